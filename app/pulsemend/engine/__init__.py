@@ -1,0 +1,1 @@
+"""Fit and apply: the one chain from recorded samples to repaired epochs."""

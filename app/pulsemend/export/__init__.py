@@ -1,0 +1,1 @@
+"""Epoch sets: containers, atomic folders, read-back."""

@@ -1,0 +1,1 @@
+"""The one use case: recording, plan and marks become a set."""

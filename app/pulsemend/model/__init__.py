@@ -1,0 +1,1 @@
+"""The frozen meaning of everything: recording facts, plan, marks, trials, epochs, ledger."""

@@ -1,0 +1,1 @@
+"""Recordings with known truth, for the sample, the tests and the benchmarks."""

@@ -1,0 +1,1 @@
+"""Markers to trials and candidate epochs. Knows no file and no signal."""
