@@ -35,6 +35,7 @@ def finish(work: Work[T], on_progress: Callable[[Progress], None] | None = None)
     Parameters
     ----------
     work : generator of Progress
+        The work to run; its return value is the result.
     on_progress : callable or None
         Called with each Progress.
     """

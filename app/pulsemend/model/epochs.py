@@ -1,0 +1,102 @@
+"""Trials, candidate epochs and the ledger, as frozen values."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+from pulsemend.model.recording import Marker
+from pulsemend.model.vocabulary import Fate, PulseState
+
+
+@dataclass(frozen=True)
+class Pulse:
+    """One pulse that is repaired.
+
+    Parameters
+    ----------
+    sample : int
+        Recorded sample of its onset; gaps and pulse anchors count from here.
+    marked : float or None
+        Recorded sample of its marker, or None if it was added by hand.
+    state : PulseState
+    """
+
+    sample: int
+    marked: float | None
+    state: PulseState
+
+
+@dataclass(frozen=True)
+class Trial:
+    """One trial: the marker of every slot that was found.
+
+    Parameters
+    ----------
+    number : int
+        From 1, in order of time.
+    markers : mapping of str to Marker
+        By slot name; slots that were not found are absent.
+    missing : tuple of str
+        Required slots that were not found.
+    """
+
+    number: int
+    markers: Mapping[str, Marker]
+    missing: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
+class Trials:
+    """All trials of a recording, and what is left over.
+
+    ``extra`` holds markers with a trial role that belong to no trial, ``unnamed`` counts codes the plan does
+    not name, ``absent`` lists codes the plan names and the recording lacks.
+    """
+
+    trials: tuple[Trial, ...]
+    extra: tuple[Marker, ...] = ()
+    unnamed: Mapping[str, int] = field(default_factory=dict)
+    absent: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
+class Candidate:
+    """One epoch that the plan asks for, with its fate: a row of the ledger.
+
+    Parameters
+    ----------
+    rule : str
+        Name of its rule.
+    rule_index : int
+        Place of the rule in the plan, from 0.
+    trial, piece : int
+        From 1.
+    anchor : str
+        Slot of the anchor.
+    anchor_sample : float or None
+        Recorded sample of the anchor (a pulse's aligned onset, else its marker); None if the slot is missing.
+    start_s : float
+        First sample minus anchor, in seconds.
+    fate : Fate
+    detail : str
+        What exactly, e.g. "pulse1 at 12.304 s" or "no probe1"; empty for kept epochs.
+    labels : mapping of str to str
+        Label columns (``cue1.item``, rule labels, ...); the same keys for every candidate.
+    """
+
+    rule: str
+    rule_index: int
+    trial: int
+    piece: int
+    anchor: str
+    anchor_sample: float | None
+    start_s: float
+    fate: Fate
+    detail: str = ""
+    labels: Mapping[str, str] = field(default_factory=dict)
+
+    @property
+    def kept(self) -> bool:
+        """Whether the epoch is part of the set."""
+        return self.fate is Fate.KEPT

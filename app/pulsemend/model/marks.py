@@ -1,0 +1,76 @@
+"""Marks: everything decided about one recording by hand, as frozen values. Files: `marks_file`."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+from pulsemend.model.recording import Fingerprint
+from pulsemend.model.vocabulary import ChannelType
+
+
+@dataclass(frozen=True)
+class BadStretch:
+    """A stretch of the recording that nothing may learn from and no kept epoch may touch.
+
+    Recorded samples, half open; `kind` says why, in the user's own words.
+    """
+
+    start: int
+    stop: int
+    kind: str = ""
+
+
+@dataclass(frozen=True)
+class EpochKey:
+    """Names an epoch by trial (from 1), rule and piece (from 1), never by index."""
+
+    trial: int
+    rule: str
+    piece: int = 1
+
+
+@dataclass(frozen=True)
+class MovedPulse:
+    """A pulse whose marker stands at `sample` and whose onset is `to` (recorded samples)."""
+
+    sample: int
+    to: int
+
+
+@dataclass(frozen=True)
+class Marks:
+    """Everything decided about one recording by hand.
+
+    Parameters
+    ----------
+    fingerprint : Fingerprint or None
+        The recording these marks belong to; None for marks that were never a file.
+    bad : tuple of str
+        Channels bad in this recording, besides the plan's.
+    types : mapping of str to ChannelType
+        Channel types that override the file's.
+    pulses_added, pulses_removed : tuple of int
+        Recorded samples: new onsets, and marker positions that are no pulse.
+    pulses_moved : tuple of MovedPulse
+    gaps_ms : mapping of str to (float, float)
+        Gap windows of channels in this recording; they win over the plan's exceptions.
+    bad_stretches : tuple of BadStretch
+    trials_excluded : tuple of int
+        From 1.
+    epochs_left_out : tuple of EpochKey
+    """
+
+    fingerprint: Fingerprint | None = None
+    bad: tuple[str, ...] = ()
+    types: Mapping[str, ChannelType] = field(default_factory=dict)
+    pulses_added: tuple[int, ...] = ()
+    pulses_removed: tuple[int, ...] = ()
+    pulses_moved: tuple[MovedPulse, ...] = ()
+    gaps_ms: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    bad_stretches: tuple[BadStretch, ...] = ()
+    trials_excluded: tuple[int, ...] = ()
+    epochs_left_out: tuple[EpochKey, ...] = ()
+
+
+NO_MARKS = Marks()
