@@ -1,0 +1,1 @@
+"""Readiness, HTML reports and methods texts of epoch sets."""

@@ -1,0 +1,1 @@
+"""Many recordings of one study: manifest, runs that resume, summary."""

@@ -1,0 +1,1 @@
+"""The state of an open window, without Qt: session, history, actions, journal, settings."""

@@ -1,0 +1,1 @@
+"""All Qt and all plotting."""
