@@ -8,6 +8,29 @@ from dataclasses import dataclass, field
 from pulsemend.model.recording import Marker
 from pulsemend.model.vocabulary import Fate, PulseState
 
+NOT_AVAILABLE = "n/a"
+"""What a label column holds where there is no label."""
+
+FIXED_COLUMNS = (
+    "index",
+    "onset",
+    "onset_s",
+    "name",
+    "rule",
+    "trial",
+    "piece",
+    "anchor",
+    "start_s",
+    "shift",
+    "shift_s",
+    "replaced_share",
+    "leak",
+    "leak_uv",
+    "fate",
+    "detail",
+)
+"""Columns of a set and its ledger that no label column may be called."""
+
 
 @dataclass(frozen=True)
 class Pulse:

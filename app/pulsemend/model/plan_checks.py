@@ -1,0 +1,380 @@
+"""What the keys of a plan must be to each other, to a recording's rate and to its channels."""
+
+from __future__ import annotations
+
+import difflib
+import math
+from collections.abc import Collection, Iterable
+
+from pulsemend.errors import MarksError, PlanError, SettingError
+from pulsemend.model.epochs import FIXED_COLUMNS
+from pulsemend.model.keys import show
+from pulsemend.model.marks import Marks
+from pulsemend.model.plan import EpochRule, Plan
+from pulsemend.model.toml_lines import key_text
+from pulsemend.model.vocabulary import Fill, Format, PulseTimes, Role
+
+WHOLE_WITHIN = 1e-6
+LARGEST_BAND = 0.4
+"""Highest low-pass at a reduced rate, as a share of that rate."""
+
+
+def check_plan(plan: Plan) -> tuple[str, ...]:
+    """Check what needs no recording.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to check.
+
+    Returns
+    -------
+    tuple of str
+        Warnings: allowed, but perhaps not meant.
+
+    Raises
+    ------
+    PlanError
+        Keys contradict each other.
+    """
+    _check_slots(plan)
+    _check_pulses(plan)
+    _check_filter(plan)
+    _check_reference(plan)
+    _check_rules(plan)
+    if plan.filter.rate_hz:
+        _check_whole_samples(plan, plan.filter.rate_hz)
+    return _warnings(plan)
+
+
+def check_decided(plan: Plan) -> None:
+    """Refuse codes whose role is still undecided.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to check.
+
+    Raises
+    ------
+    PlanError
+        Lists them; the first one's line is given.
+    """
+    undecided = [marker.code for marker in plan.markers if marker.role is Role.UNDECIDED]
+    if undecided:
+        raise PlanError(
+            key_text(("markers", undecided[0], "role")),
+            "still undecided: " + ", ".join(show(code) for code in undecided),
+            allowed=" | ".join(show(role) for role in Role if role is not Role.UNDECIDED),
+        )
+
+
+def check_against_rate(plan: Plan, recorded_rate_hz: float) -> float:
+    """Check a plan against a recording's rate.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to check.
+    recorded_rate_hz : float
+        The recording's rate.
+
+    Returns
+    -------
+    float
+        The output rate in Hz.
+
+    Raises
+    ------
+    PlanError
+        The output rate is above the recorded one, the low-pass does not fit it, or a start or a length is no
+        whole number of its samples.
+    """
+    rate_hz = plan.filter.rate_hz or recorded_rate_hz
+    if rate_hz > recorded_rate_hz:
+        raise PlanError(
+            "filter.rate_hz",
+            "is above the recorded rate",
+            allowed=f"0 (as recorded) or up to {recorded_rate_hz:.12g} Hz",
+            received=f"{rate_hz:.12g}",
+        )
+    lowpass_hz = plan.filter.lowpass_hz
+    if rate_hz < recorded_rate_hz:
+        highest, zero = LARGEST_BAND * rate_hz, f"0 ({LARGEST_BAND:g} x rate_hz)"
+    else:
+        # The transition is a quarter of the cutoff wide, at least 2 Hz, and has to end below half the rate.
+        highest, zero = min(rate_hz / 2 - 1.0, rate_hz / 2 / 1.125), "0 (off)"
+    if lowpass_hz > highest:
+        raise PlanError(
+            "filter.lowpass_hz",
+            f"is too high for an output rate of {rate_hz:.12g} Hz",
+            allowed=f"{zero} or up to {highest:.6g} Hz",
+            received=f"{lowpass_hz:.12g}",
+        )
+    _check_whole_samples(plan, rate_hz)
+    return rate_hz
+
+
+def check_channels(plan: Plan, marks: Marks, names: Collection[str]) -> tuple[str, ...]:
+    """Check the channels that plan and marks name against a recording's.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to check.
+    marks : Marks
+        The recording's marks; `NO_MARKS` if there are none.
+    names : collection of str
+        The recording's channels.
+
+    Returns
+    -------
+    tuple of str
+        Warnings: bad channels that the recording does not have.
+
+    Raises
+    ------
+    PlanError, MarksError
+        A channel that is needed is not in the recording, or is bad and the reference.
+    """
+    channels = plan.channels
+    put_back = channels.recorded_reference
+    if put_back in names:
+        raise PlanError(
+            "channels.recorded_reference",
+            "is a channel of the recording already, so it cannot be put back",
+            allowed='"" or a channel that was not recorded',
+            received=show(put_back),
+        )
+    for name in plan.pulses.channels:
+        _need(PlanError, key_text(("pulses", "channels", name)), name, names)
+    if not isinstance(channels.reference, str):
+        known = [*names, put_back] if put_back else names
+        for place, name in enumerate(channels.reference, start=1):
+            key = key_text(("channels", "reference", place))
+            _need(PlanError, key, name, known)
+            if name in marks.bad:
+                raise PlanError(key, "is bad in this recording's marks", received=show(name))
+    for table, used in (("types", marks.types), ("gaps_ms", marks.gaps_ms)):
+        for name in used:
+            _need(MarksError, key_text((table, name)), name, names)
+    return tuple(
+        f"{where}: bad channel {show(name)} is not in the recording"
+        for where, bad in (("plan", channels.bad), ("marks", marks.bad))
+        for name in bad
+        if name not in names
+    )
+
+
+def _need(error: type[SettingError], key: str, name: str, names: Collection[str]) -> None:
+    if name not in names:
+        raise error(key, "is not a channel of the recording", allowed=_near(name, names), received=show(name))
+
+
+def _near(name: str, names: Iterable[str]) -> str:
+    """Names like the one that was not found; all of them where there are few, some where none is alike."""
+    known = list(names)
+    near = difflib.get_close_matches(name, known, n=4, cutoff=0.5)
+    by_case = [other for other in known if other.casefold() == name.casefold() and other not in near]
+    return " | ".join(show(other) for other in [*by_case, *near] or known[:8]) + (
+        " | ..." if len(known) > 8 or (near and len(near) < len(known)) else ""
+    )
+
+
+def _check_slots(plan: Plan) -> None:
+    if not plan.trial:
+        raise PlanError("trial", "has no slot; at least one [[trial]] is needed")
+    roles = {marker.role for marker in plan.markers}
+    earlier: list[str] = []
+    for place, slot in enumerate(plan.trial, start=1):
+        path = ("trial", place)
+        if slot.slot in earlier or slot.slot == "log":
+            problem = "names an earlier slot too" if slot.slot in earlier else "is kept for the log's columns"
+            raise PlanError(key_text((*path, "slot")), problem, received=show(slot.slot))
+        if place == 1:
+            _check_first_slot(plan)
+        elif slot.after_s is None:
+            raise PlanError(
+                key_text((*path, "after_s")),
+                "is missing; every slot but the first needs its time limits",
+                allowed="[least, most] in s",
+            )
+        if slot.after and slot.after not in earlier:
+            raise PlanError(
+                key_text((*path, "after")),
+                "must name an earlier slot",
+                allowed=" | ".join(show(name) for name in earlier),
+                received=show(slot.after),
+            )
+        if slot.role not in roles and not slot.optional:
+            raise PlanError(
+                key_text((*path, "role")),
+                "no code under [markers] has this role, so every trial would be incomplete",
+                allowed=" | ".join(show(role) for role in Role if role in roles),
+                received=show(slot.role),
+            )
+        earlier.append(slot.slot)
+
+
+def _check_first_slot(plan: Plan) -> None:
+    first = plan.trial[0]
+    if first.after_s is not None or first.after:
+        key = "after_s" if first.after_s is not None else "after"
+        raise PlanError(f"trial[1].{key}", "the first slot starts the trial: nothing comes before it")
+    if first.optional:
+        raise PlanError(
+            "trial[1].optional",
+            "the first slot starts the trial and cannot be optional",
+            allowed="false",
+            received="true",
+        )
+
+
+def _check_pulses(plan: Plan) -> None:
+    pulses = plan.pulses
+    if pulses.times is PulseTimes.NONE:
+        return
+    if pulses.window_ms is None:
+        raise PlanError(
+            "pulses.window_ms",
+            "is missing: the gap around every pulse has no default and must be decided",
+            allowed='[from, to] in ms, or times = "none" for a recording without pulses',
+        )
+    if pulses.fill is Fill.LEAVE and Format.FIF in plan.export.formats:
+        raise PlanError(
+            "pulses.fill",
+            "FIF cannot hold gaps that are left open",
+            allowed='another fill, or formats = ["hdf5"]',
+            received=show(pulses.fill),
+        )
+
+
+def _check_filter(plan: Plan) -> None:
+    high, low = plan.filter.highpass_hz, plan.filter.lowpass_hz
+    if high and low and low <= high:
+        raise PlanError(
+            "filter.lowpass_hz",
+            "must be above highpass_hz",
+            allowed=f"0 or above {high:.12g} Hz",
+            received=f"{low:.12g}",
+        )
+
+
+def _check_reference(plan: Plan) -> None:
+    if isinstance(plan.channels.reference, str):
+        return
+    for place, name in enumerate(plan.channels.reference, start=1):
+        if name in plan.channels.bad:
+            raise PlanError(
+                f"channels.reference[{place}]",
+                "is bad in every recording (channels.bad)",
+                received=show(name),
+            )
+
+
+def _check_rules(plan: Plan) -> None:
+    if not plan.epochs.rule:
+        raise PlanError("epochs.rule", "has no rule; at least one [[epochs.rule]] is needed")
+    slots = [slot.slot for slot in plan.trial]
+    allowed = " | ".join(show(name) for name in slots)
+    names: set[str] = set()
+    for place, rule in enumerate(plan.epochs.rule, start=1):
+        path = ("epochs", "rule", place)
+        if rule.name in names:
+            raise PlanError(key_text((*path, "name")), "names an earlier rule too", received=show(rule.name))
+        names.add(rule.name)
+        for key, slot in (("anchor", rule.anchor), ("stop_before", rule.stop_before)):
+            if slot not in slots and (slot or key == "anchor"):
+                raise PlanError(
+                    key_text((*path, key)),
+                    "must name a slot of the trial",
+                    allowed=allowed,
+                    received=show(slot),
+                )
+        _check_rule_labels(plan, rule, path)
+
+
+def _check_rule_labels(plan: Plan, rule: EpochRule, path: tuple[str | int, ...]) -> None:
+    known = slot_columns(plan)
+    for column, source in rule.labels.items():
+        key = key_text((*path, "labels", column))
+        if column in FIXED_COLUMNS:
+            raise PlanError(key, "is the name of a fixed column; choose another", received=show(column))
+        if "." in column or not column:
+            raise PlanError(key, "a column made by a rule has no point in its name", received=show(column))
+        if source.startswith("log."):
+            raise PlanError(key, "labels from a log are not in this version", received=show(source))
+        if source not in known:
+            raise PlanError(
+                key,
+                "must name a label of a slot's codes, slot.label",
+                allowed=" | ".join(known) or "none: no code of a slot has labels",
+                received=show(source),
+            )
+
+
+def slot_columns(plan: Plan) -> tuple[str, ...]:
+    """Label columns that come from markers, ``slot.label``: slots in order, labels as first named.
+
+    Parameters
+    ----------
+    plan : Plan
+        Slots, codes and their labels.
+    """
+    columns: dict[str, None] = {}
+    for slot in plan.trial:
+        for marker in plan.markers:
+            if marker.role is slot.role:
+                columns.update(dict.fromkeys(f"{slot.slot}.{label}" for label in marker.labels))
+    return tuple(columns)
+
+
+def rule_columns(plan: Plan) -> tuple[str, ...]:
+    """Label columns that come from epoch rules, as first named.
+
+    Parameters
+    ----------
+    plan : Plan
+        Rules and their labels.
+    """
+    return tuple(dict.fromkeys(column for rule in plan.epochs.rule for column in rule.labels))
+
+
+def _check_whole_samples(plan: Plan, rate_hz: float) -> None:
+    _check_whole("epochs.length_s", plan.epochs.length_s, rate_hz, least=1)
+    for place, rule in enumerate(plan.epochs.rule, start=1):
+        _check_whole(key_text(("epochs", "rule", place, "start_s")), rule.start_s, rate_hz)
+
+
+def _check_whole(key: str, seconds: float, rate_hz: float, least: float = -math.inf) -> None:
+    samples = seconds * rate_hz
+    if abs(samples - round(samples)) <= WHOLE_WITHIN and round(samples) >= least:
+        return
+    nearest = [whole for whole in (math.floor(samples), math.ceil(samples)) if whole >= least] or [1]
+    raise PlanError(
+        key,
+        f"is no whole number of output samples at {rate_hz:.12g} Hz",
+        allowed=" | ".join(f"{whole / rate_hz:.12g}" for whole in nearest),
+        received=f"{seconds:.12g}",
+    )
+
+
+def _warnings(plan: Plan) -> tuple[str, ...]:
+    found: list[str] = []
+    window_ms, roles = plan.pulses.window_ms, {marker.role for marker in plan.markers}
+    has_pulses = plan.pulses.times is not PulseTimes.NONE
+    if has_pulses and window_ms is not None and not window_ms[0] <= 0.0 <= window_ms[1]:
+        found.append("pulses.window_ms does not contain the onset of the pulse (0 ms)")
+    if has_pulses and Role.PULSE not in roles:
+        found.append('no code has role "pulse", so no pulse is known; say times = "none" if there are none')
+    found += [
+        f"slot {show(slot.slot)} is optional and no code has its role {show(slot.role)}"
+        for slot in plan.trial
+        if slot.optional and slot.role not in roles
+    ]
+    rate_hz, lowpass_hz = plan.filter.rate_hz, plan.filter.lowpass_hz
+    if rate_hz and lowpass_hz > LARGEST_BAND * rate_hz:
+        found.append(
+            f"filter.lowpass_hz is above {LARGEST_BAND:g} x rate_hz: recordings of a higher rate are refused"
+        )
+    return tuple(found)

@@ -1,0 +1,208 @@
+"""Plans as files: reading with every refusal named and placed, writing with comments kept."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from pulsemend.errors import PlanError
+from pulsemend.model.plan import (
+    About,
+    Channels,
+    EpochRule,
+    Epochs,
+    Export,
+    Filter,
+    MarkerPlan,
+    OtherGap,
+    Plan,
+    Pulses,
+    Slot,
+)
+from pulsemend.model.plan_checks import check_plan
+from pulsemend.model.plan_keys import LATER_PLAN_KEYS, PLAN_KEYS, SCHEMA
+from pulsemend.model.toml_edit import new_text, updated_text
+from pulsemend.model.toml_tables import Source, parse, read_text, write_text
+
+_NAMED_BY = {"trial": "slot", "epochs.rule": "name", "pulses.also": ""}
+
+
+@dataclass(frozen=True)
+class PlanFile:
+    """A plan together with the text it came from.
+
+    Parameters
+    ----------
+    plan : Plan
+    source : Source
+        Text, name and lines; ``with plan_file.source.located(): ...`` gives later refusals their line.
+    warnings : tuple of str
+        One sentence each: allowed, but perhaps not meant.
+    """
+
+    plan: Plan
+    source: Source
+    warnings: tuple[str, ...] = ()
+
+    @property
+    def text(self) -> str:
+        """The text as it was read."""
+        return self.source.text
+
+
+def read_plan(path: Path) -> PlanFile:
+    """Read a plan.
+
+    Parameters
+    ----------
+    path : Path
+        The TOML file.
+
+    Returns
+    -------
+    PlanFile
+
+    Raises
+    ------
+    PlanError
+        The file cannot be read, or a key is unknown, missing, impossible or of a later version.
+    """
+    return parse_plan(read_text(path, PlanError), str(path))
+
+
+def parse_plan(text: str, name: str = "") -> PlanFile:
+    """Read a plan from its text.
+
+    Parameters
+    ----------
+    text : str
+        TOML, schema 1.
+    name : str
+        The file's name for messages.
+
+    Returns
+    -------
+    PlanFile
+
+    Raises
+    ------
+    PlanError
+        A key is unknown, missing, impossible or of a later version.
+    """
+    source = parse(text, name, PLAN_KEYS, LATER_PLAN_KEYS, PlanError)
+    plan = _plan(source.tree)
+    with source.located():
+        warnings = check_plan(plan)
+    return PlanFile(plan, source, warnings)
+
+
+def plan_text(plan: Plan) -> str:
+    """Write a plan as a new text without comments; defaults are left out.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to write.
+    """
+    return new_text(plan_tree(plan), defaults(), _NAMED_BY)
+
+
+def update_text(text: str, plan: Plan) -> str:
+    """Change a plan's text so that it means another plan, comments and order kept.
+
+    Parameters
+    ----------
+    text : str
+        A valid plan.
+    plan : Plan
+        What the new text has to mean.
+
+    Returns
+    -------
+    str
+        The text; only keys whose value changed are touched.
+
+    Raises
+    ------
+    PlanError
+        The text is no valid plan.
+    """
+    if parse_plan(text).plan == plan:
+        return text
+    changed = updated_text(text, plan_tree(plan), defaults(), _NAMED_BY)
+    # Meaning goes before comments, should the editing library ever write what it did not mean.
+    return changed if parse_plan(changed).plan == plan else plan_text(plan)
+
+
+def write_plan(path: Path, plan: Plan, text: str = "") -> str:
+    """Write a plan, whole or not at all.
+
+    Parameters
+    ----------
+    path : Path
+        Where to.
+    plan : Plan
+        What to write.
+    text : str
+        The text it was read from, whose comments are kept; empty: a new text.
+
+    Returns
+    -------
+    str
+        The text written.
+    """
+    new = update_text(text, plan) if text else plan_text(plan)
+    write_text(path, new)
+    return new
+
+
+def plan_tree(plan: Plan) -> dict[str, Any]:
+    """All values of a plan as nested tables, absent ones as None.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to take apart.
+    """
+    return {
+        "pulsemend": SCHEMA,
+        "about": vars(plan.about),
+        "markers": {m.code: {"role": m.role, "labels": dict(m.labels)} for m in plan.markers},
+        "trial": [vars(slot) for slot in plan.trial],
+        "pulses": {
+            **vars(plan.pulses),
+            "also": [vars(gap) for gap in plan.pulses.also],
+            "channels": dict(plan.pulses.channels),
+        },
+        "filter": vars(plan.filter),
+        "channels": vars(plan.channels),
+        "epochs": {
+            "length_s": plan.epochs.length_s,
+            "rule": [{**vars(rule), "labels": dict(rule.labels)} for rule in plan.epochs.rule],
+        },
+        "export": vars(plan.export),
+    }
+
+
+def defaults() -> Mapping[str, object]:
+    """Defaults of the keys that have one, by path in the table of keys without ``[]``."""
+    return {key.path.replace("[]", ""): key.default for key in PLAN_KEYS}
+
+
+def _plan(tree: Mapping[str, Any]) -> Plan:
+    pulses = tree["pulses"]
+    return Plan(
+        about=About(**tree["about"]),
+        markers=tuple(MarkerPlan(code, **values) for code, values in tree["markers"].items()),
+        trial=tuple(Slot(**slot) for slot in tree["trial"]),
+        pulses=Pulses(**{**pulses, "also": tuple(OtherGap(**gap) for gap in pulses["also"])}),
+        filter=Filter(**tree["filter"]),
+        channels=Channels(**tree["channels"]),
+        epochs=Epochs(
+            length_s=tree["epochs"]["length_s"],
+            rule=tuple(EpochRule(**rule) for rule in tree["epochs"]["rule"]),
+        ),
+        export=Export(**tree["export"]),
+    )
