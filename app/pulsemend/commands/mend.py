@@ -15,7 +15,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--marks",
         type=Path,
         metavar="MARKS",
-        help="marks (TOML) of this recording (default: marks/STEM.marks.toml beside the plan, if it is there)",
+        help="marks (TOML) of this recording (default: marks/STEM.marks.toml beside the plan, if there)",
     )
     parser.add_argument("--overwrite", action="store_true", help="replace the set if it exists")
     parser.add_argument("--dry-run", action="store_true", help="show what would be kept; write nothing")
