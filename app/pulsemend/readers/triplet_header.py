@@ -1,0 +1,297 @@
+"""The text files of a triplet: header (.vhdr) and markers (.vmrk), an INI dialect of their own.
+
+Two things keep a general INI parser from reading them: free text after ``[Comment]``, and commas inside
+values that are written as a backslash and a one.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path, PureWindowsPath
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pulsemend.errors import DamagedRecording, MissingPart, UnknownFormat
+from pulsemend.model.recording import Channel
+from pulsemend.model.vocabulary import ChannelType
+from pulsemend.readers.common import check_names, missing, power_of_ten, type_by_name
+
+SampleType = np.dtype[np.int16] | np.dtype[np.int32] | np.dtype[np.float32]
+
+_VOLTS: dict[str, float] = {
+    unit: power_of_ten(exponent)
+    for unit, exponent in {"V": 0, "mV": -3, "uV": -6, "\u00b5V": -6, "\u03bcV": -6, "nV": -9}.items()
+}
+_SAMPLE_TYPES = {"INT_16": "i2", "INT_32": "i4", "IEEE_FLOAT_32": "f4"}
+_HEAD_RADIUS_M = 0.095  # for directions without a distance; only the direction is used further on
+_EXPORT_AGAIN = "Export the recording again as binary, in the time domain"
+
+Sections = dict[str, dict[str, str]]
+
+
+@dataclass(frozen=True)
+class TripletHeader:
+    """What a header file says.
+
+    Parameters
+    ----------
+    rate_hz : float
+    channels : tuple of Channel
+    sample_type : dtype
+        How one stored number is written, byte order included.
+    by_channel : bool
+        Whether each channel stands in one piece (vectorized) instead of each instant (multiplexed).
+    n_samples : int or None
+        Number of samples, if the header gives it.
+    data_name, marker_name : str
+        File names as written, without folder; ``marker_name`` empty if there is none.
+    notes : tuple of str
+    """
+
+    rate_hz: float
+    channels: tuple[Channel, ...]
+    sample_type: SampleType
+    by_channel: bool
+    n_samples: int | None
+    data_name: str
+    marker_name: str
+    notes: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class MarkerLine:
+    """One entry of a marker file; ``position`` counts samples from 1."""
+
+    type: str
+    text: str
+    position: int
+
+
+def read_header(path: Path) -> TripletHeader:
+    """Read a header file.
+
+    Raises
+    ------
+    MissingPart, UnknownFormat, DamagedRecording, UnusableChannels
+    """
+    entries = _Entries(path, _sections(path, "Header File"))
+    if entries.word("Common Infos", "DataFormat", "BINARY") != "BINARY":
+        raise UnknownFormat("its samples are written as text", where=path.name, todo=_EXPORT_AGAIN)
+    if entries.word("Common Infos", "DataType", "TIMEDOMAIN") != "TIMEDOMAIN":
+        raise UnknownFormat("its data are not samples over time", where=path.name, todo=_EXPORT_AGAIN)
+    orientation = entries.word("Common Infos", "DataOrientation", "MULTIPLEXED")
+    if orientation not in ("MULTIPLEXED", "VECTORIZED"):
+        raise UnknownFormat(f"unknown data orientation {orientation}", where=path.name, todo=_EXPORT_AGAIN)
+    interval_us = entries.number("Common Infos", "SamplingInterval")
+    if not (math.isfinite(interval_us) and interval_us > 0):
+        raise entries.damaged(f"SamplingInterval is {interval_us}")
+    data_points = entries.text("Common Infos", "DataPoints", "")
+    data_name = entries.text("Common Infos", "DataFile", "")
+    if not data_name:
+        raise entries.damaged("it names no DataFile")
+    channels, notes = _channels(entries)
+    return TripletHeader(
+        rate_hz=power_of_ten(6) / interval_us,
+        channels=channels,
+        sample_type=_sample_type(entries),
+        by_channel=orientation == "VECTORIZED",
+        n_samples=entries.whole("Common Infos", "DataPoints") if data_points else None,
+        data_name=_file_name(data_name, path),
+        marker_name=_file_name(entries.text("Common Infos", "MarkerFile", ""), path),
+        notes=notes,
+    )
+
+
+def read_markers(path: Path) -> Iterator[MarkerLine]:
+    """Read the entries of a marker file in file order.
+
+    Raises
+    ------
+    MissingPart, UnknownFormat, DamagedRecording
+    """
+    for key, value in _sections(path, "Marker File").get("marker infos", {}).items():
+        fields = [field.replace("\\1", ",") for field in value.split(",")]
+        if not key.startswith("mk"):
+            continue
+        if len(fields) < 3 or not _is_whole(fields[2]):
+            raise DamagedRecording(
+                f"entry {key.capitalize()} has no position: {value}",
+                where=path.name,
+                todo="Correct the entry or copy the file again",
+            )
+        yield MarkerLine(fields[0], fields[1], int(fields[2]))
+
+
+class _Entries:
+    """Typed look-ups in the sections of one file, with its name for errors."""
+
+    def __init__(self, path: Path, sections: Sections) -> None:
+        self.path = path
+        self.sections = sections
+
+    def damaged(self, what: str) -> DamagedRecording:
+        return DamagedRecording(what, where=self.path.name, todo="Correct the header or export again")
+
+    def text(self, section: str, key: str, default: str | None = None) -> str:
+        value = self.sections.get(section.lower(), {}).get(key.lower(), default)
+        if value is None:
+            raise self.damaged(f"the entry {key} of [{section}] is missing")
+        return value
+
+    def word(self, section: str, key: str, default: str | None = None) -> str:
+        return self.text(section, key, default).upper()
+
+    def number(self, section: str, key: str) -> float:
+        value = self.text(section, key)
+        try:
+            return float(value)
+        except ValueError:
+            raise self.damaged(f"{key} is not a number: {value}") from None
+
+    def whole(self, section: str, key: str) -> int:
+        value = self.text(section, key)
+        if not _is_whole(value):
+            raise self.damaged(f"{key} is not a whole number: {value}")
+        return int(value)
+
+
+def _is_whole(text: str) -> bool:
+    return text.strip().removeprefix("-").isdecimal()
+
+
+def _sections(path: Path, kind: str) -> Sections:
+    """Split a file into sections of entries, names and keys in lower case."""
+    try:
+        content = path.read_bytes()
+    except OSError as error:
+        raise missing(path, error) from error
+    try:
+        text = content.decode("utf-8-sig")
+    except UnicodeDecodeError:
+        # Every byte is a letter in Latin-1; files that do not name their code page are written in it.
+        text = content.decode("latin-1")
+    lines = text.splitlines()
+    if not lines or f"data exchange {kind}".lower() not in lines[0].lower():
+        raise UnknownFormat(
+            f"the first line does not say that this is a {kind.lower()} of a triplet",
+            where=path.name,
+            todo="Check that the right file was copied",
+        )
+    sections: Sections = {}
+    entries: dict[str, str] = {}
+    for line in map(str.strip, lines[1:]):
+        if line.lower() == "[comment]":
+            break
+        if line.startswith("[") and line.endswith("]"):
+            entries = sections.setdefault(line[1:-1].strip().lower(), {})
+        elif line and not line.startswith(";"):
+            key, _, value = line.partition("=")
+            entries[key.strip().lower()] = value.strip()
+    return sections
+
+
+def _file_name(written: str, header: Path) -> str:
+    """Name of a part: any folder written before it is ignored, ``$b`` stands for the header's own name."""
+    return PureWindowsPath(written.replace("$b", header.stem)).name
+
+
+def _sample_type(entries: _Entries) -> SampleType:
+    written = entries.word("Binary Infos", "BinaryFormat", "INT_16")
+    if written not in _SAMPLE_TYPES:
+        raise UnknownFormat(
+            f"samples of the type {written} are not read; known are {', '.join(_SAMPLE_TYPES)}",
+            where=entries.path.name,
+            todo=_EXPORT_AGAIN,
+        )
+    big = entries.word("Binary Infos", "UseBigEndianOrder", "NO") == "YES"
+    sample_type: SampleType = np.dtype((">" if big else "<") + _SAMPLE_TYPES[written])
+    return sample_type
+
+
+def _channels(entries: _Entries) -> tuple[tuple[Channel, ...], tuple[str, ...]]:
+    n_channels = entries.whole("Common Infos", "NumberOfChannels")
+    channels = tuple(_channel(entries, number) for number in range(1, n_channels + 1))
+    check_names([channel.name for channel in channels], entries.path.name)
+    if f"ch{n_channels + 1}" in entries.sections.get("channel infos", {}):
+        raise entries.damaged(f"it describes more channels than its NumberOfChannels, {n_channels}")
+    others = [f"{channel.name} ({channel.unit})" for channel in channels if channel.type is ChannelType.MISC]
+    notes = [f"Not in volts, so taken as misc with the numbers as written: {', '.join(others)}."]
+    return channels, tuple(notes if others else ())
+
+
+def _channel(entries: _Entries, number: int) -> Channel:
+    fields = entries.text("Channel Infos", f"Ch{number}").split(",")
+    name, _, resolution, unit = (field.replace("\\1", ",").strip() for field in (*fields, *[""] * 4)[:4])
+    if not name:
+        raise entries.damaged(f"channel {number} has no name")
+    unit = unit or "uV"
+    try:
+        per_step = float(resolution or 1)
+    except ValueError:
+        raise entries.damaged(f"the resolution of channel {name} is not a number: {resolution}") from None
+    if not (math.isfinite(per_step) and per_step != 0):
+        raise entries.damaged(f"the resolution of channel {name} is {resolution}")
+    return Channel(
+        name=name,
+        type=type_by_name(name) if unit in _VOLTS else ChannelType.MISC,
+        scale_v=per_step * _VOLTS.get(unit, 1.0),
+        position_m=_position(entries, number),
+        unit=unit,
+    )
+
+
+def _position(entries: _Entries, number: int) -> tuple[float, float, float] | None:
+    """Position from radius (mm, or 1 for a direction alone), inclination and azimuth in degrees."""
+    written = entries.text("Coordinates", f"Ch{number}", "")
+    if not written:
+        return None
+    try:
+        radius, inclination, azimuth = (float(field) for field in written.split(",")[:3])
+    except ValueError:
+        raise entries.damaged(
+            f"the coordinates of channel {number} are not three numbers: {written}"
+        ) from None
+    if radius == 0:  # written for channels that are not on the head
+        return None
+    radius_m = _HEAD_RADIUS_M if radius == 1 else radius * power_of_ten(-3)
+    theta, phi = math.radians(inclination), math.radians(azimuth)
+    return (
+        radius_m * math.sin(theta) * math.cos(phi),
+        radius_m * math.sin(theta) * math.sin(phi),
+        radius_m * math.cos(theta),
+    )
+
+
+def find_part(header: Path, written: str, suffix: str) -> tuple[Path, str]:
+    """Find a file that the header names, or the one beside it that bears the header's own name.
+
+    Returns
+    -------
+    path : Path
+    note : str
+        Empty, or what was done about a name that leads nowhere.
+
+    Raises
+    ------
+    MissingPart
+    """
+    named = header.with_name(written)
+    if named.is_file():
+        return named, ""
+    own = header.with_suffix(suffix)
+    if own.is_file():
+        return own, f"The header names {written}, which is not there; {own.name} was taken instead."
+    raise MissingPart(
+        f"the file {written}, named in the header, is not there, nor is {own.name}",
+        where=header.name,
+        todo="Put all files of the recording into one folder",
+    )
+
+
+def offset_fits(offset: NDArray[np.float64], sample_type: SampleType) -> bool:
+    """Whether 16-bit numbers minus ``offset`` are exact in float32: small whole offsets."""
+    small = sample_type.kind == "i" and sample_type.itemsize == 2
+    return small and bool(np.all((np.abs(offset) <= 2**16) & (offset == np.rint(offset))))
