@@ -1,0 +1,412 @@
+"""Second pass: the one chain from recorded samples to repaired epochs.
+
+    offset -> fill -> anti-alias + decimate -> drift, line and band filters -> reference -> cut
+
+Nothing is estimated here. Every step is a pure function of recorded samples, estimates and absolute sample
+number, computed on a fixed grid of blocks counted from the start of the recording, and pulled from the end:
+whoever asks for a stretch gets the same samples, to the last bit, whatever was asked for before. So what
+a preview shows is what an export writes. Blocks used last are kept for the next request; that is the only
+state.
+"""
+
+from __future__ import annotations
+
+from collections import OrderedDict
+from collections.abc import Callable
+from dataclasses import dataclass
+from fractions import Fraction
+from functools import cache
+from typing import Any
+
+import numpy as np
+import threadpoolctl
+from numpy.typing import NDArray
+
+from pulsemend.engine.estimates import Estimates
+from pulsemend.engine.fit import read_stored
+from pulsemend.engine.setup import Setup
+from pulsemend.model.recording import Recording
+from pulsemend.model.vocabulary import Fill
+from pulsemend.signal.apply_fir import BandedFilter, FftFilter, banded
+from pulsemend.signal.design import fractional_delay
+from pulsemend.signal.fills import FillConfig, Filler
+from pulsemend.signal.gaps import Gap
+
+Samples = NDArray[Any]
+
+BLOCK_SAMPLES = 10_240
+"""Recorded samples per block, about: a block of 62 channels then fits the second-level cache."""
+
+DELAY_HALF = 32
+WHOLE_SHIFT = 1e-9
+"""Sub-sample shifts smaller than this part of a sample are none."""
+
+
+@dataclass(frozen=True)
+class EpochSamples:
+    """One epoch as it is written.
+
+    Parameters
+    ----------
+    data : array, shape (n_channels, n_times)
+        Volts.
+    replaced : bool array, shape (n_channels, n_times)
+    shift_s : float
+        How far the signal was shifted, less than an output period, to put the anchor exactly at time zero.
+    remainder_s : float
+        Anchor minus the instant taken as time zero. Zero unless the recorded rate is kept.
+    """
+
+    data: Samples
+    replaced: NDArray[np.bool_]
+    shift_s: float
+    remainder_s: float
+
+
+class Chain:
+    """All stages for one recording.
+
+    Parameters
+    ----------
+    recording : Recording
+        Read from by this chain alone.
+    setup : Setup
+        Plan and marks, bound to it.
+    estimates : Estimates
+        From `fit` with the same setup.
+    """
+
+    def __init__(self, recording: Recording, setup: Setup, estimates: Estimates) -> None:
+        _one_blas_thread()
+        self._recording = recording
+        self._setup = setup
+        self._estimates = estimates
+        self._repairs = _repairs(setup, estimates)
+        self._scale = setup.scale_v.astype(setup.work)[:, None]
+        self._decimator: BandedFilter | None = None
+        if setup.antialias is not None:
+            self._decimator = banded(setup.antialias, setup.ratio, setup.work)
+        self._fft = None if setup.band is None else FftFilter(setup.band, setup.work)
+        self._low_size = self._low_block_size()
+        self._low_blocks = _Recent(2 + (2 * self._fft.margin if self._fft else 0) // self._low_size)
+        self._band_size = self._fft.block if self._fft else self._low_size
+        self._band_blocks = _Recent(3)
+
+    @property
+    def setup(self) -> Setup:
+        """The binding this chain was made with."""
+        return self._setup
+
+    def gaps(self, columns_of: int, segment: int) -> list[Gap]:
+        """List the gaps of one group of channels in one segment."""
+        return self._repairs[columns_of].gaps[segment]
+
+    def repaired(self, start: int, stop: int) -> Samples:
+        """Read used channels at the recorded rate and fill their gaps.
+
+        Parameters
+        ----------
+        start, stop : int
+            Recorded samples within one segment.
+
+        Returns
+        -------
+        array, shape (stop - start, n_used), C-contiguous
+            Stored units minus the channels' offsets.
+        """
+        segment = self._segment_at(start)
+        touched = [
+            (repair, gap)
+            for repair in self._repairs
+            for gap in repair.gaps[segment]
+            if gap.start < stop and gap.stop > start
+        ]
+        first = min([start, *(gap.start - gap.left for _, gap in touched)])
+        last = max([stop, *(gap.stop + gap.right for _, gap in touched)])
+        offset = self._estimates.offset if self._setup.work == np.float32 else None
+        x = read_stored(self._recording, self._setup, first, last, offset, self._setup.work)
+        for repair, gap in touched:
+            repair.fill(x, first, gap)
+        return x[start - first : stop - first]
+
+    def output_span(self, segment: int) -> tuple[int, int]:
+        """Output samples [first, stop) whose instants lie within a segment."""
+        lo, hi = self._setup.facts.segments[segment]
+        ratio = self._setup.ratio
+        return _ceil(lo * ratio), _floor((hi - 1) * ratio) + 1
+
+    def stretch(self, segment: int, start: int, stop: int) -> Samples:
+        """Output samples of a stretch, filtered and referenced; mirrored oddly beyond the segment's ends.
+
+        Parameters
+        ----------
+        segment : int
+            Place in the facts' segments.
+        start, stop : int
+            Output samples; sample k stands at recorded sample k / ratio.
+
+        Returns
+        -------
+        array, shape (n_channels, stop - start)
+            Volts, in the working precision.
+        """
+        lo, hi = self.output_span(segment)
+        return _mirrored(lambda a, b: self._from_blocks(segment, a, b), lo, hi, start, stop, stop - start)
+
+    def epoch(self, anchor_sample: float, start_s: float, n_times: int) -> EpochSamples:
+        """Cut one epoch.
+
+        Parameters
+        ----------
+        anchor_sample : float
+            Recorded sample of the anchor; need not be whole.
+        start_s : float
+            First sample minus anchor; times the output rate a whole number.
+        n_times : int
+            Output samples.
+        """
+        setup = self._setup
+        ratio = setup.ratio
+        begin = round(start_s * setup.rate_hz)
+        if ratio == 1:
+            first, part = round(anchor_sample) + begin, 0.0
+            remainder_s = (anchor_sample - round(anchor_sample)) / setup.facts.rate_hz
+        else:
+            at = anchor_sample * ratio.numerator / ratio.denominator
+            first, part, remainder_s = round(at) + begin, at - round(at), 0.0
+        segment = self._segment_at(round(anchor_sample + start_s * setup.facts.rate_hz))
+        if abs(part) < WHOLE_SHIFT:
+            data, part = self.stretch(segment, first, first + n_times), 0.0
+        else:
+            delay = _delay(round(part, 9), setup.work.str)
+            blocks = -(-n_times // delay.block)
+            lo, hi = delay.span(0, blocks)
+            x = np.ascontiguousarray(self.stretch(segment, first + lo, first + hi).T)
+            data = delay.run(x, blocks)[:n_times].T
+        at_recorded = np.arange(n_times, dtype=np.float64) + (first + part)
+        replaced = self.replaced(segment, at_recorded / float(ratio))
+        data = np.array(data, dtype=setup.out, order="C")
+        if setup.fill is Fill.LEAVE:
+            data[replaced] = np.nan
+        return EpochSamples(data, replaced, part / setup.rate_hz, remainder_s)
+
+    def replaced(self, segment: int, at: NDArray[np.float64]) -> NDArray[np.bool_]:
+        """Tell which output samples rest on replaced recorded ones within half an output period.
+
+        Parameters
+        ----------
+        segment : int
+            Place in the facts' segments.
+        at : array, shape (n_times,)
+            Recorded positions of the output samples, rising.
+
+        Returns
+        -------
+        bool array, shape (n_channels, n_times)
+        """
+        marked = np.zeros((len(self._setup.names), at.size), dtype=np.bool_)
+        reach = 0.5 / float(self._setup.ratio) + 1e-6
+        for repair in self._repairs:
+            for gap in repair.gaps[segment]:
+                a, b = np.searchsorted(at, [gap.start - reach, gap.stop - 1 + reach])
+                if b > a:
+                    marked[repair.columns, a:b] = True
+        return marked
+
+    def _segment_at(self, sample: int) -> int:
+        segments = self._setup.facts.segments
+        return next(i for i, (_, hi) in enumerate(segments) if sample < hi or i == len(segments) - 1)
+
+    def _low_block_size(self) -> int:
+        if self._decimator is None:
+            return BLOCK_SAMPLES
+        return max(1, BLOCK_SAMPLES // self._decimator.advance) * self._decimator.block
+
+    def _low(self, segment: int, start: int, stop: int) -> Samples:
+        """Decimated volts, shape (n_used, stop - start), of output samples within the segment."""
+        return self._joined(self._low_blocks, self._low_size, self._low_block, segment, start, stop)
+
+    def _low_block(self, segment: int, block: int) -> Samples:
+        """One block of the grid; what lies outside the segment is left undefined."""
+        lo, hi = self.output_span(segment)
+        first = block * self._low_size
+        start, stop = max(lo, first), min(hi, first + self._low_size)
+        volts = np.zeros((self._setup.used.size, self._low_size), self._setup.work)
+        if self._decimator is None:
+            stored = self.repaired(start, stop)
+        else:
+            banded_first = start // self._decimator.block
+            n_blocks = -(-stop // self._decimator.block) - banded_first
+            segment_lo, segment_hi = self._setup.facts.segments[segment]
+            x = _mirrored(
+                lambda a, b: self.repaired(a, b).T,
+                segment_lo,
+                segment_hi,
+                *self._decimator.span(banded_first, n_blocks),
+                self._decimator.margin,
+            )
+            skipped = start - banded_first * self._decimator.block
+            y = self._decimator.run(np.ascontiguousarray(x.T), n_blocks)
+            stored = y[skipped : skipped + stop - start]
+        np.multiply(stored.T, self._scale, out=volts[:, start - first : stop - first])
+        return volts
+
+    def _from_blocks(self, segment: int, start: int, stop: int) -> Samples:
+        return self._joined(self._band_blocks, self._band_size, self._band_block, segment, start, stop)
+
+    def _band_block(self, segment: int, block: int) -> Samples:
+        lo, hi = self.output_span(segment)
+        first = block * self._band_size
+        if self._fft is None:
+            x = self._low(segment, max(lo, first), min(hi, first + self._band_size))
+            filtered = np.zeros((x.shape[0], self._band_size), x.dtype)
+            filtered[:, max(lo, first) - first : min(hi, first + self._band_size) - first] = x
+        else:
+            margin = self._fft.margin
+            filtered = self._fft.run(
+                _mirrored(
+                    lambda a, b: self._low(segment, a, b),
+                    lo,
+                    hi,
+                    first - margin,
+                    first + self._band_size + margin,
+                    margin,
+                )
+            )
+        return self._referenced(filtered)
+
+    def _referenced(self, volts: Samples) -> Samples:
+        """Put offsets back where no high-pass removed them, then subtract the reference."""
+        setup = self._setup
+        if setup.work == np.float32 and not setup.highpass_on:
+            volts = volts + (self._estimates.offset * setup.scale_v).astype(setup.work)[:, None]
+        if setup.restored:
+            volts = np.concatenate([volts, np.zeros((1, volts.shape[1]), volts.dtype)])
+        if setup.reference_from.any():
+            mean = volts[setup.reference_from].mean(axis=0)
+            volts[setup.reference_to] -= mean
+        return volts
+
+    @staticmethod
+    def _joined(
+        recent: _Recent,
+        size: int,
+        make: Callable[[int, int], Samples],
+        segment: int,
+        start: int,
+        stop: int,
+    ) -> Samples:
+        """Put a stretch together from blocks of a grid."""
+        pieces = []
+        for block in range(start // size, -(-stop // size)):
+            whole = recent.get((segment, block), make)
+            first = block * size
+            pieces.append(whole[:, max(0, start - first) : min(size, stop - first)])
+        return pieces[0] if len(pieces) == 1 else np.concatenate(pieces, axis=1)
+
+
+@dataclass(frozen=True)
+class _Repair:
+    """The gaps of one group of channels, by segment, and what fills them."""
+
+    columns: NDArray[np.intp]
+    gaps: list[list[Gap]]
+    filler: Filler | None
+
+    def fill(self, x: Samples, origin: int, gap: Gap) -> None:
+        if self.filler is None:
+            x[gap.start - origin : gap.stop - origin, self.columns] = 0.0
+        else:
+            self.filler.fill(x, origin, gap)
+
+
+def _repairs(setup: Setup, estimates: Estimates) -> list[_Repair]:
+    repairs = []
+    for group in setup.groups:
+        everyone = group.columns.size == setup.used.size
+        filler = None
+        if setup.fill is not Fill.LEAVE:
+            known = estimates.autocovariance
+            config = FillConfig(
+                kind=setup.fill,
+                side=setup.side,
+                flank=setup.flank,
+                rate_hz=setup.facts.rate_hz,
+                autocovariance=None if known is None else known[group.columns],
+            )
+            filler = Filler(config, setup.used.size, setup.work, None if everyone else group.columns)
+        gaps = [setup.lay(group, estimates.onsets, segment) for segment in setup.facts.segments]
+        repairs.append(_Repair(group.columns, gaps, filler))
+    return repairs
+
+
+class _Recent:
+    """The blocks used last, so that neighbours need not be computed again."""
+
+    def __init__(self, most: int) -> None:
+        self._most = most
+        self._blocks: OrderedDict[tuple[int, int], Samples] = OrderedDict()
+
+    def get(self, key: tuple[int, int], make: Callable[[int, int], Samples]) -> Samples:
+        if key in self._blocks:
+            self._blocks.move_to_end(key)
+        else:
+            while len(self._blocks) >= self._most:
+                self._blocks.popitem(last=False)
+            self._blocks[key] = make(*key)
+        return self._blocks[key]
+
+
+def _mirrored(
+    get: Callable[[int, int], Samples], lo: int, hi: int, start: int, stop: int, reach: int
+) -> Samples:
+    """Get samples [start, stop) of a signal known on [lo, hi): mirrored oddly beyond.
+
+    Parameters
+    ----------
+    get : callable
+        Gives samples [a, b) within [lo, hi), shape (n_channels, b - a).
+    lo, hi : int
+        Where the signal is known.
+    start, stop : int
+        What is asked for.
+    reach : int
+        How far beyond an end samples are mirrored; further out they are zero because nothing rests on them.
+
+    Returns
+    -------
+    array, shape (n_channels, stop - start)
+    """
+    before = min(max(0, lo - start), reach)
+    after = min(max(0, stop - hi), reach)
+    if not before and not after and start >= lo and stop <= hi:
+        return get(start, stop)
+    first, last = max(lo, min(start, hi - 1 - after)), min(hi, max(stop, lo + 1 + before))
+    known = get(first, last)
+    # Where the whole signal is shorter than the mirror reaches, numpy mirrors again at the other end.
+    padded = np.pad(known, ((0, 0), (before, after)), mode="reflect", reflect_type="odd")
+    origin = first - before
+    x = np.zeros((known.shape[0], stop - start), known.dtype)
+    a, b = max(start, origin), min(stop, origin + padded.shape[1])
+    if b > a:
+        x[:, a - start : b - start] = padded[:, a - origin : b - origin]
+    return x
+
+
+@cache
+def _delay(part: float, dtype: str) -> BandedFilter:
+    return banded(fractional_delay(part, DELAY_HALF)[::-1], Fraction(1), dtype, least_block=64)
+
+
+@cache
+def _one_blas_thread() -> None:
+    """Keep matrix products to one thread in the whole process: here workers are what runs in parallel."""
+    threadpoolctl.threadpool_limits(1)
+
+
+def _ceil(x: Fraction) -> int:
+    return -(-x.numerator // x.denominator)
+
+
+def _floor(x: Fraction) -> int:
+    return x.numerator // x.denominator

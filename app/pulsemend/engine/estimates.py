@@ -1,0 +1,123 @@
+"""What the engine learned from one recording before it changes a sample."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from dataclasses import asdict, dataclass, field
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pulsemend import DATA_VERSION
+from pulsemend.errors import SetError
+from pulsemend.model.epochs import Pulse
+from pulsemend.model.vocabulary import PulseState
+
+SCHEMA = 1
+
+
+@dataclass(frozen=True)
+class Estimates:
+    """Frozen result of a fit.
+
+    Parameters
+    ----------
+    offset : array, shape (n_used,)
+        Constant offset of every used channel, in stored units. Zeros where nothing is subtracted.
+    pulses : tuple of Pulse
+        Every pulse that is repaired, in order of time.
+    usual_steepness : float
+        Median over pulse-free signal of the steepness that onsets are judged by, in volts per sample.
+    autocovariance : array, shape (n_used, n_lags), or None
+        In volts squared; None where the fill does not need it.
+    unmarked : tuple of int
+        Recorded samples of pulse-like events, looked for only where no pulse is known.
+    notes : tuple of str
+        What the fit had to decide, one sentence each.
+    rests_on : mapping of str to str
+        For each of the above a hash of the settings it was learned with.
+    """
+
+    offset: NDArray[np.float64]
+    pulses: tuple[Pulse, ...]
+    usual_steepness: float
+    autocovariance: NDArray[np.float64] | None = None
+    unmarked: tuple[int, ...] = ()
+    notes: tuple[str, ...] = ()
+    rests_on: dict[str, str] = field(default_factory=dict)
+
+    @property
+    def onsets(self) -> tuple[int, ...]:
+        """Recorded samples of the pulses' onsets."""
+        return tuple(pulse.sample for pulse in self.pulses)
+
+    def save(self, path: Path) -> None:
+        """Write the estimates as HDF5."""
+        import h5py
+
+        with h5py.File(path, "w") as file:
+            file.attrs["schema"] = SCHEMA
+            file.attrs["usual_steepness"] = self.usual_steepness
+            file.attrs["rests_on"] = json.dumps(self.rests_on, sort_keys=True)
+            file.attrs["notes"] = json.dumps(self.notes)
+            file["offset"] = self.offset
+            file["unmarked"] = np.array(self.unmarked, dtype=np.int64)
+            file["pulses/sample"] = np.array(self.onsets, dtype=np.int64)
+            marked = [np.nan if p.marked is None else p.marked for p in self.pulses]
+            file["pulses/marked"] = np.array(marked, dtype=np.float64)
+            states = [p.state.value for p in self.pulses]
+            file.create_dataset("pulses/state", data=states, dtype=h5py.string_dtype(), shape=(len(states),))
+            if self.autocovariance is not None:
+                file["autocovariance"] = self.autocovariance
+
+    @classmethod
+    def load(cls, path: Path) -> Estimates:
+        """Read estimates written by `save`.
+
+        Raises
+        ------
+        SetError
+            The file is none, or of another schema.
+        """
+        import h5py
+
+        try:
+            with h5py.File(path, "r") as file:
+                if file.attrs["schema"] != SCHEMA:
+                    raise SetError("estimates of another version", where=path.name)
+                pulses = tuple(
+                    Pulse(int(sample), None if np.isnan(marked) else float(marked), PulseState(state))
+                    for sample, marked, state in zip(
+                        file["pulses/sample"][()],
+                        file["pulses/marked"][()],
+                        file["pulses/state"].asstr()[()],
+                        strict=True,
+                    )
+                )
+                return cls(
+                    offset=file["offset"][()],
+                    pulses=pulses,
+                    usual_steepness=float(file.attrs["usual_steepness"]),
+                    autocovariance=file["autocovariance"][()] if "autocovariance" in file else None,
+                    unmarked=tuple(int(n) for n in file["unmarked"][()]),
+                    notes=tuple(json.loads(file.attrs["notes"])),
+                    rests_on=json.loads(file.attrs["rests_on"]),
+                )
+        except (OSError, KeyError, ValueError) as error:
+            raise SetError(f"no estimates can be read from it ({error})", where=path.name) from error
+
+
+def basis(*parts: object) -> str:
+    """Hash of the settings an estimate rests on: anything that JSON, or a dataclass's fields, can show."""
+    text = json.dumps([DATA_VERSION, *parts], sort_keys=True, default=_plain)
+    return hashlib.sha256(text.encode()).hexdigest()
+
+
+def _plain(value: object) -> object:
+    if hasattr(value, "__dataclass_fields__"):
+        return asdict(value)  # type: ignore[call-overload]
+    if isinstance(value, np.ndarray):
+        return value.tolist()
+    return str(value)
