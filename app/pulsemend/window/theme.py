@@ -1,7 +1,7 @@
-"""The colours of the window, light and dark. Meaning never rests on colour alone: each role has a shape too.
+"""The colours of the window, light and dark. Each role has a shape too, so meaning never rests on colour.
 
-Role colours are from the palette of Okabe and Ito (2008), darkened or lightened for contrast where text or thin
-lines need it.
+Role colours are from the palette of Okabe and Ito (2008), darkened or lightened for contrast where text or
+thin lines need it.
 """
 
 from __future__ import annotations
@@ -40,9 +40,9 @@ _ROLES = {
 class Theme:
     """One set of colours, as ``#rrggbb``.
 
-    ``window`` lies behind everything, ``panel`` behind cards and traces, ``line`` is a border, ``accent`` marks
-    what is chosen, ``attention`` what needs a look. ``trace_recorded`` is the signal as recorded where it is
-    shown behind the repaired one.
+    ``window`` lies behind everything, ``panel`` behind cards and traces, ``line`` is a border, ``accent``
+    marks what is chosen, ``attention`` what needs a look. ``trace_recorded`` is the signal as recorded where
+    it is shown behind the repaired one.
     """
 
     name: str
