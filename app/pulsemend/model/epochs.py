@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
@@ -30,6 +31,17 @@ FIXED_COLUMNS = (
     "detail",
 )
 """Columns of a set and its ledger that no label column may be called."""
+
+
+def nearest_sample(sample: float) -> int:
+    """Whole sample nearest to an instant that may lie between samples; halves go up.
+
+    Parameters
+    ----------
+    sample : float
+        Recorded sample, from 0.
+    """
+    return math.floor(sample + 0.5)
 
 
 @dataclass(frozen=True)
