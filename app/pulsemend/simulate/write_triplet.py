@@ -45,26 +45,41 @@ class TripletFormat:
     comment: str = ""
 
 
+@dataclass(frozen=True)
+class TripletPaths:
+    """Where the three files are written; the stem is what header and markers call them by."""
+
+    header: Path
+    markers: Path
+    samples: Path
+    stem: str
+
+    @classmethod
+    def beside(cls, header: Path) -> Self:
+        """Name the files of a header (.vhdr) by its own stem."""
+        return cls(header, header.with_suffix(".vmrk"), header.with_suffix(".eeg"), header.stem)
+
+
 class TripletWriter:
     """Writes the three files; used as a context manager.
 
-    Samples go straight to ``STEM.eeg``; header and markers follow when the context is left without an error.
+    Samples go straight to their file; header and markers follow when the context is left without an error.
 
     Parameters
     ----------
-    header : Path
-        The .vhdr file; the others stand beside it under the same stem.
+    paths : TripletPaths
+        Where to.
     form : TripletFormat
         What the header says.
     markers : sequence of Marker
         In order of time, with whole samples.
     """
 
-    def __init__(self, header: Path, form: TripletFormat, markers: Sequence[Marker]) -> None:
-        self._header = header
+    def __init__(self, paths: TripletPaths, form: TripletFormat, markers: Sequence[Marker]) -> None:
+        self._paths = paths
         self._form = form
         self._markers = markers
-        self._samples = header.with_suffix(".eeg").open("wb")
+        self._samples = paths.samples.open("wb")
 
     def write(self, block: NDArray[np.int16] | NDArray[np.float32]) -> None:
         """Append stored numbers, shape (n_samples, n_channels).
@@ -90,9 +105,9 @@ class TripletWriter:
     ) -> None:
         self._samples.close()
         if kind is None:
-            stem = self._header.stem
-            _write_text(self._header, header_text(stem, self._form))
-            _write_text(self._header.with_suffix(".vmrk"), marker_text(stem, self._markers))
+            stem = self._paths.stem
+            self._paths.header.write_bytes(header_text(stem, self._form).encode())
+            self._paths.markers.write_bytes(marker_text(stem, self._markers).encode())
 
 
 def header_text(stem: str, form: TripletFormat) -> str:
@@ -146,8 +161,3 @@ def marker_text(stem: str, markers: Sequence[Marker]) -> str:
 
 def _escaped(text: str) -> str:
     return text.replace(",", r"\1")
-
-
-def _write_text(path: Path, text: str) -> None:
-    # The same bytes on every system.
-    path.write_bytes(text.encode("utf-8"))
