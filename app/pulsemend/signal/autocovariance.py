@@ -70,23 +70,25 @@ class AutocovarianceSum:
         if size > len(x):
             return
         self._n_samples += len(x)
-        n_segments = 1 + -(-2 * (len(x) - size) // size)
-        taper = np.sin(np.pi * (np.arange(size) + 0.5) / size) * np.sqrt(2.0 / size)
+        n_segments = -(-len(x) // size)
+        taper = (np.sin(np.pi * (np.arange(size) + 0.5) / size) * np.sqrt(2.0 / size)).astype(np.float32)
         for start in np.linspace(0, len(x) - size, n_segments).astype(int):
             self._add_segment(x[start : start + size], taper)
 
-    def _add_segment(self, segment: NDArray[Any], taper: NDArray[np.float64]) -> None:
+    def _add_segment(self, segment: NDArray[Any], taper: NDArray[np.float32]) -> None:
         n_points = fft.next_fast_len(len(segment) + self._n_lags, real=True)
         if n_points not in self._power:
             self._power[n_points] = np.zeros((self._n_channels, n_points // 2 + 1))
         power = self._power[n_points]
         for first in range(0, self._n_channels, _CHANNELS_AT_A_TIME):
-            channels = slice(first, first + _CHANNELS_AT_A_TIME)
-            rows = segment[:, channels].T.astype(np.float64, order="C")
-            rows -= rows.mean(axis=1, keepdims=True)
-            rows *= taper
-            spectrum = fft.rfft(rows, n_points, axis=1)
-            power[channels] += len(segment) * (spectrum.real**2 + spectrum.imag**2)
+            rows = segment[:, first : first + _CHANNELS_AT_A_TIME].T.copy()
+            # Once the mean is gone single precision is ample: its noise lies 140 dB below the signal.
+            rows -= rows.mean(axis=1, keepdims=True, dtype=np.float64)
+            spectrum = fft.rfft(rows.astype(np.float32, copy=False) * taper, n_points, axis=1)
+            of_segment = spectrum.real**2
+            of_segment += spectrum.imag**2
+            of_segment *= len(segment)
+            power[first : first + _CHANNELS_AT_A_TIME] += of_segment
         self._weight += len(segment)
 
     def result(self) -> NDArray[np.float64]:
