@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
@@ -36,6 +36,16 @@ def pytest_pycollect_makemodule(module_path: Path, parent: pytest.Collector) -> 
     if QT_PROBLEM and module_path.parent.name == "window":
         return _NoQt.from_parent(parent, path=module_path)
     return None
+
+
+@pytest.fixture(scope="session")
+def share() -> Callable[[int], int]:
+    """For slow tests: how many of so many draws to make.
+
+    All by default; ``PULSEMEND_SLOW_SHARE=0.1`` makes a tenth (at least one), as continuous integration does.
+    """
+    part = float(os.environ.get("PULSEMEND_SLOW_SHARE", "1"))
+    return lambda count: max(1, round(count * part))
 
 
 @pytest.fixture(autouse=True, scope="session")

@@ -59,7 +59,3 @@ def test_no_claim_that_must_not_be_made(path: Path) -> None:
 )
 def test_such_a_claim_would_be_found(claim: str) -> None:
     assert CLAIMS.search(claim)
-
-
-def test_readme_names_no_origin_from_memory() -> None:
-    assert "memory" not in readme().replace("memory task", "")
