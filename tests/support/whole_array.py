@@ -39,4 +39,4 @@ def chain(
         y = odd_ends(y, antialias)[:, phase % step :: step]
     if band is not None:
         y = odd_ends(y, band)
-    return y - y.mean(axis=0)
+    return np.asarray(y - y.mean(axis=0))
