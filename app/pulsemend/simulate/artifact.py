@@ -56,7 +56,7 @@ class Artifacts:
 
     Parameters
     ----------
-    shapes : dict of str to array, shape (8, n_samples, n_channels)
+    shapes : dict of str to array, shape (8, n_channels, n_samples)
         Volts, by kind and phase.
     hits : tuple of Hit
     decay_v, decay_tau_s : array, shape (n_channels,)
@@ -73,18 +73,18 @@ class Artifacts:
 
         Parameters
         ----------
-        volts : array, shape (n_samples, n_channels)
+        volts : array, shape (n_channels, n_samples)
             The block.
         start : int
             Absolute number of the block's first sample.
         """
-        stop = start + len(volts)
+        stop = start + volts.shape[1]
         for hit in self.hits:
             first = -(-hit.onset_fine // FINE)
             shape = self.shapes[hit.kind][first * FINE - hit.onset_fine]
-            a, b = max(first, start), min(first + len(shape), stop)
+            a, b = max(first, start), min(first + shape.shape[1], stop)
             if a < b:
-                volts[a - start : b - start] += hit.size * shape[a - first : b - first]
+                volts[:, a - start : b - start] += hit.size * shape[:, a - first : b - first]
 
 
 def amplifier(rate_hz: float, grid: int = 1) -> NDArray[np.float64]:
@@ -142,11 +142,11 @@ def make_artifacts(
     sections = amplifier(rate_hz, FINE)
     t = np.arange(round(SHORT_S * fine_hz)) / fine_hz
     long = np.arange(round(DECAY_S * fine_hz)) / fine_hz
-    burst = _spike(t)[:, None] * spike_v + _muscle(t)[:, None] * muscle_v
+    burst = spike_v[:, None] * _spike(t) + muscle_v[:, None] * _muscle(t)
     shapes = {
         "spike": _sampled(burst, sections),
-        "decay": _sampled(_decay(long[:, None], decay_v, tau_s), sections),
-        "recharge": _sampled(_lobe(t)[:, None] * recharge_v, sections),
+        "decay": _sampled(_decay(long, decay_v[:, None], tau_s[:, None]), sections),
+        "recharge": _sampled(recharge_v[:, None] * _lobe(t), sections),
     }
     return Artifacts(shapes, _hits(rng, schedule, rate_hz, size), decay_v, tau_s)
 
@@ -189,7 +189,7 @@ def _decay(
 
 
 def _sampled(fine: NDArray[np.float64], sections: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Low-pass (n_fine, n_channels) and deal it out to the eight phases."""
-    n = len(fine) // FINE
-    passed = np.asarray(signal.sosfilt(sections, fine[: n * FINE], axis=0))
-    return np.ascontiguousarray(passed.reshape(n, FINE, -1).transpose(1, 0, 2))
+    """Low-pass (n_channels, n_fine) and deal it out to the eight phases."""
+    n = fine.shape[1] // FINE
+    passed = np.asarray(signal.sosfilt(sections, fine[:, : n * FINE], axis=1))
+    return np.ascontiguousarray(passed.reshape(len(fine), n, FINE).transpose(2, 0, 1))

@@ -12,6 +12,7 @@ from enum import IntEnum
 
 import numpy as np
 from numpy.typing import NDArray
+from threadpoolctl import ThreadpoolController
 
 from pulsemend.model.recording import Marker
 from pulsemend.simulate import background
@@ -283,6 +284,7 @@ def _cells(lantern: Lantern) -> Iterator[tuple[NDArray[np.int16], NDArray[np.flo
     activity = Noise(
         _rng(spec, _Part.ACTIVITY), background.N_PATCHES, background.activity_filter(spec.rate_hz)
     )
+    blas = ThreadpoolController()
     sensors = Noise(_rng(spec, _Part.SENSORS), len(spec.channels), amplifier(spec.rate_hz))
     for _ in range(round(background.WARM_UP_S / CELL_S)):
         activity.draw(n_cell)
@@ -290,16 +292,18 @@ def _cells(lantern: Lantern) -> Iterator[tuple[NDArray[np.int16], NDArray[np.flo
         # The last cell is drawn whole, too: sums of the same shape round the same way.
         times_s = np.arange(start, start + n_cell) / spec.rate_hz
         rows = np.concatenate([activity.draw(n_cell), _caused(lantern, times_s)])
-        clean = rows.T @ lantern.source_maps
-        clean += lantern.offset_v
-        clean += (sensors.draw(n_cell) * lantern.sensor_v[:, None]).T
-        clean = clean[: lantern.n_samples - start]
+        # So small a product gains nothing from threads, and without them it always rounds the same way.
+        with blas.limit(limits=1, user_api="blas"):
+            clean = lantern.source_maps.T @ rows
+        clean += lantern.offset_v[:, None]
+        clean += sensors.draw(n_cell) * lantern.sensor_v[:, None]
+        clean = clean[:, : lantern.n_samples - start]
         volts = clean.copy()
         lantern.artifacts.add_to(volts, start)
         volts /= lantern.scale_v
         np.rint(volts, out=volts)
         np.clip(volts, -RAIL, RAIL, out=volts)
-        yield volts.astype(np.int16), clean
+        yield np.ascontiguousarray(volts.astype(np.int16).T), clean.T
 
 
 def _caused(lantern: Lantern, times_s: NDArray[np.float64]) -> NDArray[np.float64]:

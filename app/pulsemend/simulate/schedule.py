@@ -15,7 +15,7 @@ from pulsemend.model.recording import Marker
 
 Span = tuple[float, float]
 
-LEAD_S = 2.0  # recording before the first dot and after the last pause
+LEAD_S = 1.0  # recording before the first dot and after the last pause
 DOT_TO_LANTERNS_S: Span = (1.3, 1.7)
 LANTERNS_TO_ARROW_S: Span = (1.2, 1.6)
 ARROW_TO_PULSE_S: Span = (1.7, 2.4)

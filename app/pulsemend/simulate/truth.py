@@ -89,8 +89,8 @@ def truth_arrays(lantern: Lantern) -> bytes:
     """Make the truth's arrays, as an uncompressed .npz file.
 
     ``channels``, ``source_names``, ``source_maps`` (source, channel; against FCz), ``offset_v``, ``sensor_v``
-    (channel), ``times_s`` and for every kind of event ``evoked_<kind>`` (place, time): the volts that the maps
-    of the sources named in ``places`` are multiplied with.
+    (channel), ``times_s`` and for every kind of event ``evoked_<kind>`` (place, time): the volts that the
+    maps of the sources named in ``places`` are multiplied with.
     """
     rate_hz = lantern.spec.rate_hz
     times_s = np.arange(round(LENGTH_S * rate_hz)) / rate_hz
