@@ -29,6 +29,7 @@ from support.engine_cases import (
     coloured,
     make_chain,
     plan,
+    read_epoch,
     with_pulses,
 )
 from support.whole_array import chain as whole_array_chain
@@ -57,7 +58,7 @@ def test_equals_whole_array_reference(
         reference = whole_array_chain(
             recording.stored * STEP_V, SPANS, setup.antialias, setup.band, 5, phase=anchor
         )
-        epoch = chain.epoch(anchor, -0.3, 1000)
+        epoch = read_epoch(chain, anchor, -0.3, 1000)
         first = anchor // 5 - 300
         error_uv = v_to_uv(np.abs(epoch.data - reference[:, first : first + 1000]).max())
         # On the grid, double precision is exact; between two output samples the delay filter's error remains.
@@ -109,7 +110,7 @@ def test_preview_equals_export(recording: ArrayRecording) -> None:
     rng = np.random.default_rng(5)
     anchors = [0, 5, 6999 // 5 * 5, 15_000, 32_100, N_SAMPLES - 500, *(5 * rng.integers(0, 11_900, 30))]
     for anchor in sorted(anchors):
-        written = export.epoch(float(anchor), 0.0, 100).data
+        written = read_epoch(export, float(anchor), 0.0, 100).data
         first = int(anchor) // 5
         lo = max(0, first - int(rng.integers(0, 700)))
         shown = preview.stretch(0, lo, min(N_SAMPLES // 5, first + 300))
@@ -139,7 +140,7 @@ def test_anchor_is_time_zero_to_ten_microseconds(rate_hz: int) -> None:
         4.5 * rate_hz + 0.37,
     ):
         n_times = round(out_hz)
-        data = chain.epoch(float(anchor), 0.0, n_times).data.astype(np.float64)
+        data = read_epoch(chain, float(anchor), 0.0, n_times).data.astype(np.float64)
         time_s = np.arange(n_times) / out_hz
         wanted = 2 * np.pi * tones_hz * anchor / rate_hz
         measured = np.angle(np.sum(data * np.exp(-2j * np.pi * tones_hz[:, None] * time_s), axis=1))
@@ -176,7 +177,7 @@ def test_nothing_to_do_returns_the_recording(precision: Precision) -> None:
         plan(pulses=NO_PULSES, filter=UNTOUCHED, reference="as recorded", precision=precision),
     )
     volts = stored * STEP_V
-    epoch = chain.epoch(3000.4, -0.1, 5000)
+    epoch = read_epoch(chain, 3000.4, -0.1, 5000)
     expected = volts[:, 2500:7500]
     np.testing.assert_array_equal(
         epoch.data, expected if precision is Precision.DOUBLE else expected.astype("f4")
@@ -188,7 +189,7 @@ def test_nothing_to_do_returns_the_recording(precision: Precision) -> None:
 
 def test_offset_comes_back_without_a_highpass(recording: ArrayRecording) -> None:
     chain = make_chain(recording, plan(filter=Filter(0.0, 100.0, 1000.0), reference="as recorded"))
-    data = chain.epoch(25_000, 0.0, 1000).data
+    data = read_epoch(chain, 25_000, 0.0, 1000).data
     means_uv = v_to_uv(data.astype(np.float64).mean(axis=1))
     expected_uv = v_to_uv(recording.stored[:, 25_000:30_000].mean(axis=1) * STEP_V)
     np.testing.assert_allclose(means_uv, expected_uv, atol=1.0)
@@ -206,7 +207,7 @@ def test_replaced_follows_the_gap_of_each_channel(recording: ArrayRecording) -> 
     chain = make_chain(recording, plan(pulses=pulses))
     onset = 15_001
     for anchor in (float(onset), onset - 2.0, onset + 1.0):
-        epoch = chain.epoch(anchor, -0.1, 500)
+        epoch = read_epoch(chain, anchor, -0.1, 500)
         recorded = np.zeros((6, N_SAMPLES), dtype=bool)
         for channel in range(6):
             for window in ((-0.002, 0.025 if channel == 1 else 0.014), (0.248, 0.254)):
@@ -221,7 +222,7 @@ def test_replaced_follows_the_gap_of_each_channel(recording: ArrayRecording) -> 
 
 def test_leave_is_nan_where_replaced_and_only_there(recording: ArrayRecording) -> None:
     chain = make_chain(recording, plan(pulses=Pulses(window_ms=(-2.0, 14.0), fill=Fill.LEAVE)))
-    epoch = chain.epoch(15_001, -0.1, 500)
+    epoch = read_epoch(chain, 15_001, -0.1, 500)
     np.testing.assert_array_equal(np.isnan(epoch.data), epoch.replaced)
     assert epoch.replaced.any()
 
@@ -279,14 +280,16 @@ def test_reference_with_the_recorded_one_put_back() -> None:
     recording = ArrayRecording(stored, 1000.0)
     untouched = plan(pulses=NO_PULSES, filter=UNTOUCHED, precision=Precision.DOUBLE)
     plain = make_chain(recording, untouched)
-    assert np.round(v_to_uv(plain.epoch(100, 0.0, 1).data[:, 0]), 9).tolist() == [-2.0, -1.0, 0.0, 3.0]
+    assert np.round(v_to_uv(read_epoch(plain, 100, 0.0, 1).data[:, 0]), 9).tolist() == [-2.0, -1.0, 0.0, 3.0]
     channels = replace(untouched.channels, recorded_reference="Cz")
     restored = make_chain(recording, replace(untouched, channels=channels))
     assert restored.setup.names[-1] == "Cz"
-    data = v_to_uv(restored.epoch(100, 0.0, 1).data[:, 0])
+    data = v_to_uv(read_epoch(restored, 100, 0.0, 1).data[:, 0])
     np.testing.assert_allclose(data, [-1.4, -0.4, 0.6, 3.6, -2.4], atol=1e-9)
     bad = make_chain(recording, replace(untouched, channels=replace(untouched.channels, bad=("E4",))))
-    np.testing.assert_allclose(v_to_uv(bad.epoch(100, 0.0, 1).data[:, 0]), [-1.0, 0.0, 1.0, 4.0], atol=1e-9)
+    np.testing.assert_allclose(
+        v_to_uv(read_epoch(bad, 100, 0.0, 1).data[:, 0]), [-1.0, 0.0, 1.0, 4.0], atol=1e-9
+    )
 
 
 _HASH = """
@@ -317,6 +320,6 @@ def test_threads_and_workers_change_nothing(recording: ArrayRecording) -> None:
 
     def epochs(which: list[int]) -> list[str]:
         chain = make_chain(recording, the_plan)
-        return [hashlib.sha256(chain.epoch(a, 0.0, 1000).data.tobytes()).hexdigest() for a in which]
+        return [hashlib.sha256(read_epoch(chain, a, 0.0, 1000).data.tobytes()).hexdigest() for a in which]
 
     assert epochs(anchors) == epochs(anchors[:2]) + epochs(anchors[2:])

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -127,3 +127,19 @@ def make_chain(recording: Recording, a_plan: Plan, marks: Marks = NO_MARKS) -> C
     """Bind, fit and build."""
     setup = bind(recording.facts, a_plan, marks)
     return Chain(recording, setup, finish(fit(recording, setup)))
+
+
+@dataclass(frozen=True)
+class EpochSamples:
+    """One epoch, as the tests look at it."""
+
+    data: NDArray[Any]
+    replaced: NDArray[np.bool_]
+    shift_s: float
+    remainder_s: float
+
+
+def read_epoch(chain: Chain, anchor_sample: float, start_s: float, n_times: int) -> EpochSamples:
+    """Cut and read one epoch."""
+    cut = chain.cut(anchor_sample, start_s, n_times)
+    return EpochSamples(chain.samples(cut), chain.replaced(cut), cut.shift_s, cut.remainder_s)

@@ -23,8 +23,9 @@ import threadpoolctl
 from numpy.typing import NDArray
 
 from pulsemend.engine.estimates import Estimates
-from pulsemend.engine.fit import read_stored
+from pulsemend.engine.reading import read_stored
 from pulsemend.engine.setup import Setup
+from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.recording import Recording
 from pulsemend.model.vocabulary import Fill
 from pulsemend.signal.apply_fir import BandedFilter, FftFilter, banded
@@ -43,22 +44,27 @@ WHOLE_SHIFT = 1e-9
 
 
 @dataclass(frozen=True)
-class EpochSamples:
-    """One epoch as it is written.
+class Cut:
+    """Where one epoch lies on the output grid.
 
     Parameters
     ----------
-    data : array, shape (n_channels, n_times)
-        Volts.
-    replaced : bool array, shape (n_channels, n_times)
+    segment : int
+        Place in the facts' segments.
+    first, n_times : int
+        First output sample and number of output samples.
+    part : float
+        How much later than the grid the epoch's samples are, as a part of an output sample.
     shift_s : float
-        How far the signal was shifted, less than an output period, to put the anchor exactly at time zero.
+        The same in seconds: the signal is shifted by it, so that the anchor is exactly at time zero.
     remainder_s : float
         Anchor minus the instant taken as time zero. Zero unless the recorded rate is kept.
     """
 
-    data: Samples
-    replaced: NDArray[np.bool_]
+    segment: int
+    first: int
+    n_times: int
+    part: float
     shift_s: float
     remainder_s: float
 
@@ -153,8 +159,8 @@ class Chain:
         lo, hi = self.output_span(segment)
         return _mirrored(lambda a, b: self._from_blocks(segment, a, b), lo, hi, start, stop, stop - start)
 
-    def epoch(self, anchor_sample: float, start_s: float, n_times: int) -> EpochSamples:
-        """Cut one epoch.
+    def cut(self, anchor_sample: float, start_s: float, n_times: int) -> Cut:
+        """Lay an epoch onto the output grid.
 
         Parameters
         ----------
@@ -166,48 +172,56 @@ class Chain:
             Output samples.
         """
         setup = self._setup
-        ratio = setup.ratio
+        ratio, recorded_hz = setup.ratio, setup.facts.rate_hz
         begin = round(start_s * setup.rate_hz)
+        at = anchor_sample * ratio.numerator / ratio.denominator
+        nearest = nearest_sample(at)
+        middle = anchor_sample + (begin + n_times // 2) / float(ratio)
+        part = at - nearest
+        remainder_s = 0.0
         if ratio == 1:
-            first, part = round(anchor_sample) + begin, 0.0
-            remainder_s = (anchor_sample - round(anchor_sample)) / setup.facts.rate_hz
-        else:
-            at = anchor_sample * ratio.numerator / ratio.denominator
-            first, part, remainder_s = round(at) + begin, at - round(at), 0.0
-        segment = self._segment_at(round(anchor_sample + start_s * setup.facts.rate_hz))
-        if abs(part) < WHOLE_SHIFT:
-            data, part = self.stretch(segment, first, first + n_times), 0.0
-        else:
-            delay = _delay(round(part, 9), setup.work.str)
-            blocks = -(-n_times // delay.block)
+            part, remainder_s = 0.0, part / recorded_hz
+        elif abs(part) < WHOLE_SHIFT:
+            part = 0.0
+        return Cut(
+            self._segment_at(int(middle)), nearest + begin, n_times, part, part / setup.rate_hz, remainder_s
+        )
+
+    def samples(self, cut: Cut) -> Samples:
+        """Read one epoch.
+
+        Returns
+        -------
+        array, shape (n_channels, n_times)
+            Volts, in the precision of the plan; NaN where a gap was left.
+        """
+        setup = self._setup
+        if cut.part:
+            delay = _delay(round(cut.part, 9), setup.work.str)
+            blocks = -(-cut.n_times // delay.block)
             lo, hi = delay.span(0, blocks)
-            x = np.ascontiguousarray(self.stretch(segment, first + lo, first + hi).T)
-            data = delay.run(x, blocks)[:n_times].T
-        at_recorded = np.arange(n_times, dtype=np.float64) + (first + part)
-        replaced = self.replaced(segment, at_recorded / float(ratio))
+            x = np.ascontiguousarray(self.stretch(cut.segment, cut.first + lo, cut.first + hi).T)
+            data = delay.run(x, blocks)[: cut.n_times].T
+        else:
+            data = self.stretch(cut.segment, cut.first, cut.first + cut.n_times)
         data = np.array(data, dtype=setup.out, order="C")
         if setup.fill is Fill.LEAVE:
-            data[replaced] = np.nan
-        return EpochSamples(data, replaced, part / setup.rate_hz, remainder_s)
+            data[self.replaced(cut)] = np.nan
+        return data
 
-    def replaced(self, segment: int, at: NDArray[np.float64]) -> NDArray[np.bool_]:
-        """Tell which output samples rest on replaced recorded ones within half an output period.
-
-        Parameters
-        ----------
-        segment : int
-            Place in the facts' segments.
-        at : array, shape (n_times,)
-            Recorded positions of the output samples, rising.
+    def replaced(self, cut: Cut) -> NDArray[np.bool_]:
+        """Tell which samples of an epoch rest on replaced recorded ones within half an output period.
 
         Returns
         -------
         bool array, shape (n_channels, n_times)
         """
+        ratio = float(self._setup.ratio)
+        at = (np.arange(cut.n_times) + (cut.first + cut.part)) / ratio
         marked = np.zeros((len(self._setup.names), at.size), dtype=np.bool_)
-        reach = 0.5 / float(self._setup.ratio) + 1e-6
+        reach = 0.5 / ratio + 1e-6
         for repair in self._repairs:
-            for gap in repair.gaps[segment]:
+            for gap in repair.gaps[cut.segment]:
                 a, b = np.searchsorted(at, [gap.start - reach, gap.stop - 1 + reach])
                 if b > a:
                     marked[repair.columns, a:b] = True

@@ -4,21 +4,22 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend.engine.estimates import Estimates, basis
+from pulsemend.engine.reading import read_stored
+from pulsemend.engine.scan import find_pulse_like
 from pulsemend.engine.setup import ExpectedPulse, Setup
 from pulsemend.errors import InputError
-from pulsemend.model.epochs import Pulse
+from pulsemend.model.epochs import Pulse, nearest_sample
 from pulsemend.model.recording import Recording
 from pulsemend.model.vocabulary import Fill, PulseState
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.autocovariance import AutocovarianceSum
 from pulsemend.signal.fills import lags_needed
-from pulsemend.signal.find import align_onset, count_pulse_like, usual_steepness
+from pulsemend.signal.find import align_onset, usual_steepness
 from pulsemend.signal.gaps import merge_spans, window_to_samples
 
 WINDOW_S = 2.0
@@ -32,9 +33,6 @@ AFTER_PULSE_S = 0.1
 
 STEEPNESS_S = 0.25
 """Of each window as much is used for the usual steepness."""
-
-LEAST_SPACING_S = 0.05
-"""Pulse-like steps closer together are one event."""
 
 _STAGE = "learning from the recording"
 
@@ -87,7 +85,7 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         pulses.append(_align(recording, setup, expected, usual, judged))
     unmarked: tuple[int, ...] = ()
     if setup.pulses_known and not setup.pulses and judged.size:
-        unmarked = yield from _look_for_pulses(recording, setup, usual, judged)
+        unmarked = yield from find_pulse_like(recording, setup.used[judged])
     if sums is not None and not sums.n_samples:
         raise InputError(
             "no stretch free of pulses is long enough to learn the signal's autocovariance from",
@@ -104,30 +102,6 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
     )
 
 
-def read_stored(
-    recording: Recording,
-    setup: Setup,
-    start: int,
-    stop: int,
-    offset: NDArray[np.float64] | None = None,
-    dtype: type[np.floating] | np.dtype[np.floating] = np.float64,
-) -> NDArray[Any]:
-    """Read the used channels of a stretch, in stored units minus `offset` (shape (n_used,)).
-
-    Returns
-    -------
-    array, shape (stop - start, n_used), C-contiguous
-    """
-    n_channels = len(setup.facts.channels)
-    x = np.empty((stop - start, n_channels), dtype)
-    all_offsets = None
-    if offset is not None:
-        all_offsets = np.zeros(n_channels)
-        all_offsets[setup.used] = offset
-    recording.read(start, stop, x, all_offsets)
-    return x if setup.used.size == n_channels else np.ascontiguousarray(x[:, setup.used])
-
-
 def quiet_windows(setup: Setup) -> list[tuple[int, int]]:
     """Windows without pulses and bad stretches, spread evenly over the recording, as sample spans."""
     rate = setup.facts.rate_hz
@@ -135,7 +109,7 @@ def quiet_windows(setup: Setup) -> list[tuple[int, int]]:
     edges = [window_s for group in setup.groups for window_s in group.windows_s]
     first = min([setup.search_s[0], *(w[0] for w in edges)])
     last = max([0.0, *(w[1] for w in edges)]) + max(setup.search_s[1], 0.0) + AFTER_PULSE_S
-    closed += [window_to_samples(round(p.sample), (first, last), rate) for p in setup.pulses]
+    closed += [window_to_samples(nearest_sample(p.sample), (first, last), rate) for p in setup.pulses]
     length, least = round(WINDOW_S * rate), max(2, round(LEAST_WINDOW_S * rate))
     windows: list[tuple[int, int]] = []
     for start, stop in _open_stretches(setup.facts.segments, merge_spans(closed)):
@@ -196,8 +170,8 @@ def _align(
 ) -> Pulse:
     """Find a pulse's onset near its marker; it stays at the marker where the signal shows none."""
     if expected.placed is not None:
-        return Pulse(round(expected.sample), expected.marked, expected.placed)
-    near = round(expected.sample)
+        return Pulse(nearest_sample(expected.sample), expected.marked, expected.placed)
+    near = nearest_sample(expected.sample)
     rate = setup.facts.rate_hz
     lo, hi = next((s for s in setup.facts.segments if s[0] <= near < s[1]), (0, setup.facts.n_samples))
     first = max(lo, near + math.floor(setup.search_s[0] * rate) - 1)
@@ -209,23 +183,6 @@ def _align(
     if onset is None:
         return Pulse(min(max(near, 0), setup.facts.n_samples - 1), expected.marked, PulseState.MARKED_ONLY)
     return Pulse(first + 1 + onset, expected.marked, PulseState.ALIGNED)
-
-
-def _look_for_pulses(
-    recording: Recording, setup: Setup, usual: float, judged: NDArray[np.intp]
-) -> Work[tuple[int, ...]]:
-    """Read the whole recording for pulse-like events."""
-    block = max(1, 2_000_000 // len(setup.facts.channels))
-    spacing = round(LEAST_SPACING_S * setup.facts.rate_hz)
-    found: list[int] = []
-    for lo, hi in setup.facts.segments:
-        for start in range(lo, hi, block):
-            yield Progress("looking for pulses", start, setup.facts.n_samples)
-            first = max(lo, start - 1)
-            x = read_stored(recording, setup, first, min(hi, start + block))
-            events = count_pulse_like(x[:, judged] * setup.scale_v[judged], usual, spacing=spacing)
-            found += [first + int(n) for n in events if not found or first + int(n) - found[-1] >= spacing]
-    return tuple(found)
 
 
 def _rests_on(setup: Setup) -> dict[str, str]:

@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend.errors import PlanError, UnusableChannels
+from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import Plan
 from pulsemend.model.recording import Channel, RecordingFacts
@@ -236,7 +237,7 @@ def _expected_pulses(facts: RecordingFacts, plan: Plan, marks: Marks) -> tuple[E
     moved = {pulse.sample: pulse.to for pulse in marks.pulses_moved}
     expected = [ExpectedPulse(float(sample), None, PulseState.ADDED) for sample in marks.pulses_added]
     for marker in facts.markers:
-        near = round(marker.sample)
+        near = nearest_sample(marker.sample)
         if plan.role_of(marker.code) is not Role.PULSE or near in marks.pulses_removed:
             continue
         if near in moved:
