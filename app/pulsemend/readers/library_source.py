@@ -1,0 +1,234 @@
+"""What files that are read through the reader library say of themselves, before their samples are read."""
+
+from __future__ import annotations
+
+import gzip
+import math
+from collections.abc import Iterable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import IO, Any, cast
+
+import numpy as np
+
+from pulsemend.errors import DamagedRecording
+from pulsemend.model.recording import Channel
+from pulsemend.model.vocabulary import ChannelType
+from pulsemend.readers.codes import split_at_slash
+from pulsemend.readers.common import check_names, missing
+from pulsemend.readers.edf_header import EdfHeader
+from pulsemend.readers.tal import Timeline, read_timeline
+
+Found = tuple[float, str, str]
+
+_FIF_TYPES = {
+    "eeg": ChannelType.EEG,
+    "eog": ChannelType.EOG,
+    "ecg": ChannelType.ECG,
+    "emg": ChannelType.EMG,
+    "stim": ChannelType.TRIGGER,
+}
+_FIF_CHANNEL, _FIF_LAST = 203, -1  # kind of a channel's entry; link of the last entry of a file
+_JOINS = ("bad boundary", "edge boundary")
+_SKIP = "bad_acq_skip"
+_WHOLE_WITHIN = 1e-6  # samples; what a product of seconds and rate may miss a whole number by
+
+
+@dataclass(frozen=True)
+class Source:
+    """Facts of one file, still without the events of its trigger channels.
+
+    Parameters
+    ----------
+    format : str
+    rate_hz : float
+    n_samples : int
+    channels : tuple of Channel
+    found : tuple of (sample, type, text)
+        Annotations that lie inside the recording.
+    boundaries : tuple of int
+    paths : tuple of Path
+    notes : tuple of str
+    """
+
+    format: str
+    rate_hz: float
+    n_samples: int
+    channels: tuple[Channel, ...]
+    found: tuple[Found, ...]
+    boundaries: tuple[int, ...]
+    paths: tuple[Path, ...]
+    notes: tuple[str, ...]
+
+
+def edf_source(header: EdfHeader) -> Source:
+    """Describe an EDF or BDF file.
+
+    Raises
+    ------
+    DamagedRecording
+        Its annotations cannot be read.
+    """
+    timeline = read_timeline(header)
+    n_samples = header.n_records * header.per_record
+    marks = [(_sample_at(mark.onset_s, header, timeline), mark.text) for mark in timeline.annotations]
+    found, outside = _inside(marks, n_samples)
+    jumps = np.abs(np.diff(timeline.record_onsets_s) - header.record_s) * header.rate_hz > 0.5
+    boundaries = (np.flatnonzero(jumps) + 1) * header.per_record
+    pauses = [f"The recording was paused {len(boundaries)} times; nothing is joined across a pause."]
+    kind = "EDF" if header.sample_bytes == 2 else "BDF"
+    return Source(
+        format=kind + "+" if any(signal.holds_annotations for signal in header.signals) else kind,
+        rate_hz=header.rate_hz,
+        n_samples=n_samples,
+        channels=header.channels(),
+        found=found,
+        boundaries=tuple(map(int, boundaries)),
+        paths=(header.path,),
+        notes=(*header.notes, *(pauses if len(boundaries) else ()), *outside),
+    )
+
+
+def fif_source(path: Path, raw: Any) -> Source:
+    """Describe a FIF recording that the reader library has opened.
+
+    Parameters
+    ----------
+    path : Path
+        The file that was named.
+    raw : mne.io.Raw
+        The same, opened.
+
+    Raises
+    ------
+    UnusableChannels
+    """
+    rate_hz, n_samples = float(raw.info["sfreq"]), int(raw.n_times)
+    check_names(raw.ch_names, path.name)
+    channels = tuple(map(_fif_channel, raw.info["chs"], raw.get_channel_types()))
+    marks: list[tuple[float | None, str]] = []
+    boundaries: set[int] = set()
+    coarsest = 0.0
+    for entry in raw.annotations:
+        text, onset_s = str(entry["description"]), float(entry["onset"])
+        # Onsets are kept in 32 bits: a whole sample within their rounding is that sample.
+        rounding = float(np.spacing(np.float32(onset_s))) * rate_hz / 2
+        sample = _whole_if_close(onset_s * rate_hz - raw.first_samp, max(rounding, _WHOLE_WITHIN))
+        if text.lower() in (*_JOINS, _SKIP):
+            boundaries.add(round(sample))
+            if text.lower() == _SKIP:
+                boundaries.add(round(sample + float(entry["duration"]) * rate_hz))
+            continue
+        coarsest = max(coarsest, rounding)
+        marks.append((sample, text))
+    found, notes = _inside(marks, n_samples)
+    if coarsest > 0.25:
+        notes.append(f"Annotation times are rounded in the file, by up to {coarsest:.1f} samples.")
+    others = [channel.name for channel in channels if channel.type is ChannelType.MISC]
+    if others:
+        notes.append(f"Taken as misc: {', '.join(others)}.")
+    return Source(
+        format="FIF",
+        rate_hz=rate_hz,
+        n_samples=n_samples,
+        channels=channels,
+        found=found,
+        boundaries=tuple(sorted(sample for sample in boundaries if 0 < sample < n_samples)),
+        paths=tuple(map(Path, raw.filenames)),
+        notes=tuple(notes),
+    )
+
+
+def check_fif(path: Path) -> None:
+    """Follow the entries of a FIF file to its last, and look at the channel names on the way.
+
+    The reader library reads a file that was cut short as if it were whole, and renames channels that share
+    a name.
+
+    Raises
+    ------
+    MissingPart, DamagedRecording, UnusableChannels
+    """
+    names: list[str] = []
+    opener = gzip.open if path.name.lower().endswith(".gz") else open
+    try:
+        with cast("IO[bytes]", opener(path, "rb")) as file:
+            link = 0
+            while link != _FIF_LAST:
+                kind, size, link = _fif_entry(file, path)
+                content = file.read(size) if kind == _FIF_CHANNEL else b""
+                if kind == _FIF_CHANNEL:
+                    names.append(content[80:96].split(b"\0")[0].decode("latin-1"))
+                elif size:
+                    # Reading its last byte shows whether the entry is whole; seeking alone would not.
+                    file.seek(size - 1, 1)
+                    content = file.read(1)
+                if size and not content:
+                    raise _cut_short(path)
+                if link > 0:
+                    file.seek(link)
+    except (EOFError, gzip.BadGzipFile) as error:
+        raise _cut_short(path) from error
+    except OSError as error:
+        raise missing(path, error) from error
+    check_names(names, path.name)
+
+
+def _fif_entry(file: IO[bytes], path: Path) -> tuple[int, int, int]:
+    """Read the head of one entry: kind, size and link."""
+    head = file.read(16)
+    if len(head) < 16:
+        raise _cut_short(path)
+    kind, _, size, link = (int(number) for number in np.frombuffer(head, ">i4"))
+    if size < 0:
+        raise _cut_short(path)
+    return kind, size, link
+
+
+def _cut_short(path: Path) -> DamagedRecording:
+    return DamagedRecording(
+        "the file ends before its last entry", where=path.name, todo="Copy it again, or save it again"
+    )
+
+
+def _fif_channel(described: Any, kind: str) -> Channel:
+    place = np.asarray(described["loc"][:3], dtype=np.float64)
+    known = bool(np.isfinite(place).all() and place.any())
+    kind_here = _FIF_TYPES.get(kind, ChannelType.MISC)
+    return Channel(
+        name=str(described["ch_name"]),
+        type=kind_here,
+        position_m=(float(place[0]), float(place[1]), float(place[2])) if known else None,
+        unit="no unit" if kind_here in (ChannelType.TRIGGER, ChannelType.MISC) else "V",
+    )
+
+
+def _sample_at(onset_s: float, header: EdfHeader, timeline: Timeline) -> float | None:
+    """Sample at a time on the file's clock; None inside a pause."""
+    onsets_s = timeline.record_onsets_s
+    record = max(
+        int(np.searchsorted(onsets_s, onset_s + _WHOLE_WITHIN / header.rate_hz, side="right")) - 1, 0
+    )
+    inside = _whole_if_close((onset_s - float(onsets_s[record])) * header.rate_hz, _WHOLE_WITHIN)
+    last = record == header.n_records - 1
+    if inside >= header.per_record and header.interrupted and not last:
+        return None
+    return record * header.per_record + inside
+
+
+def _inside(marks: Iterable[tuple[float | None, str]], n_samples: int) -> tuple[tuple[Found, ...], list[str]]:
+    """Split annotations into those on a recorded sample and a note about the others."""
+    found: list[Found] = []
+    outside: list[str] = []
+    for sample, text in marks:
+        if sample is None or not 0 <= sample <= n_samples - 1:
+            outside.append(" ".join(text.split()))
+        else:
+            found.append((sample, *split_at_slash(text)))
+    note = f"Left out, because they lie outside the recorded samples: {', '.join(outside)}."
+    return tuple(found), [note] if outside else []
+
+
+def _whole_if_close(sample: float, within: float) -> float:
+    whole = math.floor(sample + 0.5)
+    return float(whole) if abs(sample - whole) <= within else sample

@@ -1,0 +1,174 @@
+"""EDF(+), BDF(+) and FIF files, their samples read by the reader library (mne)."""
+
+from __future__ import annotations
+
+import struct
+import zlib
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+import mne
+import numpy as np
+from numpy.typing import NDArray
+
+from pulsemend.errors import DamagedRecording, MissingPart
+from pulsemend.model.recording import FloatArray, RecordingFacts
+from pulsemend.model.vocabulary import ChannelType
+from pulsemend.readers.codes import coded
+from pulsemend.readers.common import check_finite, check_request, file_part, stem_of
+from pulsemend.readers.edf_header import EdfHeader, read_edf_header
+from pulsemend.readers.library_source import Found, Source, check_fif, edf_source, fif_source
+from pulsemend.readers.triggers import LOW_16_BITS, trigger_events
+
+_TRIGGER_BLOCK = 1 << 16  # samples per piece when a trigger channel is searched
+# What the library lets through where a file is not as it expects.
+_LIBRARY_FAULTS = (
+    ValueError, RuntimeError, OSError, LookupError, TypeError, AssertionError, EOFError, OverflowError,
+    struct.error, zlib.error,
+)  # fmt: skip
+
+
+class LibraryRecording:
+    """A recording whose samples come through the reader library, as volts.
+
+    Parameters
+    ----------
+    path : Path
+        An .edf, .bdf, .fif or .fif.gz file.
+
+    Raises
+    ------
+    MissingPart, DamagedRecording, UnusableChannels
+    """
+
+    def __init__(self, path: Path) -> None:
+        self._path = path
+        self._raw: Any = None
+        self._header: EdfHeader | None = None
+        if path.suffix.lower() in (".edf", ".bdf"):
+            self._header = read_edf_header(path)
+            source = edf_source(self._header)
+        else:
+            check_fif(path)
+            source = fif_source(path, self._library())
+        self._n_samples = source.n_samples
+        self._paths = source.paths
+        events, trigger_notes = self._trigger_markers(source)
+        self._facts = RecordingFacts(
+            stem=stem_of(path),
+            format=source.format,
+            rate_hz=source.rate_hz,
+            n_samples=source.n_samples,
+            channels=source.channels,
+            markers=coded([*source.found, *events]),
+            boundaries=source.boundaries,
+            parts=tuple(map(file_part, source.paths)),
+            notes=(*source.notes, *trigger_notes),
+        )
+
+    @property
+    def facts(self) -> RecordingFacts:
+        """Facts from the header, the annotations and the trigger channels."""
+        return self._facts
+
+    def fingerprint_paths(self) -> tuple[str, ...]:
+        """Paths of all files of the recording."""
+        return tuple(map(str, self._paths))
+
+    def read(self, start: int, stop: int, out: FloatArray, offset: NDArray[np.float64] | None = None) -> None:
+        """Fill ``out`` with the samples [start, stop); see `Recording.read`."""
+        check_request(self._facts, start, stop, out)
+        block = self._volts(slice(None), start, stop).T
+        check_finite(block, start, [channel.name for channel in self._facts.channels], self._path.name)
+        if offset is None:
+            out[...] = block
+        else:
+            np.subtract(block, offset, out=out, casting="same_kind")
+
+    def close(self) -> None:
+        """Release the file; reading again opens it again."""
+        if self._raw is not None:
+            self._raw.close()
+            self._raw = None
+
+    def _library(self) -> Any:
+        """Open the file in the library, if it is not."""
+        if self._raw is None:
+            with _own_errors(self._path):
+                self._raw = _open(self._path, self._header)
+        return self._raw
+
+    def _volts(self, rows: slice | list[int], start: int, stop: int) -> NDArray[np.float64]:
+        raw = self._library()
+        with _own_errors(self._path):
+            if raw.n_times != self._n_samples:
+                raise ValueError(f"{raw.n_times} samples instead of {self._n_samples}")
+            block: NDArray[np.float64] = raw[rows, start:stop][0]
+        return block
+
+    def _trigger_markers(self, source: Source) -> tuple[list[Found], list[str]]:
+        """Events of all trigger channels, each with its channel's name as type."""
+        channels = source.channels
+        rows = [row for row, channel in enumerate(channels) if channel.type is ChannelType.TRIGGER]
+        events = [
+            (float(sample), channels[row].name, str(level))
+            for row in rows
+            for sample, level in trigger_events(self._levels(row, source.n_samples))
+        ]
+        names = ", ".join(channels[row].name for row in rows)
+        if not rows:
+            return events, []
+        return events, [f"{len(events)} markers come from {names}, {len(source.found)} from annotations."]
+
+    def _levels(self, row: int, n_samples: int) -> Iterator[NDArray[np.int64]]:
+        for start in range(0, n_samples, _TRIGGER_BLOCK):
+            block = self._volts([row], start, min(start + _TRIGGER_BLOCK, n_samples))
+            levels = np.rint(np.nan_to_num(block[0])).astype(np.int64)
+            # In EDF and BDF the higher bits report the state of the amplifier.
+            yield levels & LOW_16_BITS if self._header is not None else levels
+
+    def __getstate__(self) -> dict[str, object]:
+        return {**self.__dict__, "_raw": None}
+
+
+def _open(path: Path, header: EdfHeader | None) -> Any:
+    if header is None:
+        return mne.io.read_raw_fif(path, preload=False, verbose="error")
+    read = mne.io.read_raw_edf if header.sample_bytes == 2 else mne.io.read_raw_bdf
+    return read(
+        path,
+        stim_channel=[signal.label for signal in header.used if signal.is_trigger] or None,
+        exclude=[signal.label for signal in header.left_out],
+        # Annotations are read here by other means; in this code page none can fail.
+        encoding="latin1",
+        preload=False,
+        verbose="error",
+    )
+
+
+@contextmanager
+def _own_errors(path: Path) -> Iterator[None]:
+    """Turn what the library raises on files it cannot read into errors for the user: the one place for it."""
+    try:
+        yield
+    except FileNotFoundError as error:
+        raise MissingPart(
+            f"the file {Path(str(error.filename)).name} is not there",
+            where=path.name,
+            todo="Put all files of the recording into one folder",
+        ) from error
+    except _LIBRARY_FAULTS as error:
+        told = " ".join(str(error).split()) or type(error).__name__
+        if "Split raw file" in told:  # the library has no class of its own for it
+            raise MissingPart(
+                "the file that continues this recording is not there",
+                where=path.name,
+                todo="Put all files of the recording into one folder",
+            ) from error
+        raise DamagedRecording(
+            f"the reader library cannot read it ({told.rstrip('.')})",
+            where=path.name,
+            todo="Copy the file again, or export it again",
+        ) from error
