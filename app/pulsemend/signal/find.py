@@ -34,6 +34,9 @@ def steepness(x: NDArray[Any]) -> NDArray[np.float64]:
 def usual_steepness(windows: Iterable[NDArray[Any]]) -> float:
     """Median of the steepness over pulse-free signal.
 
+    Where resolution is so coarse that most steps are zero, the zeros are left out: a single step of
+    the converter would otherwise count as many times the usual.
+
     Parameters
     ----------
     windows : iterable of array, shape (n_samples, n_channels)
@@ -52,7 +55,9 @@ def usual_steepness(windows: Iterable[NDArray[Any]]) -> float:
     values = [steepness(x) for x in windows if len(x) > 1]
     if not values:
         raise ValueError("the usual steepness needs a window of at least two samples")
-    return float(np.median(np.concatenate(values)))
+    steps = np.concatenate(values)
+    usual = float(np.median(steps))
+    return usual if usual > 0.0 or not steps.any() else float(np.median(steps[steps > 0.0]))
 
 
 def align_onset(x_eeg: NDArray[Any], usual: float, at_least: float = 5.0) -> int | None:

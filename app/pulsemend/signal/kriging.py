@@ -90,7 +90,7 @@ def kriging_weights(
     spread = float(np.ptp(autocovariance))
     if not np.isfinite(spread) or spread <= 0.0:
         autocovariance = np.arange(len(autocovariance), 0.0, -1.0)
-        spread = float(len(autocovariance))
+        spread = float(np.ptp(autocovariance))
     among = autocovariance[np.abs(knots[:, None] - knots[None, :])]
     among[np.diag_indices_from(among)] += _NUGGET_SHARE * spread
     towards = autocovariance[np.abs(knots[:, None] - np.arange(size)[None, :])]
