@@ -18,6 +18,20 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )
 
 
+def run(args: argparse.Namespace) -> int:
+    """Write the sample and list what was written."""
+    from pulsemend.commands.output import say, show
+    from pulsemend.simulate.sample import write_sample
+
+    result = show(write_sample(args.folder, args.recordings))
+    say(f"plan       {result.plan}")
+    for recording, log, truth in zip(result.recordings, result.logs, result.truths, strict=True):
+        say(f"recording  {recording}")
+        say(f"log        {log}")
+        say(f"truth      {truth}")
+    return 0
+
+
 def _count(text: str) -> int:
     """Read a number of recordings, 1 or more."""
     if not (text.isdecimal() and int(text) >= 1):
