@@ -79,8 +79,7 @@ class SetWriter:
         self._replaced: OpenRegion | None = None
         self._next = 0
         check_contents(contents)
-        recover(self.folder)
-        self._check_place()
+        check_place(parent, contents.stem, overwrite=overwrite)
         check_space(parent, needed_bytes(contents))
         self._hash = ContentHash(contents.channels, labels_of(contents), contents.dtype, contents.shape)
 
@@ -184,6 +183,11 @@ class SetWriter:
         self._part = None
         return self.folder
 
+    @property
+    def content_sha256(self) -> str:
+        """Identity of the data written so far."""
+        return self._hash.hexdigest()
+
     def abort(self) -> None:
         """Remove everything that was written. May be called at any time, and again."""
         self._close()
@@ -218,13 +222,6 @@ class SetWriter:
             if region is not None:
                 region.close()
         self._data, self._replaced = [], None
-
-    def _check_place(self) -> None:
-        """Say early what `publish` would say at the end."""
-        if self.folder.exists() or self.folder.is_symlink():
-            if not self._overwrite:
-                raise SetError("the set exists", where=str(self.folder), todo="Use --overwrite to replace it")
-            check_replaceable(self.folder)
 
     def _write_beside(
         self, rank: int, extra: Mapping[str, object], save_estimates: Callable[[Path], None]
@@ -262,6 +259,30 @@ class SetWriter:
         path = self._path(names.CHECKSUMS)
         path.write_bytes(checksums_text(digests))
         sync_file(path)
+
+
+def check_place(parent: Path, stem: str, *, overwrite: bool) -> None:
+    """Say early what would be said at the end: the set exists, or what stands there is none.
+
+    Parameters
+    ----------
+    parent : Path
+        Folder of the sets.
+    stem : str
+        The recording's name.
+    overwrite : bool
+        Whether a set that stands there is replaced.
+
+    Raises
+    ------
+    SetError
+    """
+    folder = set_folder(parent.absolute(), stem)
+    recover(folder)
+    if folder.exists() or folder.is_symlink():
+        if not overwrite:
+            raise SetError("the set exists", where=str(folder), todo="Use --overwrite to replace it")
+        check_replaceable(folder)
 
 
 def check_contents(contents: SetContents) -> None:

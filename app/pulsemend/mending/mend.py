@@ -1,0 +1,272 @@
+"""The one use case: recording, plan and marks become an epoch set."""
+
+from __future__ import annotations
+
+import importlib.metadata
+import platform
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import asdict, dataclass
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pulsemend import DATA_VERSION, __version__
+from pulsemend.engine.chain import Cut
+from pulsemend.engine.steps import steps
+from pulsemend.export.contents import SetChannel, SetContents, SetEpoch, Zero
+from pulsemend.export.set_writer import SetWriter, check_place
+from pulsemend.mending.prepare import Prepared, Request, marked_only, need_epochs, prepare, set_channels
+from pulsemend.progress import Progress, Work
+from pulsemend.readers.opening import open_recording
+
+RANK_TOLERANCE = 1e-5
+"""Directions of the set in which the amplitude is below this share of the strongest direction's do not count:
+single precision leaves about 1e-7, electrodes differ by more than 1e-3 (common practice: none known)."""
+
+_LIBRARIES = ("numpy", "scipy", "mne", "h5py", "tomlkit", "threadpoolctl")
+_STAGE = "writing epochs"
+
+
+@dataclass(frozen=True)
+class MendResult:
+    """What was written.
+
+    Parameters
+    ----------
+    folder : Path
+        The set.
+    content_sha256 : str
+        Identity of its data.
+    prepared : Prepared
+        What it rests on; its recording is closed.
+    rank : int
+        Of the data written.
+    """
+
+    folder: Path
+    content_sha256: str
+    prepared: Prepared
+    rank: int
+
+
+def mend(request: Request, out: Path, *, overwrite: bool = False) -> Work[MendResult]:
+    """Turn a recording into an epoch set.
+
+    Parameters
+    ----------
+    request : Request
+        Recording, plan and marks.
+    out : Path
+        Parent folder of the set.
+    overwrite : bool
+        Whether a set that stands there is replaced.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    MendResult
+
+    Raises
+    ------
+    InputError
+        Recording, plan or marks cannot be used, no epoch is kept, or the set exists. Nothing is written then.
+    """
+    recording = open_recording(request.recording)
+    recording.close()
+    check_place(out, recording.facts.stem, overwrite=overwrite)
+    prepared = yield from prepare(request)
+    try:
+        need_epochs(prepared)
+        cuts = cut_all(prepared)
+        contents = set_contents(prepared, cuts)
+        rank = _Rank(contents.shape)
+        with SetWriter(contents, out, overwrite) as writer:
+            for index, cut in enumerate(cuts):
+                yield Progress(_STAGE, index, len(cuts))
+                data = prepared.chain.samples(cut)
+                rank.add(data)
+                writer.write(index, data, prepared.chain.replaced(cut))
+            yield Progress("reading back", 0, 0)
+            folder = writer.finish(rank.rank(), {}, prepared.estimates.save)
+            yield Progress("reading back", 1, 1)
+    finally:
+        prepared.recording.close()
+    return MendResult(folder, writer.content_sha256, prepared, rank.rank())
+
+
+def dry_run(request: Request) -> Work[Prepared]:
+    """Do everything but touch the samples of epochs: trials, fates and counts.
+
+    Parameters
+    ----------
+    request : Request
+        Recording, plan and marks.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    Prepared
+        Its recording is closed.
+    """
+    prepared = yield from prepare(request)
+    prepared.recording.close()
+    return prepared
+
+
+def cut_all(prepared: Prepared) -> list[Cut]:
+    """Lay every kept epoch onto the output grid."""
+    n_times = round(prepared.plan.epochs.length_s * prepared.setup.rate_hz)
+    return [
+        prepared.chain.cut(candidate.anchor_sample, candidate.start_s, n_times)
+        for candidate in prepared.kept
+        if candidate.anchor_sample is not None
+    ]
+
+
+def set_contents(prepared: Prepared, cuts: Sequence[Cut]) -> SetContents:
+    """Describe the set before its first sample.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The recording, opened and decided.
+    cuts : sequence of Cut
+        One for each kept epoch.
+    """
+    plan, setup = prepared.plan, prepared.setup
+    recorded_hz = setup.facts.rate_hz
+    epochs = tuple(
+        SetEpoch(
+            candidate=candidate,
+            onset_s=(candidate.anchor_sample or 0.0) / recorded_hz,
+            start_s=candidate.start_s,
+            shift_s=cut.shift_s or cut.remainder_s,
+            replaced_share=float(prepared.chain.replaced(cut).mean()),
+        )
+        for candidate, cut in zip(prepared.kept, cuts, strict=True)
+    )
+    starts = {round(candidate.start_s * setup.rate_hz) for candidate in prepared.kept}
+    zero: Zero = "anchor" if len(starts) == 1 else "epoch start"
+    first = starts.pop() if zero == "anchor" else 0
+    reduced_lowpass_hz = 0.4 * setup.rate_hz if setup.antialias is not None else 0.0
+    return SetContents(
+        stem=setup.facts.stem,
+        channels=_channels(prepared),
+        rate_hz=setup.rate_hz,
+        recorded_rate_hz=recorded_hz,
+        times=(first + np.arange(cuts[0].n_times)) / setup.rate_hz,
+        zero=zero,
+        epochs=epochs,
+        ledger=prepared.ledger,
+        pulses=prepared.estimates.pulses,
+        plan_text=prepared.plan_file.text,
+        marks_text=prepared.marks_text,
+        source_sha256=prepared.fingerprint.digest,
+        precision=plan.export.precision,
+        formats=plan.export.formats,
+        fill=plan.pulses.fill,
+        rereferenced=bool(setup.reference_from.any()),
+        highpass_hz=plan.filter.highpass_hz,
+        lowpass_hz=plan.filter.lowpass_hz or reduced_lowpass_hz,
+        replaced_reach_s=setup.replaced_reach_s,
+        provenance=provenance(prepared),
+    )
+
+
+def provenance(prepared: Prepared) -> dict[str, Any]:
+    """Tell where the set comes from: recording, versions, steps, counts."""
+    facts = prepared.setup.facts
+    return {
+        "program": {"name": "pulsemend", "version": __version__, "data_version": DATA_VERSION},
+        "written": datetime.now(UTC).isoformat(timespec="seconds"),
+        "versions": {
+            "python": platform.python_version(),
+            **{name: importlib.metadata.version(name) for name in _LIBRARIES},
+        },
+        "recording": {
+            "stem": facts.stem,
+            "format": facts.format,
+            "rate_hz": facts.rate_hz,
+            "samples": facts.n_samples,
+            "segments": [list(segment) for segment in facts.segments],
+            "fingerprint": [
+                {"file": name, "size": size, "sha256": sha256}
+                for name, size, sha256 in prepared.fingerprint.parts
+            ],
+            "notes": list(facts.notes),
+        },
+        "steps": [asdict(step) for step in steps(prepared.setup, prepared.estimates)],
+        "trials": {
+            "found": len(prepared.trials.trials),
+            "incomplete": sum(bool(trial.missing) for trial in prepared.trials.trials),
+            "markers_in_no_trial": len(prepared.trials.extra),
+        },
+        "pulses_marked_not_in_signal": marked_only(prepared.estimates),
+        "kept_per_rule": kept_per_rule(prepared),
+        "rank_tolerance": RANK_TOLERANCE,
+        "warnings": list(prepared.warnings),
+    }
+
+
+def kept_per_rule(prepared: Prepared) -> dict[str, int]:
+    """Count kept epochs per rule, rules without any included."""
+    counts = Counter(candidate.rule for candidate in prepared.kept)
+    return {rule.name: counts[rule.name] for rule in prepared.plan.epochs.rule}
+
+
+def _channels(prepared: Prepared) -> tuple[SetChannel, ...]:
+    setup = prepared.setup
+    in_plan = set(prepared.plan.channels.bad)
+    channels = []
+    for place, channel in enumerate(set_channels(setup)):
+        bad = place < setup.bad.size and bool(setup.bad[place])
+        note = (
+            ""
+            if not bad
+            else "named bad in the plan"
+            if channel.name in in_plan
+            else "named bad in the marks"
+        )
+        channels.append(
+            SetChannel(channel.name, channel.type, "bad" if bad else "good", note, channel.position_m)
+        )
+    return tuple(channels)
+
+
+class _Rank:
+    """Rank of everything written, from second moments over enough of its samples.
+
+    Parameters
+    ----------
+    shape : tuple of int
+        (n_epochs, n_channels, n_times) of the set.
+    """
+
+    ENOUGH = 50_000
+    """Samples looked at, at least, where there are as many: all would cost more than they tell."""
+
+    def __init__(self, shape: tuple[int, int, int]) -> None:
+        n_epochs, n_channels, n_times = shape
+        self._moments = np.zeros((n_channels, n_channels))
+        self._every = max(1, n_epochs * n_times // self.ENOUGH)
+
+    def add(self, data: NDArray[np.floating]) -> None:
+        """Take in one epoch, shape (n_channels, n_times)."""
+        some = data[:, :: self._every].astype(np.float64)
+        whole = some[:, np.isfinite(some).all(axis=0)]
+        self._moments += whole @ whole.T
+
+    def rank(self) -> int:
+        """Count the directions that carry signal."""
+        strengths = np.linalg.eigvalsh(self._moments)
+        return int(np.count_nonzero(strengths > strengths[-1] * RANK_TOLERANCE**2))

@@ -1,0 +1,275 @@
+"""Everything that is known of a set before its first sample: opened, learned, matched, decided."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from pulsemend.engine.chain import Chain
+from pulsemend.engine.estimates import Estimates
+from pulsemend.engine.fit import fit
+from pulsemend.engine.setup import Setup, bind
+from pulsemend.errors import InputError, NoEpochs
+from pulsemend.model.epochs import Candidate, Trials
+from pulsemend.model.marks import NO_MARKS, Marks
+from pulsemend.model.marks_file import (
+    check_files,
+    check_fingerprint,
+    check_samples,
+    marks_text,
+    read_marks,
+    update_text,
+)
+from pulsemend.model.plan import Plan
+from pulsemend.model.plan_checks import check_against_rate, check_channels, check_decided
+from pulsemend.model.plan_file import PlanFile, read_plan
+from pulsemend.model.recording import Channel, Fingerprint, Recording, RecordingFacts
+from pulsemend.model.vocabulary import PulseState
+from pulsemend.progress import Work
+from pulsemend.readers.fingerprint import fingerprint
+from pulsemend.readers.opening import open_recording
+from pulsemend.signal.gaps import window_to_samples
+from pulsemend.trials.candidates import GapSpan, Geometry, candidates, set_order, stale_decisions
+from pulsemend.trials.matching import match_trials
+
+
+@dataclass(frozen=True)
+class Request:
+    """What is to be mended.
+
+    Parameters
+    ----------
+    recording, plan : Path
+    marks : Path or None
+        None: ``marks/STEM.marks.toml`` beside the plan, if it is there.
+    """
+
+    recording: Path
+    plan: Path
+    marks: Path | None = None
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """A recording, opened, learned and cut on paper: what `mend` writes and `--dry-run` shows.
+
+    Parameters
+    ----------
+    recording : Recording
+        Open; whoever asked for the preparation closes it.
+    plan_file : PlanFile
+    marks : Marks
+    marks_text : str
+        As they will be written into the set.
+    fingerprint : Fingerprint
+    estimates : Estimates
+    chain : Chain
+    trials : Trials
+    geometry : Geometry
+    ledger : tuple of Candidate
+        All candidates, in order of trial, rule and piece.
+    kept : tuple of Candidate
+        In the order of the set.
+    warnings : tuple of str
+        One sentence each.
+    """
+
+    recording: Recording
+    plan_file: PlanFile
+    marks: Marks
+    marks_text: str
+    fingerprint: Fingerprint
+    estimates: Estimates
+    chain: Chain
+    trials: Trials
+    geometry: Geometry
+    ledger: tuple[Candidate, ...]
+    kept: tuple[Candidate, ...]
+    warnings: tuple[str, ...]
+
+    @property
+    def plan(self) -> Plan:
+        """The plan's values."""
+        return self.plan_file.plan
+
+    @property
+    def setup(self) -> Setup:
+        """The plan, bound to the recording."""
+        return self.chain.setup
+
+
+def marks_path(plan: Path, stem: str) -> Path:
+    """Name the place of a recording's marks: with the study, because recordings may be read-only."""
+    return plan.parent / "marks" / f"{stem}.marks.toml"
+
+
+def prepare(request: Request) -> Work[Prepared]:
+    """Open, identify, learn, match and decide.
+
+    Parameters
+    ----------
+    request : Request
+        Recording, plan and marks.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    Prepared
+
+    Raises
+    ------
+    InputError
+        The recording, plan or marks cannot be used; or pulses are in the signal and none is known.
+    """
+    plan_file = read_plan(request.plan)
+    recording = open_recording(request.recording)
+    try:
+        return (yield from _prepare(request, plan_file, recording))
+    except BaseException:
+        recording.close()
+        raise
+
+
+def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Work[Prepared]:
+    plan, facts = plan_file.plan, recording.facts
+    path = request.marks or marks_path(request.plan, facts.stem)
+    marks_file = read_marks(path) if request.marks is not None or path.exists() else None
+    marks = NO_MARKS if marks_file is None else marks_file.marks
+    with plan_file.source.located():
+        check_decided(plan)
+        check_against_rate(plan, facts.rate_hz)
+        warnings = [*plan_file.warnings, *check_channels(plan, marks, [c.name for c in facts.channels])]
+        setup = bind(with_positions(facts), plan, marks)
+    if marks_file is not None:
+        with marks_file.source.located():
+            check_files(marks, facts.parts)
+            check_samples(marks, facts.n_samples)
+    identity = yield from fingerprint(recording)
+    if marks_file is not None:
+        with marks_file.source.located():
+            check_fingerprint(marks, identity)
+    identified = replace(marks, fingerprint=identity)
+    estimates = yield from fit(recording, setup)
+    if estimates.unmarked:
+        first_s = estimates.unmarked[0] / facts.rate_hz
+        raise InputError(
+            f"no pulse is known, but {len(estimates.unmarked)} pulse-like events are in the signal, "
+            f"the first at {first_s:.3f} s",
+            where=facts.stem,
+            todo='Give the pulse markers role = "pulse", or set pulses.times = "none" if these are no pulses',
+        )
+    trials = match_trials(facts.markers, plan, facts.rate_hz, marks)
+    geometry = lay_geometry(setup, estimates, marks)
+    ledger = candidates(trials, plan, geometry)
+    warnings += _trial_warnings(trials, facts)
+    warnings += stale_decisions(trials, plan, geometry)
+    warnings += estimates.notes
+    return Prepared(
+        recording=recording,
+        plan_file=plan_file,
+        marks=marks,
+        marks_text=update_text(marks_file.text, identified) if marks_file else marks_text(identified),
+        fingerprint=identity,
+        estimates=estimates,
+        chain=Chain(recording, setup, estimates),
+        trials=trials,
+        geometry=geometry,
+        ledger=ledger,
+        kept=set_order(ledger, geometry),
+        warnings=tuple(warnings),
+    )
+
+
+def with_positions(facts: RecordingFacts) -> RecordingFacts:
+    """Give channels without a position of their own that of their name in the extended 10-20 system."""
+    if all(channel.position_m is not None for channel in facts.channels):
+        return facts
+    # The table of positions comes with the reader library, which takes a second to load.
+    from pulsemend.readers.names import standard_positions
+
+    known = standard_positions([channel.name for channel in facts.channels])
+    placed = (
+        replace(channel, position_m=channel.position_m or known.get(channel.name))
+        for channel in facts.channels
+    )
+    return replace(facts, channels=tuple(placed))
+
+
+def lay_geometry(setup: Setup, estimates: Estimates, marks: Marks) -> Geometry:
+    """Put together where everything is that decides an epoch's fate."""
+    windows_s = {window_s for group in setup.groups for window_s in group.windows_s}
+    gaps = [
+        GapSpan(*window_to_samples(onset, window_s, setup.facts.rate_hz), pulse=onset)
+        for onset in estimates.onsets
+        for window_s in windows_s
+    ]
+    return Geometry(
+        recorded_hz=setup.facts.rate_hz,
+        output_hz=setup.rate_hz,
+        segments=setup.facts.segments,
+        gaps=tuple(sorted(gaps)),
+        onsets={pulse.marked: pulse.sample for pulse in estimates.pulses if pulse.marked is not None},
+        bad_stretches=marks.bad_stretches,
+        trials_excluded=marks.trials_excluded,
+        epochs_left_out=marks.epochs_left_out,
+    )
+
+
+def need_epochs(prepared: Prepared) -> None:
+    """Refuse a recording of which nothing is kept, with the commonest reason.
+
+    Raises
+    ------
+    NoEpochs
+    """
+    if prepared.kept:
+        return
+    stem = prepared.setup.facts.stem
+    if not prepared.ledger:
+        raise NoEpochs(
+            "no trial was found, so there is no epoch to keep",
+            where=stem,
+            todo="Compare the plan's roles and slots with what `pulsemend facts` lists",
+        )
+    fates = [candidate.fate for candidate in prepared.ledger]
+    commonest = max(dict.fromkeys(fates), key=fates.count)
+    example = next(c for c in prepared.ledger if c.fate is commonest)
+    raise NoEpochs(
+        f"none of {len(fates)} epochs is kept; {fates.count(commonest)} of them: {commonest.value}"
+        + (f" ({example.detail})" if example.detail else ""),
+        where=stem,
+        todo="`pulsemend mend --dry-run` lists the reasons",
+    )
+
+
+def _trial_warnings(trials: Trials, facts: RecordingFacts) -> list[str]:
+    lines = []
+    if trials.unnamed:
+        listed = ", ".join(f"{code} ({count})" for code, count in trials.unnamed.items())
+        lines.append(f"codes that the plan does not name count as other: {listed}")
+    if trials.absent:
+        lines.append(f"codes that the plan names but the recording lacks: {', '.join(trials.absent)}")
+    if trials.extra:
+        first = trials.extra[0]
+        lines.append(
+            f"{len(trials.extra)} markers belong to no trial, the first is {first.code} at "
+            f"{first.sample / facts.rate_hz:.3f} s"
+        )
+    return lines
+
+
+def marked_only(estimates: Estimates) -> int:
+    """Count the pulses that have a marker but no artifact."""
+    return sum(pulse.state is PulseState.MARKED_ONLY for pulse in estimates.pulses)
+
+
+def set_channels(setup: Setup) -> tuple[Channel, ...]:
+    """Output channels in order: the used ones, then the recorded reference if it is put back."""
+    if not setup.restored:
+        return setup.channels
+    eeg = setup.channels[int(setup.eeg.argmax())].type
+    known = with_positions(replace(setup.facts, channels=(Channel(setup.restored, eeg),)))
+    return (*setup.channels, *known.channels)
