@@ -9,8 +9,8 @@ uint64, then the bytes; a list is its length as uint64, then its items.
 4. the label columns name (texts), trial, piece (int64), anchor (texts), onset_s, start_s (float64), each
    as a list;
 5. the list of other label columns sorted by name, each: its name, then its texts as a list;
-6. for every epoch in order: its samples (channel, time) in volts, then one byte, 0 or 1, for
-   each of them: replaced.
+6. for every epoch in order: its samples (channel, time) in volts, then one bit for each of them, 1 where it
+   is replaced: eight to a byte, the first in the highest bit, the last byte filled up with zeros.
 """
 
 from __future__ import annotations
@@ -79,7 +79,7 @@ class ContentHash:
             Which samples are estimates.
         """
         self._hash.update(np.ascontiguousarray(data, self._dtype).data)
-        self._hash.update(np.ascontiguousarray(replaced, bool).view(np.uint8).data)
+        self._hash.update(np.packbits(replaced).data)
 
     def hexdigest(self) -> str:
         """Return the hash of what was added so far."""

@@ -161,6 +161,7 @@ def read_fif(path: Path) -> FifFacts:
         The file is damaged or is something else.
     """
     found: dict[int, bytes] = {}
+    region = None
     with path.open("rb") as file:
         size = file.seek(0, 2)
         place = following = 0
@@ -180,6 +181,8 @@ def read_fif(path: Path) -> FifFacts:
             if following > 0 and following <= place:
                 raise ValueError("the tags run in a circle")
             place = following if following > 0 else body + length
+    if region is None:
+        raise ValueError("the file holds no epochs")
     first, last = (struct.unpack(">i", found[kind])[0] for kind in (_FIRST, _LAST))
     channels = struct.unpack(">i", found[_N_CHANNELS])[0]
     events = np.frombuffer(found[_EVENTS], ">i4").reshape(-1, 3)
@@ -273,6 +276,7 @@ def _write_events(file: BinaryIO, contents: SetContents) -> None:
 
 def _metadata(contents: SetContents) -> list[dict[str, Any]]:
     """One record per epoch, in the form the library writes a table of its own."""
+    columns = contents.label_columns
     return [
         {
             "index": index,
@@ -284,7 +288,7 @@ def _metadata(contents: SetContents) -> list[dict[str, Any]]:
             "start_s": epoch.start_s,
             "shift_s": epoch.shift_s,
             "replaced_share": epoch.replaced_share,
-            **{column: epoch.candidate.labels.get(column, "") for column in contents.label_columns},
+            **{column: epoch.candidate.labels.get(column, "") for column in columns},
         }
         for index, epoch in enumerate(contents.epochs)
     ]

@@ -161,10 +161,11 @@ def _reserve(file: Any, name: str, shape: tuple[int, int, int], kind: Any) -> in
 def _region(path: Path, dataset: Any) -> Region:
     offset = dataset.id.get_offset()
     if offset is None:
-        raise ValueError(
-            f"{dataset.name} does not lie in one piece: the file was written again by something else"
-        )
-    return Region(path, int(offset), dataset.dtype.str, dataset.shape)
+        raise ValueError(f"{dataset.name} does not lie in one piece: something else wrote the file again")
+    region = Region(path, int(offset), dataset.dtype.str, dataset.shape)
+    if 0 in region.shape or region.offset + region.epoch_bytes * region.shape[0] > path.stat().st_size:
+        raise ValueError(f"the file ends before the last sample of {dataset.name}")
+    return region
 
 
 def _write_channels(group: Any, contents: SetContents) -> None:
