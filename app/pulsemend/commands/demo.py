@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import argparse
+import textwrap
 from pathlib import Path
+
+from pulsemend.commands import output
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -17,3 +20,32 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="where to write (default: %(default)s)",
     )
     parser.add_argument("--no-window", action="store_true", help="do not open the window afterwards")
+
+
+def run(args: argparse.Namespace) -> int:
+    """Write the sample, mend it, check it, and say where everything is."""
+    from pulsemend.commands.check import check_lines
+    from pulsemend.mending.check import check_set
+    from pulsemend.mending.mend import mend
+    from pulsemend.mending.prepare import Request
+    from pulsemend.notice import SAFETY_NOTICE
+    from pulsemend.simulate.sample import write_sample
+
+    sample = output.show(write_sample(args.folder))
+    request = Request(sample.recordings[0], sample.plan)
+    result = output.show(mend(request, args.folder / "sets", overwrite=True))
+    checked = output.show(check_set(result.folder))
+    prepared = result.prepared
+    output.say(f"recording  {sample.recordings[0]}")
+    output.say(f"plan       {sample.plan}")
+    output.say(f"log        {sample.logs[0]}")
+    output.say(f"truth      {sample.truths[0]}")
+    output.say(f"epoch set  {result.folder}")
+    output.say(f"           {len(prepared.kept)} epochs kept of {len(prepared.ledger)}")
+    output.say()
+    for line in check_lines(checked):
+        output.say(line)
+    output.say()
+    for paragraph in SAFETY_NOTICE:
+        output.say(textwrap.fill(paragraph, 100))
+    return 0

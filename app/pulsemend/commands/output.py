@@ -263,6 +263,8 @@ def _plain(value: object) -> object:
         return [_plain(item) for item in value]
     if isinstance(value, Path):
         return str(value)
+    if hasattr(value, "item"):  # a number of the array library
+        value = value.item()
     if isinstance(value, bool):
         return value
     if isinstance(value, Integral):
