@@ -127,6 +127,17 @@ def show(value: object) -> str:
     return text if len(text) <= _MANY else text[: _MANY - 3] + "..."
 
 
+def key_defaults(keys: Iterable[Key]) -> dict[str, object]:
+    """Defaults by path, ``[]`` left out; `REQUIRED` where there is none.
+
+    Parameters
+    ----------
+    keys : iterable of Key
+        A table of keys.
+    """
+    return {key.path.replace("[]", ""): key.default for key in keys}
+
+
 class Refusal(Exception):
     """A value that a key does not take: what is wrong, and at which place of a list (from 1)."""
 

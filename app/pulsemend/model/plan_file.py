@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from pulsemend.errors import PlanError
+from pulsemend.model.keys import key_defaults
 from pulsemend.model.plan import (
     About,
     Channels,
@@ -106,7 +107,7 @@ def plan_text(plan: Plan) -> str:
     plan : Plan
         What to write.
     """
-    return new_text(plan_tree(plan), defaults(), _NAMED_BY)
+    return new_text(plan_tree(plan), key_defaults(PLAN_KEYS), _NAMED_BY)
 
 
 def update_text(text: str, plan: Plan) -> str:
@@ -131,7 +132,7 @@ def update_text(text: str, plan: Plan) -> str:
     """
     if parse_plan(text).plan == plan:
         return text
-    changed = updated_text(text, plan_tree(plan), defaults(), _NAMED_BY)
+    changed = updated_text(text, plan_tree(plan), key_defaults(PLAN_KEYS), _NAMED_BY)
     # Meaning goes before comments, should the editing library ever write what it did not mean.
     return changed if parse_plan(changed).plan == plan else plan_text(plan)
 
@@ -184,11 +185,6 @@ def plan_tree(plan: Plan) -> dict[str, Any]:
         },
         "export": vars(plan.export),
     }
-
-
-def defaults() -> Mapping[str, object]:
-    """Defaults of the keys that have one, by path in the table of keys without ``[]``."""
-    return {key.path.replace("[]", ""): key.default for key in PLAN_KEYS}
 
 
 def _plan(tree: Mapping[str, Any]) -> Plan:
