@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import gzip
 import math
+import zlib
 from collections.abc import Iterable
 from dataclasses import dataclass
 from pathlib import Path
@@ -29,6 +30,7 @@ _FIF_TYPES = {
     "stim": ChannelType.TRIGGER,
 }
 _FIF_CHANNEL, _FIF_LAST = 203, -1  # kind of a channel's entry; link of the last entry of a file
+_PACKED_CHUNK = 1 << 20
 _JOINS = ("bad boundary", "edge boundary")
 _SKIP = "bad_acq_skip"
 _WHOLE_WITHIN = 1e-6  # samples; what a product of seconds and rate may miss a whole number by
@@ -167,7 +169,9 @@ def check_fif(path: Path) -> None:
                     raise _cut_short(path)
                 if link > 0:
                     file.seek(link)
-    except (EOFError, gzip.BadGzipFile) as error:
+            while opener is gzip.open and file.read(_PACKED_CHUNK):
+                pass  # only behind the last byte stands the sum that tells whether it was packed whole
+    except (EOFError, gzip.BadGzipFile, zlib.error) as error:
         raise _cut_short(path) from error
     except OSError as error:
         raise missing(path, error) from error

@@ -180,6 +180,7 @@ def _sections(path: Path, kind: str) -> Sections:
             where=path.name,
             todo="Check that the right file was copied",
         )
+    _check_last_line(path, text, lines[-1])
     sections: Sections = {}
     entries: dict[str, str] = {}
     for line in map(str.strip, lines[1:]):
@@ -191,6 +192,20 @@ def _sections(path: Path, kind: str) -> Sections:
             key, _, value = line.partition("=")
             entries[key.strip().lower()] = value.strip()
     return sections
+
+
+def _check_last_line(path: Path, text: str, last: str) -> None:
+    """Refuse a file that ends inside an entry: a resolution or position that lost digits would be wrong."""
+    key, _, value = last.partition("=")
+    fields = value.split(",")
+    wanted = {"ch": 4, "mk": 5}.get(key.strip().lower()[:2])
+    if text.endswith(("\n", "\r")) or wanted is None or (len(fields) >= wanted and fields[-1].strip()):
+        return
+    raise DamagedRecording(
+        f"the file ends inside its entry {key.strip()}",
+        where=path.name,
+        todo="Copy it again; if the entry is whole, end it with a line break",
+    )
 
 
 def _file_name(written: str, header: Path) -> str:
@@ -224,6 +239,8 @@ def _channels(entries: _Entries) -> tuple[tuple[Channel, ...], tuple[str, ...]]:
 
 def _channel(entries: _Entries, number: int) -> Channel:
     fields = entries.text("Channel Infos", f"Ch{number}").split(",")
+    if len(fields) < 3:
+        raise entries.damaged(f"channel {number} is described by fewer than three fields")
     name, _, resolution, unit = (field.replace("\\1", ",").strip() for field in (*fields, *[""] * 4)[:4])
     if not name:
         raise entries.damaged(f"channel {number} has no name")
