@@ -17,10 +17,10 @@ from pulsemend.simulate.head import dipole_map
 N_PATCHES = 20  # independent sources of 1/f activity
 EXPONENT = 1.2  # power falls as f to minus this
 SLOWEST_HZ, FASTEST_HZ = 0.05, 1000.0  # where the fall begins and ends
-ACTIVITY_V = 12e-6  # standard deviation, 1 to 100 Hz, root mean square over the cap
+ACTIVITY_V = 8e-6  # standard deviation, 1 to 100 Hz, root mean square over the cap, before referencing
 WARM_UP_S = 20.0  # so that the slowest part is there from the first sample on
 
-ALPHA_V = 14e-6
+ALPHA_V = 22e-6
 ALPHA_HZ = (9.0, 11.0)
 ALPHA_LENGTH_S = (0.5, 2.0)
 ALPHA_PAUSE_S = (0.3, 4.0)
@@ -95,8 +95,8 @@ def alpha_maps(sites: NDArray[np.float64]) -> NDArray[np.float64]:
     """Make the maps of left and right occipital alpha, shape (2, n_sites)."""
     return np.stack(
         [
-            dipole_map(sites, np.array([x, -0.62, 0.2]), np.array([0.5 * np.sign(x), -0.8, 0.3]))
-            for x in (-0.32, 0.32)
+            dipole_map(sites, np.array([x, -0.5, 0.08]), np.array([0.4 * np.sign(x), -0.85, 0.15]))
+            for x in (-0.25, 0.25)
         ]
     )
 

@@ -6,9 +6,12 @@ cells of fixed length whatever the blocks are, so a recording does not depend on
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from bisect import bisect_left, bisect_right
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from enum import IntEnum
+from operator import attrgetter
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,6 +25,8 @@ from pulsemend.simulate.evoked import LENGTH_S, OTHER_PROBE, PEAKS, PLACES, wave
 from pulsemend.simulate.head import CAP, REFERENCE, dipole_map, directions
 from pulsemend.simulate.schedule import LANTERN_FAULTS, Fault, Moment, Schedule, make_schedule
 from pulsemend.units import uv_to_v
+
+T = TypeVar("T")
 
 CELL_S = 0.25
 RESOLUTION_UV = 0.1
@@ -306,17 +311,22 @@ def _cells(lantern: Lantern) -> Iterator[tuple[NDArray[np.int16], NDArray[np.flo
         yield np.ascontiguousarray(volts.astype(np.int16).T), clean.T
 
 
+def _between(events: Sequence[T], first_s: float, last_s: float, time: str) -> Sequence[T]:
+    """Pick the events of a closed span of time; they stand in order of the attribute ``time``."""
+    when = attrgetter(time)
+    return events[bisect_left(events, first_s, key=when) : bisect_right(events, last_s, key=when)]
+
+
 def _caused(lantern: Lantern, times_s: NDArray[np.float64]) -> NDArray[np.float64]:
     """Activity of every source that is no noise, shape (n_sources - n_patches, n_times)."""
     places = tuple(PLACES)
     rows = np.zeros((2 + len(places) + 2 + background.N_DRIFTS, len(times_s)))
     first_s, last_s = times_s[0], times_s[-1]
-    for burst in lantern.bursts:
-        if burst.start_s <= last_s and burst.start_s + burst.length_s >= first_s:
-            rows[burst.side] += burst.wave(times_s)
-    for moment in lantern.schedule.moments:
+    for burst in _between(lantern.bursts, first_s - background.ALPHA_LENGTH_S[1], last_s, "start_s"):
+        rows[burst.side] += burst.wave(times_s)
+    for moment in _between(lantern.schedule.moments, first_s - LENGTH_S, last_s, "time_s"):
         kind = evoked_kind(moment)
-        if kind is None or moment.time_s > last_s or moment.time_s + LENGTH_S < first_s:
+        if kind is None:
             continue
         since_s = times_s - moment.time_s
         inside = (since_s >= 0.0) & (since_s < LENGTH_S)

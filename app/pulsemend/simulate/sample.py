@@ -148,18 +148,27 @@ def _writer(parts: dict[str, Path], stem: str, form: TripletFormat, lantern: Lan
     return TripletWriter(TripletPaths(header, marker, samples, Path(stem).name), form, lantern.markers)
 
 
-def _refuse_foreign(folder: Path, names: list[str]) -> None:
-    """Raise if a file is in the way that is not the sample's own, unchanged."""
+def _listed(folder: Path) -> dict[str, str]:
+    """Files that an earlier sample left, with their SHA-256."""
     try:
-        own = json.loads((folder / MANIFEST).read_text(encoding="utf-8"))["files"]
+        content = json.loads((folder / MANIFEST).read_text(encoding="utf-8"))
     except FileNotFoundError:
-        own = {}
-    except (ValueError, KeyError, TypeError) as error:
+        return {}
+    except ValueError:
+        content = None
+    files = content.get("files") if isinstance(content, dict) else None
+    if not isinstance(files, dict):
         raise InputError(
             f"{MANIFEST} is not the list that a sample leaves",
             where=str(folder),
             todo="Choose another folder",
-        ) from error
+        )
+    return files
+
+
+def _refuse_foreign(folder: Path, names: list[str]) -> None:
+    """Raise if a file is in the way that is not the sample's own, unchanged."""
+    own = _listed(folder)
     for name in names:
         path = folder / name
         if not path.exists():
@@ -191,10 +200,7 @@ def _part_files(folder: Path, names: list[str]) -> Iterator[dict[str, Path]]:
 
 def _put_in_place(folder: Path, parts: dict[str, Path]) -> None:
     """Move finished files to their names and list them."""
-    try:
-        listed = json.loads((folder / MANIFEST).read_text(encoding="utf-8"))["files"]
-    except FileNotFoundError:
-        listed = {}
+    listed = _listed(folder)
     # What an earlier run wrote stays listed: it is still the sample's own.
     listed |= {name: _sha256(path) for name, path in parts.items()}
     for name, path in parts.items():
