@@ -159,7 +159,7 @@ def _edf(folder: Path, events: Sequence[Event]) -> Written:
 def _bdf(folder: Path, events: Sequence[Event]) -> Written:
     stored = counts().astype(np.int64) * 200 + 77  # needs 24 bits
     lowest, step = -262144.0, 524288.0 / (2**24 - 1)
-    microvolts = (stored + 2**23) * step + lowest
+    microvolts = (stored + 2**23).astype(np.float64) * step + lowest
     annotations = [edfio.EdfAnnotation(onset, None, text) for onset, text in _described(events)]
     signals = [
         edfio.BdfSignal(row, RATE_HZ, label=name, physical_dimension="uV", physical_range=(lowest, -lowest))

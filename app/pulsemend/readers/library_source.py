@@ -167,6 +167,8 @@ def check_fif(path: Path) -> None:
                     content = file.read(1)
                 if size and not content:
                     raise _cut_short(path)
+                if 0 < link < file.tell():
+                    raise _cut_short(path)
                 if link > 0:
                     file.seek(link)
             while opener is gzip.open and file.read(_PACKED_CHUNK):

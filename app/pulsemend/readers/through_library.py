@@ -52,7 +52,9 @@ class LibraryRecording:
             source = edf_source(self._header)
         else:
             check_fif(path)
-            source = fif_source(path, self._library())
+            raw = self._library()
+            with _own_errors(path):
+                source = fif_source(path, raw)
         self._n_samples = source.n_samples
         self._paths = source.paths
         events, trigger_notes = self._trigger_markers(source)

@@ -180,7 +180,6 @@ def _sections(path: Path, kind: str) -> Sections:
             where=path.name,
             todo="Check that the right file was copied",
         )
-    _check_last_line(path, text, lines[-1])
     sections: Sections = {}
     entries: dict[str, str] = {}
     for line in map(str.strip, lines[1:]):
@@ -191,6 +190,8 @@ def _sections(path: Path, kind: str) -> Sections:
         elif line and not line.startswith(";"):
             key, _, value = line.partition("=")
             entries[key.strip().lower()] = value.strip()
+    else:
+        _check_last_line(path, text, lines[-1])
     return sections
 
 
