@@ -9,7 +9,7 @@ import signal
 import subprocess
 import sys
 import types
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
@@ -207,6 +207,17 @@ def test_error_in_json_mode_keeps_both_streams_json(
     assert json.loads(streams.err) == {"error": "not a recording"}
 
 
+@pytest.fixture
+def deliverable() -> Iterator[None]:
+    """A process started in the background may ignore signals by inheritance, and so would the command."""
+    numbers = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
+    before = [signal.signal(number, signal.default_int_handler) for number in numbers]
+    yield
+    for number, handler in zip(numbers, before, strict=True):
+        signal.signal(number, handler)
+
+
+@pytest.mark.usefixtures("deliverable")
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP])
 def test_signals_cancel_and_leave_nothing_behind(
     number: signal.Signals, tmp_path: Path, fake: Callable[[Callable[[], int]], None]
@@ -216,7 +227,7 @@ def test_signals_cancel_and_leave_nothing_behind(
     def work() -> Work[None]:
         part.mkdir()
         try:
-            while True:
+            for _ in range(10):
                 yield Progress("writing", 0, 0)
                 os.kill(os.getpid(), number)
         finally:
@@ -233,6 +244,19 @@ def test_signals_cancel_and_leave_nothing_behind(
     assert main(["fake"]) == 130
     assert not part.exists()
     assert signal.getsignal(number) == before
+
+
+@pytest.mark.usefixtures("deliverable")
+def test_signals_ignored_from_outside_stay_ignored(fake: Callable[[Callable[[], int]], None]) -> None:
+    """So a command under nohup survives the terminal's end."""
+    signal.signal(signal.SIGHUP, signal.SIG_IGN)
+
+    def does() -> int:
+        os.kill(os.getpid(), signal.SIGHUP)
+        return 0
+
+    fake(does)
+    assert main(["fake"]) == 0
 
 
 def test_program_starts_as_a_module_and_prints_its_version() -> None:
