@@ -11,7 +11,7 @@ import mne
 import numpy as np
 import pytest
 
-from pulsemend.errors import InputError
+from pulsemend.errors import InputError, UsageError
 from pulsemend.model.marks import NO_MARKS
 from pulsemend.model.plan_checks import check_against_rate, check_channels, check_decided, check_plan
 from pulsemend.model.plan_file import read_plan
@@ -156,3 +156,8 @@ def test_a_folder_that_is_a_file_is_named(tmp_path: Path) -> None:
     (tmp_path / "sample").write_text("")
     with pytest.raises(InputError, match="cannot be written"):
         write(tmp_path / "sample")
+
+
+def test_no_recording_is_a_wrong_use(tmp_path: Path) -> None:
+    with pytest.raises(UsageError, match="at least one"):
+        write(tmp_path, 0)

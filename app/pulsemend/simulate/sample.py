@@ -12,7 +12,7 @@ from pathlib import Path
 
 import numpy as np
 
-from pulsemend.errors import InputError
+from pulsemend.errors import InputError, UsageError
 from pulsemend.progress import Progress, Work
 from pulsemend.resources import sample_folder
 from pulsemend.simulate.head import REFERENCE
@@ -78,15 +78,19 @@ def write_sample(
 
     Raises
     ------
+    UsageError
+        No recording is asked for.
     InputError
         A file in the way, or a folder that cannot be written.
     """
+    if recordings < 1:
+        raise UsageError("a sample has at least one recording")
     specs = _specs(recordings, spec or LanternSpec())
     names = [name for each in specs for name in _names(each.stem, clean)]
     try:
         _refuse_foreign(folder, [PLAN, STORY, *names])
         (folder / "truth").mkdir(parents=True, exist_ok=True)
-        with _part_files(folder, [PLAN, STORY, *names]) as parts:
+        with _part_files(folder, [MANIFEST, PLAN, STORY, *names]) as parts:
             for name in (PLAN, STORY):
                 parts[name].write_bytes((sample_folder() / name).read_bytes())
             for i, each in enumerate(specs):
@@ -200,10 +204,10 @@ def _part_files(folder: Path, names: list[str]) -> Iterator[dict[str, Path]]:
 
 def _put_in_place(folder: Path, parts: dict[str, Path]) -> None:
     """Move finished files to their names and list them."""
-    listed = _listed(folder)
-    # What an earlier run wrote stays listed: it is still the sample's own.
-    listed |= {name: _sha256(path) for name, path in parts.items()}
-    for name, path in parts.items():
-        path.replace(folder / name)
+    # What an earlier run wrote stays listed: it is still the sample's own. The list comes first, so that a
+    # crash among the moves leaves no file that a later run would take for somebody else's.
+    listed = _listed(folder) | {name: _sha256(path) for name, path in parts.items() if name != MANIFEST}
     content = {"what": "files written by the sample, with their SHA-256", "files": listed}
-    (folder / MANIFEST).write_bytes((json.dumps(content, indent=1) + "\n").encode())
+    parts[MANIFEST].write_bytes((json.dumps(content, indent=1) + "\n").encode())
+    for name in sorted(parts, key=lambda name: name != MANIFEST):
+        parts[name].replace(folder / name)
