@@ -225,6 +225,18 @@ def test_stop_before_a_gap_or_an_instant() -> None:
     assert fates(rules(stop), GEOMETRY, none) == [(Fate.KEPT, "")]
 
 
+def test_stop_before_at_a_reduced_rate_counts_half_an_output_period() -> None:
+    # Output samples 12500, 12505, ... 17495, each for 2 samples around.
+    stop = rules(replace(DELAY, stop_before="pulse1", pulse=PulseRule.ACCEPT_FILLED))
+    for start, fate in ((17497, Fate.NOT_BEFORE_STOP), (17498, Fate.KEPT)):
+        trials = Trials((Trial(1, {**MARKERS, "cue1": Marker(10000, "A"), "pulse1": Marker(17600, "T")}),))
+        geometry = Geometry(5000.0, 1000.0, ((0, 50000),), (GapSpan(start, 17700, 17600),))
+        assert fates(stop, geometry, trials)[0][0] is fate
+    for instant, fate in ((17497, Fate.NOT_BEFORE_STOP), (17500, Fate.KEPT)):
+        trials = Trials((Trial(1, {**MARKERS, "cue1": Marker(10000, "A"), "pulse1": Marker(instant, "T")}),))
+        assert fates(stop, Geometry(5000.0, 1000.0, ((0, 50000),)), trials)[0][0] is fate
+
+
 def test_bad_stretch_and_hand() -> None:
     bad = replace(GEOMETRY, bad_stretches=(BadStretch(3499, 3600, "moved"),))
     assert fates(rules(DELAY), bad) == [(Fate.BAD_STRETCH, "moved, 3.499 s to 3.600 s")]

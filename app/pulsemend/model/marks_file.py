@@ -120,8 +120,8 @@ def update_text(text: str, marks: Marks) -> str:
     if parse_marks(text).marks == marks:
         return text
     changed = updated_text(text, marks_tree(marks), key_defaults(MARKS_KEYS), _NAMED_BY)
-    # Meaning goes before comments, should the editing library ever write what it did not mean.
-    return changed if parse_marks(changed).marks == marks else marks_text(marks)
+    # Meaning goes before comments, as for plans.
+    return changed if _means(changed, marks) else marks_text(marks)
 
 
 def write_marks(path: Path, marks: Marks, text: str = "") -> str:
@@ -228,6 +228,13 @@ def check_samples(marks: Marks, n_samples: int) -> None:
             raise MarksError(
                 key, "is beyond the recording's end", allowed=f"up to {n_samples - 1}", received=str(sample)
             )
+
+
+def _means(text: str, marks: Marks) -> bool:
+    try:
+        return parse_marks(text).marks == marks
+    except MarksError:
+        return False
 
 
 def marks_tree(marks: Marks) -> dict[str, Any]:

@@ -314,30 +314,28 @@ def _check_rule_labels(plan: Plan, rule: EpochRule, path: tuple[str | int, ...])
 
 
 def slot_columns(plan: Plan) -> tuple[str, ...]:
-    """Label columns that come from markers, ``slot.label``: slots in order, labels as first named.
+    """Label columns that come from markers, ``slot.label``: slots in order, their labels sorted.
 
     Parameters
     ----------
     plan : Plan
         Slots, codes and their labels.
     """
-    columns: dict[str, None] = {}
-    for slot in plan.trial:
-        for marker in plan.markers:
-            if marker.role is slot.role:
-                columns.update(dict.fromkeys(f"{slot.slot}.{label}" for label in marker.labels))
-    return tuple(columns)
+    labels: dict[Role, set[str]] = {}
+    for marker in plan.markers:
+        labels.setdefault(marker.role, set()).update(marker.labels)
+    return tuple(f"{slot.slot}.{label}" for slot in plan.trial for label in sorted(labels.get(slot.role, ())))
 
 
 def rule_columns(plan: Plan) -> tuple[str, ...]:
-    """Label columns that come from epoch rules, as first named.
+    """Label columns that come from epoch rules, sorted.
 
     Parameters
     ----------
     plan : Plan
         Rules and their labels.
     """
-    return tuple(dict.fromkeys(column for rule in plan.epochs.rule for column in rule.labels))
+    return tuple(sorted({column for rule in plan.epochs.rule for column in rule.labels}))
 
 
 def _check_whole_samples(plan: Plan, rate_hz: float) -> None:
@@ -354,8 +352,8 @@ def _check_whole(key: str, seconds: float, rate_hz: float, least: float = -math.
     raise PlanError(
         key,
         f"is no whole number of output samples at {rate_hz:.12g} Hz",
-        allowed=" | ".join(f"{whole / rate_hz:.12g}" for whole in nearest),
-        received=f"{seconds:.12g}",
+        allowed=" | ".join(f"{whole / rate_hz:.15g}" for whole in nearest),
+        received=f"{seconds:.15g}",
     )
 
 

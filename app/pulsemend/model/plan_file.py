@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -130,11 +130,12 @@ def update_text(text: str, plan: Plan) -> str:
     PlanError
         The text is no valid plan.
     """
-    if parse_plan(text).plan == plan:
+    if _meaning(parse_plan(text).plan) == _meaning(plan):
         return text
     changed = updated_text(text, plan_tree(plan), key_defaults(PLAN_KEYS), _NAMED_BY)
-    # Meaning goes before comments, should the editing library ever write what it did not mean.
-    return changed if parse_plan(changed).plan == plan else plan_text(plan)
+    # Meaning goes before comments: some ways to write TOML (dotted keys, inline tables) cannot take every
+    # change in place.
+    return changed if _means(changed, plan) else plan_text(plan)
 
 
 def write_plan(path: Path, plan: Plan, text: str = "") -> str:
@@ -157,6 +158,18 @@ def write_plan(path: Path, plan: Plan, text: str = "") -> str:
     new = update_text(text, plan) if text else plan_text(plan)
     write_text(path, new)
     return new
+
+
+def _meaning(plan: Plan) -> Plan:
+    """Give the plan with its codes in a fixed order: theirs says nothing."""
+    return replace(plan, markers=tuple(sorted(plan.markers, key=lambda marker: marker.code)))
+
+
+def _means(text: str, plan: Plan) -> bool:
+    try:
+        return _meaning(parse_plan(text).plan) == _meaning(plan)
+    except PlanError:
+        return False
 
 
 def plan_tree(plan: Plan) -> dict[str, Any]:

@@ -23,7 +23,7 @@ def new_text(tree: Tree, defaults: Mapping[str, object], named_by: Mapping[str, 
     defaults : mapping of str to object
         Values that need not be written, by path (names joined by points, any name as ``*``).
     named_by : mapping of str to str
-        For every array of tables the key by which its tables are told apart; empty: by their place.
+        For every array of tables the key by which its tables are told apart; empty: all of them.
     """
     document = tomlkit.document()
     _update(document, tree, "", _Rules(defaults, named_by))
@@ -42,7 +42,7 @@ def updated_text(text: str, tree: Tree, defaults: Mapping[str, object], named_by
     defaults : mapping of str to object
         Values that need not be written, by path (names joined by points, any name as ``*``).
     named_by : mapping of str to str
-        For every array of tables the key by which its tables are told apart; empty: by their place.
+        For every array of tables the key by which its tables are told apart; empty: all of them.
     """
     crlf = "\r\n" in text
     document = tomlkit.parse(text.replace("\r\n", "\n"))
@@ -142,7 +142,10 @@ def _tables(tables: Iterable[Any]) -> AoT:
 
 def _id(values: Mapping[str, Any], path: str, rules: _Rules) -> object:
     key = rules.named_by[path]
-    return _plain(values.get(key)) if key else None
+    if key:
+        return _plain(values.get(key))
+    said = ((name, _plain(value)) for name, value in values.items())
+    return {name: value for name, value in said if not rules.is_default(f"{path}.{name}", value)}
 
 
 def _match(old: Sequence[object], wanted: Sequence[object]) -> list[int | None]:
