@@ -41,6 +41,7 @@ def stored(path: Path) -> NDArray[np.float64]:
     return out
 
 
+@pytest.mark.filterwarnings("ignore:Encountered unsupported voltage units")
 @pytest.mark.parametrize("fmt", ["binary_int16", "binary_float32"])
 def test_volts_equal_the_reader_librarys_bit_for_bit(tmp_path: Path, fmt: str) -> None:
     """Outside reference: mne. Resolutions whose product with the unit is not what dividing would give."""
