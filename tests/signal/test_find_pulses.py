@@ -17,7 +17,7 @@ N_CHANNELS = 31
 
 
 def background(rate_hz: float, seconds: float, seed: int) -> FloatArray:
-    """1/f noise of 10 uV, alpha of 5 to 15 uV, 0.3 uV of amplifier noise; in microvolts, (samples, channels)."""
+    """1/f noise of 10 uV, alpha of 5 to 15 uV, 0.3 uV of amplifier noise; (samples, channels), uV."""
     rng = np.random.default_rng(seed)
     n = int(seconds * rate_hz)
     f = np.fft.rfftfreq(n, 1 / rate_hz)
@@ -32,7 +32,7 @@ def background(rate_hz: float, seconds: float, seed: int) -> FloatArray:
 
 
 def with_pulse(x: FloatArray, onset: int, size_uv: float, rate_hz: float) -> FloatArray:
-    """A biphasic pulse of 0.4 ms, with a decay of 10 ms, of either sign, sizes spread about the median given."""
+    """A biphasic pulse of 0.4 ms, with a decay of 10 ms, of either sign, sizes about the median given."""
     rng = np.random.default_rng(onset)
     t = np.arange(len(x) - onset) / rate_hz
     shape = np.where(t < 0.0002, 1.0, np.where(t < 0.0004, -0.8, 0.0)) + 0.1 * np.exp(-t / 0.010)

@@ -8,9 +8,9 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import fft
 
-# Segments of this many times the longest lag: the taper then takes 2 % off the longest lags.
+# Long windows are cut into segments of this many times the longest lag, or a little more.
 _SEGMENT_PER_LAGS = 16
-# Windows too short for that use halves of it, down to this many times the longest lag.
+# Windows shorter than this many times the longest lag are passed over.
 _LEAST_SEGMENT_PER_LAGS = 2
 # Channels transformed at a time, so that the work stays within the processor's cache.
 _CHANNELS_AT_A_TIME = 8
@@ -19,12 +19,11 @@ _CHANNELS_AT_A_TIME = 8
 class AutocovarianceSum:
     """Collects the autocovariance of each channel from windows of signal, piece by piece.
 
-    Every window is cut into segments. Of each the mean is removed and a sine taper applied, the
-    taper that leaks least at small distances in frequency [1]_: an offset changes nothing, and a drift
+    Windows are cut into segments. Each has its mean removed and is tapered by a half sine, the taper
+    that leaks least at small distances in frequency [1]_. So an offset changes nothing, and a drift
     slower than a segment adds only a part that is smooth in the lag, which a conditional mean with
-    unknown mean does not notice. The inverse transform of the power collected is a positive
-    semidefinite function of the lag by construction; dividing by the number of products per lag
-    would be free of the taper's bias of at most 2 % but could give impossible autocovariances.
+    unknown mean hardly notices. The products at each lag are divided by those of the taper alone,
+    so that no lag is damped.
 
     Parameters
     ----------
@@ -32,6 +31,11 @@ class AutocovarianceSum:
         Columns of the windows.
     n_lags : int
         Lags wanted, from 0 on.
+
+    Raises
+    ------
+    ValueError
+        If there is no channel or only one lag.
 
     References
     ----------
@@ -42,15 +46,18 @@ class AutocovarianceSum:
     def __init__(self, n_channels: int, n_lags: int) -> None:
         if n_channels < 1 or n_lags < 2:
             raise ValueError(f"needs a channel and two lags; received {n_channels} and {n_lags}")
-        self._n_channels = n_channels
         self._n_lags = n_lags
-        self._power: dict[int, NDArray[np.float64]] = {}  # by length of the transform
-        self._weight = 0.0
         self._n_samples = 0
+        self._products = np.zeros((n_channels, n_lags))
+        self._weights = np.zeros(n_lags)
+        # Power of the segments of one size, until another size comes: most windows are equally long.
+        self._size = 0
+        self._power = np.zeros((n_channels, 0))
+        self._taper_power = np.zeros(0)
 
     @property
     def n_samples(self) -> int:
-        """Samples per channel that were used so far, those of overlapping segments once each."""
+        """Samples per channel that were used so far."""
         return self._n_samples
 
     def add(self, x: NDArray[Any]) -> None:
@@ -64,32 +71,19 @@ class AutocovarianceSum:
         x : array, shape (n_samples, n_channels)
             float32 or float64.
         """
-        size = _SEGMENT_PER_LAGS * self._n_lags
-        while size > len(x) and size > _LEAST_SEGMENT_PER_LAGS * self._n_lags:
-            size //= 2
-        if size > len(x):
+        if len(x) < _LEAST_SEGMENT_PER_LAGS * self._n_lags:
             return
-        self._n_samples += len(x)
-        n_segments = -(-len(x) // size)
-        taper = (np.sin(np.pi * (np.arange(size) + 0.5) / size) * np.sqrt(2.0 / size)).astype(np.float32)
-        for start in np.linspace(0, len(x) - size, n_segments).astype(int):
-            self._add_segment(x[start : start + size], taper)
-
-    def _add_segment(self, segment: NDArray[Any], taper: NDArray[np.float32]) -> None:
-        n_points = fft.next_fast_len(len(segment) + self._n_lags, real=True)
-        if n_points not in self._power:
-            self._power[n_points] = np.zeros((self._n_channels, n_points // 2 + 1))
-        power = self._power[n_points]
-        for first in range(0, self._n_channels, _CHANNELS_AT_A_TIME):
-            rows = segment[:, first : first + _CHANNELS_AT_A_TIME].T.copy()
-            # Once the mean is gone single precision is ample: its noise lies 140 dB below the signal.
-            rows -= rows.mean(axis=1, keepdims=True, dtype=np.float64)
-            spectrum = fft.rfft(rows.astype(np.float32, copy=False) * taper, n_points, axis=1)
-            of_segment = spectrum.real**2
-            of_segment += spectrum.imag**2
-            of_segment *= len(segment)
-            power[first : first + _CHANNELS_AT_A_TIME] += of_segment
-        self._weight += len(segment)
+        n_segments = max(1, len(x) // (_SEGMENT_PER_LAGS * self._n_lags))
+        size = len(x) // n_segments
+        if size != self._size:
+            self._settle()
+            self._size = size
+            n_points = self._n_points()
+            self._power = np.zeros((len(self._products), n_points // 2 + 1))
+            self._taper_power = np.zeros(n_points // 2 + 1)
+        for start in range(0, n_segments * size, size):
+            self._add_segment(x[start : start + size])
+        self._n_samples += n_segments * size
 
     def result(self) -> NDArray[np.float64]:
         """Autocovariance of each channel, in squared units of the windows.
@@ -105,9 +99,32 @@ class AutocovarianceSum:
         ValueError
             If no window was long enough.
         """
-        if not self._power:
+        if not self._n_samples:
             raise ValueError(f"no window had the {_LEAST_SEGMENT_PER_LAGS * self._n_lags} samples needed")
-        total = np.zeros((self._n_channels, self._n_lags))
-        for n_points, power in self._power.items():
-            total += fft.irfft(power, n_points, axis=1)[:, : self._n_lags]
-        return total / self._weight
+        self._settle()
+        return self._products / self._weights
+
+    def _n_points(self) -> int:
+        # Zeros after a segment keep its end from meeting its start.
+        return int(fft.next_fast_len(self._size + self._n_lags, real=True))
+
+    def _add_segment(self, segment: NDArray[Any]) -> None:
+        taper = np.sin(np.pi * (np.arange(self._size) + 0.5) / self._size)
+        self._taper_power += np.abs(fft.rfft(taper, self._n_points())) ** 2
+        single = taper.astype(np.float32)
+        for first in range(0, len(self._products), _CHANNELS_AT_A_TIME):
+            channels = slice(first, first + _CHANNELS_AT_A_TIME)
+            rows = segment[:, channels].T.copy()
+            rows -= rows.mean(axis=1, keepdims=True, dtype=np.float64)
+            # Single precision is ample for the spectrum, whose noise then lies 140 dB below the signal. The
+            # way back is in double: neighbouring lags of a smooth signal differ by less than that.
+            spectrum = fft.rfft(rows.astype(np.float32, copy=False) * single, self._n_points(), axis=1)
+            self._power[channels] += spectrum.real**2
+            self._power[channels] += spectrum.imag**2
+
+    def _settle(self) -> None:
+        """Turn the power collected into products per lag."""
+        if self._size:
+            self._products += fft.irfft(self._power, self._n_points(), axis=1)[:, : self._n_lags]
+            self._weights += fft.irfft(self._taper_power, self._n_points())[: self._n_lags]
+            self._size = 0
