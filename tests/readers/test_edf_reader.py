@@ -101,7 +101,7 @@ def test_strangers_files_are_there() -> None:
 
 
 @pytest.mark.parametrize("path", STRANGERS, ids=lambda path: path.name)
-def test_strangers_files_equal_the_reader_librarys_volts(path: Path) -> None:
+def test_strangers_files_equal_the_reader_library(path: Path) -> None:
     """Outside reference: mne, given only the channels of the common rate."""
     facts, volts = opened(path)
     read = mne.io.read_raw_edf if path.suffix == ".edf" else mne.io.read_raw_bdf

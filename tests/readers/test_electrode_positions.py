@@ -57,7 +57,7 @@ def test_left_and_right_mirror_each_other() -> None:
         np.testing.assert_allclose(at(left) * (-1, 1, 1), at(right), atol=1e-12)
 
 
-def test_every_site_of_the_reader_librarys_list_lies_near_it_on_a_measured_head() -> None:
+def test_every_site_of_the_reader_library_lies_near_it_on_a_measured_head() -> None:
     """Outside reference: mne's positions on one measured head, which is no sphere (hence 12 degrees)."""
     name = "colin27_1005" if "colin27_1005" in mne.channels.get_builtin_montages() else "standard_1005"
     measured = mne.channels.make_standard_montage(name).get_positions()["ch_pos"]

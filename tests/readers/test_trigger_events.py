@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 import pytest
 from hypothesis import given
@@ -32,5 +34,5 @@ def test_known_levels(levels: list[int], expected: list[tuple[int, int]]) -> Non
 @given(st.lists(st.integers(0, 3), max_size=40), st.lists(st.integers(0, 40), max_size=6))
 def test_cuts_make_no_difference(levels: list[int], cuts: list[int]) -> None:
     edges = [0, *sorted(min(cut, len(levels)) for cut in cuts), len(levels)]
-    pieces = [levels[a:b] for a, b in zip(edges, edges[1:], strict=False)]
+    pieces = [levels[a:b] for a, b in itertools.pairwise(edges)]
     assert events(*pieces) == events(levels)

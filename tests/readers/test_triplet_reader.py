@@ -43,7 +43,7 @@ def stored(path: Path) -> NDArray[np.float64]:
 
 @pytest.mark.filterwarnings("ignore:Encountered unsupported voltage units")
 @pytest.mark.parametrize("fmt", ["binary_int16", "binary_float32"])
-def test_volts_equal_the_reader_librarys_bit_for_bit(tmp_path: Path, fmt: str) -> None:
+def test_volts_equal_the_reader_library_bit_for_bit(tmp_path: Path, fmt: str) -> None:
     """Outside reference: mne. Resolutions whose product with the unit is not what dividing would give."""
     resolutions = np.array([0.0488281, 0.1, 0.3, 1 / 3, 7.0e-3, 0.0762951, 1.0, 0.5])
     units = {"\u00b5V": 1e-6, "mV": 1e-3, "V": 1.0, "nV": 1e-9}
