@@ -11,6 +11,7 @@ state.
 
 from __future__ import annotations
 
+from bisect import bisect_left, bisect_right
 from collections import OrderedDict
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -88,7 +89,11 @@ class Chain:
         self._setup = setup
         self._estimates = estimates
         self._repairs = _repairs(setup, estimates)
+        self._output_spans = [
+            (_ceil(lo * setup.ratio), _floor((hi - 1) * setup.ratio) + 1) for lo, hi in setup.facts.segments
+        ]
         self._scale = setup.scale_v.astype(setup.work)[:, None]
+        self._mean_of = (setup.reference_from / max(1, setup.reference_from.sum())).astype(setup.work)
         self._decimator: BandedFilter | None = None
         if setup.antialias is not None:
             self._decimator = banded(setup.antialias, setup.ratio, setup.work)
@@ -121,12 +126,7 @@ class Chain:
             Stored units minus the channels' offsets.
         """
         segment = self._segment_at(start)
-        touched = [
-            (repair, gap)
-            for repair in self._repairs
-            for gap in repair.gaps[segment]
-            if gap.start < stop and gap.stop > start
-        ]
+        touched = [(repair, gap) for repair in self._repairs for gap in repair.touching(segment, start, stop)]
         first = min([start, *(gap.start - gap.left for _, gap in touched)])
         last = max([stop, *(gap.stop + gap.right for _, gap in touched)])
         offset = self._estimates.offset if self._setup.work == np.float32 else None
@@ -137,9 +137,7 @@ class Chain:
 
     def output_span(self, segment: int) -> tuple[int, int]:
         """Output samples [first, stop) whose instants lie within a segment."""
-        lo, hi = self._setup.facts.segments[segment]
-        ratio = self._setup.ratio
-        return _ceil(lo * ratio), _floor((hi - 1) * ratio) + 1
+        return self._output_spans[segment]
 
     def stretch(self, segment: int, start: int, stop: int) -> Samples:
         """Output samples of a stretch, filtered and referenced; mirrored oddly beyond the segment's ends.
@@ -221,10 +219,9 @@ class Chain:
         marked = np.zeros((len(self._setup.names), at.size), dtype=np.bool_)
         reach = 0.5 / ratio + 1e-6
         for repair in self._repairs:
-            for gap in repair.gaps[cut.segment]:
+            for gap in repair.touching(cut.segment, at[0] - reach, at[-1] + reach):
                 a, b = np.searchsorted(at, [gap.start - reach, gap.stop - 1 + reach])
-                if b > a:
-                    marked[repair.columns, a:b] = True
+                marked[repair.columns, a:b] = True
         return marked
 
     def _segment_at(self, sample: int) -> int:
@@ -297,8 +294,8 @@ class Chain:
         if setup.restored:
             volts = np.concatenate([volts, np.zeros((1, volts.shape[1]), volts.dtype)])
         if setup.reference_from.any():
-            mean = volts[setup.reference_from].mean(axis=0)
-            volts[setup.reference_to] -= mean
+            mean = self._mean_of @ volts
+            np.subtract(volts, mean, out=volts, where=setup.reference_to[:, None])
         return volts
 
     @staticmethod
@@ -326,6 +323,12 @@ class _Repair:
     columns: NDArray[np.intp]
     gaps: list[list[Gap]]
     filler: Filler | None
+
+    def touching(self, segment: int, start: float, stop: float) -> list[Gap]:
+        """List the gaps that reach into [start, stop]; they are in order and do not overlap."""
+        gaps = self.gaps[segment]
+        first = bisect_left(gaps, start, key=lambda gap: gap.stop)
+        return gaps[first : bisect_right(gaps, stop, key=lambda gap: gap.start)]
 
     def fill(self, x: Samples, origin: int, gap: Gap) -> None:
         if self.filler is None:

@@ -24,8 +24,8 @@ from pulsemend.signal.gaps import merge_spans, window_to_samples
 
 WINDOW_S = 2.0
 LEAST_WINDOW_S = 0.1
-MOST_WINDOWS = 60
-"""Pulse-free signal is sampled in this many windows, spread over the recording: two minutes tell a channel's
+MOST_WINDOWS = 40
+"""Pulse-free signal is sampled in this many windows, spread over the recording: 80 s tell a channel's
 offset and autocovariance; reading hours more would not change a fill."""
 
 AFTER_PULSE_S = 0.1
@@ -65,19 +65,22 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
     total = len(windows) + len(setup.pulses)
     judged = _judged_channels(setup)
     sums = _autocovariance_sum(setup)
+    scale_v = setup.scale_v.astype(np.float32)
     means: list[NDArray[np.float64]] = []
     steep: list[NDArray[np.float64]] = []
     for done, (start, stop) in enumerate(windows):
         yield Progress(_STAGE, done, total)
-        x = read_stored(recording, setup, start, stop)
+        # Counting from a sample of its own, single precision is enough.
+        origin = read_stored(recording, setup, start, start + 1)[0]
+        x = read_stored(recording, setup, start, stop, origin, np.float32)
         mean = x.mean(axis=0)
-        means.append(mean)
+        means.append(origin + mean)
         x -= mean
-        x *= setup.scale_v
+        x *= scale_v
         if judged.size:
             steep.append(x[: max(2, round(STEEPNESS_S * setup.facts.rate_hz)), judged])
         if sums is not None:
-            sums.add(x.astype(np.float32))
+            sums.add(x)
     usual = usual_steepness(steep) if steep else 0.0
     pulses = []
     for done, expected in enumerate(setup.pulses):

@@ -82,7 +82,7 @@ class BandedFilter:
         return y.reshape(n_blocks * block, n_channels)
 
 
-def banded(taps: Taps, ratio: Fraction, dtype: DTypeLike, *, least_block: int = 16) -> BandedFilter:
+def banded(taps: Taps, ratio: Fraction, dtype: DTypeLike, *, least_block: int = 12) -> BandedFilter:
     """Lay centred taps out as a banded matrix.
 
     Parameters
