@@ -14,6 +14,7 @@
           MarksError
         NoEpochs                   nothing is kept, so nothing is written
         SetError                   the folder of an epoch set: exists already, is none, is damaged
+        ChangedOnDisk              a plan or marks file that somebody else changed since it was read
         OutOfSpace                 the disk, or a format's size limit
       Cancelled               130  stopped by the user
 
@@ -155,6 +156,28 @@ class NoEpochs(InputError):
 
 class SetError(InputError):
     """The folder of an epoch set: it exists already, is none, or is damaged."""
+
+
+class ChangedOnDisk(InputError):
+    """A plan or marks file that changed on the disk since it was read, so it is not written over.
+
+    Parameters
+    ----------
+    path : str
+        The file.
+    ours, theirs : str
+        The text that was to be written, and the one found.
+    """
+
+    def __init__(self, path: str, *, ours: str, theirs: str) -> None:
+        self.path = path
+        self.ours = ours
+        self.theirs = theirs
+        super().__init__(
+            "was changed by somebody else since it was read",
+            where=path,
+            todo="Keep that one, write over it, or save under another name",
+        )
 
 
 class OutOfSpace(InputError):
