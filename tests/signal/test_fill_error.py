@@ -56,7 +56,7 @@ LEAST_GAIN = {
 }
 
 
-@functools.cache
+@functools.lru_cache(maxsize=1)
 def simulated(name: str, seconds: int, n_channels: int) -> tuple[FloatArray, FloatArray]:
     """Signal in microvolts, (n_channels, n_samples), and its true autocovariance in squared microvolts."""
     kind = KINDS[name]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from pulsemend.signal.gaps import Gap, lay_gaps, merge_spans, shortened, window_to_samples
@@ -22,6 +22,7 @@ def test_closed_window_covers_its_samples(rate_hz: float, first: int, n_samples:
     assert (start - 700, stop - start) == (first, n_samples)
 
 
+@settings(deadline=None)
 @given(
     first=st.integers(-500, 500),
     length=st.integers(0, 500),
@@ -77,6 +78,7 @@ SPANS = st.lists(
 )
 
 
+@settings(deadline=None)
 @given(spans=SPANS, barriers=SPANS, flank=st.integers(1, 80), lo=st.integers(0, 60), hi=st.integers(200, 300))
 def test_flanks_hold_only_good_samples_and_all_of_them(
     spans: list[tuple[int, int]], barriers: list[tuple[int, int]], flank: int, lo: int, hi: int

@@ -57,7 +57,7 @@ def test_curve_never_turns_back_where_an_ordinary_spline_does() -> None:
     assert ordinary.min() == pytest.approx(-0.00945, abs=1e-5)
 
 
-@settings(max_examples=60)
+@settings(max_examples=60, deadline=None)
 @given(seed=st.integers(0, 10_000), n_knots=st.integers(2, 8), flat=st.booleans())
 def test_equals_the_general_library(seed: int, n_knots: int, flat: bool) -> None:
     # outside reference: scipy.interpolate.PchipInterpolator
