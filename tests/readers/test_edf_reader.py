@@ -205,7 +205,7 @@ def test_pauses_are_boundaries(tmp_path: Path) -> None:
     assert facts.segments == ((0, 20), (20, 40))
     np.testing.assert_allclose(volts[0], np.arange(40) * 1e-7, atol=1e-15)
     assert [(m.sample, m.code) for m in facts.markers] == [(13, "cue"), (20, "pulse"), (39, "probe")]
-    assert any("paused 1 times" in note for note in facts.notes)
+    assert any("Pauses in the recording: 1" in note for note in facts.notes)
     assert any("lost, end" in note for note in facts.notes)
 
 
@@ -296,7 +296,7 @@ def test_status_channel_gives_markers(tmp_path: Path) -> None:
         (20, "65285", "Status"),
         (30, "300", "Status"),
     ]
-    assert any("4 markers come from Status, 0 from annotations" in note for note in facts.notes)
+    assert any("Markers from Status: 4; from annotations: 0" in note for note in facts.notes)
 
 
 def test_annotations_and_trigger_channel_both_count(tmp_path: Path) -> None:

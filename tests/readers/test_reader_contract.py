@@ -159,6 +159,12 @@ def test_requests_outside_are_a_fault_of_the_caller(recording: Recording, start:
         recording.read(0, 5, np.empty((5, len(NAMES) + 1)))
 
 
+def test_nothing_is_printed(written: Written, capfd: pytest.CaptureFixture[str]) -> None:
+    """Standard output belongs to results."""
+    try_all(written.path)
+    assert capfd.readouterr() == ("", "")
+
+
 def test_fingerprint_covers_every_part(written: Written, recording: Recording) -> None:
     parts = finish(fingerprint(recording)).parts
     files = sorted(written.path.parent.iterdir())

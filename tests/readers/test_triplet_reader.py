@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import os
+import subprocess
+import sys
 from contextlib import closing
 from pathlib import Path
 
@@ -181,8 +183,8 @@ def test_second_segment_marker_is_a_boundary(header: Path) -> None:
         (699, "cue", "Stimulus"),
         (800, "cue", "Stimulus"),
     ]
-    assert any("2 markers of the amplifier's clock" in note for note in facts.notes)
-    assert any("paused 1 times" in note for note in facts.notes)
+    assert any("amplifier's clock (SyncStatus), left out: 2" in note for note in facts.notes)
+    assert any("Pauses in the recording: 1" in note for note in facts.notes)
 
 
 def test_codes_of_markers(header: Path) -> None:
@@ -202,7 +204,7 @@ def test_marker_before_the_first_sample(header: Path) -> None:
     write_markers(header.with_suffix(".vmrk"), [("Stimulus", "cue", 0)])
     facts = facts_of(header)
     assert facts.markers[0].sample == 0
-    assert any("before the first sample" in note for note in facts.notes)
+    assert any("before the first sample, moved onto it: 1" in note for note in facts.notes)
 
 
 def test_marker_behind_the_last_sample_means_that_samples_are_missing(header: Path) -> None:
@@ -316,3 +318,15 @@ def test_marker_file_that_ends_inside_an_entry(header: Path, lost: int) -> None:
         open_recording(header)
     path.write_bytes(content)
     assert len(facts_of(header).markers) == 4
+
+
+def test_plain_triplets_do_without_the_reader_library(header: Path) -> None:
+    """The window shows their first traces before that library is loaded (design, section 5)."""
+    lines = (
+        "import sys",
+        "from pathlib import Path",
+        "from pulsemend.readers.opening import open_recording",
+        f"open_recording(Path({str(header)!r})).close()",
+        "sys.exit('mne' in sys.modules)",
+    )
+    subprocess.run([sys.executable, "-c", "\n".join(lines)], check=True)

@@ -192,7 +192,7 @@ def _signals(path: Path, text: bytes, n_signals: int) -> tuple[Signal, ...]:
 
 
 def _signal(path: Path, fields: tuple[bytes, ...]) -> Signal:
-    label = fields[0].decode("latin-1").strip()
+    label = fields[0].strip().decode("latin-1")
     signal = Signal(
         label=label,
         unit=fields[2].decode("latin-1").strip(),

@@ -77,7 +77,7 @@ def edf_source(header: EdfHeader) -> Source:
     found, outside = _inside(marks, n_samples)
     jumps = np.abs(np.diff(timeline.record_onsets_s) - header.record_s) * header.rate_hz > 0.5
     boundaries = (np.flatnonzero(jumps) + 1) * header.per_record
-    pauses = [f"The recording was paused {len(boundaries)} times; nothing is joined across a pause."]
+    pauses = [f"Pauses in the recording: {len(boundaries)}; nothing is joined across a pause."]
     kind = "EDF" if header.sample_bytes == 2 else "BDF"
     return Source(
         format=kind + "+" if any(signal.holds_annotations for signal in header.signals) else kind,

@@ -122,7 +122,7 @@ class LibraryRecording:
         names = ", ".join(channels[row].name for row in rows)
         if not rows:
             return events, []
-        return events, [f"{len(events)} markers come from {names}, {len(source.found)} from annotations."]
+        return events, [f"Markers from {names}: {len(events)}; from annotations: {len(source.found)}."]
 
     def _levels(self, row: int, n_samples: int) -> Iterator[NDArray[np.int64]]:
         for start in range(0, n_samples, _TRIGGER_BLOCK):
@@ -159,7 +159,7 @@ def _own_errors(path: Path) -> Iterator[None]:
             yield
     except FileNotFoundError as error:
         raise MissingPart(
-            f"the file {Path(str(error.filename)).name} is not there",
+            f"the file {Path(error.filename or path).name} is not there",
             where=path.name,
             todo="Put all files of the recording into one folder",
         ) from error

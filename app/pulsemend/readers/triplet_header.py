@@ -12,7 +12,6 @@ from dataclasses import dataclass
 from pathlib import Path, PureWindowsPath
 
 import numpy as np
-from numpy.typing import NDArray
 
 from pulsemend.errors import DamagedRecording, MissingPart, UnknownFormat
 from pulsemend.model.recording import Channel
@@ -307,9 +306,3 @@ def find_part(header: Path, written: str, suffix: str) -> tuple[Path, str]:
         where=header.name,
         todo="Put all files of the recording into one folder",
     )
-
-
-def offset_fits(offset: NDArray[np.float64], sample_type: SampleType) -> bool:
-    """Whether 16-bit numbers minus ``offset`` are exact in float32: small whole offsets."""
-    small = sample_type.kind == "i" and sample_type.itemsize == 2
-    return small and bool(np.all((np.abs(offset) <= 2**16) & (offset == np.rint(offset))))
