@@ -195,6 +195,7 @@ class Filler:
             return _monotone(before, after, size).astype(self._dtype)
         if kind == "autoregressive":
             return _autoregressive(before, after, size).astype(self._dtype)
+        # A monotone curve with one flank only is left to the cubic's rule: the nearest sample is held.
         weights = self._held.get((size, len(before), len(after)))
         if weights is None:
             shape = line_weights if kind == "line" else cubic_weights
