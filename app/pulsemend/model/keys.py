@@ -9,6 +9,8 @@ from dataclasses import dataclass, replace
 from enum import Enum
 from typing import TypeVar
 
+from pulsemend.model.toml_lines import quoted
+
 T = TypeVar("T")
 
 
@@ -114,7 +116,7 @@ def show(value: object) -> str:
     if isinstance(value, bool):
         text = str(value).lower()
     elif isinstance(value, str):
-        text = '"' + str(value).replace("\\", "\\\\").replace('"', '\\"').replace("\n", "\\n") + '"'
+        text = quoted(value)
     elif isinstance(value, dict):
         text = "a table"
     elif isinstance(value, (list, tuple)):
@@ -123,7 +125,6 @@ def show(value: object) -> str:
         text = f"a whole number of more than {_MANY} digits"
     else:
         text = str(value)
-    text = "".join(sign if sign.isprintable() else f"\\u{ord(sign):04x}" for sign in text)
     return text if len(text) <= _MANY else text[: _MANY - 3] + "..."
 
 

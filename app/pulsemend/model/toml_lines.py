@@ -28,9 +28,29 @@ def key_text(path: KeyPath) -> str:
         if isinstance(part, int):
             text += f"[{part}]"
             continue
-        name = part if _BARE.fullmatch(part) else '"' + part.replace("\\", "\\\\").replace('"', '\\"') + '"'
+        name = part if _BARE.fullmatch(part) else quoted(part)
         text += f".{name}" if text else name
     return text
+
+
+def quoted(text: str) -> str:
+    """Write a text as a TOML string on one line, everything that would not show escaped.
+
+    Parameters
+    ----------
+    text : str
+        Any text.
+    """
+    signs = []
+    for sign in text:
+        code = ord(sign)
+        if sign in '"\\':
+            signs.append("\\" + sign)
+        elif sign.isprintable():
+            signs.append(sign)
+        else:
+            signs.append(f"\\u{code:04X}" if code < 0x10000 else f"\\U{code:08X}")
+    return '"' + "".join(signs) + '"'
 
 
 def key_lines(text: str) -> dict[str, int]:

@@ -1,0 +1,345 @@
+"""A first plan for a recording: everything that can be told, and every decision left open marked as such.
+
+A draft of a recording with pulses is no finished plan on purpose: `mend` refuses it until a person has
+decided the gap and the roles of the codes that the markers do not explain.
+"""
+
+from __future__ import annotations
+
+import os
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from statistics import median
+
+from pulsemend.errors import UsageError
+from pulsemend.mending.facts import summarise
+from pulsemend.model.keys import Key, show
+from pulsemend.model.plan import Pulses
+from pulsemend.model.plan_checks import LARGEST_BAND
+from pulsemend.model.plan_keys import PLAN_KEYS, SCHEMA
+from pulsemend.model.recording import RecordingFacts
+from pulsemend.model.toml_lines import key_text
+from pulsemend.model.toml_tables import write_text
+from pulsemend.model.vocabulary import Role
+from pulsemend.progress import Work
+from pulsemend.trials.proposal import CodeGuess, Guess, SlotGuess, guess
+from pulsemend.units import ms_to_s, s_to_ms
+
+_ALWAYS = 0.8
+_LONGEST_EPOCH_S, _SHORTEST_EPOCH_S = 2.0, 0.2
+
+
+@dataclass(frozen=True)
+class CodeEvidence:
+    """What the signal shows at the markers of one code.
+
+    Parameters
+    ----------
+    code : str
+    n_markers : int
+    n_in_signal : int
+        Markers with a pulse-like event near them.
+    latency_ms : float
+        Median of event minus marker.
+    least_ms, most_ms : float
+        Its range.
+    """
+
+    code: str
+    n_markers: int
+    n_in_signal: int
+    latency_ms: float
+    least_ms: float
+    most_ms: float
+
+
+@dataclass(frozen=True)
+class PulseEvidence:
+    """Pulse-like events in the signal, by the codes they belong to; `unmarked` belong to none."""
+
+    codes: tuple[CodeEvidence, ...] = ()
+    n_events: int = 0
+    unmarked: int = 0
+
+    @property
+    def pulse_codes(self) -> tuple[str, ...]:
+        """Codes at whose markers there nearly always is a pulse."""
+        return tuple(one.code for one in self.codes if one.n_in_signal >= _ALWAYS * one.n_markers)
+
+
+NO_EVIDENCE = PulseEvidence()
+
+
+def write_draft(recording: Path, out: Path) -> Work[Path]:
+    """Write a first plan for a recording.
+
+    Parameters
+    ----------
+    recording : Path
+        The recording to start from.
+    out : Path
+        The plan to write; it must not exist.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    Path
+        The plan.
+
+    Raises
+    ------
+    UsageError
+        There is such a file already, or no folder for it.
+    RecordingError
+        The recording cannot be used.
+    """
+    _check_free(out)
+    summary = yield from summarise(recording)
+    text = draft_plan(summary.facts, pulse_evidence(summary.facts, summary.pulses_found))
+    _check_free(out)
+    write_text(out, text)
+    return out
+
+
+def _check_free(out: Path) -> None:
+    if os.path.lexists(out):
+        raise UsageError("exists already", where=str(out), todo="Choose another name; plans are not replaced")
+    if not out.parent.is_dir():
+        raise UsageError("is no folder", where=str(out.parent), todo="Make it first")
+
+
+def pulse_evidence(facts: RecordingFacts, pulses_found: Sequence[int]) -> PulseEvidence:
+    """Assign pulse-like events to the nearest marker within the usual search range.
+
+    Parameters
+    ----------
+    facts : RecordingFacts
+        Markers and rate.
+    pulses_found : sequence of int
+        Recorded samples of pulse-like events.
+    """
+    low, high = (ms_to_s(edge) * facts.rate_hz for edge in Pulses().search_ms)
+    seen: dict[str, list[float]] = {}
+    unmarked = 0
+    for event in pulses_found:
+        near = [marker for marker in facts.markers if low <= event - marker.sample <= high]
+        if near:
+            marker = min(near, key=lambda one: abs(event - one.sample))
+            seen.setdefault(marker.code, []).append(s_to_ms((event - marker.sample) / facts.rate_hz))
+        else:
+            unmarked += 1
+    counts = Counter(marker.code for marker in facts.markers)
+    codes = tuple(
+        CodeEvidence(code, counts[code], len(ms), median(ms), min(ms), max(ms)) for code, ms in seen.items()
+    )
+    return PulseEvidence(codes, len(pulses_found), unmarked)
+
+
+def draft_plan(facts: RecordingFacts, evidence: PulseEvidence = NO_EVIDENCE) -> str:
+    """Write the text of a first plan.
+
+    Parameters
+    ----------
+    facts : RecordingFacts
+        The recording to start from.
+    evidence : PulseEvidence
+        What the signal shows; without it only names and intervals speak.
+
+    Returns
+    -------
+    str
+        TOML with comments; lines marked ``# decide:`` need a person.
+    """
+    found = guess(facts.markers, facts.rate_hz, evidence.pulse_codes)
+    rate_hz = _output_rate_hz(facts.rate_hz)
+    parts = [
+        _head(facts),
+        _markers(found),
+        _trial(found),
+        _pulses(found, evidence),
+        _filter(facts.rate_hz, rate_hz),
+        _section("channels"),
+        _epochs(found, rate_hz or facts.rate_hz),
+        _section("export"),
+    ]
+    return "\n\n".join("\n".join(lines) for lines in parts) + "\n"
+
+
+def _head(facts: RecordingFacts) -> list[str]:
+    return [
+        f"# First plan, drafted from {show(facts.stem)}.",
+        "# A person has to settle every line marked `decide:`; `pulsemend mend` refuses what is still open.",
+        f"pulsemend = {SCHEMA}",
+        "",
+        "[about]",
+        'name = ""   # decide: name of the study',
+        "line_hz = 0   # decide: mains frequency to remove, 50 or 60; 0: no line removal",
+    ]
+
+
+def _markers(found: Guess) -> list[str]:
+    lines = ["# Every code of the recording, what it stands for, and the labels it gives to its trial."]
+    if not found.codes:
+        return [*lines, "# decide: this recording has no markers; without any there are no trials."]
+    lines.append('# Labels are written as: labels = { item = "left" }')
+    for one in found.codes:
+        lines += ["", f"# {_neighbourhood(one, found)}", f"[{key_text(('markers', one.code))}]"]
+        if one.role is Role.UNDECIDED:
+            roles = ", ".join(role.value for role in Role if role is not Role.UNDECIDED)
+            lines.append(f'role = "undecided"   # decide: {roles}')
+        else:
+            lines.append(f'role = "{one.role}"   # decide: right? {one.reason}')
+    return lines
+
+
+def _neighbourhood(one: CodeGuess, found: Guess) -> str:
+    text = f"{one.count} times" if one.count > 1 else "once"
+    if found.slots and one.role is Role.UNDECIDED:
+        text += f", {one.count / found.n_trials:.2f} for each {show(found.slots[0].slot.slot)}"
+    if one.before:
+        text += f"; usually {one.before[1]:.3f} s after {show(one.before[0])}"
+    if one.after:
+        text += f"{' and' if one.before else '; usually'} {one.after[1]:.3f} s before {show(one.after[0])}"
+    return text
+
+
+def _trial(found: Guess) -> list[str]:
+    if not found.slots:
+        return [
+            "# decide: no trial could be made out; name the markers of one trial in order, for example:",
+            "# [[trial]]",
+            '# slot = "sample"',
+            '# role = "sample"',
+            "# [[trial]]",
+            '# slot = "cue1"',
+            '# role = "cue"',
+            "# after_s = [1.0, 2.0]",
+        ]
+    lines = [
+        f"# One trial: its markers in order, as in most of {found.n_trials} trials. decide: right?",
+        "# after_s counts from the nearest earlier slot that is not optional.",
+    ]
+    for one in found.slots:
+        lines += ["", "[[trial]]", f"slot = {show(one.slot.slot)}", f'role = "{one.slot.role}"']
+        lines += _slot_limits(one)
+        if one.slot.optional:
+            lines.append(f"optional = true   # decide: found in {one.found} of {found.n_trials} trials")
+    return lines
+
+
+def _slot_limits(one: SlotGuess) -> list[str]:
+    if one.slot.after_s is None or one.seen_s is None:
+        return []
+    low, high = one.slot.after_s
+    return [
+        f"after_s = [{low}, {high}]   # seen: {one.seen_s[0]:.3f} to {one.seen_s[1]:.3f} s in 98 % of them"
+    ]
+
+
+def _pulses(found: Guess, evidence: PulseEvidence) -> list[str]:
+    lines = [f"# {evidence.n_events} pulse-like events in the signal."] if evidence.n_events else []
+    lines += [
+        f"# {show(one.code)}: {one.n_in_signal} of {one.n_markers} markers have one,"
+        f" {one.latency_ms:.1f} ms after the marker ({one.least_ms:.1f} to {one.most_ms:.1f})."
+        for one in evidence.codes
+    ]
+    if evidence.unmarked:
+        lines.append(
+            f"# decide: {evidence.unmarked} have no marker; they can be added in the recording's marks."
+        )
+    roles = {one.role for one in found.codes}
+    if Role.PULSE not in roles and Role.UNDECIDED not in roles and found.codes and not evidence.n_events:
+        lines.append("# decide: no code is a pulse, so nothing is repaired; right?")
+        return [*lines, *_section("pulses", times='"none"')]
+    gap = [
+        "# decide: the gap around every pulse, from before its onset until the spike and the muscle response",
+        "# are over in the channels near the coil. Look at the pulses, then write for example:",
+        "# window_ms = [-2.0, 14.0]   # replaced, in ms since the onset",
+    ]
+    return [*lines, *_section("pulses", window_ms=gap)]
+
+
+def _filter(recorded_hz: float, rate_hz: float) -> list[str]:
+    highest_hz = LARGEST_BAND * (rate_hz or recorded_hz)
+    lowpass = {} if highest_hz >= 100.0 else {"lowpass_hz": "0.0"}
+    rate = {} if rate_hz else {"rate_hz": "0.0"}
+    return [f"# Recorded at {recorded_hz:.12g} Hz.", *_section("filter", **lowpass, **rate)]
+
+
+def _output_rate_hz(recorded_hz: float) -> float:
+    """Output rate of the draft: the default, or 0 where the recording is not faster."""
+    default = next(key.default for key in PLAN_KEYS if key.path == "filter.rate_hz")
+    return float(str(default)) if recorded_hz > float(str(default)) else 0.0
+
+
+def _epochs(found: Guess, rate_hz: float) -> list[str]:
+    lines = ["# One length for the whole set, and one rule for each kind of epoch."]
+    cues = [place for place, one in enumerate(found.slots) if one.slot.role is Role.CUE]
+    if not found.slots:
+        return [
+            *lines,
+            "# decide: rules need the slots of a trial.",
+            "[epochs]",
+            "length_s = 1.0   # decide",
+            "# [[epochs.rule]]",
+            '# name = "delay1"',
+            '# anchor = "cue1"',
+            "# start_s = 0.0",
+        ]
+    length_s = _length_s(found.slots, cues, rate_hz)
+    lines += [
+        "[epochs]",
+        f"length_s = {length_s:.15g}   # decide: the longest that fits between a cue and what follows",
+    ]
+    first = found.slots[0].slot.slot
+    lines += _rule("baseline", first, -length_s, f"before {show(first)}")
+    for number, place in enumerate(cues, start=1):
+        cue = found.slots[place].slot.slot
+        following = found.slots[place + 1].slot.slot if place + 1 < len(found.slots) else ""
+        lines += _rule(f"delay{number}", cue, 0.0, f"from {show(cue)} on", following)
+    return lines
+
+
+def _length_s(slots: Sequence[SlotGuess], cues: Sequence[int], rate_hz: float) -> float:
+    """Longest epoch, in whole output samples and mostly in tenths of a second, that fits after every cue."""
+    after = [slots[place + 1].seen_s for place in cues if place + 1 < len(slots)]
+    room_s = min((seen[0] for seen in after if seen is not None), default=1.0)
+    length_s = min(max(int(room_s * 10 + 1e-6) / 10, _SHORTEST_EPOCH_S), _LONGEST_EPOCH_S)
+    return max(1, round(length_s * rate_hz)) / rate_hz
+
+
+def _rule(name: str, anchor: str, start_s: float, what: str, stop_before: str = "") -> list[str]:
+    lines = [
+        "",
+        f"[[epochs.rule]]   # decide: {what}",
+        f'name = "{name}"',
+        f"anchor = {show(anchor)}",
+        f"start_s = {start_s:.15g}",
+    ]
+    return [*lines, f"stop_before = {show(stop_before)}"] if stop_before else lines
+
+
+def _section(name: str, **settled: str | list[str]) -> list[str]:
+    """All single keys of a section with their defaults and meanings, from the table of keys."""
+    lines = [f"[{name}]"]
+    for key in PLAN_KEYS:
+        section, _, own = key.path.partition(".")
+        if section != name or "." in own or "*" in own:
+            continue
+        value = settled.get(own, show(key.default))
+        if isinstance(value, list):
+            lines += value
+        elif key.default is None:
+            lines.append(f"# {own} = ...   # {_meaning(key)}")
+        else:
+            lines.append(f"{own} = {value}   # {_meaning(key)}")
+    return lines
+
+
+def _meaning(key: Key) -> str:
+    return f"{key.meaning}: {key.allowed}" if key.words else key.meaning
