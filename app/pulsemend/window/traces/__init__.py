@@ -1,0 +1,1 @@
+"""The stacked traces: our own renderer, its overlays, and the hands on it."""
