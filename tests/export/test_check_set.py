@@ -96,7 +96,10 @@ def test_progress_grows_to_the_end(whole_set: Path) -> None:
 
 def test_a_flipped_bit_in_either_container(copied_set: Path) -> None:
     flip_bit(copied_set, "epochs.h5", data_place(copied_set, "epochs.h5", "<f4"))
-    assert set(failed(copied_set)) == {"checksums", "content", "equal"}
+    # changed structures may hang the library: what the checksum does not cover is not opened
+    found = failed(copied_set)
+    assert set(found) == {"checksums", "readable", "content", "equal"}
+    assert "was changed after it was written" in found["readable"].detail
     sign_again(copied_set)
     found = failed(copied_set)
     assert set(found) == {"content", "equal"}
@@ -113,6 +116,7 @@ def test_the_sign_of_a_zero_is_a_difference(copied_set: Path) -> None:
     with h5py.File(part(copied_set, "epochs.h5"), "r+") as file:
         assert np.signbit(file["data"][0, 0, 0])
         file["data"][0, 0, 0] = 0.0
+    sign_again(copied_set)
     assert failed(copied_set)["equal"].detail == "epoch 0 differs"
 
 

@@ -224,6 +224,18 @@ def test_tags_of_the_file_are_found_without_the_library(tmp_path: Path) -> None:
     assert math.isclose(facts.rate_hz, 200.0)
 
 
+def test_every_type_of_channel(tmp_path: Path) -> None:
+    channels = tuple(SetChannel(kind.value, kind) for kind in ChannelType)
+    contents = make_contents(channels=channels)
+    data, replaced = make_data(contents)
+    replaced[:] = False
+    epochs = tuple(replace(epoch, replaced_share=0.0) for epoch in contents.epochs)
+    folder = write_set(replace(contents, epochs=epochs), tmp_path, data, replaced)
+    read = mne.read_epochs(folder / f"{NAME}_epo.fif", verbose="error")
+    assert read.get_channel_types() == ["eeg", "eog", "emg", "ecg", "misc", "stim"]
+    np.testing.assert_array_equal(read.get_data(copy=False), data.astype(np.float32))
+
+
 def test_rule_names_in_other_letters(tmp_path: Path) -> None:
     rows = (replace(candidate(1), rule="verz\u00f6gert_\u03b2"), candidate(1, "baseline"))
     contents = make_contents(

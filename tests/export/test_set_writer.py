@@ -146,6 +146,14 @@ def test_disk_space_is_checked_before_anything_is_written(
     assert names_in(tmp_path) == []
 
 
+def test_a_parent_that_is_a_file_is_the_users_error(tmp_path: Path) -> None:
+    (tmp_path / "file").write_bytes(b"")
+    with pytest.raises(SetError, match="file"):
+        write_set(make_contents(), tmp_path / "file")
+    with pytest.raises(SetError, match="file"):
+        write_set(make_contents(), tmp_path / "file" / "below")
+
+
 def test_a_disk_that_fills_up_leaves_nothing(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     before = content(write_set(make_contents(), tmp_path))
     original = OpenRegion.write
@@ -444,6 +452,7 @@ def test_a_killed_process_leaves_no_set_and_the_next_run_cleans_up(tmp_path: Pat
     assert names_in(tmp_path) == [NAME]
 
 
+@pytest.mark.skipif(shutil.which("sha256sum") is None, reason="needs the program sha256sum")
 @pytest.mark.parametrize(
     "stem", ["x", "-rf", "a b'c\"", "\u65e5\u672c\u8a9e_\u03b1", "new\nline\\back", "y" * 226, "%s{}"]
 )

@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 
 from pulsemend.errors import PlanError, SetError
 from pulsemend.export import contents as names
-from pulsemend.export.checksums import file_sha256
+from pulsemend.export.checksums import file_sha256, read_checksums
 from pulsemend.export.content_hash import ContentHash
 from pulsemend.export.fif import FifFacts, read_fif
 from pulsemend.export.folders import file_in
@@ -57,8 +57,8 @@ class FoundSet:
         What the files' names start with.
     present : frozenset of str
         Names of the files that are there.
-    digests : dict of str to str
-        SHA-256 by file name.
+    digests, listed : dict of str to str
+        SHA-256 by file name: of what is there, and as the checksums say; `listed` is None without them.
     problems : dict of str to str
         What is wrong, by file or by what was tried.
     hdf5, fif, plan, tables
@@ -79,6 +79,7 @@ class FoundSet:
     prefix: str
     present: frozenset[str] = frozenset()
     digests: dict[str, str] = field(default_factory=dict)
+    listed: dict[str, str] | None = None
     problems: dict[str, str] = field(default_factory=dict)
     hdf5: Hdf5Facts | None = None
     fif: FifFacts | None = None
@@ -162,9 +163,15 @@ def read_found(folder: Path, prefix: str) -> Work[FoundSet]:
             found.digests[name] = file_sha256(found.folder / name)
         done += sizes[name]
     _read_beside(found)
-    if found.path(names.EPOCHS_H5).name in found.present:
+    with found.reading(names.CHECKSUMS):
+        found.listed = read_checksums(found.path(names.CHECKSUMS))
+    path = found.path(names.EPOCHS_H5)
+    if path.name in found.present:
         with found.reading(names.EPOCHS_H5):
-            found.hdf5 = read_hdf5(found.path(names.EPOCHS_H5))
+            # The HDF5 library may never return from a file with damaged structures.
+            if found.listed is not None and found.listed.get(path.name) != found.digests.get(path.name):
+                raise ValueError("was changed after it was written, so it is not opened")
+            found.hdf5 = read_hdf5(path)
     if found.path(names.EPO_FIF).name in found.present:
         with found.reading(names.EPO_FIF):
             found.fif = read_fif(found.path(names.EPO_FIF))

@@ -9,7 +9,6 @@ import numpy as np
 
 from pulsemend.export import contents as names
 from pulsemend.export.check_items import CheckItem, integrity_item
-from pulsemend.export.checksums import read_checksums
 from pulsemend.export.contents import Labels, zero_samples
 from pulsemend.export.found_set import FoundSet
 from pulsemend.export.hdf5 import Hdf5Facts
@@ -82,23 +81,16 @@ def check_checksums(found: FoundSet) -> CheckItem:
         What was read.
     """
     title, limit = "checksums of the files", "as written"
-    path = found.path(names.CHECKSUMS)
-    with found.reading(names.CHECKSUMS):
-        listed = read_checksums(path)
-        problems = [
-            f"{name} was changed" for name in listed if found.digests.get(name, "") not in ("", listed[name])
-        ]
-        problems += [f"{name} is missing" for name in listed if name not in found.digests]
-        wanted = (found.path(name).name for name in (*names.CONTAINERS.values(), *names.SIDE_FILES))
-        problems += [
-            f"{name} is not listed" for name in wanted if name in found.digests and name not in listed
-        ]
-        return integrity_item(
-            "checksums", title, f"{len(listed) - len(problems)} of {len(listed)}", limit, problems
-        )
-    return integrity_item(
-        "checksums", title, "none", limit, [f"{names.CHECKSUMS}: {found.problems[names.CHECKSUMS]}"]
-    )
+    if found.listed is None:
+        problems = [f"{names.CHECKSUMS}: {found.problems[names.CHECKSUMS]}"]
+        return integrity_item("checksums", title, "none", limit, problems)
+    listed, digests = found.listed, found.digests
+    problems = [f"{name} was changed" for name in listed if digests.get(name, listed[name]) != listed[name]]
+    problems += [f"{name} is missing" for name in listed if name not in digests]
+    wanted = (found.path(name).name for name in (*names.CONTAINERS.values(), *names.SIDE_FILES))
+    problems += [f"{name} is not listed" for name in wanted if name in digests and name not in listed]
+    value = f"{sum(digests.get(name) == digest for name, digest in listed.items())} of {len(listed)}"
+    return integrity_item("checksums", title, value, limit, problems)
 
 
 def _readable(found: FoundSet) -> CheckItem:
