@@ -295,6 +295,27 @@ def test_every_key_of_the_simple_sections_is_shown() -> None:
     assert decided(text).role_of("pulse") is Role.PULSE
 
 
+def test_draft_of_the_sample_recording(tmp_path: Path) -> None:
+    recording = Path(__file__).parents[2] / "sample_data" / "sub-lt01_task-lantern_eeg.vhdr"
+    out = finish(write_draft(recording, tmp_path / "draft.toml"))
+    text = out.read_text(encoding="utf-8")
+    assert roles(text) == {
+        "dot": "undecided",
+        "lanterns up": "undecided",
+        "arrow left": "cue",
+        "arrow right": "cue",
+        "pulse": "pulse",
+        "probe same": "probe",
+        "probe other": "probe",
+        "answer same": "response",
+        "answer other": "response",
+    }
+    with pytest.raises(PlanError, match=r"pulses\.window_ms"):
+        parse_plan(text)
+    with pytest.raises(PlanError, match='still undecided: "dot", "lanterns up"'):
+        check_decided(decided(text))
+
+
 def test_plans_are_never_replaced(tmp_path: Path) -> None:
     out = tmp_path / "plan.toml"
     out.write_text("mine", encoding="utf-8")

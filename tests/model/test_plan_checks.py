@@ -8,6 +8,7 @@ import pytest
 
 from pulsemend.errors import MarksError, PlanError
 from pulsemend.model.marks import NO_MARKS, Marks
+from pulsemend.model.marks_file import parse_marks
 from pulsemend.model.plan import Plan
 from pulsemend.model.plan_checks import (
     check_against_rate,
@@ -212,6 +213,17 @@ def test_channels_that_are_needed(rows: str, key: str, near: str) -> None:
         check_channels(plan, NO_MARKS, NAMES)
     assert caught.value.key == key
     assert near in caught.value.allowed
+
+
+def test_refusals_of_marks_are_located_in_the_marks() -> None:
+    plan_file = parse_plan(TEXT, "study.toml")
+    marks_file = parse_marks("pulsemend_marks = 1\n\n[types]\nfp1 = 'eog'\n", "lt01.marks.toml")
+    with pytest.raises(MarksError) as caught, plan_file.source.located(), marks_file.source.located():
+        check_channels(plan_file.plan, marks_file.marks, NAMES)
+    assert (caught.value.path, caught.value.line) == ("lt01.marks.toml", 4)
+    with pytest.raises(MarksError) as caught, plan_file.source.located():
+        check_channels(plan_file.plan, marks_file.marks, NAMES)
+    assert (caught.value.path, caught.value.line) == ("", None)
 
 
 @pytest.mark.parametrize(

@@ -206,6 +206,23 @@ epochs.rule = [ { name = "baseline", anchor = "sample", start_s = -1 } ]
     assert parse_plan(update_text(text, changed)).plan == changed
 
 
+CODES = ["a\nb", "\0", "\x7f", "\u2028", "a\tb", "\U000e0001", "'" * 3, '"' * 3, "*", "a.b", ""]
+
+
+@pytest.mark.parametrize("code", CODES, ids=ascii)
+def test_any_code_is_kept_and_named_on_one_line(code: str) -> None:
+    plan = replace(PLAN, markers=(*PLAN.markers, MarkerPlan(code, Role.OTHER)))
+    text = plan_text(plan)
+    assert same(parse_plan(text).plan, plan)
+    updated = update_text(TEXT, plan)
+    assert same(parse_plan(updated).plan, plan)
+    assert comments(updated) == comments(TEXT)
+    with pytest.raises(PlanError) as caught:
+        parse_plan(text.replace('role = "other"', 'role = "no"'))
+    assert len(str(caught.value).splitlines()) == 1
+    assert caught.value.line == text[: text.index('role = "other"')].count("\n") + 1
+
+
 # --- any plan ---------------------------------------------------------------------------------------
 
 words = st.text("abcXY_-1", min_size=1, max_size=5)

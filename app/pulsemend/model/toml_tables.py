@@ -36,17 +36,23 @@ class Source:
         The checked values, defaults filled in.
     lines : mapping of str to int
         Lines of the keys.
+    error : type of SettingError
+        What refusals of this kind of file are.
     """
 
     text: str
     name: str
     tree: Mapping[str, Any] = field(repr=False)
     lines: Mapping[str, int] = field(repr=False)
+    error: type[SettingError]
 
     @contextmanager
     def located(self) -> Iterator[None]:
-        """Give refusals raised inside that have none yet their line and file."""
-        with _located(self.lines, self.name):
+        """Give refusals of this kind of file raised inside, that have none yet, their line and file.
+
+        Others pass through: a plan and marks can be checked together inside both their blocks.
+        """
+        with _located(self.lines, self.name, self.error):
             yield
 
 
@@ -128,21 +134,21 @@ def parse(
     try:
         raw = _toml(text, name, error)
         lines = key_lines(text)
-        with _located(lines, name):
+        with _located(lines, name, error):
             tree = _Checker(error, frozenset(later)).table(_schema(keys), raw, ())
     except RecursionError:
         raise error("", "is nested too deeply", path=name) from None
-    return Source(text, name, tree, lines)
+    return Source(text, name, tree, lines, error)
 
 
 @contextmanager
-def _located(lines: Mapping[str, int], name: str) -> Iterator[None]:
+def _located(lines: Mapping[str, int], name: str, error: type[SettingError]) -> Iterator[None]:
     try:
         yield
-    except SettingError as refusal:
+    except error as refusal:
         if refusal.line is not None or refusal.path:
             raise
-        raise type(refusal)(
+        raise error(
             refusal.key,
             refusal.problem,
             allowed=refusal.allowed,
