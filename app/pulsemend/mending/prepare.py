@@ -139,10 +139,7 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
     marks_file = read_marks(path) if request.marks is not None or path.exists() else None
     marks = NO_MARKS if marks_file is None else marks_file.marks
     with plan_file.source.located():
-        check_decided(plan)
-        check_against_rate(plan, facts.rate_hz)
-        warnings = [*plan_file.warnings, *check_channels(plan, marks, [c.name for c in facts.channels])]
-        setup = bind(with_positions(facts), plan, marks)
+        setup, warnings = bind_checked(facts, plan, marks)
     if marks_file is not None:
         with marks_file.source.located():
             check_files(marks, facts.parts)
@@ -153,20 +150,8 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
             check_fingerprint(marks, identity)
     identified = replace(marks, fingerprint=identity)
     estimates = yield from fit(recording, setup)
-    if estimates.unmarked:
-        first_s = estimates.unmarked[0] / facts.rate_hz
-        raise InputError(
-            f"no pulse is known, but {len(estimates.unmarked)} pulse-like events are in the signal, "
-            f"the first at {first_s:.3f} s",
-            where=facts.stem,
-            todo='Give the pulse markers role = "pulse", or set pulses.times = "none" if these are no pulses',
-        )
-    trials = match_trials(facts.markers, plan, facts.rate_hz, marks)
-    geometry = lay_geometry(setup, estimates, marks)
-    ledger = candidates(trials, plan, geometry)
-    warnings += _trial_warnings(trials, facts)
-    warnings += stale_decisions(trials, plan, geometry)
-    warnings += estimates.notes
+    need_known_pulses(estimates, facts)
+    decision = decide(setup, estimates, plan, marks)
     return Prepared(
         recording=recording,
         plan_file=plan_file,
@@ -175,11 +160,84 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
         fingerprint=identity,
         estimates=estimates,
         chain=Chain(recording, setup, estimates),
-        trials=trials,
-        geometry=geometry,
-        ledger=ledger,
-        kept=set_order(ledger, geometry),
-        warnings=tuple(warnings),
+        trials=decision.trials,
+        geometry=decision.geometry,
+        ledger=decision.ledger,
+        kept=decision.kept,
+        warnings=(*plan_file.warnings, *warnings, *decision.warnings),
+    )
+
+
+def bind_checked(facts: RecordingFacts, plan: Plan, marks: Marks) -> tuple[Setup, tuple[str, ...]]:
+    """Check plan and marks against a recording and bind them to it.
+
+    Returns
+    -------
+    setup : Setup
+    warnings : tuple of str
+
+    Raises
+    ------
+    PlanError, MarksError, UnusableChannels
+        Something is undecided, or does not fit the recording.
+    """
+    check_decided(plan)
+    check_against_rate(plan, facts.rate_hz)
+    warnings = check_channels(plan, marks, [channel.name for channel in facts.channels])
+    return bind(with_positions(facts), plan, marks), warnings
+
+
+@dataclass(frozen=True)
+class Decision:
+    """What becomes of every trial and epoch.
+
+    Parameters
+    ----------
+    trials : Trials
+    geometry : Geometry
+    ledger : tuple of Candidate
+        All candidates, in order of trial, rule and piece.
+    kept : tuple of Candidate
+        In the order of the set.
+    warnings : tuple of str
+    """
+
+    trials: Trials
+    geometry: Geometry
+    ledger: tuple[Candidate, ...]
+    kept: tuple[Candidate, ...]
+    warnings: tuple[str, ...]
+
+
+def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks) -> Decision:
+    """Match the trials and decide every candidate's fate; touches no sample."""
+    facts = setup.facts
+    trials = match_trials(facts.markers, plan, facts.rate_hz, marks)
+    geometry = lay_geometry(setup, estimates, marks)
+    ledger = candidates(trials, plan, geometry)
+    warnings = [
+        *_trial_warnings(trials, facts),
+        *stale_decisions(trials, plan, geometry),
+        *estimates.notes,
+    ]
+    return Decision(trials, geometry, ledger, set_order(ledger, geometry), tuple(warnings))
+
+
+def need_known_pulses(estimates: Estimates, facts: RecordingFacts) -> None:
+    """Refuse a recording whose signal holds pulses while none is known.
+
+    Raises
+    ------
+    InputError
+    """
+    if not estimates.unmarked:
+        return
+    first_s = estimates.unmarked[0] / facts.rate_hz
+    raise InputError(
+        f"no pulse is known, but {len(estimates.unmarked)} pulse-like events are in the signal, "
+        f"the first at {first_s:.3f} s",
+        where=facts.stem,
+        todo='Give the pulse markers role = "pulse", or set pulses.times = "none" if these are no pulses',
     )
 
 
