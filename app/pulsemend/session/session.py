@@ -173,7 +173,7 @@ class Session(Surroundings):
         self._view = replace(
             View(row_uv=self._view.row_uv, shown=self._view.shown),
             width_s=min(self._view.width_s, facts.duration_s) or self._view.width_s,
-            rows=tuple(one.name for one in facts.channels if one.type is not ChannelType.TRIGGER),
+            rows=usual_rows(facts),
         )
         self._selected = NOTHING_SELECTED
         self._estimates_revision = None
@@ -506,6 +506,17 @@ class Session(Surroundings):
     def _say_unsafe(self, error: OSError) -> None:
         text = "Changes can no longer be kept safe from a crash: save the plan soon"
         self.say(Message(Level.PROBLEM, text, error.strerror or str(error)))
+
+
+def usual_rows(facts: RecordingFacts) -> tuple[str, ...]:
+    """Channels that are shown unless somebody hides them: all but the triggers.
+
+    Parameters
+    ----------
+    facts : RecordingFacts
+        Of the recording.
+    """
+    return tuple(one.name for one in facts.channels if one.type is not ChannelType.TRIGGER)
 
 
 def _kind(what: What) -> Changed:
