@@ -14,6 +14,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import h5py
 import numpy as np
 import pytest
 
@@ -22,7 +23,7 @@ from pulsemend.export import folders
 from pulsemend.export.contents import SetChannel
 from pulsemend.export.read_set import check_set
 from pulsemend.export.region import OpenRegion
-from pulsemend.export.set_writer import SetWriter
+from pulsemend.export.set_writer import SetWriter, check_place
 from pulsemend.model.vocabulary import ChannelType, Fill, Format
 from pulsemend.progress import finish
 from support.written_sets import candidate, make_contents, make_data, plan_text, save_estimates, write_set
@@ -81,6 +82,32 @@ def test_a_set_that_exists_is_left_alone(tmp_path: Path) -> None:
     assert caught.value.exit_code == 3
     assert content(folder) == before
     assert names_in(tmp_path) == [NAME]
+
+
+def test_the_place_can_be_checked_before_there_are_contents(tmp_path: Path) -> None:
+    check_place(tmp_path / "new", "sub-01", overwrite=False)
+    write_set(make_contents(), tmp_path)
+    with pytest.raises(SetError, match="exists"):
+        check_place(tmp_path, "sub-01_task-lantern", overwrite=False)
+    check_place(tmp_path, "sub-01_task-lantern", overwrite=True)
+    with pytest.raises(SetError, match="too long"):
+        check_place(tmp_path, "x" * 300, overwrite=True)
+    assert names_in(tmp_path) == [NAME]
+
+
+def test_the_writer_tells_the_hash_that_stands_in_the_set(tmp_path: Path) -> None:
+    contents = make_contents()
+    data, replaced = make_data(contents)
+    with SetWriter(contents, tmp_path, overwrite=False) as writer:
+        for index in range(3):
+            writer.write(index, data[index], replaced[index])
+        folder = writer.finish(3, {}, save_estimates)
+    with h5py.File(folder / f"{NAME}_epochs.h5") as file:
+        assert file.attrs["content_sha256"] == writer.content_sha256
+    # written again from double precision: the same set
+    again = write_set(contents, tmp_path / "again")
+    assert content(again).keys() == content(folder).keys()
+    assert (again / f"{NAME}_epochs.h5").read_bytes() == (folder / f"{NAME}_epochs.h5").read_bytes()
 
 
 def test_overwrite_replaces_it_whole(tmp_path: Path) -> None:

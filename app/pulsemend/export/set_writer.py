@@ -262,7 +262,7 @@ class SetWriter:
 
 
 def check_place(parent: Path, stem: str, *, overwrite: bool) -> None:
-    """Say early what would be said at the end: the set exists, or what stands there is none.
+    """Put in order what dead processes left, and say early what would be said at the end.
 
     Parameters
     ----------
@@ -276,7 +276,9 @@ def check_place(parent: Path, stem: str, *, overwrite: bool) -> None:
     Raises
     ------
     SetError
+        The set exists, what stands there is none, or the name cannot be a folder's.
     """
+    check_name(stem)
     folder = set_folder(parent.absolute(), stem)
     recover(folder)
     if folder.exists() or folder.is_symlink():
@@ -297,7 +299,6 @@ def check_contents(contents: SetContents) -> None:
     ------
     SetError, NoEpochs, OutOfSpace
     """
-    check_name(contents.stem)
     if not contents.epochs:
         raise NoEpochs("no epoch is kept, so there is nothing to write", where=contents.stem)
     if not contents.formats:
