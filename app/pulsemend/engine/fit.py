@@ -101,7 +101,7 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         usual_steepness=usual,
         autocovariance=None if sums is None else sums.result(),
         unmarked=unmarked,
-        rests_on=_rests_on(setup),
+        rests_on=basis_of(setup),
     )
 
 
@@ -188,7 +188,8 @@ def _align(
     return Pulse(first + 1 + onset, expected.marked, PulseState.ALIGNED)
 
 
-def _rests_on(setup: Setup) -> dict[str, str]:
+def basis_of(setup: Setup) -> dict[str, str]:
+    """Hash, for every estimate, the settings it rests on."""
     source = [setup.facts.parts, setup.facts.n_samples, setup.used, setup.barriers]
     quiet = [*source, setup.pulses, setup.groups, setup.search_s]
     return {

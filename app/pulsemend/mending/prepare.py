@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import nullcontext
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -138,7 +139,7 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
     path = request.marks or marks_path(request.plan, facts.stem)
     marks_file = read_marks(path) if request.marks is not None or path.exists() else None
     marks = NO_MARKS if marks_file is None else marks_file.marks
-    with plan_file.source.located():
+    with plan_file.source.located(), marks_file.source.located() if marks_file else nullcontext():
         setup, warnings = bind_checked(facts, plan, marks)
     if marks_file is not None:
         with marks_file.source.located():
