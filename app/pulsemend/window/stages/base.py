@@ -30,11 +30,11 @@ class StagePage:
         self.shown = False
 
     def show_stage(self) -> None:
-        """Called when the stage is opened; costly pictures are made only then and while it stays open."""
+        """Take note that the stage is open; costly pictures are made only while it is."""
         self.shown = True
 
     def hide_stage(self) -> None:
-        """Called when another stage is opened."""
+        """Take note that another stage is open."""
         self.shown = False
 
     def set_theme(self, theme: Theme) -> None:
