@@ -22,6 +22,9 @@ else:
     os.environ.setdefault("QT_QPA_PLATFORM", "offscreen")
 
 
+WINDOW_TESTS = Path(__file__).parent / "window"
+
+
 class _NoQt(pytest.Module):
     """A file of window tests where Qt cannot be loaded: skipped, or failed where skipping is forbidden."""
 
@@ -32,8 +35,11 @@ class _NoQt(pytest.Module):
 
 
 def pytest_pycollect_makemodule(module_path: Path, parent: pytest.Collector) -> pytest.Module | None:
-    """Keep the window's tests, which import Qt, from being imported without it."""
-    if QT_PROBLEM and module_path.parent.name == "window":
+    """Keep the window's tests, which import Qt, from being imported without it.
+
+    Fixtures with Qt belong into those files or a module they import: a conftest.py is imported always.
+    """
+    if QT_PROBLEM and module_path.is_relative_to(WINDOW_TESTS):
         return _NoQt.from_parent(parent, path=module_path)
     return None
 

@@ -17,7 +17,7 @@ REPOSITORY = Path(__file__).resolve().parents[2]
 TEXT = {".py", ".md", ".toml", ".svg", ".tsv", ".csv", ".json", ".vhdr", ".vmrk", ""}
 
 # In pieces, so that this file does not find itself.
-MACHINE_PATHS = re.compile(r"(?<![\w.<>])/(?:" + "|".join("work root home tmp".split()) + r")\b")
+MACHINE_PATHS = re.compile(r"(?<![\w.<>])/(?:" + "|".join(["work", "root", "home", "tmp"]) + r")\b")
 REGISTRY_HOSTS = re.compile(
     "|".join(["py" + r"pi\.", "python" + "hosted", "npm" + "js", "deb" + r"\.debian", "conda" + "-forge"])
 )
