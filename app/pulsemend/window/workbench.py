@@ -6,9 +6,9 @@ everybody. Workers never touch the session and each reads through a Recording of
 
 from __future__ import annotations
 
-import threading
+import traceback
 from collections.abc import Callable
-from pathlib import Path
+from dataclasses import replace
 from typing import TypeVar
 
 from PySide6.QtCore import QObject, QTimer, Signal
@@ -20,9 +20,11 @@ from pulsemend.progress import Work
 from pulsemend.readers.opening import open_recording
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import Found
+from pulsemend.session.messages import Level, Message
 from pulsemend.session.session import Session
 from pulsemend.session.settings import Settings
-from pulsemend.window.jobs import Jobs
+from pulsemend.window.job import Job
+from pulsemend.window.jobs import Jobs, Shelf
 from pulsemend.window.theme import LIGHT, Theme
 
 T = TypeVar("T")
@@ -39,7 +41,7 @@ class Workbench(QObject):
     session : Session
         The window's state.
     settings : Settings
-        The user's.
+        The user's; replaced by whoever changes them.
 
     Attributes
     ----------
@@ -57,16 +59,18 @@ class Workbench(QObject):
         self.session = session
         self.settings = settings
         self.theme: Theme = LIGHT
-        self.jobs = Jobs(self)
+        self.jobs = Jobs(open_recording, lambda: self.session.revision, self)
         self.learned: Learned | None = None
         self.problem = ""
-        self._own = threading.local()
         self._settle = QTimer(self)
         self._settle.setSingleShot(True)
         self._settle.setInterval(SETTLE_MS)
         self._settle.timeout.connect(self._learn)
-        self._ended = [session.subscribe(kind, self._settle.start) for kind in (Changed.PLAN, Changed.MARKS)]
-        self._ended.append(session.subscribe(Changed.RECORDING, self._forget))
+        self._unsubscribe = [
+            session.subscribe(Changed.RECORDING, self._forget),
+            session.subscribe(Changed.PLAN, self._settle.start),
+            session.subscribe(Changed.MARKS, self._settle.start),
+        ]
 
     @property
     def provisional(self) -> bool:
@@ -79,59 +83,57 @@ class Workbench(QObject):
         work: Callable[[Recording], Work[T]],
         returned: Callable[[T], None],
         failed: Callable[[BaseException], None] | None = None,
-    ) -> None:
+        *,
+        urgent: bool = False,
+    ) -> Job | None:
         """Let a worker do something with a recording of its own.
 
         Parameters
         ----------
         kind : str
-            The newest request of a kind replaces one that still waits; results of another revision than the
-            present one are thrown away.
+            The newest request of a kind replaces older ones.
         work : callable
             Given the worker's recording, gives the work.
         returned : callable
-            Called in the window's thread with the result.
+            Called in the window's thread with the result, unless plan or marks have changed meanwhile.
         failed : callable or None
             Called in the window's thread with the error; None tells the user.
+        urgent : bool
+            Whether it goes before others: a preview the user waits for.
+
+        Returns
+        -------
+        Job or None
+            None without an open recording.
         """
         opened = self.session.recording
         if opened is None:
-            return
+            return None
         path, revision = opened.path, self.session.revision
 
-        def begin() -> Work[T]:
-            return work(self._recording_of_thread(path))
+        def begin(shelf: Shelf) -> Work[object]:
+            return (yield from work(shelf.recording(path)))
 
-        def take(result: T) -> None:
-            if self.session.revision == revision:
-                returned(result)
-
-        def complain(error: BaseException) -> None:
-            if self.session.revision == revision:
-                (failed or self.tell)(error)
-
-        self.jobs.start(kind, begin, take, complain)
+        job = self.jobs.submit(kind, begin, revision=revision, urgent=urgent)
+        job.returned.connect(returned)
+        job.failed.connect(failed or self.tell)
+        return job
 
     def tell(self, error: BaseException) -> None:
         """Put an error before the user, in words, with details on demand."""
-        self.session.say(self.jobs.message_of(error))
+        if isinstance(error, PulsemendError):
+            self.session.say(Message(Level.PROBLEM, str(error)))
+            return
+        details = "".join(traceback.format_exception(error))
+        text = "A fault of ours stopped this; what you were doing is not lost"
+        self.session.say(Message(Level.PROBLEM, text, details))
 
     def close(self) -> None:
         """Stop the workers and let go of everything."""
-        for end in self._ended:
+        for end in self._unsubscribe:
             end()
         self._settle.stop()
         self.jobs.close()
-
-    def _recording_of_thread(self, path: Path) -> Recording:
-        """Open the recording once for each worker thread."""
-        held: tuple[Path, Recording] | None = getattr(self._own, "held", None)
-        if held is None or held[0] != path:
-            if held is not None:
-                held[1].close()
-            held = (path, open_recording(path))
-            self._own.held = held
-        return held[1]
 
     def _forget(self) -> None:
         self.learned, self.problem = None, ""
@@ -145,23 +147,39 @@ class Workbench(QObject):
             return
         if earlier is not None and earlier.plan == plan and earlier.marks == marks:
             session.set_estimates_revision(session.revision)
+            self.learned_changed.emit()
             return
-        self.learning_changed.emit(True)
-        self.start("learn", lambda recording: learn(recording, plan, marks, earlier), self._take, self._fail)
+        job = self.start(
+            "learn",
+            lambda recording: learn(recording, plan, marks, earlier),
+            self._take,
+            self._fail,
+            urgent=True,
+        )
+        if job is not None:
+            self.learning_changed.emit(True)
+            job.finished.connect(self._learning_ended)
+
+    def _learning_ended(self) -> None:
+        self.learning_changed.emit(False)
 
     def _take(self, learned: Learned) -> None:
         self.learned, self.problem = learned, ""
         counts = {rule.name: 0 for rule in learned.plan.epochs.rule}
         for candidate in learned.decision.kept:
             counts[candidate.rule] += 1
-        found = self.session.found
-        self.session.set_found(Found((), tuple(counts.items()), len(learned.estimates.pulses), found.written))
+        self.session.set_found(
+            replace(
+                self.session.found,
+                problems=(),
+                kept=tuple(counts.items()),
+                n_pulses=len(learned.estimates.pulses),
+            )
+        )
         self.session.set_estimates_revision(self.session.revision)
-        self.learning_changed.emit(False)
         self.learned_changed.emit()
 
     def _fail(self, error: BaseException) -> None:
-        self.learning_changed.emit(False)
         if not isinstance(error, PulsemendError):
             self.tell(error)
             return
