@@ -189,6 +189,26 @@ def test_a_fault_of_ours_names_the_log(
     assert str(log_file()) in capsys.readouterr().err
 
 
+@pytest.mark.parametrize(
+    "error",
+    [
+        InputError("not a recording", where="/data/lt01.vhdr"),
+        FileNotFoundError(2, "No such file or directory", "/data/lt01.vhdr"),
+        ValueError("lt01 has no markers"),
+    ],
+)
+def test_log_of_a_run_names_no_file_and_no_participant(
+    error: Exception, fake: Callable[[Callable[[], int]], None]
+) -> None:
+    log_file().unlink(missing_ok=True)
+    fake(raising(error))
+    main(["fake", "/data/lt01.vhdr"])
+    text = log_file().read_text("utf-8")
+    assert "fake ended with" in text
+    assert "lt01" not in text
+    assert "/" not in text
+
+
 def test_debug_shows_the_traceback(
     fake: Callable[[Callable[[], int]], None], capsys: pytest.CaptureFixture[str]
 ) -> None:
