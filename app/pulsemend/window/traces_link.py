@@ -1,0 +1,228 @@
+"""Between the session and the traces: overlays, overview, repaired stretches. The traces know none of it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+from PySide6.QtCore import QObject, Signal
+
+from pulsemend.engine.chain import Chain
+from pulsemend.engine.pyramid import Patch, Pyramid, patch, pyramid
+from pulsemend.engine.store import Store
+from pulsemend.mending.learned import Learned, repaired_stored
+from pulsemend.model.recording import Recording
+from pulsemend.model.vocabulary import Role
+from pulsemend.progress import Progress, Work
+from pulsemend.session.changed import Changed
+from pulsemend.session.session import Session
+from pulsemend.session.view import View
+from pulsemend.signal.gaps import merge_spans
+from pulsemend.window.traces.model import Bands, Events, Overlays
+from pulsemend.window.traces.source import RepairedStretch
+from pulsemend.window.traces.widget import TracesWidget
+from pulsemend.window.workbench import Workbench
+
+PULSE_KEYS_FROM = 1_000_000_000
+"""Keys of events from here on are pulses' onsets; below, places among the markers."""
+
+
+class SessionView:
+    """The session as the traces' view model."""
+
+    def __init__(self, session: Session) -> None:
+        self._session = session
+
+    @property
+    def view(self) -> View:
+        """The part in view."""
+        return self._session.view
+
+    def set_view(self, view: View) -> None:
+        """Replace the view."""
+        self._session.set_view(view)
+
+    def subscribe(self, listener: Callable[[], None]) -> Callable[[], None]:
+        """Have a function called after every change of the view."""
+        return self._session.subscribe(Changed.VIEW, listener)
+
+
+def overlays(session: Session, learned: Learned | None) -> Overlays:
+    """Put together everything that lies over the traces."""
+    opened = session.recording
+    if opened is None:
+        return Overlays()
+    rate_hz = opened.facts.rate_hz
+    plan, marks = session.plan, session.marks
+    stretches = sorted((s.start / rate_hz, s.stop / rate_hz, s.kind) for s in marks.bad_stretches)
+    return Overlays(
+        events=_events(session, learned),
+        gaps=_gap_bands(learned),
+        bad_stretches=Bands(
+            np.array([s[0] for s in stretches]),
+            np.array([s[1] for s in stretches]),
+            tuple(s[2] or "bad" for s in stretches),
+        ),
+        epochs=_epoch_bands(learned),
+        bad=frozenset(marks.bad) | frozenset(plan.channels.bad if plan is not None else ()),
+    )
+
+
+def _events(session: Session, learned: Learned | None) -> Events:
+    """Markers by role and labels; pulses stand at their onsets where these are known."""
+    opened, plan = session.recording, session.plan
+    if opened is None:
+        return Events()
+    rate_hz = opened.facts.rate_hz
+    rows: list[tuple[float, Role, str, int]] = []
+    pulses_known = learned is not None and bool(learned.estimates.pulses)
+    for place, marker in enumerate(opened.facts.markers):
+        role = Role.OTHER if plan is None else plan.role_of(marker.code)
+        if role is Role.IGNORE or (role is Role.PULSE and pulses_known):
+            continue
+        labels = {} if plan is None else plan.labels_of(marker.code)
+        text = " ".join((role.value, *labels.values())) if labels else marker.code
+        rows.append((marker.sample / rate_hz, role, text, place))
+    if learned is not None:
+        rows += [
+            (pulse.sample / rate_hz, Role.PULSE, "pulse", PULSE_KEYS_FROM + pulse.sample)
+            for pulse in learned.estimates.pulses
+        ]
+    rows.sort(key=lambda row: row[0])
+    return Events(
+        np.array([row[0] for row in rows], dtype=np.float64),
+        tuple(row[1] for row in rows),
+        tuple(row[2] for row in rows),
+        tuple(row[3] for row in rows),
+    )
+
+
+def _gap_bands(learned: Learned | None) -> Bands:
+    if learned is None:
+        return Bands()
+    rate_hz = learned.setup.facts.rate_hz
+    spans = merge_spans([(gap.start, gap.stop) for gap in learned.decision.geometry.gaps])
+    return Bands(np.array([a / rate_hz for a, _ in spans]), np.array([b / rate_hz for _, b in spans]))
+
+
+def _epoch_bands(learned: Learned | None) -> Bands:
+    """Kept epochs, with rule and trial as their label."""
+    if learned is None:
+        return Bands()
+    geometry, length_s = learned.decision.geometry, learned.plan.epochs.length_s
+    rate_hz = learned.setup.facts.rate_hz
+    starts = [
+        geometry.first_sample(candidate.anchor_sample or 0.0, candidate.start_s) / rate_hz
+        for candidate in learned.decision.kept
+    ]
+    labels = tuple(f"{c.rule} \u00b7 trial {c.trial}" for c in learned.decision.kept)
+    return Bands(np.array(starts), np.array(starts) + length_s, labels)
+
+
+class TracesLink(QObject):
+    """Asks workers for what the traces need, and hands it over.
+
+    Parameters
+    ----------
+    bench : Workbench
+        Session and workers.
+    cache : Path
+        Folder of the store.
+
+    Attributes
+    ----------
+    pyramid_ready : Signal(object)
+        The Pyramid of the open recording.
+    """
+
+    pyramid_ready = Signal(object)
+
+    def __init__(self, bench: Workbench, cache: Path, parent: QObject | None = None) -> None:
+        super().__init__(parent)
+        self._bench = bench
+        self._cache = cache
+        self._traces: TracesWidget | None = None
+        self._pyramid: Pyramid | None = None
+
+    def attach(self, traces: TracesWidget | None) -> None:
+        """Serve other traces from now on; their overview is asked for at once."""
+        self._traces = traces
+        self._pyramid = None
+        opened = self._bench.session.recording
+        if traces is None or opened is None:
+            return
+        path, store = opened.path, Store(self._cache)
+        job = self._bench.jobs.submit("overview", lambda shelf: pyramid(shelf.recording(path), store))
+        job.returned.connect(self._take_pyramid)
+        job.failed.connect(self._bench.tell)
+
+    def show_learned(self) -> None:
+        """Show overlays of now, and have the repaired signal computed anew."""
+        if self._traces is None:
+            return
+        bench = self._bench
+        self._traces.set_overlays(overlays(bench.session, bench.learned))
+        if not bench.provisional:
+            self._traces.set_revision(bench.session.revision)
+            self._patch_overview()
+
+    def request_repaired(self, start: int, stop: int) -> None:
+        """Let a worker repair a stretch."""
+        learned, revision = self._bench.learned, self._bench.session.revision
+        if learned is None or self._bench.provisional:
+            return
+        self._bench.start(
+            "repaired stretch",
+            lambda recording: _repaired(recording, learned, start, stop, revision),
+            self._take_repaired,
+            urgent=True,
+        )
+
+    def _take_pyramid(self, ready: Pyramid) -> None:
+        self._pyramid = ready
+        if self._traces is not None:
+            self._traces.set_pyramid(ready)
+            self._patch_overview()
+        self.pyramid_ready.emit(ready)
+
+    def _take_repaired(self, stretch: RepairedStretch) -> None:
+        if self._traces is not None:
+            self._traces.set_repaired(stretch)
+
+    def _patch_overview(self) -> None:
+        """Work out what repair changes in the overview, as soon as both are known."""
+        learned, of, revision = self._bench.learned, self._pyramid, self._bench.session.revision
+        if learned is None or of is None or self._bench.provisional:
+            return
+
+        def take(found: Patch) -> None:
+            if self._traces is not None:
+                self._traces.set_repaired_overview(found, revision)
+
+        self._bench.start("repaired overview", lambda recording: _patched(recording, learned, of), take)
+
+
+def _repaired(
+    recording: Recording, learned: Learned, start: int, stop: int, revision: int
+) -> Work[RepairedStretch]:
+    yield Progress("repairing what is in view", 0, 1)
+    chain: Chain = learned.chain(recording)
+    samples = repaired_stored(chain, learned.estimates, start, stop)
+    return RepairedStretch(start, samples, learned.setup.used, revision)
+
+
+def _patched(recording: Recording, learned: Learned, of: Pyramid) -> Work[Patch]:
+    chain = learned.chain(recording)
+    channels = learned.setup.used
+
+    def read(start: int, stop: int) -> NDArray[np.float32]:
+        stored = np.empty((stop - start, len(recording.facts.channels)), np.float32)
+        recording.read(start, stop, stored)
+        stored[:, channels] = repaired_stored(chain, learned.estimates, start, stop)
+        return stored
+
+    spans = [(gap.start, gap.stop) for gap in learned.decision.geometry.gaps]
+    inside = [(max(0, a), min(b, recording.facts.n_samples)) for a, b in spans]
+    return (yield from patch(of, [span for span in inside if span[0] < span[1]], read))
