@@ -1,0 +1,147 @@
+"""Candidate epochs as rows of a table, and their counts: what a list of them shows, without a window."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from pulsemend.mending.prepare import Decision
+from pulsemend.model.epochs import Candidate
+from pulsemend.model.marks import EpochKey
+from pulsemend.model.plan import Plan
+from pulsemend.model.recording import RecordingFacts
+from pulsemend.model.vocabulary import Fate
+
+
+@dataclass(frozen=True)
+class EpochRow:
+    """One candidate epoch.
+
+    Parameters
+    ----------
+    trial, piece : int
+        From 1.
+    rule : str
+    anchor_s : float or None
+        Instant of the anchor, seconds from the recording's first sample; None if the slot is missing.
+    near_s : float
+        The anchor's instant, or where its trial begins: never missing, for sorting and for going there.
+    span : tuple of (int, int) or None
+        Recorded samples, half open; may reach beyond the recording. None without an anchor.
+    fate : Fate
+    detail : str
+        What exactly; empty for kept epochs.
+    """
+
+    trial: int
+    rule: str
+    piece: int
+    anchor_s: float | None
+    near_s: float
+    span: tuple[int, int] | None
+    fate: Fate
+    detail: str
+
+    @property
+    def key(self) -> EpochKey:
+        """Name of the epoch in the marks."""
+        return EpochKey(self.trial, self.rule, self.piece)
+
+
+@dataclass(frozen=True)
+class RuleCount:
+    """How many epochs of a rule are kept, of how many."""
+
+    rule: str
+    kept: int
+    total: int
+
+
+def epoch_rows(decision: Decision, plan: Plan) -> tuple[EpochRow, ...]:
+    """All candidates as rows, in order of time, then of rule.
+
+    Parameters
+    ----------
+    decision : Decision
+        Trials, geometry and ledger.
+    plan : Plan
+        The plan that was decided with.
+    """
+    rate_hz = decision.geometry.recorded_hz
+    begins = {
+        trial.number: min((marker.sample for marker in trial.markers.values()), default=0.0)
+        for trial in decision.trials.trials
+    }
+    rows: list[tuple[float, int, int, EpochRow]] = []
+    for one in decision.ledger:
+        near = begins[one.trial] if one.anchor_sample is None else one.anchor_sample
+        row = EpochRow(
+            trial=one.trial,
+            rule=one.rule,
+            piece=one.piece,
+            anchor_s=None if one.anchor_sample is None else one.anchor_sample / rate_hz,
+            near_s=near / rate_hz,
+            span=_span(one, decision, plan),
+            fate=one.fate,
+            detail=one.detail,
+        )
+        rows.append((row.near_s, one.rule_index, one.piece, row))
+    return tuple(row for *_, row in sorted(rows, key=lambda item: item[:3]))
+
+
+def kept_of_all(decision: Decision, plan: Plan) -> tuple[RuleCount, ...]:
+    """Count kept epochs per rule, in the plan's order; rules without any included.
+
+    Parameters
+    ----------
+    decision : Decision
+        Trials, geometry and ledger.
+    plan : Plan
+        The plan that was decided with.
+    """
+    total = Counter(one.rule for one in decision.ledger)
+    kept = Counter(one.rule for one in decision.kept)
+    return tuple(RuleCount(rule.name, kept[rule.name], total[rule.name]) for rule in plan.epochs.rule)
+
+
+def left_out_by_reason(ledger: Sequence[Candidate]) -> tuple[tuple[Fate, int], ...]:
+    """Count what is left out, in the order of the fates; reasons without any are absent.
+
+    Parameters
+    ----------
+    ledger : sequence of Candidate
+        All candidates.
+    """
+    counts = Counter(one.fate for one in ledger)
+    return tuple((fate, counts[fate]) for fate in Fate if fate is not Fate.KEPT and counts[fate])
+
+
+def why_no_trial(plan: Plan, facts: RecordingFacts) -> str:
+    """Say why no trial was found, and what can be done: a trial begins with the first slot's marker.
+
+    Parameters
+    ----------
+    plan : Plan
+        Codes, roles and slots.
+    facts : RecordingFacts
+        The recording's markers.
+    """
+    first = plan.trial[0]
+    codes = [marker.code for marker in plan.markers if marker.role is first.role]
+    found = Counter(marker.code for marker in facts.markers)
+    begins = f"A trial begins with the slot {first.slot}, which takes a marker of role {first.role}"
+    if not found:
+        return f"{begins}, but the recording has no markers at all. Open a recording with its markers."
+    listed = ", ".join(f"{code} ({count})" for code, count in found.most_common(6))
+    listed += ", ..." if len(found) > 6 else ""
+    missing = f"the recording has none of its codes ({', '.join(codes)})" if codes else "no code has it"
+    return f"{begins}, and {missing}. The recording has {listed}: give the right one this role in the plan."
+
+
+def _span(one: Candidate, decision: Decision, plan: Plan) -> tuple[int, int] | None:
+    if one.anchor_sample is None:
+        return None
+    geometry = decision.geometry
+    first = round(geometry.first_sample(one.anchor_sample, one.start_s))
+    return first, first + max(1, round(plan.epochs.length_s * geometry.recorded_hz))
