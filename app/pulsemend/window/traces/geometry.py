@@ -6,6 +6,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from pulsemend.engine.columns import Grid
 from pulsemend.session.view import View
@@ -61,6 +62,11 @@ class TimeScale:
     def x_of(self, time_s: float) -> float:
         """Place of a time."""
         return (time_s / self.column_s - self.grid.first) / self.ratio
+
+    def xs_of(self, times_s: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Places of many times."""
+        places: NDArray[np.float64] = (times_s / self.column_s - self.grid.first) / self.ratio
+        return places
 
     def time_at(self, x: float) -> float:
         """Time at a place."""

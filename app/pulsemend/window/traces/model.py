@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Protocol
 
@@ -83,12 +83,10 @@ class Bands:
         if len(self.start_s) != len(self.stop_s) or np.any(np.diff(self.start_s) < 0):
             raise ValueError("bands need a start and a stop each, in order of their starts")
 
-    def within(self, start_s: float, stop_s: float) -> Iterator[tuple[float, float, str]]:
-        """Start, stop and label of the bands that touch [start_s, stop_s]."""
+    def within(self, start_s: float, stop_s: float) -> NDArray[np.intp]:
+        """Places of the bands that touch [start_s, stop_s]."""
         last = int(np.searchsorted(self.start_s, stop_s, side="right"))
-        for place in np.flatnonzero(self.stop_s[:last] >= start_s):
-            label = self.labels[place] if self.labels else ""
-            yield float(self.start_s[place]), float(self.stop_s[place]), label
+        return np.flatnonzero(self.stop_s[:last] >= start_s)
 
 
 @dataclass(frozen=True)

@@ -72,10 +72,12 @@ class RowNames(QWidget):
         self, names: Sequence[str], bad: frozenset[str], picked: frozenset[str], rows: Rows
     ) -> None:
         """Show these names at these places."""
-        changed = tuple(names) != self._names
+        before = (self._names, self._bad, self._picked, self._rows)
         self._names, self._bad, self._picked, self._rows = tuple(names), bad, picked, rows
+        if (self._names, bad, picked, rows) == before:
+            return
         self._current = min(self._current, max(0, len(self._names) - 1))
-        if changed:
+        if self._names != before[0]:
             self.updateGeometry()
         self._describe()
         self.update()
@@ -92,7 +94,10 @@ class RowNames(QWidget):
 
     def paintEvent(self, _event: QPaintEvent) -> None:
         """Paint the names that have room, and those of the current row and the one under the cursor."""
-        painter = QPainter(self)
+        with QPainter(self) as painter:
+            self._paint(painter)
+
+    def _paint(self, painter: QPainter) -> None:
         painter.fillRect(self.rect(), QColor(self._theme.panel))
         painter.setClipRect(QRectF(0, self._rows.top, self.width(), self._rows.area))
         metrics = QFontMetricsF(self.font())

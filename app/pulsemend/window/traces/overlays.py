@@ -3,17 +3,20 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
+import numpy as np
+from numpy.typing import NDArray
 from PySide6.QtCore import QLineF, QPointF, QRectF, Qt
-from PySide6.QtGui import QBrush, QColor, QFontMetricsF, QPainter, QPen
+from PySide6.QtGui import QBrush, QColor, QFontMetricsF, QImage, QPainter, QPen
 
-from pulsemend.model.vocabulary import Role
 from pulsemend.window.theme import Theme
 from pulsemend.window.traces.clock import clock, duration, microvolts, nice, nice_s, number, ticks
 from pulsemend.window.traces.geometry import AXIS, HEADER, Rows, TimeScale
 from pulsemend.window.traces.labels import LEAST_ROOM, Placed, place
 from pulsemend.window.traces.model import Bands, Events, Measure, Overlays
-from pulsemend.window.traces.shapes import draw_role
+from pulsemend.window.traces.shapes import draw_roles
+from pulsemend.window.traces.ticks import draw_ticks
 
 LEAST_BAND = 3.0
 """Bands narrower than this are drawn as a marker of this width."""
@@ -21,6 +24,7 @@ _SHAPE = 11.0
 _HALF_SHAPE = _SHAPE / 2 + 4
 _CROWDED = 7.0
 """Pixels per event below which events are ticks instead of shapes with lines."""
+_MARK_HEIGHT = 6.0
 _SPARSE_SHARE = 0.2
 """Share of the width up to which markers of narrow gaps reach down over the traces."""
 
@@ -59,18 +63,16 @@ class Canvas:
 def paint_behind(canvas: Canvas, overlays: Overlays) -> None:
     """Paint bad stretches, epochs and gaps, to scale."""
     area = QRectF(0, canvas.rows.top, canvas.width, canvas.rows.area)
-    for left, width, _ in _laid(canvas, overlays.epochs):
-        box = QRectF(left, area.top(), max(width, LEAST_BAND), area.height())
-        canvas.painter.fillRect(box, QColor(canvas.theme.accent_soft))
-    for left, width, _ in _laid(canvas, overlays.bad_stretches):
-        box = QRectF(left, area.top(), max(width, LEAST_BAND), area.height())
-        canvas.painter.fillRect(box, QColor(canvas.theme.bad_stretch))
+    painter = canvas.painter
+    for box in _boxes(canvas, overlays.epochs, area):
+        painter.fillRect(box, QColor(canvas.theme.accent_soft))
+    for box in _boxes(canvas, overlays.bad_stretches, area):
+        painter.fillRect(box, QColor(canvas.theme.bad_stretch))
         # A hatch as well, so that the colour does not stand alone.
-        canvas.painter.fillRect(
-            QRectF(left, area.top(), max(width, LEAST_BAND), 5),
-            QBrush(QColor(canvas.theme.attention), Qt.BrushStyle.BDiagPattern),
-        )
-    _paint_gaps(canvas, overlays.gaps, area)
+        box.setHeight(5)
+        painter.fillRect(box, QBrush(QColor(canvas.theme.attention), Qt.BrushStyle.BDiagPattern))
+    for box in _boxes(canvas, overlays.gaps, area):
+        painter.fillRect(box, QColor(canvas.theme.gap))
 
 
 def paint_band_labels(canvas: Canvas, overlays: Overlays) -> None:
@@ -99,25 +101,27 @@ def paint_events(canvas: Canvas, events: Events, current: int | None) -> int:
     margin_s = _SHAPE * canvas.scale.column_s * canvas.scale.ratio
     seen = events.within(canvas.scale.start_s - margin_s, canvas.scale.stop_s + margin_s)
     if len(seen) * _CROWDED > canvas.width:
-        _paint_ticks(canvas, events, seen)
-        return sum(1 for place_ in seen if events.labels[place_])
-    xs = [canvas.scale.x_of(float(events.time_s[place_])) for place_ in seen]
-    bottom = canvas.rows.top + canvas.rows.area
-    for place_, x in zip(seen, xs, strict=True):
-        colour = QColor(canvas.theme.roles[events.roles[place_]])
-        colour.setAlpha(255 if place_ == current else 170)
-        pen = QPen(colour, 1.0, Qt.PenStyle.CustomDashLine)
-        pen.setDashPattern([3, 3])
+        ticked = canvas.scale.xs_of(events.time_s[seen.start : seen.stop])
+        draw_ticks(
+            canvas.painter,
+            events.roles[seen.start : seen.stop],
+            ticked,
+            (3, int(canvas.width), HEADER - 6),
+            canvas.theme,
+        )
+        return sum(1 for label in events.labels[seen.start : seen.stop] if label)
+    xs = canvas.scale.xs_of(events.time_s[seen.start : seen.stop]).tolist()
+    roles = list(events.roles[seen.start : seen.stop])
+    height = canvas.rows.area + 4
+    for place_, role, x in zip(seen, roles, xs, strict=True):
+        colour = canvas.theme.roles[role]
+        at = QPointF(_snapped(x, canvas.scale.ratio) - 0.5, HEADER - 4)
         if place_ == current:
-            pen = QPen(colour, 2.0)
-        canvas.painter.setPen(pen)
-        snapped = _snapped(x, canvas.scale.ratio)
-        canvas.painter.drawLine(QLineF(snapped, HEADER - 4, snapped, bottom))
-    canvas.painter.setRenderHint(QPainter.RenderHint.Antialiasing, on=True)
-    for place_, x in zip(seen, xs, strict=True):
-        draw_role(canvas.painter, events.roles[place_], x, HEADER / 2, _SHAPE, canvas.theme)
-    canvas.painter.setRenderHint(QPainter.RenderHint.Antialiasing, on=False)
-    return _paint_labels(canvas, [events.labels[place_] for place_ in seen], xs)
+            canvas.painter.fillRect(QRectF(at.x() - 0.5, at.y(), 2, height), QColor(colour))
+        else:
+            canvas.painter.drawImage(at, _dashed(colour, height))
+    draw_roles(canvas.painter, roles, (xs, HEADER / 2), _SHAPE, canvas.theme, canvas.scale.ratio)
+    return _paint_labels(canvas, list(events.labels[seen.start : seen.stop]), xs)
 
 
 def paint_times(canvas: Canvas) -> None:
@@ -216,12 +220,37 @@ def event_at(canvas_scale: TimeScale, events: Events, x: float) -> int | None:
     return min(seen, key=lambda place_: abs(float(events.time_s[place_]) - time_s), default=None)
 
 
-def _laid(canvas: Canvas, bands: Bands) -> list[tuple[float, float, str]]:
-    """Left edge, width and label of the bands in view."""
-    return [
-        (*canvas.band(start_s, stop_s), label)
-        for start_s, stop_s, label in bands.within(canvas.scale.start_s, canvas.scale.stop_s)
+def _spans(canvas: Canvas, bands: Bands) -> tuple[NDArray[np.intp], NDArray[np.float64], NDArray[np.float64]]:
+    """Places, left and right edges of the bands in view, cut to just beyond the widget."""
+    seen = bands.within(canvas.scale.start_s, canvas.scale.stop_s)
+    beyond = (-LEAST_BAND, canvas.width + LEAST_BAND)
+    return (
+        seen,
+        np.clip(canvas.scale.xs_of(bands.start_s[seen]), *beyond),
+        np.clip(canvas.scale.xs_of(bands.stop_s[seen]), *beyond),
+    )
+
+
+def _boxes(canvas: Canvas, bands: Bands, area: QRectF) -> list[QRectF]:
+    """Boxes of the bands in view, to scale; narrow ones are markers of one width, merged where they touch."""
+    _, left, right = _spans(canvas, bands)
+    narrow = right - left < LEAST_BAND
+    boxes = [
+        QRectF(a, area.top(), b - a, area.height())
+        for a, b in zip(left[~narrow], right[~narrow], strict=True)
     ]
+    middle = 0.5 * (left[narrow] + right[narrow])
+    # So many that they would hide the rest stay a row of marks along the upper edge.
+    reach_down = middle.size * LEAST_BAND <= _SPARSE_SHARE * canvas.width
+    height = area.height() if reach_down else _MARK_HEIGHT
+    starts = middle - LEAST_BAND / 2
+    firsts = np.flatnonzero(np.diff(starts, prepend=-np.inf) > LEAST_BAND)
+    lasts = np.append(firsts[1:], starts.size)[: firsts.size] - 1
+    boxes += [
+        QRectF(starts[a], area.top(), starts[b] - starts[a] + LEAST_BAND, height)
+        for a, b in zip(firsts, lasts, strict=True)
+    ]
+    return boxes
 
 
 def _paint_band_labels(canvas: Canvas, bands: Bands, ink: str) -> None:
@@ -231,9 +260,12 @@ def _paint_band_labels(canvas: Canvas, bands: Bands, ink: str) -> None:
     free_from = 0.0
     ground = QColor(canvas.theme.panel)
     ground.setAlpha(225)
-    for left, width, label in _laid(canvas, bands):
+    if not bands.labels:
+        return
+    for place_, left, right in zip(*_spans(canvas, bands), strict=True):
+        label = bands.labels[place_]
         start = max(left + 6, 6.0, free_from)
-        room = min(left + width, canvas.width) - start - 6
+        room = min(right, canvas.width) - start - 6
         if label and room > LEAST_ROOM:
             text = metrics.elidedText(label, Qt.TextElideMode.ElideRight, room)
             box = QRectF(start - 3, 0, metrics.horizontalAdvance(text) + 6, metrics.height())
@@ -242,33 +274,6 @@ def _paint_band_labels(canvas: Canvas, bands: Bands, ink: str) -> None:
             canvas.painter.setPen(QColor(ink))
             canvas.painter.drawText(box, Qt.AlignmentFlag.AlignCenter, text)
             free_from = box.right() + 6
-
-
-def _paint_gaps(canvas: Canvas, gaps: Bands, area: QRectF) -> None:
-    laid = _laid(canvas, gaps)
-    narrow = sum(1 for _, width, _ in laid if width < LEAST_BAND)
-    reach_down = narrow * LEAST_BAND <= _SPARSE_SHARE * canvas.width
-    colour = QColor(canvas.theme.gap)
-    for left, width, _ in laid:
-        if width >= LEAST_BAND:
-            canvas.painter.fillRect(QRectF(left, area.top(), width, area.height()), colour)
-            continue
-        middle = left + width / 2
-        # So many that they would hide the rest stay a row of marks along the upper edge.
-        height = area.height() if reach_down else 6.0
-        canvas.painter.fillRect(QRectF(middle - LEAST_BAND / 2, area.top(), LEAST_BAND, height), colour)
-
-
-def _paint_ticks(canvas: Canvas, events: Events, seen: range) -> None:
-    """Paint events that are too many for shapes: a tick per pixel, in a lane of its own for each role."""
-    roles = sorted({events.roles[place_] for place_ in seen}, key=list(Role).index)
-    height = (HEADER - 6) / len(roles)
-    drawn = {(int(canvas.scale.x_of(float(events.time_s[place_]))), events.roles[place_]) for place_ in seen}
-    for lane, role in enumerate(roles):
-        top = 3 + lane * height
-        canvas.painter.setPen(QPen(QColor(canvas.theme.roles[role]), 1.0))
-        lines = [QLineF(x + 0.5, top, x + 0.5, top + height - 1) for x, of in drawn if of is role]
-        canvas.painter.drawLines(lines)
 
 
 def _paint_labels(canvas: Canvas, labels: list[str], xs: list[float]) -> int:
@@ -286,6 +291,17 @@ def _label_at(one: Placed, metrics: QFontMetricsF) -> QPointF:
 
 def _label_text(one: Placed, label: str, metrics: QFontMetricsF) -> str:
     return metrics.elidedText(label, Qt.TextElideMode.ElideRight, one.width + 0.01)
+
+
+@lru_cache(maxsize=64)
+def _dashed(colour: str, height: int) -> QImage:
+    """Make a picture of a dashed vertical line: a dashed pen takes many times as long."""
+    line = QImage(1, height, QImage.Format.Format_ARGB32_Premultiplied)
+    line.fill(Qt.GlobalColor.transparent)
+    for y in range(height):
+        if y % 6 < 4:
+            line.setPixelColor(0, y, QColor(colour))
+    return line
 
 
 def _snapped(x: float, ratio: float) -> float:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -129,7 +130,8 @@ class TracePicture:
     def _image(self, theme: Theme) -> QImage:
         height, width = self._raster.pixels.shape
         image = QImage(self._raster.pixels.data, width, height, width, QImage.Format.Format_Indexed8)
-        image.setColorTable(_palette(theme))
+        inks = (theme.trace_recorded, theme.trace, theme.trace_picked, theme.trace_bad)
+        image.setColorTable(_palette(inks))
         # Painting eight-bit pictures directly takes several times as long.
         return image.convertToFormat(QImage.Format.Format_ARGB32_Premultiplied)
 
@@ -140,16 +142,12 @@ def _ink(name: str, scene: Scene) -> int:
     return _PICKED if name in scene.view.picked else _NORMAL
 
 
-def _palette(theme: Theme) -> list[int]:
-    colours = {
-        _BEHIND: theme.trace_recorded,
-        _NORMAL: theme.trace,
-        _PICKED: theme.trace_picked,
-        _BAD: theme.trace_bad,
-    }
+@lru_cache(maxsize=4)
+def _palette(trace_colours: tuple[str, ...]) -> list[int]:
+    """Colours of all pixel values: each ink at every coverage."""
     palette = []
-    for ink in range(INKS):
-        colour = QColor(colours[ink])
+    for name in trace_colours:
+        colour = QColor(name)
         for coverage in range(FULL + 1):
             colour.setAlpha(round(255 * coverage / FULL))
             palette.append(colour.rgba())

@@ -1,4 +1,4 @@
-"""The traces themselves: painted from one picture, moved and measured by hand."""
+"""The traces under the user's hands: panned, zoomed, measured, selected; events reached and dragged."""
 
 from __future__ import annotations
 
@@ -6,35 +6,30 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 from enum import Enum
 
-from PySide6.QtCore import QEvent, QLineF, QPointF, Qt, QTimer, Signal
+from PySide6.QtCore import QEvent, QLineF, QPointF, Qt, Signal
 from PySide6.QtGui import (
     QColor,
     QFocusEvent,
-    QImage,
     QKeyEvent,
     QMouseEvent,
     QNativeGestureEvent,
-    QPainter,
-    QPaintEvent,
     QPen,
-    QResizeEvent,
     QWheelEvent,
 )
-from PySide6.QtWidgets import QGestureEvent, QPinchGesture, QSizePolicy, QWidget
+from PySide6.QtWidgets import QGestureEvent, QPinchGesture, QWidget
 
 from pulsemend.model.vocabulary import Role
 from pulsemend.session.view import Shown, View
 from pulsemend.window.theme import Theme
 from pulsemend.window.traces import overlays as paint
-from pulsemend.window.traces.clock import clock, duration, number
-from pulsemend.window.traces.geometry import HEADER, Rows, TimeScale
+from pulsemend.window.traces.canvas import TraceView
+from pulsemend.window.traces.clock import clock
+from pulsemend.window.traces.geometry import HEADER
 from pulsemend.window.traces.keys import moved_by_key, plain, wheel_move, wheel_zoom
-from pulsemend.window.traces.model import Events, Measure, Overlays, Reading, ViewModel
+from pulsemend.window.traces.model import Measure, Reading, ViewModel
 from pulsemend.window.traces.navigation import SMALL_STEP, Extent
-from pulsemend.window.traces.picture import Scene, TracePicture
-from pulsemend.window.traces.source import Detail, TraceSource
+from pulsemend.window.traces.source import TraceSource
 
-_AGAIN_MS = 15
 _STILL = 4
 """Pixels that the mouse may move within a click."""
 _LEAST_SAMPLES = 8
@@ -70,8 +65,8 @@ class _Stretch:
     time_s: float
 
 
-class TracePlot(QWidget):
-    """Stacked traces with everything that lies over them.
+class TracePlot(TraceView):
+    """Stacked traces that can be moved and measured.
 
     Dragging pans; with Shift it measures between two points, with Ctrl it selects a stretch of time;
     `set_hand` makes one of these what plain dragging does. A click on an event's shape, or Return on the one
@@ -92,97 +87,22 @@ class TracePlot(QWidget):
     event_clicked = Signal(int)
     pulse_dragged = Signal(int, float)
     pulse_added = Signal(float)
-    laid_out = Signal()
 
     def __init__(
         self, model: ViewModel, source: TraceSource, theme: Theme, parent: QWidget | None = None
     ) -> None:
-        super().__init__(parent)
-        self._model = model
-        self._source = source
-        self._theme = theme
-        self._picture = TracePicture(source)
+        super().__init__(model, source, theme, parent)
         facts = source.facts
         self._extent = Extent(facts.duration_s, _LEAST_SAMPLES / facts.rate_hz)
-        self._overlays = Overlays()
-        self._names = {channel.name: place for place, channel in enumerate(facts.channels)}
         self._hand = Hand.PAN
         self._pulses_editable = False
-        self._scroll = 0
-        self._image: QImage | None = None
-        self._detail = Detail.EXACT
-        self._hidden_labels = 0
         self._cursor: QPointF | None = None
         self._drag: _Drag | None = None
         self._stretch: _Stretch | None = None
         self._measure: tuple[Measure, tuple[float, float]] | None = None
-        self._current_event: int | None = None
-        self._again = QTimer(self, singleShot=True, interval=_AGAIN_MS)
-        self._again.timeout.connect(self.refresh)
-        self.setAttribute(Qt.WidgetAttribute.WA_OpaquePaintEvent)
         self.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
         self.setMouseTracking(True)
-        self.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Expanding)
-        self.setMinimumSize(200, 80)
         self.grabGesture(Qt.GestureType.PinchGesture)
-        self.setAccessibleName("Traces")
-        self.show_view()
-
-    # What is shown
-
-    @property
-    def rows(self) -> Rows:
-        """Where the rows lie."""
-        return Rows(len(self.shown_names), self.height(), self._scroll)
-
-    @property
-    def scale(self) -> TimeScale:
-        """Where times lie."""
-        return TimeScale.of(
-            self._model.view, self.width(), self._source.facts.rate_hz, self.devicePixelRatioF()
-        )
-
-    @property
-    def shown_names(self) -> list[str]:
-        """Names of the rows, top to bottom."""
-        return [name for name in self._model.view.rows if name in self._names]
-
-    @property
-    def detail(self) -> Detail:
-        """What the traces painted last are."""
-        return self._detail
-
-    @property
-    def hidden_labels(self) -> int:
-        """How many labels of events in view had no room."""
-        return self._hidden_labels
-
-    def show_view(self) -> None:
-        """Take over a changed view."""
-        view = self._model.view
-        self._scroll = min(self._scroll, self.rows.scroll_range)
-        self.setAccessibleDescription(
-            f"{view.shown}, {duration(view.width_s)} from {clock(view.start_s)}, "
-            f"{number(view.row_uv)} µV a row"
-        )
-        self.laid_out.emit()
-        self.refresh()
-
-    def refresh(self) -> None:
-        """Paint again, because the numbers or the overlays changed."""
-        self._image = None
-        self.update()
-
-    def set_overlays(self, overlays: Overlays) -> None:
-        """Show other events, bands and bad channels."""
-        self._overlays = overlays
-        self._current_event = None
-        self.refresh()
-
-    def set_theme(self, theme: Theme) -> None:
-        """Change the colours."""
-        self._theme = theme
-        self.refresh()
 
     def set_hand(self, hand: Hand) -> None:
         """Choose what plain dragging does."""
@@ -192,23 +112,9 @@ class TracePlot(QWidget):
         """Let pulses be dragged, and added by a double click above the traces."""
         self._pulses_editable = editable
 
-    def set_scroll(self, scroll: int) -> None:
-        """Scroll the rows."""
-        scroll = min(max(0, scroll), self.rows.scroll_range)
-        if scroll != self._scroll:
-            self._scroll = scroll
-            self.laid_out.emit()
-            self.refresh()
-
-    # Painting
-
-    def paintEvent(self, _event: QPaintEvent) -> None:
-        """Paint the picture, and what moves with the mouse over it."""
-        if self._image is None or self._image.devicePixelRatio() != self.devicePixelRatioF():
-            self._image = self._painted()
-        painter = QPainter(self)
-        painter.drawImage(0, 0, self._image)
-        canvas = self._canvas(painter)
+    def paint_moving(self, canvas: paint.Canvas) -> None:
+        """Paint the cursor, a measure, a stretch being chosen, a pulse being dragged."""
+        painter = canvas.painter
         drag = self._drag
         if self._stretch is not None:
             paint.paint_chosen_stretch(canvas, self._stretch.anchor_s, self._stretch.time_s)
@@ -223,43 +129,6 @@ class TracePlot(QWidget):
             painter.setPen(QPen(QColor(self._theme.line), 1.0))
             x = int(self._cursor.x()) + 0.5
             painter.drawLine(QLineF(x, self.rows.top, x, self.rows.top + self.rows.area))
-        if self.hasFocus():
-            painter.setPen(QPen(QColor(self._theme.accent), 1.5))
-            painter.drawRect(self.rect().adjusted(1, 1, -2, -2))
-
-    def _canvas(self, painter: QPainter) -> paint.Canvas:
-        return paint.Canvas(painter, self.scale, self.rows, float(self.width()), self._theme)
-
-    def _painted(self) -> QImage:
-        """Everything but what moves with the mouse."""
-        ratio = self.devicePixelRatioF()
-        image = QImage(
-            max(1, round(self.width() * ratio)),
-            max(1, round(self.height() * ratio)),
-            QImage.Format.Format_RGB32,
-        )
-        image.setDevicePixelRatio(ratio)
-        image.fill(QColor(self._theme.panel))
-        scene = Scene(self._model.view, self.scale, self.rows, self._overlays.bad, self._theme)
-        drawn = self._picture.draw(scene)
-        drawn.image.setDevicePixelRatio(ratio)
-        painter = QPainter(image)
-        painter.setFont(self.font())
-        canvas = self._canvas(painter)
-        paint.paint_behind(canvas, self._overlays)
-        painter.drawImage(QPointF(0, self.rows.top), drawn.image)
-        paint.paint_band_labels(canvas, self._overlays)
-        self._hidden_labels = paint.paint_events(canvas, self._overlays.events, self._current_event)
-        paint.paint_times(canvas)
-        paint.paint_scale_bar(canvas, self._model.view.row_uv)
-        self._detail = drawn.detail
-        word = "every channel is hidden" if not self.shown_names else drawn.detail.value
-        if not self.shown_names or drawn.detail is not Detail.EXACT:
-            paint.paint_word(canvas, word)
-        painter.end()
-        if not drawn.complete:
-            self._again.start()
-        return image
 
     # Mouse
 
@@ -364,8 +233,6 @@ class TracePlot(QWidget):
             if isinstance(pinch, QPinchGesture):
                 self._zoom(pinch.scaleFactor(), self.mapFromGlobal(pinch.hotSpot()).x())
                 return True
-        elif event.type() is QEvent.Type.DevicePixelRatioChange:
-            self.refresh()
         return super().event(event)
 
     # Keys
@@ -410,13 +277,6 @@ class TracePlot(QWidget):
         """Stop showing the focus."""
         self.update()
         super().focusOutEvent(event)
-
-    def resizeEvent(self, event: QResizeEvent) -> None:
-        """Lay the rows out anew."""
-        self._scroll = min(self._scroll, self.rows.scroll_range)
-        self.laid_out.emit()
-        self.refresh()
-        super().resizeEvent(event)
 
     # Acts
 
@@ -534,5 +394,5 @@ class TracePlot(QWidget):
         return self._on_sample(drag.start.x()), self._on_sample(drag.at.x())
 
     def _movable(self, place: int) -> bool:
-        events: Events = self._overlays.events
+        events = self._overlays.events
         return self._pulses_editable and events.roles[place] is Role.PULSE

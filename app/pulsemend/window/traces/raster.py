@@ -16,6 +16,9 @@ FULL = 63
 INKS = 4
 """Inks that one picture can hold; a pixel is its ink times (FULL + 1) plus its coverage."""
 _UNIT = FULL + 1
+_ROWS = 48
+_LEAST = 8
+"""Coverage from which a later ink shows over an earlier one."""
 
 Spans = NDArray[np.float32]
 """Upper or lower ends of spans in pixels from the top, shape (n_traces, n_columns)."""
@@ -34,11 +37,14 @@ class Raster:
         self.pixels = np.zeros((height, width), dtype=np.uint8)
         # 512 traces may lie over each other in one pixel; two rows more take what ends at the lower edge.
         self._steps = np.zeros((height + 2, width), dtype=np.int16)
+        self._rows = list(self._steps)
         self._coverage = np.empty((height, width), dtype=np.uint8)
+        self._empty = True
 
     def clear(self) -> None:
         """Make all pixels empty."""
         self.pixels.fill(0)
+        self._empty = True
 
     def draw(self, top: Spans, bottom: Spans, ink: int, column: int = 0, line: float = 1.0) -> None:
         """Draw traces, each a span per column; they may lie over each other.
@@ -48,7 +54,7 @@ class Raster:
         top, bottom : arrays, shape (n_traces, n_columns)
             Ends of the spans, top <= bottom; beyond the picture they are cut.
         ink : int
-            0 to INKS - 1. A later ink covers an earlier one where it covers at least as much of the pixel.
+            0 to INKS - 1. A higher one hides a lower one wherever it covers an eighth of the pixel.
         column : int
             Where the first span stands.
         line : float
@@ -73,29 +79,39 @@ class Raster:
         width = self.pixels.shape[1]
         flat = self._steps.reshape(-1)
         columns = np.arange(column, column + upper.shape[1], dtype=np.int32)
-        for ends, sign in ((upper, 1), (lower, -1)):
+        for ends, put in ((upper, np.add.at), (lower, np.subtract.at)):
             part = (ends & FULL).astype(np.int16).ravel()
-            place = (((ends >> 6) * np.int32(width)) + columns).ravel().astype(np.intp)
-            np.add.at(flat, place, sign * (_UNIT - part))
+            ends >>= 6
+            ends *= np.int32(width)
+            ends += columns
+            place = ends.ravel().astype(np.intp)
+            put(flat, place, _UNIT - part)
             place += width
-            np.add.at(flat, place, sign * part)
+            put(flat, place, part)
 
     def _sum(self, first: int, last: int) -> None:
-        rows = list(self._steps[first:last])
-        # Row by row: numpy's cumsum along this axis takes 15 times as long.
-        for above, row in itertools.pairwise(rows):
-            np.add(row, above, out=row)
-        np.minimum(self._steps[first:last], FULL, out=self._coverage[first:last], casting="unsafe")
-        self._steps[first : last + 2] = 0
+        """Turn steps into coverage, some rows at a time so that they stay in the processor's cache."""
+        for start in range(first, last, _ROWS):
+            stop = min(start + _ROWS, last)
+            # Row by row: numpy's cumsum along this axis takes 15 times as long.
+            for above, row in itertools.pairwise(self._rows[max(first, start - 1) : stop]):
+                np.add(row, above, out=row)
+            np.minimum(self._steps[start:stop], FULL, out=self._coverage[start:stop], casting="unsafe")
+            self._steps[max(first, start - 1) : stop - 1] = 0
+        self._steps[last - 1 : last + 2] = 0
 
     def _merge(self, first: int, last: int, ink: int) -> None:
         pixels, coverage = self.pixels[first:last], self._coverage[first:last]
-        if not ink:
-            np.maximum(pixels, coverage, out=pixels)
+        if self._empty:
+            self._empty = False
+            np.add(coverage, np.uint8(ink * _UNIT), out=pixels)
             return
-        covers = coverage >= np.maximum(pixels & FULL, 1)
-        coverage += np.uint8(ink * _UNIT)
-        np.copyto(pixels, coverage, where=covers)
+        # The ink's number only where enough is covered: adding carries into the bit above the coverage.
+        flags = coverage + np.uint8(_UNIT - _LEAST)
+        flags &= np.uint8(_UNIT)
+        flags *= np.uint8(ink)
+        flags |= coverage
+        np.maximum(pixels, flags, out=pixels)
 
 
 def joined(top: Spans, bottom: Spans) -> tuple[Spans, Spans]:
