@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -95,7 +95,7 @@ class Study:
 
     recording: Path
     plan: Path
-    lantern: Lantern
+    lantern: Lantern = field(repr=False)
 
 
 def write_study(folder: Path) -> Study:

@@ -11,7 +11,7 @@ from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import fit
 from pulsemend.engine.setup import Setup, bind
 from pulsemend.errors import InputError, NoEpochs
-from pulsemend.model.epochs import Candidate, Trials
+from pulsemend.model.epochs import Candidate, Trials, nearest_sample
 from pulsemend.model.marks import NO_MARKS, Marks
 from pulsemend.model.marks_file import (
     check_files,
@@ -25,7 +25,7 @@ from pulsemend.model.plan import Plan
 from pulsemend.model.plan_checks import check_against_rate, check_channels, check_decided
 from pulsemend.model.plan_file import PlanFile, read_plan
 from pulsemend.model.recording import Channel, Fingerprint, Recording, RecordingFacts
-from pulsemend.model.vocabulary import PulseState
+from pulsemend.model.vocabulary import PulseState, Role
 from pulsemend.progress import Work
 from pulsemend.readers.fingerprint import fingerprint
 from pulsemend.readers.opening import open_recording
@@ -318,6 +318,18 @@ def _trial_warnings(trials: Trials, facts: RecordingFacts) -> list[str]:
             f"{first.sample / facts.rate_hz:.3f} s"
         )
     return lines
+
+
+def _stale_pulses(facts: RecordingFacts, plan: Plan, marks: Marks) -> list[str]:
+    """Pulses moved or removed by hand where no marker is a pulse: the plan or the marks have changed since."""
+    at = {nearest_sample(one.sample) for one in facts.markers if plan.role_of(one.code) is Role.PULSE}
+    named = [("moved", pulse.sample) for pulse in marks.pulses_moved]
+    named += [("removed", sample) for sample in marks.pulses_removed]
+    return [
+        f"marks: the pulse at sample {sample} is {what}, but no pulse marker is there"
+        for what, sample in named
+        if sample not in at
+    ]
 
 
 def marked_only(estimates: Estimates) -> int:
