@@ -1,0 +1,180 @@
+"""The pulses of a recording as a list that can be edited: markers of pulses, and what was added by hand."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from statistics import median, quantiles
+
+from pulsemend.model.epochs import Pulse, nearest_sample
+from pulsemend.model.marks import Marks, MovedPulse
+from pulsemend.model.plan import Plan
+from pulsemend.model.recording import RecordingFacts
+from pulsemend.model.vocabulary import PulseState, PulseTimes, Role
+from pulsemend.units import s_to_ms
+
+REMOVED = "removed by hand"
+NOT_YET = "not looked for yet"
+
+
+@dataclass(frozen=True)
+class PulseRow:
+    """One pulse of the list.
+
+    Parameters
+    ----------
+    onset : int
+        Recorded sample of its onset; of its marker where the onset is not known.
+    marked : float or None
+        Recorded sample of its marker; None if it was added by hand.
+    state : PulseState or None
+        None: removed, or not looked for yet.
+    words : str
+        The state in words.
+    """
+
+    onset: int
+    marked: float | None
+    state: PulseState | None
+    words: str
+
+    @property
+    def is_removed(self) -> bool:
+        """Whether somebody said that the marker is no pulse."""
+        return self.words == REMOVED
+
+    @property
+    def marker(self) -> int | None:
+        """Recorded sample that marks know the marker by."""
+        return None if self.marked is None else nearest_sample(self.marked)
+
+    def latency_ms(self, rate_hz: float) -> float | None:
+        """Onset minus marker; None without a marker or without an onset of its own."""
+        if self.marked is None or self.state not in (PulseState.ALIGNED, PulseState.MOVED):
+            return None
+        return s_to_ms((self.onset - self.marked) / rate_hz)
+
+
+def pulse_rows(
+    facts: RecordingFacts, plan: Plan, marks: Marks, known: Sequence[Pulse] = ()
+) -> tuple[PulseRow, ...]:
+    """List the pulses in order of time, those removed by hand among them.
+
+    Parameters
+    ----------
+    facts : RecordingFacts
+        Markers.
+    plan, marks : Plan, Marks
+        As they are edited.
+    known : sequence of Pulse
+        What a fit found, perhaps with earlier settings: pulses found in the signal are known by their marker.
+    """
+    if plan.pulses.times is PulseTimes.NONE:
+        return ()
+    found = {pulse.marked: pulse for pulse in known if pulse.marked is not None and not _by_hand(pulse)}
+    moved = {pulse.sample: pulse.to for pulse in marks.pulses_moved}
+    rows = [PulseRow(sample, None, PulseState.ADDED, PulseState.ADDED.value) for sample in marks.pulses_added]
+    for marker in facts.markers:
+        if plan.role_of(marker.code) is not Role.PULSE:
+            continue
+        near = nearest_sample(marker.sample)
+        if near in marks.pulses_removed:
+            rows.append(PulseRow(near, marker.sample, None, REMOVED))
+        elif near in moved:
+            rows.append(PulseRow(moved[near], marker.sample, PulseState.MOVED, PulseState.MOVED.value))
+        elif marker.sample in found:
+            pulse = found[marker.sample]
+            rows.append(PulseRow(pulse.sample, marker.sample, pulse.state, pulse.state.value))
+        else:
+            rows.append(PulseRow(near, marker.sample, None, NOT_YET))
+    return tuple(sorted(rows, key=lambda row: row.onset))
+
+
+def _by_hand(pulse: Pulse) -> bool:
+    return pulse.state in (PulseState.ADDED, PulseState.MOVED)
+
+
+@dataclass(frozen=True)
+class PulseCounts:
+    """The list in numbers.
+
+    Parameters
+    ----------
+    known : int
+        Pulses that are repaired.
+    aligned, marked_only, added, moved, removed : int
+    lead_ms : float or None
+        How long markers come before their artifact, median; None where no artifact was found.
+    spread_ms : float
+        Width of the middle half of these.
+    """
+
+    known: int
+    aligned: int
+    marked_only: int
+    added: int
+    moved: int
+    removed: int
+    lead_ms: float | None
+    spread_ms: float
+
+
+def count_pulses(rows: Sequence[PulseRow], rate_hz: float) -> PulseCounts:
+    """Count what is in the list.
+
+    Parameters
+    ----------
+    rows : sequence of PulseRow
+        From `pulse_rows`.
+    rate_hz : float
+        Recorded rate.
+    """
+    states = [row.state for row in rows]
+    leads = [row.latency_ms(rate_hz) for row in rows if row.state is PulseState.ALIGNED]
+    known = [lead for lead in leads if lead is not None]
+    spread = 0.0
+    if len(known) > 1:
+        first, _, third = quantiles(known, n=4, method="inclusive")
+        spread = third - first
+    return PulseCounts(
+        known=sum(not row.is_removed for row in rows),
+        aligned=states.count(PulseState.ALIGNED),
+        marked_only=states.count(PulseState.MARKED_ONLY),
+        added=states.count(PulseState.ADDED),
+        moved=states.count(PulseState.MOVED),
+        removed=sum(row.is_removed for row in rows),
+        lead_ms=median(known) if known else None,
+        spread_ms=spread,
+    )
+
+
+def with_added(marks: Marks, *samples: int) -> Marks:
+    """Add pulses at onsets (recorded samples)."""
+    return replace(marks, pulses_added=tuple(sorted({*marks.pulses_added, *samples})))
+
+
+def with_moved(marks: Marks, row: PulseRow, to: int) -> Marks:
+    """Give a pulse another onset (recorded sample); a marker that was removed counts as a pulse again."""
+    if row.marker is None:
+        others = {sample for sample in marks.pulses_added if sample != row.onset}
+        return replace(marks, pulses_added=tuple(sorted({*others, to})))
+    free = as_found(marks, row)
+    moved = (*free.pulses_moved, MovedPulse(row.marker, to))
+    return replace(free, pulses_moved=tuple(sorted(moved, key=lambda pulse: pulse.sample)))
+
+
+def with_removed(marks: Marks, row: PulseRow) -> Marks:
+    """Say that a marker is no pulse, or take back a pulse that was added."""
+    if row.marker is None:
+        return replace(marks, pulses_added=tuple(s for s in marks.pulses_added if s != row.onset))
+    free = as_found(marks, row)
+    return replace(free, pulses_removed=tuple(sorted({*free.pulses_removed, row.marker})))
+
+
+def as_found(marks: Marks, row: PulseRow) -> Marks:
+    """Forget what was said about a marker by hand: its pulse is where the signal shows it."""
+    return replace(
+        marks,
+        pulses_moved=tuple(pulse for pulse in marks.pulses_moved if pulse.sample != row.marker),
+        pulses_removed=tuple(sample for sample in marks.pulses_removed if sample != row.marker),
+    )
