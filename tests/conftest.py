@@ -45,7 +45,7 @@ def pytest_pycollect_makemodule(module_path: Path, parent: pytest.Collector) -> 
 
 
 @pytest.fixture(scope="session")
-def share() -> Callable[[int], int]:
+def slow_count() -> Callable[[int], int]:
     """For slow tests: how many of so many draws to make.
 
     All by default; ``PULSEMEND_SLOW_SHARE=0.1`` makes a tenth (at least one), as continuous integration does.
