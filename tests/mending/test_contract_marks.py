@@ -102,7 +102,7 @@ def test_decisions_about_what_does_not_exist_are_warned_of(study: Study, tmp_pat
         f"[pulses]\nremoved = [{at}]\n[[pulses.moved]]\nsample = {at + 1}\nto = {at + 2}\n"
     )
     warnings = finish(dry_run(make_request(study.recording, PLAN, tmp_path, marks))).warnings
-    for piece in ("trial 9", "gone", f"sample {at} is removed", f"sample {at + 1} is moved"):
+    for piece in ("trial 9", "gone", f"sample {at} is removed,", f"sample {at + 1} is moved,"):
         assert any(piece in text for text in warnings), piece
 
 

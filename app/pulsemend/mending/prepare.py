@@ -219,6 +219,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks) -> Deci
     warnings = [
         *_trial_warnings(trials, facts),
         *stale_decisions(trials, plan, geometry),
+        *_stale_pulses(facts, plan, marks),
         *estimates.notes,
     ]
     return Decision(trials, geometry, ledger, set_order(ledger, geometry), tuple(warnings))
@@ -321,7 +322,7 @@ def _trial_warnings(trials: Trials, facts: RecordingFacts) -> list[str]:
 
 
 def _stale_pulses(facts: RecordingFacts, plan: Plan, marks: Marks) -> list[str]:
-    """Pulses moved or removed by hand where no marker is a pulse: the plan or the marks have changed since."""
+    """Pulses moved or removed by hand where no marker is a pulse: plan or marks have changed since."""
     at = {nearest_sample(one.sample) for one in facts.markers if plan.role_of(one.code) is Role.PULSE}
     named = [("moved", pulse.sample) for pulse in marks.pulses_moved]
     named += [("removed", sample) for sample in marks.pulses_removed]
