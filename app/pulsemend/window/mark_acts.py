@@ -107,14 +107,14 @@ class MarkActs:
             session.select(NOTHING_SELECTED)
 
     def pulse_at(self, sample: int) -> Pulse | None:
-        """The known pulse whose onset is at a sample."""
+        """Find the known pulse whose onset is at a sample."""
         learned = self._bench.learned
         pulses = () if learned is None else learned.estimates.pulses
         return next((pulse for pulse in pulses if pulse.sample == sample), None)
 
 
 def _without(marks: Marks, pulse: Pulse) -> Marks:
-    """Marks without what they say about one pulse."""
+    """Take out of marks what they say about one pulse."""
     added = tuple(n for n in marks.pulses_added if pulse.marked is not None or n != pulse.sample)
     moved = marks.pulses_moved
     if pulse.marked is not None:
