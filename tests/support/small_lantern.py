@@ -159,6 +159,11 @@ class SetOnDisk:
 
         return mne.read_epochs(self.path("epo.fif"), proj=False, verbose="error")
 
+    def metadata(self) -> list[dict[str, Any]]:
+        """Rows of the FIF file's metadata, which become a frame where pandas is installed."""
+        rows = self.fif().metadata
+        return list(rows) if isinstance(rows, list) else list(rows.to_dict("records"))
+
     def table(self, name: str) -> dict[str, list[str]]:
         """Columns of a table."""
         lines = [line.split("\t") for line in self.path(name).read_text(encoding="utf-8").splitlines()]
