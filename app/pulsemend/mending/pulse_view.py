@@ -248,7 +248,7 @@ def _lags(setup: Setup) -> int:
 def _quick_autocovariance(
     recording: Recording, setup: Setup, columns: NDArray[np.intp]
 ) -> Work[NDArray[np.float64]]:
-    """Autocovariance of a few channels from a few windows; zeros for all others."""
+    """Learn the autocovariance of some channels from a few windows; all others count as white noise."""
     windows = quiet_windows(setup)
     chosen = np.linspace(0, len(windows) - 1, min(len(windows), QUICK_WINDOWS)).round().astype(int)
     sums = AutocovarianceSum(columns.size, _lags(setup))
@@ -257,10 +257,9 @@ def _quick_autocovariance(
         x = read_stored(recording, setup, *windows[place])[:, columns] * setup.scale_v[columns]
         sums.add((x - x.mean(axis=0)).astype(np.float32))
     rows = np.zeros((setup.used.size, _lags(setup)))
+    rows[:, 0] = 1.0
     if sums.n_samples:
         rows[columns] = sums.result()
-    else:
-        rows[:, 0] = 1.0
     return rows
 
 
@@ -356,7 +355,7 @@ def _inside(ground: Ground, first: int, stop: int) -> NDArray[np.intp]:
 def _spread_out(values: NDArray[np.intp], most: int | None) -> NDArray[np.intp]:
     if most is None or len(values) <= most:
         return values
-    return values[np.linspace(0, len(values) - 1, most).round().astype(int)]
+    return np.asarray(values[np.linspace(0, len(values) - 1, most).round().astype(int)])
 
 
 def _columns(setup: Setup, request: PulseRequest) -> NDArray[np.intp]:
