@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 
+from pulsemend.mending.learned import Learned
 from pulsemend.mending.prepare import Decision
 from pulsemend.model.epochs import Candidate
 from pulsemend.model.marks import EpochKey
 from pulsemend.model.plan import Plan
 from pulsemend.model.recording import RecordingFacts
-from pulsemend.model.vocabulary import Fate
+from pulsemend.model.vocabulary import Fate, PulseRule
+from pulsemend.progress import Progress, Work
+from pulsemend.trials.candidates import candidates
 
 
 @dataclass(frozen=True)
@@ -145,3 +148,31 @@ def _span(one: Candidate, decision: Decision, plan: Plan) -> tuple[int, int] | N
     geometry = decision.geometry
     first = round(geometry.first_sample(one.anchor_sample, one.start_s))
     return first, first + max(1, round(plan.epochs.length_s * geometry.recorded_hz))
+
+
+def kept_under(learned: Learned, place: int) -> Work[Mapping[PulseRule, int]]:
+    """Count what one rule would keep under each of its choices about pulses: evidence beside the choice.
+
+    Parameters
+    ----------
+    learned : Learned
+        What is known of the recording.
+    place : int
+        Place of the rule, from 0.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    mapping of PulseRule to int
+    """
+    decision, plan = learned.decision, learned.plan
+    kept: dict[PulseRule, int] = {}
+    for choice in PulseRule:
+        yield Progress("counting epochs", len(kept), len(PulseRule))
+        rule = replace(plan.epochs.rule[place], pulse=choice)
+        alone = replace(plan, epochs=replace(plan.epochs, rule=(rule,)))
+        kept[choice] = sum(one.kept for one in candidates(decision.trials, alone, decision.geometry))
+    return kept

@@ -1,0 +1,344 @@
+"""The stage Epochs: the rules, the counts they lead to, and every candidate with its fate."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import replace
+
+from PySide6.QtWidgets import QStackedWidget, QVBoxLayout, QWidget
+
+from pulsemend.errors import InputError, SettingError
+from pulsemend.mending.epoch_rows import (
+    EpochRow,
+    epoch_rows,
+    kept_of_all,
+    kept_under,
+    left_out_by_reason,
+    why_no_trial,
+)
+from pulsemend.mending.rule_edits import (
+    check_epochs,
+    with_copy,
+    with_length,
+    with_moved_rule,
+    with_new_rule,
+    with_rule,
+    without_rule,
+)
+from pulsemend.model.epochs import nearest_sample
+from pulsemend.model.marks import Marks
+from pulsemend.model.plan import EpochRule, Plan
+from pulsemend.model.vocabulary import Fate, PulseRule
+from pulsemend.session.changed import Changed
+from pulsemend.session.found import Selected, Stage
+from pulsemend.window.epoch_table import EpochTable
+from pulsemend.window.fields import Field, PlainNumber, in_words
+from pulsemend.window.parts import Card, EmptyState, ValueLine, scrolling_column
+from pulsemend.window.rule_editor import RuleEditor, RuleList
+from pulsemend.window.stages.base import StagePage
+from pulsemend.window.theme import Theme
+from pulsemend.window.workbench import Workbench
+
+ROOM_AROUND = 2.5
+"""Part in view when an epoch is gone to, at least, in epochs."""
+
+
+class EpochsStage(StagePage):
+    """Rules, counts, candidates.
+
+    Parameters
+    ----------
+    bench : Workbench
+        Session and workers.
+    """
+
+    stage = Stage.EPOCHS
+
+    def __init__(self, bench: Workbench) -> None:
+        super().__init__(bench)
+        self._place = 0
+        self._counted: object = None
+        self._build()
+        session = bench.session
+        ends = [
+            session.subscribe(Changed.PLAN, self._show_plan),
+            session.subscribe(Changed.MARKS, lambda: self.table.show_marks(session.marks)),
+            session.subscribe(Changed.RECORDING, self._show_plan),
+        ]
+        bench.learned_changed.connect(self._show_learned)
+        bench.learning_changed.connect(self._show_learning)
+        self.settings.destroyed.connect(lambda: [end() for end in ends])
+        self.picture.destroyed.connect(self._let_go)
+        self._show_plan()
+        self._show_learned()
+
+    def show_stage(self) -> None:
+        """Count what only an open stage needs."""
+        super().show_stage()
+        self._count_choices()
+
+    def set_theme(self, theme: Theme) -> None:
+        """Draw the shapes of fates in other colours."""
+        self.table.set_theme(theme)
+
+    # Put together
+
+    def _build(self) -> None:
+        self.set_card = Card("Epochs", "one length for the whole set")
+        self.length = PlainNumber("Length of every epoch", "s", 0.001, 3600, 0.1)
+        self.length_field = Field("length", self.length)
+        self.set_card.add(self.length_field)
+        self.samples = self.set_card.add_line("samples per epoch")
+        self.trials = self.set_card.add_line("trials found")
+        self.excluded = self.set_card.add_line("trials excluded by hand")
+        self.kept = self.set_card.add_line("epochs kept")
+        self.length.committed.connect(self._take_length)
+        self.length.editingFinished.connect(self.bench.session.end_merge)
+        self.rules = RuleList()
+        self.editor = RuleEditor(self._edit_rule, self.bench.session.end_merge)
+        self.reasons = Card("Left out, by reason")
+        self._reason_lines: list[ValueLine] = []
+        self.nothing_left_out = self.reasons.add_note("Nothing is left out.")
+        self.notes = Card("Notes")
+        self.notes_text = self.notes.add_note()
+        self.no_plan = Card("Epochs")
+        self.no_plan_words = self.no_plan.add_note()
+        self._cards = (self.set_card, self.rules, self.editor, self.reasons)
+        self.settings = scrolling_column(self.no_plan, *self._cards, self.notes, name="Epochs, settings")
+        self.table = EpochTable(self.bench.theme)
+        self.empty = EmptyState("")
+        self.picture = QWidget()
+        column = QVBoxLayout(self.picture)
+        column.setContentsMargins(0, 0, 0, 0)
+        self.pages = QStackedWidget()
+        self.pages.addWidget(self.empty)
+        self.pages.addWidget(self.table)
+        column.addWidget(self.pages)
+        self.empty.text.setWordWrap(True)
+        self._listen()
+
+    def _listen(self) -> None:
+        self.rules.chosen.connect(self._choose)
+        self.rules.add_wanted.connect(self._add)
+        self.rules.copy_wanted.connect(self._copy)
+        self.rules.remove_wanted.connect(self._remove)
+        self.rules.move_wanted.connect(self._move)
+        self.table.wanted.connect(self.go_to)
+        self.table.marks_wanted.connect(self._edit_marks)
+
+    def _let_go(self) -> None:
+        self.bench.learned_changed.disconnect(self._show_learned)
+        self.bench.learning_changed.disconnect(self._show_learning)
+
+    # Edits
+
+    def _edit(self, field: str, label: str, plan: Plan, merge_key: str | None = None) -> str:
+        """Change the plan; gives the words of a refusal, empty if there is none."""
+        session = self.bench.session
+        try:
+            if session.recording is not None:
+                check_epochs(plan, session.recording.facts.rate_hz)
+            session.edit_plan(label, plan, merge_key)
+        except SettingError as error:
+            return in_words(error, field)
+        except InputError as error:
+            return str(error)
+        return ""
+
+    def _take_length(self, length_s: float) -> None:
+        plan = self.bench.session.plan
+        if plan is None:
+            return
+        refusal = self._edit(
+            "length_s", f"Epochs {length_s:g} s long", with_length(plan, length_s), "epochs.length_s"
+        )
+        if refusal:
+            self.length.show_value(plan.epochs.length_s)
+        self.length_field.refuse(refusal)
+
+    def _edit_rule(self, field: str, label: str, rule: EpochRule, merge_key: str | None) -> str:
+        plan = self.bench.session.plan
+        if plan is None:
+            return ""
+        return self._edit(field, label, with_rule(plan, self._place, rule), merge_key)
+
+    def _change_rules(self, label: str, change: Callable[[Plan], Plan], place: int) -> bool:
+        """Add, copy, remove or move; the rule at `place` is chosen afterwards."""
+        plan, before = self.bench.session.plan, self._place
+        if plan is None:
+            return False
+        self._place = place
+        refusal = self._edit("", label, change(plan))
+        if refusal:
+            self._place = before
+        self.rules.refuse(refusal)
+        return not refusal
+
+    def _add(self) -> None:
+        place = self._place + 1
+        if self._change_rules("Add a rule", lambda plan: with_new_rule(plan, place), place):
+            self.editor.name.setFocus()
+            self.editor.name.selectAll()
+
+    def _copy(self) -> None:
+        place = self._place
+        self._change_rules(f"Copy rule {self._name()}", lambda plan: with_copy(plan, place), place + 1)
+
+    def _remove(self) -> None:
+        place = self._place
+        self._change_rules(
+            f"Remove rule {self._name()}", lambda plan: without_rule(plan, place), max(0, place - 1)
+        )
+
+    def _move(self, step: int) -> None:
+        place = self._place
+        self._change_rules(
+            f"Move rule {self._name()} {'down' if step > 0 else 'up'}",
+            lambda plan: with_moved_rule(plan, place, place + step),
+            place + step,
+        )
+
+    def _name(self) -> str:
+        plan = self.bench.session.plan
+        return "" if plan is None else plan.epochs.rule[self._place].name
+
+    def _edit_marks(self, label: str, marks: Marks) -> None:
+        try:
+            self.bench.session.edit_marks(label, marks)
+        except InputError as error:
+            self.bench.tell(error)
+
+    # What is shown
+
+    def go_to(self, row: EpochRow) -> None:
+        """Bring an epoch into view and select its stretch; without an anchor, the beginning of its trial."""
+        session = self.bench.session
+        if session.recording is None or session.plan is None:
+            return
+        facts, view = session.recording.facts, session.view
+        length_s = session.plan.epochs.length_s
+        width_s = min(max(view.width_s, ROOM_AROUND * length_s), facts.duration_s)
+        middle_s = row.near_s if row.span is None else sum(row.span) / 2 / facts.rate_hz
+        start_s = min(max(middle_s - width_s / 2, 0.0), facts.duration_s - width_s)
+        session.set_view(replace(view, start_s=start_s, width_s=width_s))
+        if row.span is None:
+            at = nearest_sample(row.near_s * facts.rate_hz)
+            span = (at, at + 1)
+        else:
+            span = row.span
+        start, stop = max(0, span[0]), min(facts.n_samples, span[1])
+        session.select(Selected(stretch=(start, stop) if start < stop else None))
+
+    def _choose(self, place: int) -> None:
+        plan = self.bench.session.plan
+        if plan is None:
+            return
+        self._place = place
+        self.editor.show_rule(plan, place)
+        self.rules.refuse("")
+        self._count_choices()
+
+    def _show_plan(self) -> None:
+        plan = self.bench.session.plan
+        for card in self._cards:
+            card.setVisible(plan is not None)
+        self.no_plan.setVisible(plan is None)
+        if plan is None:
+            self.notes.hide()
+            self._show_learned()
+            return
+        self._place = min(self._place, len(plan.epochs.rule) - 1)
+        self.length.show_value(plan.epochs.length_s)
+        self.length_field.refuse("")
+        self.rules.refuse("")
+        self.editor.show_rule(plan, self._place)
+        self._show_counts(plan)
+
+    def _show_counts(self, plan: Plan) -> None:
+        learned = self.bench.learned
+        counts = () if learned is None else kept_of_all(learned.decision, learned.plan)
+        self.rules.show_rules(plan.epochs.rule, counts, self._place)
+        recording = self.bench.session.recording
+        rate_hz = plan.filter.rate_hz or (recording.facts.rate_hz if recording else 0.0)
+        self.samples.show_value(
+            f"{round(plan.epochs.length_s * rate_hz)} at {rate_hz:g} Hz" if rate_hz else "as recorded"
+        )
+
+    def _show_learned(self) -> None:
+        plan, learned = self.bench.session.plan, self.bench.learned
+        if plan is not None:
+            self._show_counts(plan)
+        self._show_lines()
+        if learned is None or not learned.decision.ledger:
+            self.empty.text.setText(self._why_empty())
+            self.no_plan_words.setText(self._why_empty())
+            self.pages.setCurrentWidget(self.empty)
+            return
+        self.pages.setCurrentWidget(self.table)
+        # The same decision may be announced again, and nothing has to be drawn for that.
+        if self._counted is not learned:
+            self._counted = learned
+            self.table.show_rows(epoch_rows(learned.decision, learned.plan), self.bench.session.marks)
+            self._count_choices()
+
+    def _why_empty(self) -> str:
+        session = self.bench.session
+        if session.recording is None:
+            return "Open a recording and a plan: the epochs of all its trials will be listed here."
+        if session.plan is None:
+            return (
+                "There is no plan yet. Open one, or draft one from this recording (menu File): "
+                "its rules say which epochs are cut, and each will be listed here with its fate."
+            )
+        if self.bench.problem:
+            return f"Epochs cannot be counted yet. {self.bench.problem}"
+        learned = self.bench.learned
+        if learned is None:
+            return "The epochs are being counted."
+        return f"No trial was found. {why_no_trial(learned.plan, session.recording.facts)}"
+
+    def _show_lines(self) -> None:
+        learned = self.bench.learned
+        for line in self._reason_lines:
+            line.hide()
+            line.deleteLater()
+        self._reason_lines = []
+        self.notes.setVisible(bool(learned and learned.decision.warnings))
+        if learned is None:
+            for line in (self.trials, self.excluded, self.kept):
+                line.show_value("not counted")
+            self.nothing_left_out.setText("Not counted.")
+            self.nothing_left_out.show()
+            return
+        trials, ledger = learned.decision.trials.trials, learned.decision.ledger
+        incomplete = sum(bool(trial.missing) for trial in trials)
+        more = f", {incomplete} incomplete" if incomplete else ""
+        self.trials.show_value(f"{len(trials)}{more}", attention=not trials)
+        self.excluded.show_value(str(len(learned.marks.trials_excluded)))
+        n_kept = len(learned.decision.kept)
+        self.kept.show_value(f"{n_kept} of {len(ledger)}", attention=not n_kept)
+        for fate, count in left_out_by_reason(ledger):
+            self._reason_lines.append(self._reason_line(fate, count))
+        self.nothing_left_out.setText("Nothing is left out." if ledger else "There are no epochs.")
+        self.nothing_left_out.setVisible(not self._reason_lines)
+        self.notes_text.setText("\n".join(f"{note}." for note in learned.decision.warnings))
+
+    def _reason_line(self, fate: Fate, count: int) -> ValueLine:
+        return self.reasons.add_line(str(fate), str(count))
+
+    def _show_learning(self, learning: bool) -> None:
+        self.rules.note.setText("being counted" if learning else "")
+
+    def _count_choices(self) -> None:
+        """Let a worker count what the chosen rule would keep under each choice about gaps."""
+        learned, plan = self.bench.learned, self.bench.session.plan
+        self.editor.show_kept(None)
+        if not self.shown or learned is None or plan is None or self.bench.provisional:
+            return
+        place = self._place
+
+        def take(kept: Mapping[PulseRule, int]) -> None:
+            if place == self._place:
+                self.editor.show_kept(kept)
+
+        self.bench.start("epoch choices", lambda _recording: kept_under(learned, place), take)
