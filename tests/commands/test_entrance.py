@@ -137,14 +137,23 @@ def test_wrong_usage_is_2(words: list[str], capsys: pytest.CaptureFixture[str]) 
     assert streams.err
 
 
-@pytest.mark.parametrize("words", [[], [__file__], ["roster", "r.toml", "--out", "d", "--workers", "2"]])
-def test_what_this_version_has_not_is_3_in_one_line(
-    words: list[str], capsys: pytest.CaptureFixture[str]
-) -> None:
-    assert main(words) == 3
+def test_a_later_command_is_3_in_one_line(capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["roster", "r.toml", "--out", "d", "--workers", "2"]) == 3
     streams = capsys.readouterr()
     assert streams.out == ""
     assert "not in this version" in streams.err
+    assert streams.err.count("\n") == 1
+
+
+@pytest.mark.parametrize("words", [[], [__file__]])
+def test_window_without_a_display_is_3_in_one_line(
+    words: list[str], capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setenv("QT_QPA_PLATFORM", "offscreen")
+    assert main(words) == 3
+    streams = capsys.readouterr()
+    assert streams.out == ""
+    assert "window" in streams.err
     assert streams.err.count("\n") == 1
 
 
@@ -285,5 +294,6 @@ def test_program_starts_as_a_module_and_prints_its_version() -> None:
 
 
 def test_exit_code_reaches_the_shell() -> None:
-    result = subprocess.run(PROGRAM, capture_output=True, text=True, check=False)
+    environment = os.environ | {"QT_QPA_PLATFORM": "offscreen"}
+    result = subprocess.run(PROGRAM, capture_output=True, text=True, check=False, env=environment)
     assert result.returncode == 3
