@@ -13,7 +13,9 @@ try:
     from PySide6 import QtWidgets  # noqa: F401
 except ImportError as error:
     QT_PROBLEM = (
-        f"Qt cannot be loaded ({error}); install: apt-get install libegl1 libgl1 libxkbcommon0 libdbus-1-3"
+        f"Qt cannot be loaded ({error}); install: apt-get install libegl1 libgl1 libxkbcommon0 "
+        "libxkbcommon-x11-0 libdbus-1-3 libxcb-cursor0 libxcb-icccm4 libxcb-keysyms1 libxcb-shape0 "
+        "libfontconfig1 fonts-dejavu-core"
     )
 else:
     QT_PROBLEM = ""
