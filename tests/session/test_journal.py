@@ -82,6 +82,19 @@ def test_what_came_back_is_safe_from_the_next_crash(desk: Desk, session: Session
     assert [session.undo() for _ in range(5)] == [*(f"Gap to {stop} ms" for stop in (18, 17, 16, 15)), ""]
 
 
+def test_what_can_be_redone_survives_a_second_crash(desk: Desk, session: Session) -> None:
+    gap(session, 15)
+    gap(session, 16)
+    session.undo()
+    for _ in range(2):
+        crash(session)
+        session = desk.new_session()
+        session.recover()
+        assert (window(session), session.next_redo) == ((-2, 15), "Gap to 16 ms")
+    session.redo()
+    assert window(session) == (-2, 16)
+
+
 def test_a_clean_end_leaves_no_journal(desk: Desk, session: Session) -> None:
     gap(session, 15)
     session.edit_marks("C3 bad", Marks(bad=("C3",)))
@@ -153,6 +166,22 @@ def test_marks_changed_meanwhile_are_offered_with_a_word(desk: Desk, session: Se
     assert again.marks.bad == ("C3",)
     with pytest.raises(ChangedOnDisk):
         again.save_marks()
+
+
+def test_marks_made_before_the_offer_are_told(desk: Desk, session: Session) -> None:
+    gap(session, 15)
+    crash(session)
+    again = desk.new_session(with_plan=False)
+    again.edit_marks("C3 bad", Marks(bad=("C3",)))
+    offer = again.open_plan(read_plan(desk.plan_path), desk.plan_path)
+    assert offer is not None
+    assert offer.marks_changed
+    again.drop_recovery()
+    assert again.marks.bad == ("C3",)
+    crash(again)
+    third = desk.new_session()
+    third.recover()
+    assert (third.marks.bad, window(third)) == (("C3",), (-2, 14))
 
 
 def test_an_offer_can_be_thrown_away(desk: Desk, session: Session) -> None:
@@ -346,6 +375,61 @@ def test_a_full_disk_is_told_once_and_work_goes_on(
     again = desk.new_session()
     again.recover()
     assert [again.undo() for _ in range(5)] == [*(f"Gap to {stop} ms" for stop in (18, 17, 16, 15)), ""]
+
+
+def test_a_line_torn_by_a_full_disk_is_followed_by_none(
+    desk: Desk, session: Session, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    gap(session, 15)
+    with monkeypatch.context() as patch:
+
+        def torn(self: journal.Journal, _line: object, *, sync: bool = True) -> None:
+            self._file.write(b'{"do": "ed')
+            self._file.flush()
+            raise OSError(28, "No space left on device")
+
+        patch.setattr(journal.Journal, "_append", torn)
+        gap(session, 16)
+    gap(session, 17)
+    crash(session)
+    again = desk.new_session()
+    assert again.recovery is not None
+    assert again.recovery.lost == 0
+    again.recover()
+    assert window(again) == (-2, 17)
+
+
+def test_a_journal_killed_before_it_was_whole_is_swept_up(desk: Desk, session: Session) -> None:
+    gap(session, 15)
+    begun = only_journal(desk).with_suffix(".part")
+    begun.write_bytes(b'{"jour')
+    crash(session)
+    again = desk.new_session()
+    assert not begun.exists()
+    again.recover()
+    assert window(again) == (-2, 15)
+
+
+def test_journals_that_cannot_be_opened_or_locked_are_passed_over(
+    desk: Desk, session: Session, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    gap(session, 15)
+    crash(session)
+    path = only_journal(desk)
+
+    def no_locks(_file: object) -> bool:
+        raise OSError(37, "No locks available")
+
+    with monkeypatch.context() as patch:
+        patch.setattr("pulsemend.session.left_behind.try_lock", no_locks)
+        desk.new_session().close()
+    whole = path.read_bytes()
+    path.unlink()
+    path.mkdir()
+    desk.new_session().close()
+    path.rmdir()
+    path.write_bytes(whole)
+    assert desk.new_session().recovery is not None
 
 
 def test_journals_are_private(desk: Desk, session: Session) -> None:

@@ -65,6 +65,9 @@ def test_a_file_of_nonsense_is_taken_over(tmp_path: Path) -> None:
     path.write_text("nonsense")
     third = lock_recording(tmp_path, tmp_path / "lt01.vhdr")
     assert third.is_held
+    fourth = lock_recording(tmp_path, tmp_path / "lt01.vhdr")
+    assert fourth.other is not None
+    assert fourth.other.pid == os.getpid()
     third.release()
 
 

@@ -300,8 +300,7 @@ def test_the_newest_of_a_kind_replaces_the_others(qtbot: QtBot, bench: Bench) ->
 
 
 def test_an_urgent_job_goes_before_the_next_step_of_long_ones(qtbot: QtBot, bench: Bench) -> None:
-    order: list[str] = []
-    opened = threading.Event()
+    opened, shown = threading.Event(), threading.Event()
     reached = [threading.Event(), threading.Event()]
 
     def long(number: int) -> Start:
@@ -309,30 +308,31 @@ def test_an_urgent_job_goes_before_the_next_step_of_long_ones(qtbot: QtBot, benc
             reached[number].set()
             assert opened.wait(WAIT_S)
             yield Progress("long", 0, 2)
-            order.append("long goes on")
-            yield Progress("long", 1, 2)
-            return None
+            # Both workers wait here for ever unless one of them showed the preview first.
+            return "after it" if shown.wait(WAIT_S) else "before it"
 
         return start
 
     def preview(_shelf: Shelf) -> Work[object]:
         yield Progress("preview", 0, 1)
-        order.append("preview")
+        shown.set()
         return "shown"
 
     longs = [bench.jobs.submit(f"long {number}", long(number)) for number in range(2)]
     assert all(one.wait(WAIT_S) for one in reached)
     late = bench.jobs.submit("late", counting(1))
     urgent = bench.jobs.submit("preview", preview, urgent=True)
-    with qtbot.waitSignals([job.finished for job in (*longs, urgent, late)], timeout=20_000):
+    heard = [Listener(job) for job in (*longs, urgent, late)]
+    with qtbot.waitSignals([job.finished for job in (*longs, urgent, late)], timeout=60_000):
         opened.set()
-    assert order.count("long goes on") == 2
-    # At least the worker that took it did not go on before it was shown.
-    assert order.index("preview") < 2
+    results = [one.ends[0][1] for one in heard]
+    assert results == ["after it", "after it", "shown", "done"]
 
 
 def test_a_flood_of_progress_wakes_the_window_seldom(qtbot: QtBot, bench: Bench) -> None:
     done = threading.Event()
+    wakes: list[int] = []
+    bench.jobs._woken.connect(lambda: wakes.append(1))
 
     def start(_shelf: Shelf) -> Work[object]:
         for number in range(20_000):
@@ -347,6 +347,7 @@ def test_a_flood_of_progress_wakes_the_window_seldom(qtbot: QtBot, bench: Bench)
     with qtbot.waitSignal(job.finished, timeout=20_000):
         pass
     assert len(heard.said) <= 5
+    assert len(wakes) <= 5
     assert heard.ends == [("returned", "through"), "finished"]
 
 
@@ -410,20 +411,26 @@ def test_a_finished_job_and_its_result_are_let_go(qtbot: QtBot, bench: Bench) ->
     class Large:
         pass
 
-    results: list[weakref.ref[Large]] = []
+    refs: list[weakref.ref[Large]] = []
 
-    def start(_shelf: Shelf) -> Work[object]:
-        yield Progress("large", 0, 1)
+    def new() -> Large:
         large = Large()
-        results.append(weakref.ref(large))
+        refs.append(weakref.ref(large))
         return large
 
-    job = bench.jobs.submit("large", start)
+    def starting(given: Large) -> Start:
+        def start(_shelf: Shelf) -> Work[object]:
+            yield Progress(str(given), 0, 1)
+            return new()
+
+        return start
+
+    job = bench.jobs.submit("large", starting(new()))
     with qtbot.waitSignal(job.finished, timeout=20_000):
         pass
     del job
     gc.collect()
-    qtbot.waitUntil(lambda: results[0]() is None, timeout=20_000)
+    qtbot.waitUntil(lambda: [ref() for ref in refs] == [None, None], timeout=20_000)
 
 
 def test_a_slot_that_raises_keeps_no_end_from_being_told(qtbot: QtBot, bench: Bench) -> None:

@@ -78,15 +78,14 @@ def find_left_behind(folder: Path, key: str) -> LeftBehind | None:
     LeftBehind or None
         None if there is none that brings anything back; those that bring nothing are removed.
     """
-    found = sorted(folder.glob(f"{key}-*.journal"), key=_written_s, reverse=True)
-    for path in found:
-        try:
-            file = path.open("r+b")
-        except OSError as error:
-            log.warning("a journal cannot be opened: %s", type(error).__name__)
-            continue
-        if not (try_lock(file) and is_same_file(file, path)):
+    for path in folder.glob(f"{key}-*.part"):
+        # Begun, and killed before it was whole: the journal it was to replace is still there.
+        if file := _taken(path):
+            path.unlink(missing_ok=True)
             file.close()
+    for path in sorted(folder.glob(f"{key}-*.journal"), key=_written_s, reverse=True):
+        file = _taken(path)
+        if file is None:
             continue
         left = _replay(path, file)
         if left is None:
@@ -96,6 +95,22 @@ def find_left_behind(folder: Path, key: str) -> LeftBehind | None:
             return left
         else:
             left.remove()
+    return None
+
+
+def _taken(path: Path) -> BinaryIO | None:
+    """Open and lock a file; None if a living window has it or it cannot be used."""
+    try:
+        file = path.open("r+b")
+    except OSError as error:
+        log.warning("a journal cannot be opened: %s", type(error).__name__)
+        return None
+    try:
+        if try_lock(file) and is_same_file(file, path):
+            return file
+    except OSError as error:
+        log.warning("a journal cannot be locked: %s", type(error).__name__)
+    file.close()
     return None
 
 
