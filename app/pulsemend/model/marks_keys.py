@@ -12,7 +12,7 @@ _LAST_SAMPLE = 2.0**53
 MARKS_KEYS: tuple[Key, ...] = (
     Key("pulsemend_marks", Kind.WHOLE, "version of the format of marks", low=1, high=SCHEMA),
     Key("bad", Kind.TEXTS, "channels bad in this recording", default=()),
-    Key("trials_excluded", Kind.WHOLES, "trials left out whole, from 1", default=(), low=1, high=1e6),
+    Key("trials_excluded", Kind.WHOLES, "trials left out whole, from 1", default=(), low=1, high=1_000_000.0),
     Key("fingerprint[].name", Kind.TEXT, "a file of the recording, without its folder", filled=True),
     Key("fingerprint[].size", Kind.WHOLE, "its size", unit="bytes", low=0, high=_LAST_SAMPLE),
     Key("fingerprint[].sha256", Kind.TEXT, "its SHA-256", filled=True),
@@ -39,7 +39,7 @@ MARKS_KEYS: tuple[Key, ...] = (
     Key("bad_stretches[].start", Kind.WHOLE, "first bad recorded sample", low=0, high=_LAST_SAMPLE),
     Key("bad_stretches[].stop", Kind.WHOLE, "the sample after the last bad one", low=1, high=_LAST_SAMPLE),
     Key("bad_stretches[].kind", Kind.TEXT, "why, in your own words", default=""),
-    Key("epochs_left_out[].trial", Kind.WHOLE, "trial of an epoch left out, from 1", low=1, high=1e6),
+    Key("epochs_left_out[].trial", Kind.WHOLE, "trial of an epoch left out, from 1", low=1, high=1_000_000.0),
     Key("epochs_left_out[].rule", Kind.NAME, "name of its rule"),
     Key("epochs_left_out[].piece", Kind.WHOLE, "its piece, from 1", default=1, low=1, high=10000),
 )

@@ -223,7 +223,16 @@ PLAN_KEYS: tuple[Key, ...] = (
         "epochs.rule[].labels.*", Kind.TEXT, "label column, from a slot's label, e.g. cue1.item", filled=True
     ),
     *(
-        Key(f"limits.{name}", Kind.NUMBER, meaning, default=0.0, unit="uV", low=0.0, high=1e6, now=(0.0,))
+        Key(
+            f"limits.{name}",
+            Kind.NUMBER,
+            meaning,
+            default=0.0,
+            unit="uV",
+            low=0.0,
+            high=1_000_000.0,
+            now=(0.0,),
+        )
         for name, meaning in (
             ("peak_to_peak_uv", "largest range within an epoch; 0: off"),
             ("least_range_uv", "smallest range within an epoch; 0: off"),
