@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,7 +27,7 @@ class ArrayRecording:
 
     def __init__(
         self,
-        samples: NDArray[np.generic],
+        samples: NDArray[Any],
         path: Path,
         rate_hz: float = 1000.0,
         names: tuple[str, ...] = (),

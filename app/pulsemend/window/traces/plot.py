@@ -303,11 +303,11 @@ class TracePlot(TraceView):
             place = self._current_event + step
         self._current_event = min(max(place, 0), len(events.keys) - 1)
         time_s = float(events.time_s[self._current_event])
+        self._model.set_view(self._extent.centred(self._model.view, time_s))
         self.setAccessibleDescription(
             f"{events.roles[self._current_event]} {events.labels[self._current_event]} at {clock(time_s, 3)}"
         )
-        self._model.set_view(self._extent.centred(self._model.view, time_s))
-        self.refresh()
+        self.update()
 
     def _stretch_by(self, step: int) -> None:
         """Choose a stretch, or move its end."""

@@ -107,17 +107,17 @@ class TraceSource:
         self._asked: tuple[int, int, int] | None = None
         self._revision = 0
         self.facts = recording.facts
-        self.uv_per_unit = v_to_uv(np.array([channel.scale_v for channel in self.facts.channels]))
+        scale_v = np.array([channel.scale_v for channel in self.facts.channels], dtype=np.float64)
+        self.uv_per_unit: NDArray[np.float64] = v_to_uv(scale_v)
 
     @property
     def pyramid(self) -> Pyramid | None:
         """The pyramid, once there."""
         return self._pyramid
 
-    @property
-    def sampler(self) -> Sampler:
-        """What wide views are drawn from before."""
-        return self._sampler
+    def new_sampler(self) -> Sampler:
+        """Make a sampler of the same recording for another picture in the same thread."""
+        return Sampler(self._recording)
 
     def set_pyramid(self, pyramid: Pyramid) -> None:
         """Draw wide views exactly from now on."""

@@ -79,7 +79,8 @@ class TracesWidget(QWidget):
         self.setTabOrder(self.names, self.plot)
         self.setFocusProxy(self.plot)
         self._connect()
-        self.destroyed.connect(model.subscribe(self._on_view))
+        unsubscribe = model.subscribe(self._on_view)
+        self.destroyed.connect(lambda: unsubscribe())
         self._lay_out()
 
     def set_overlays(self, overlays: Overlays) -> None:
