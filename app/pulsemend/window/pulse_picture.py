@@ -34,6 +34,7 @@ from pulsemend.window.theme import Theme
 ZOOM = 1.4
 LEAST_SPAN_MS = 4.0
 LEAST_HALF_UV = 5.0
+MOST_HALF_UV = 2e5
 LONGEST_MS = (-1000.0, 5000.0)
 """Where a gap's edges may be; the plan's own limits."""
 
@@ -203,7 +204,7 @@ class PulseCanvas(QWidget):
         self.theme = theme
         self.setAccessibleName("All pulses at zero")
         self.setAccessibleDescription(
-            "Arrow keys left and right move through time, up and down zoom the voltage, Page keys zoom the time"
+            "Left and right move through time, up and down zoom the voltage, Page keys zoom the time"
         )
         self.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
         self.setMinimumHeight(110)
@@ -265,7 +266,7 @@ class PulseCanvas(QWidget):
         """Show less voltage, or more with a factor below 1."""
         low, high = self.range_uv
         middle, half = (low + high) / 2.0, (high - low) / 2.0 / factor
-        half = min(max(half, 0.5), 1e6)
+        half = min(max(half, 0.5), MOST_HALF_UV)
         self._range_uv = (middle - half, middle + half)
         self.update()
 
@@ -318,7 +319,7 @@ class PulseCanvas(QWidget):
             handle.setAccessibleDescription(f"{at:.3f} ms")
 
     def _fitting_range(self) -> tuple[float, float]:
-        """Voltage of what the repair leaves; before a gap is decided, of what lies outside the proposed one."""
+        """Find the voltage of what the repair leaves; of an undecided gap, of what lies outside."""
         view = self.view
         if view is None:
             return -20.0, 20.0
@@ -523,7 +524,7 @@ class PulseCanvas(QWidget):
         return area.bottom() - (uv - low) / (high - low) * area.height()
 
     def _paint_words(self, painter: QPainter, area: QRectF, shown: Shown) -> None:
-        """Times of the edges, the flanks' name, and how far the picture can be trusted."""
+        """Write the times of the edges, the flank, and how far the picture can be trusted."""
         theme, metrics = self.theme, self.fontMetrics()
         baseline = area.top() + metrics.ascent() + 3
         painter.setPen(QColor(theme.attention))
