@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import argparse
+import subprocess
+import sys
 import textwrap
 from pathlib import Path
 
 from pulsemend.commands import output
+from pulsemend.commands.open_window import display_exists
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -48,4 +51,25 @@ def run(args: argparse.Namespace) -> int:
     output.say()
     for paragraph in SAFETY_NOTICE:
         output.say(textwrap.fill(paragraph, 100))
+    if not args.no_window and display_exists():
+        _open_window(sample.recordings[0], sample.plan)
     return 0
+
+
+def _open_window(recording: Path, plan: Path) -> None:
+    """Open the window as a process of its own: whatever becomes of it, the demo has done its work."""
+    output.say()
+    output.say("opening the window")
+    words = [
+        sys.executable,
+        "-P",
+        "-m",
+        "pulsemend",
+        str(recording.absolute()),
+        "--plan",
+        str(plan.absolute()),
+    ]
+    try:
+        subprocess.Popen(words, stdin=subprocess.DEVNULL, start_new_session=True)
+    except OSError as error:
+        output.say(f"the window cannot be opened ({error.strerror})")

@@ -3,9 +3,19 @@
 from __future__ import annotations
 
 import argparse
+import os
+import sys
 from pathlib import Path
 
 from pulsemend.errors import InputError, UsageError
+
+QT_PACKAGES = (
+    "libegl1 libgl1 libxkbcommon0 libxkbcommon-x11-0 libdbus-1-3 libxcb-cursor0 libxcb-icccm4 "
+    "libxcb-keysyms1 libxcb-shape0 libfontconfig1 fonts-dejavu-core"
+)
+"""Debian packages that the window needs and a bare system lacks."""
+
+_WITHOUT_SCREEN = ("offscreen", "minimal")
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -15,14 +25,14 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def run(args: argparse.Namespace) -> int:
-    """Say that there is no window yet.
+    """Show the window until it is closed.
 
     Raises
     ------
     UsageError
         The word is neither a command nor a file.
     InputError
-        Always otherwise.
+        There is no display, or Qt cannot be loaded.
     """
     if args.recording is not None and not args.recording.exists():
         raise UsageError(
@@ -30,4 +40,27 @@ def run(args: argparse.Namespace) -> int:
             where=str(args.recording),
             todo="`pulsemend --help` lists the commands",
         )
-    raise InputError("the window is not in this version", todo="`pulsemend --help` lists the commands")
+    # Asked before Qt is touched: without a display it ends the whole process.
+    if not display_exists():
+        raise InputError(
+            "the window needs a display, and there is none",
+            todo="`pulsemend --help` lists the commands that need none",
+        )
+    try:
+        from pulsemend.window.program import run as run_window
+    except ImportError as error:
+        raise InputError(
+            f"the window's libraries cannot be loaded ({error})",
+            todo=f"On Debian: apt-get install {QT_PACKAGES}",
+        ) from error
+    return run_window(args.recording, args.plan)
+
+
+def display_exists() -> bool:
+    """Whether a window could be seen."""
+    platform = os.environ.get("QT_QPA_PLATFORM", "").split(":")[0]
+    if platform in _WITHOUT_SCREEN:
+        return False
+    if not sys.platform.startswith("linux"):
+        return True
+    return bool(os.environ.get("DISPLAY") or os.environ.get("WAYLAND_DISPLAY"))

@@ -7,7 +7,7 @@ from pathlib import Path
 
 from PySide6.QtCore import QObject, QTimer, Signal
 
-from pulsemend.errors import ChangedOnDisk, InputError, PulsemendError
+from pulsemend.errors import ChangedOnDisk, PulsemendError
 from pulsemend.mending.draft import draft_plan, pulse_evidence
 from pulsemend.mending.facts import summarise
 from pulsemend.mending.prepare import marks_path
@@ -26,7 +26,6 @@ from pulsemend.window.jobs import Shelf
 from pulsemend.window.workbench import Workbench
 
 SAVE_MARKS_MS = 800
-RECORDING_ENDINGS = (".vhdr", ".edf", ".bdf", ".fif", ".fif.gz")
 
 
 @dataclass(frozen=True)
@@ -204,39 +203,3 @@ def _read(recording: Path | None, plan: Path | None, plan_path: Path | None) -> 
             check_files(marks.marks, facts.parts)
             check_samples(marks.marks, facts.n_samples)
     return Opened(recording, facts, plan, plan_file, marks, at)
-
-
-def pair_in(folder: Path) -> tuple[Path, Path | None]:
-    """Find the recording and the plan of a folder.
-
-    Parameters
-    ----------
-    folder : Path
-        Looked at itself, not below.
-
-    Returns
-    -------
-    recording : Path
-        The first by name.
-    plan : Path or None
-        The only TOML file of the folder that says it is a plan, if there is one.
-
-    Raises
-    ------
-    InputError
-        There is no recording.
-    """
-    files = sorted(path for path in folder.iterdir() if path.is_file())
-    recordings = [path for path in files if path.name.lower().endswith(RECORDING_ENDINGS)]
-    if not recordings:
-        raise InputError("no recording is in this folder", where=folder.name, todo="Choose another one")
-    plans = [path for path in files if path.suffix.lower() == ".toml" and _says_plan(path)]
-    return recordings[0], plans[0] if len(plans) == 1 else None
-
-
-def _says_plan(path: Path) -> bool:
-    try:
-        lines = path.read_text("utf-8", errors="replace").splitlines()
-    except OSError:
-        return False
-    return any(line.replace(" ", "").startswith("pulsemend=") for line in lines)

@@ -9,7 +9,6 @@ from pulsemend.progress import Progress
 from pulsemend.session.changed import Changed
 from pulsemend.session.session import Session
 from pulsemend.units import s_to_ms
-from pulsemend.window.job import Job
 from pulsemend.window.parts import button, words
 from pulsemend.window.traces.model import Measure, Reading
 
@@ -77,9 +76,8 @@ class StatusLine(QWidget):
         apart = f"{s_to_ms(measure.duration_s):.1f} ms, {_signed(measure.difference_uv)} \u00b5V"
         self.cursor_words.setText(f"{measure.channel}: {apart}")
 
-    def show_work(self, job: Job, progress: Progress, seconds_left: float | None) -> None:
-        """Show how far a job is."""
-        del job
+    def show_work(self, progress: Progress, seconds_left: float | None) -> None:
+        """Show how far the work that runs is."""
         left = "" if seconds_left is None or seconds_left < 1 else f", about {round(seconds_left)} s left"
         share = f" {min(progress.done / progress.total, 1.0):.0%}" if progress.total > 0 else ""
         self.work.setText(f"{progress.stage}{share}{left}")

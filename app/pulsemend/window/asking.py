@@ -1,0 +1,14 @@
+"""Asking the user where nothing can go on before there is an answer."""
+
+from __future__ import annotations
+
+from pulsemend.window.dialogs.sheet import Question
+
+
+def answer(question: Question) -> str:
+    """Show a question until it is answered, and return the key of the answer."""
+    answers: list[str] = []
+    question.answered.connect(answers.append)
+    question.exec()
+    question.deleteLater()
+    return answers[0]
