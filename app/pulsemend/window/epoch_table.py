@@ -7,7 +7,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 
 from PySide6.QtCore import QItemSelection, QItemSelectionModel, QSignalBlocker, Qt, Signal
-from PySide6.QtWidgets import QComboBox, QHBoxLayout, QLabel, QPushButton, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QComboBox, QHBoxLayout, QLabel, QPushButton, QSizePolicy, QVBoxLayout, QWidget
 
 from pulsemend.mending.epoch_rows import EpochRow
 from pulsemend.model.marks import EpochKey, Marks
@@ -203,8 +203,8 @@ class EpochTable(QWidget):
             name = QLabel(label)
             name.setBuddy(field)
             above.addWidget(name)
-            above.addWidget(field)
-        above.addWidget(self.count, 1)
+            above.addWidget(field, 1)
+        above.addWidget(self.count)
         below = QHBoxLayout()
         for one in (self.leave_out, self.take_back, self.exclude, self.include):
             below.addWidget(one)
@@ -309,7 +309,10 @@ class _Selection:
 def _combo(name: str) -> QComboBox:
     made = QComboBox()
     made.setAccessibleName(name)
-    made.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToContents)
+    # A long name must not make the window wide.
+    made.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
+    made.setMinimumContentsLength(8)
+    made.setSizePolicy(QSizePolicy.Policy.MinimumExpanding, QSizePolicy.Policy.Fixed)
     return made
 
 

@@ -54,7 +54,7 @@ class Chooser(QComboBox):
         self.setAccessibleName(name)
         self.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
         self.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
-        self.setMinimumContentsLength(12)
+        self.setMinimumContentsLength(9)
         self.activated.connect(lambda _: self.chosen.emit(self.currentData()))
 
     def show_choice(self, options: Sequence[tuple[str, str]], key: str) -> None:
@@ -93,8 +93,8 @@ class Field(QWidget):
         self.label = QLabel(name)
         self.label.setBuddy(inputs[0])
         row = QHBoxLayout()
-        row.addWidget(self.label)
-        row.addStretch(1)
+        self.label.setWordWrap(True)
+        row.addWidget(self.label, 1)
         for one in inputs:
             row.addWidget(one)
         self.refusal = words("", "attention")

@@ -5,7 +5,15 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from PySide6.QtCore import QItemSelectionModel, Qt
-from PySide6.QtWidgets import QButtonGroup, QHBoxLayout, QPushButton, QStackedWidget, QVBoxLayout, QWidget
+from PySide6.QtWidgets import (
+    QButtonGroup,
+    QHBoxLayout,
+    QPushButton,
+    QSizePolicy,
+    QStackedWidget,
+    QVBoxLayout,
+    QWidget,
+)
 
 from pulsemend.mending.check import CheckItem
 from pulsemend.mending.outlook import Outlook
@@ -67,7 +75,7 @@ class CheckModel(RowsModel):
         Colours of the shapes.
     """
 
-    TITLES = ("verdict", "kind", "what is checked", "found", "asked for", "where")
+    TITLES = ("verdict", "kind", "what is checked", "found", "asked for")
 
     def __init__(self, theme: Theme) -> None:
         super().__init__(self.TITLES)
@@ -96,7 +104,7 @@ class CheckModel(RowsModel):
     def text(self, row: int, column: int) -> str:
         """Give what stands in a cell."""
         item = self._items[row]
-        return (verdict(item), item.kind, item.title, item.value, item.limit, item.detail)[column]
+        return (verdict(item), item.kind, item.title, item.value, item.limit)[column]
 
     def more(self, row: int, column: int, role: int) -> object:
         """Give the shape of a verdict."""
@@ -147,6 +155,8 @@ class SetTables(QWidget):
         self.to_check = self._switch("Check")
         self.about = words("", "quiet")
         self.about.setWordWrap(False)
+        # A long name must not make the window wide.
+        self.about.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Preferred)
         self._lay_out()
         self.check_table.selectionModel().currentRowChanged.connect(self._show_item)
 

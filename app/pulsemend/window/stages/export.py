@@ -91,9 +91,9 @@ class ExportStage(StagePage):
         self.set_name = self.where.add_note()
         self._build_formats()
         self.will = Card("What it will be")
-        self.shape = self.will.add_line("epochs, channels, samples")
+        self.shape = self.will.add_line("epochs \u00d7 channels \u00d7 samples")
         self.rate = self.will.add_line("rate")
-        self.size = self.will.add_line("size at most")
+        self.size = self.will.add_line("room kept for it, at most")
         self.left = self.will.add_line("free on the disk")
         self._build_writing()
         self.settings = scrolling_column(
@@ -390,7 +390,7 @@ class ExportStage(StagePage):
             label.setText("")
         if outlook is not None:
             n_epochs, n_channels, n_times = outlook.shape
-            self.shape.show_value(f"{n_epochs} x {n_channels} x {n_times}", attention=not n_epochs)
+            self.shape.show_value(f"{n_epochs} \u00d7 {n_channels} \u00d7 {n_times}", attention=not n_epochs)
             self.rate.show_value(f"{outlook.rate_hz:g} Hz")
             short = outlook.needed_bytes > outlook.free_bytes
             self.size.show_value(size_words(outlook.needed_bytes), attention=short)
@@ -455,10 +455,16 @@ class ExportStage(StagePage):
 
     def _show_run(self) -> None:
         job = self.runner.job
-        for one in (self.bar, self.cancel):
-            one.setVisible(job is not None)
+        if job is not None and (self.write_button.hasFocus() or self.check_button.hasFocus()):
+            self.cancel.show()
+            self.cancel.setFocus()
+        had_focus = self.cancel.hasFocus()
         self.check_button.setEnabled(job is None)
         self._show_problems()
+        if job is None and had_focus:
+            self.write_button.setFocus()
+        for one in (self.bar, self.cancel):
+            one.setVisible(job is not None)
         if job is not None:
             self.bar.setRange(0, 0)
             self.run_words.setText(run_words(job, None, None))
