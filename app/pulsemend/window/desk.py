@@ -39,7 +39,6 @@ class Desk(QWidget):
         self.ribbon_place.setFixedHeight(RIBBON_PX)
         self.traces_place = _frame("Traces")
         self.settings = QStackedWidget()
-        self.settings.setMinimumWidth(240)
         self.pictures = QStackedWidget()
         self.picture_place = _frame("Picture of the stage")
         self._fill(self.picture_place, self.pictures)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 
-from PySide6.QtCore import QSignalBlocker, Qt, Signal
+from PySide6.QtCore import QSignalBlocker, QSize, Qt, Signal
 from PySide6.QtWidgets import (
     QButtonGroup,
     QDoubleSpinBox,
@@ -235,6 +235,17 @@ class EmptyState(QWidget):
         column.addStretch(1)
 
 
+class _Column(QScrollArea):
+    """Scrolls up and down, and is never narrower than what is inside."""
+
+    def minimumSizeHint(self) -> QSize:
+        """As wide as the widest card, and the scroll bar."""
+        hint = super().minimumSizeHint()
+        inside = self.widget()
+        width = 0 if inside is None else inside.minimumSizeHint().width()
+        return QSize(max(hint.width(), width + self.verticalScrollBar().sizeHint().width()), hint.height())
+
+
 def scrolling_column(*cards: QWidget, name: str) -> QScrollArea:
     """Stack cards in a column that scrolls when the window is low."""
     inside = QWidget()
@@ -244,7 +255,7 @@ def scrolling_column(*cards: QWidget, name: str) -> QScrollArea:
     for card in cards:
         column.addWidget(card)
     column.addStretch(1)
-    area = QScrollArea()
+    area = _Column()
     area.setAccessibleName(name)
     area.setWidgetResizable(True)
     area.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
