@@ -436,9 +436,9 @@ class PulseCanvas(QWidget):
             painter.drawLine(QPointF(area.left(), y), QPointF(area.right(), y))
             painter.setPen(quiet)
             text = f"{uv:g} \u00b5V"
-            painter.drawText(
-                QPointF(area.left() - 6 - metrics.horizontalAdvance(text), y + metrics.ascent() / 2.5), text
-            )
+            right = area.left() - 6 - metrics.horizontalAdvance(text)
+            at = min(max(y + metrics.ascent() / 2.5, metrics.ascent()), area.bottom())
+            painter.drawText(QPointF(right, at), text)
         start, stop = self.span_ms
         wide = metrics.horizontalAdvance("-000.0 ms") * 1.6
         for ms in _ticks(start, stop, max(2, int(area.width() / wide))):
@@ -529,12 +529,12 @@ class PulseCanvas(QWidget):
         baseline = area.top() + metrics.ascent() + 3
         painter.setPen(QColor(theme.attention))
         first, last = shown.window_ms
-        text = f"{first:.3f}".rstrip("0").rstrip(".") + " ms"
+        text = f"{first:.4g} ms"
         if self.start.isVisible():
             painter.drawText(
                 QPointF(self.x_of(first) - _GRIP.width() - metrics.horizontalAdvance(text), baseline), text
             )
-        text = f"{last:.3f}".rstrip("0").rstrip(".") + " ms"
+        text = f"{last:.4g} ms"
         if self.stop.isVisible():
             painter.drawText(QPointF(self.x_of(last) + _GRIP.width(), baseline), text)
         state = self.state_words
@@ -633,7 +633,7 @@ class PulsePicture(QWidget):
         self.message.setAlignment(Qt.AlignmentFlag.AlignCenter)
         head = QHBoxLayout()
         head.addWidget(words("All pulses at zero", "title"))
-        head.addWidget(self.info, 1)
+        head.addStretch(1)
         label = words("Channel")
         label.setBuddy(self.chooser)
         head.addWidget(label)
@@ -648,8 +648,9 @@ class PulsePicture(QWidget):
         head.addWidget(_zoom_button("Whole", "Show the usual span and voltage again", canvas.show_whole))
         column = QVBoxLayout(self)
         column.setContentsMargins(12, 6, 12, 6)
-        column.setSpacing(4)
+        column.setSpacing(2)
         column.addLayout(head)
+        column.addWidget(self.info)
         column.addWidget(self.canvas, 1)
         column.addWidget(self.message, 1)
         self.message.hide()

@@ -6,8 +6,8 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 from functools import partial
 
-from PySide6.QtCore import QSignalBlocker, Signal
-from PySide6.QtWidgets import QHBoxLayout, QListWidget, QVBoxLayout, QWidget
+from PySide6.QtCore import QSignalBlocker, QSize, Signal
+from PySide6.QtWidgets import QHBoxLayout, QLabel, QListWidget, QVBoxLayout, QWidget
 
 from pulsemend.errors import PulsemendError
 from pulsemend.mending.pulse_effect import Effect
@@ -21,7 +21,7 @@ from pulsemend.mending.pulse_gaps import (
 from pulsemend.mending.pulse_view import PROPOSED_MS, edge_ms, on_sample_ms
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import OtherGap, Plan, Pulses, Window
-from pulsemend.model.vocabulary import Fill, Side
+from pulsemend.model.vocabulary import Fill, Format, Side
 from pulsemend.signal.fills import default_flank_s
 from pulsemend.units import s_to_ms
 from pulsemend.window.parts import Card, Choices, NumberField, ValueLine, button, set_kind, words
@@ -75,7 +75,20 @@ class Edits:
         self._refresh()
 
 
-class MsField(NumberField):
+class SlimField(NumberField):
+    """A number field that can be as narrow as what stands in it, whatever its range."""
+
+    def minimumSizeHint(self) -> QSize:
+        """Leave room for the text of now and the arrows."""
+        shown = self.fontMetrics().horizontalAdvance(self.text() + "00")
+        return QSize(shown + 2 * self.fontMetrics().height(), super().minimumSizeHint().height())
+
+    def sizeHint(self) -> QSize:
+        """Want no more than that."""
+        return self.minimumSizeHint()
+
+
+class MsField(SlimField):
     """Milliseconds from the onset: one step is one sample, and no more digits than there are."""
 
     def __init__(self, name: str, least: float = -1000.0, most: float = 5000.0) -> None:
@@ -164,7 +177,6 @@ class GapCard(Card):
         self.add(words("Exceptions of single channels"))
         self.list = QListWidget()
         self.list.setAccessibleName("Gap: exceptions of single channels")
-        self.list.setMaximumHeight(96)
         self.add(self.list)
         self.own = WindowFields("the exception")
         self.add(self.own)
@@ -225,6 +237,8 @@ class GapCard(Card):
                 row = next((i for i in same if shown[i].source is current.source), same[0] if same else -1)
             self.list.setCurrentRow(row if row >= 0 else (0 if shown else -1))
         self.list.setVisible(bool(shown))
+        rows = min(max(len(shown), 1), 5)
+        self.list.setFixedHeight(rows * (self.list.fontMetrics().height() + 6) + 8)
         self._show_current()
 
     @property
@@ -347,7 +361,7 @@ _FILLS: Mapping[Fill, tuple[str, str]] = {
     ),
     Fill.LEAVE: (
         "no samples",
-        "Gaps stay empty. FIF files cannot hold empty samples: FIF refuses such a set, HDF5 holds it.",
+        "Gaps stay empty. FIF files cannot hold empty samples and refuse such a set; HDF5 files hold it.",
     ),
 }
 
@@ -373,14 +387,20 @@ class FillCard(Card):
         self.fill = Choices("Fill", [(fill.value, _fill_name(fill)) for fill in _FILLS])
         for fill, (short, _) in _FILLS.items():
             self.fill.show_evidence(fill.value, short)
+        for label in self.fill.findChildren(QLabel):
+            # In a narrow column these words may be cut; they are said again below.
+            label.setMinimumWidth(1)
+            label.setToolTip(label.text())
         self.add(self.fill)
         self.meaning = self.add_note()
+        self.without_fif = button("Leave gaps empty, without FIF", self._leave_without_fif)
+        self.add(self.without_fif)
         self.add(words("Learns from"))
         self.side = Choices(
             "Flanks a fill learns from", [(side.value, text) for side, text in _SIDES.items()]
         )
         self.add(self.side)
-        self.flank = NumberField("Fill: length of a flank", "ms", 0.0, 10_000.0, 1.0, decimals=2)
+        self.flank = SlimField("Fill: length of a flank", "ms", 0.0, 10_000.0, 1.0, decimals=2)
         self.add_field("Length of a flank", self.flank)
         self.flank.setToolTip("0 ms means the usual length of this fill")
         self.fill.chosen.connect(self._choose_fill)
@@ -391,6 +411,7 @@ class FillCard(Card):
     def show_values(self, pulses: Pulses) -> None:
         """Show what holds now."""
         self.fill.show_choice(pulses.fill.value)
+        self.without_fif.hide()
         self.meaning.setText(_FILLS[pulses.fill][1])
         set_kind(self.meaning, "attention" if pulses.fill is Fill.LEAVE else "quiet")
         self.meaning.setWordWrap(True)
@@ -403,8 +424,24 @@ class FillCard(Card):
 
     def _choose_fill(self, key: str) -> None:
         plan = self._edits.bench.session.plan
+        if plan is None:
+            return
+        if Fill(key) is Fill.LEAVE and Format.FIF in plan.export.formats:
+            self.show_values(plan.pulses)
+            self.meaning.setText("FIF files cannot hold empty samples, and the plan asks for FIF.")
+            set_kind(self.meaning, "attention")
+            self.meaning.setWordWrap(True)
+            self.without_fif.show()
+            return
+        self._edits.pulses(f"Fill: {key}", replace(plan.pulses, fill=Fill(key)))
+
+    def _leave_without_fif(self) -> None:
+        plan = self._edits.bench.session.plan
         if plan is not None:
-            self._edits.pulses(f"Fill: {key}", replace(plan.pulses, fill=Fill(key)))
+            formats = tuple(one for one in plan.export.formats if one is not Format.FIF) or (Format.HDF5,)
+            pulses = replace(plan.pulses, fill=Fill.LEAVE)
+            export = replace(plan.export, formats=formats)
+            self._edits.plan("Gaps left empty, no FIF", replace(plan, pulses=pulses, export=export))
 
     def _choose_side(self, key: str) -> None:
         plan = self._edits.bench.session.plan
@@ -482,7 +519,7 @@ class OtherGapsCard(Card):
             fields = WindowFields(f"further gap {place + 1}", -5000.0, 20_000.0)
             fields.committed.connect(lambda a, b, place=place: self._change(place, (a, b)))
             fields.ended.connect(self._edits.end)
-            remove = button("Remove", partial(self._remove, place))
+            remove = button("\u00d7", partial(self._remove, place), tooltip="Remove this gap")
             remove.setAccessibleName(f"Remove further gap {place + 1}")
             row.addWidget(fields, 1)
             row.addWidget(remove)

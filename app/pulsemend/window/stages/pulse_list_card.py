@@ -7,7 +7,7 @@ from dataclasses import replace
 from typing import Any
 
 from PySide6.QtCore import QAbstractTableModel, QModelIndex, QPersistentModelIndex, Qt
-from PySide6.QtWidgets import QAbstractItemView, QHBoxLayout, QHeaderView, QTableView, QWidget
+from PySide6.QtWidgets import QAbstractItemView, QHBoxLayout, QHeaderView, QTableView, QVBoxLayout, QWidget
 
 from pulsemend.mending.pulse_list import (
     PulseCounts,
@@ -23,12 +23,12 @@ from pulsemend.model.marks import Marks
 from pulsemend.model.vocabulary import PulseState, PulseTimes
 from pulsemend.session.found import NOTHING_SELECTED, Selected
 from pulsemend.units import ms_to_s, s_to_ms
-from pulsemend.window.parts import Card, Choices, NumberField, button
-from pulsemend.window.stages.pulse_cards import Edits, MsField
+from pulsemend.window.parts import Card, Choices, button, words
+from pulsemend.window.stages.pulse_cards import Edits, MsField, SlimField
 
 Index = QModelIndex | QPersistentModelIndex
 _ROOT = QModelIndex()
-_COLUMNS = ("Time", "After its marker", "State")
+_COLUMNS = ("Time", "After marker", "State")
 _TIMES = ((PulseTimes.MARKERS, "at their markers"), (PulseTimes.NONE, "there are no pulses"))
 
 
@@ -107,8 +107,8 @@ class PulseListCard(Card):
         self.add(self.table)
         self.chosen = _Chosen(self._edits)
         self.add(self.chosen)
-        self.new_s = NumberField("Onset of a new pulse", "s", 0.0, 9_999_999.0, 0.001, decimals=4)
-        self.add_field("A pulse without a marker at", self.new_s)
+        self.new_s = SlimField("Onset of a new pulse", "s", 0.0, 9_999_999.0, 0.001, decimals=4)
+        self.add_field("A new pulse at", self.new_s)
         self.add_button = button(
             "Add this pulse",
             self._add,
@@ -136,6 +136,7 @@ class PulseListCard(Card):
             self.model.show_rows(rows, rate_hz)
             if before is not None:
                 self._choose(_same(rows, before))
+        self._fit_columns()
         self._show_counts(count_pulses(rows, rate_hz))
         exist = times is not PulseTimes.NONE
         for widget in (self.known, self.aligned, self.table, self.chosen, self.new_s, self.add_button):
@@ -171,17 +172,28 @@ class PulseListCard(Card):
         table.setEditTriggers(QAbstractItemView.EditTrigger.NoEditTriggers)
         table.setTabKeyNavigation(False)
         table.setWordWrap(False)
+        table.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
         table.setToolTip("Click a pulse, or press Return on it, to bring it into view")
         table.verticalHeader().hide()
         table.verticalHeader().setSectionResizeMode(QHeaderView.ResizeMode.Fixed)
-        table.verticalHeader().setDefaultSectionSize(table.fontMetrics().height() + 8)
         table.horizontalHeader().setStretchLastSection(True)
-        table.setFixedHeight(6 * (table.fontMetrics().height() + 8) + 28)
+        table.horizontalHeader().setDefaultAlignment(
+            Qt.AlignmentFlag.AlignLeft | Qt.AlignmentFlag.AlignVCenter
+        )
         table.clicked.connect(lambda _index: self._jump())
         table.activated.connect(lambda _index: self._jump())
         table.selectionModel().currentRowChanged.connect(
             lambda _new, _old: self.chosen.show_row(self.current, self.model.rate_hz, self._n_samples)
         )
+
+    def _fit_columns(self) -> None:
+        """Fit to the text of now, whatever size it has; without asking every row."""
+        metrics = self.table.fontMetrics()
+        for column, widest in enumerate(("0000.0000 s", _COLUMNS[1])):
+            self.table.setColumnWidth(column, metrics.horizontalAdvance(widest) + 18)
+        height = metrics.height() + 8
+        self.table.verticalHeader().setDefaultSectionSize(height)
+        self.table.setFixedHeight(7 * height + 4)
 
     def _show_counts(self, counts: PulseCounts) -> None:
         self.known.show_value(str(counts.known), attention=counts.known == 0)
@@ -243,18 +255,24 @@ class _Chosen(QWidget):
         self._edits = edits
         self._row: PulseRow | None = None
         self._rate_hz = 1.0
-        row = QHBoxLayout(self)
-        row.setContentsMargins(0, 0, 0, 0)
         self.after_marker = MsField("Onset of the chosen pulse after its marker", -100_000.0, 100_000.0)
         self.after_marker.setToolTip("Another onset, counted from the marker")
-        self.sample = NumberField(
-            "Onset of the chosen pulse as a recorded sample", "", 0, 9e12, 1, decimals=0
-        )
-        self.sample.setPrefix("sample ")
+        self.sample = SlimField("Onset of the chosen pulse as a recorded sample", "", 0, 9e12, 1, decimals=0)
+        self.sample.setToolTip("Another onset, as a recorded sample from 0")
         self.remove = button("Remove", self._remove, tooltip="Say that this is no pulse")
         self.back = button("As found", self._back, tooltip="Take back what was done to this pulse by hand")
-        for widget in (self.after_marker, self.sample, self.remove, self.back):
-            row.addWidget(widget)
+        self.name = words("")
+        fields, buttons = QHBoxLayout(), QHBoxLayout()
+        fields.addWidget(self.name)
+        fields.addWidget(self.after_marker, 1)
+        fields.addWidget(self.sample, 1)
+        buttons.addWidget(self.remove)
+        buttons.addWidget(self.back)
+        buttons.addStretch(1)
+        column = QVBoxLayout(self)
+        column.setContentsMargins(0, 0, 0, 0)
+        column.addLayout(fields)
+        column.addLayout(buttons)
         self.after_marker.committed.connect(self._move_after_marker)
         self.sample.committed.connect(lambda sample: self._move(int(sample)))
         for field in (self.after_marker, self.sample):
@@ -268,6 +286,8 @@ class _Chosen(QWidget):
         if row is None:
             return
         self.after_marker.setVisible(row.marked is not None)
+        self.name.setText("Onset: sample" if row.marked is None else "Onset after marker")
+        self.name.setBuddy(self.sample if row.marked is None else self.after_marker)
         self.after_marker.setSingleStep(s_to_ms(1.0 / rate_hz))
         if row.marked is not None:
             self.after_marker.show_value(s_to_ms((row.onset - row.marked) / rate_hz))
