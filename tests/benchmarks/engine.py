@@ -22,6 +22,7 @@ import statistics
 import subprocess
 import sys
 from pathlib import Path
+from typing import Any
 
 PLAN = """
 pulsemend = 1
@@ -130,7 +131,9 @@ else:
     n = len(cuts)
 seconds = time.process_time() - before
 shares["reference, cut, rest of samples"] = shares.pop("samples") - sum(
-    shares.get(k, 0.0) for k in ("read and fill", "banded products (anti-alias, sub-sample shift)", "band filter"))
+    shares.get(k, 0.0)
+    for k in ("read and fill", "banded products (anti-alias, sub-sample shift)", "band filter")
+)
 peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
 print(json.dumps({"seconds": seconds, "peak_mib": peak, "epochs": n, "shares": shares}))
 """
@@ -157,7 +160,8 @@ for anchor in ("lanterns up", "arrow left", "arrow right"):
 cut = np.concatenate(cut)
 cut = cut[np.argsort(cut[:, 0], kind="stable")]
 cut[:, 2] = 1
-epochs = mne.Epochs(raw, cut, tmin=0.0, tmax=0.999, baseline=None, preload=True, event_repeated="drop", verbose="error")
+epochs = mne.Epochs(
+    raw, cut, tmin=0.0, tmax=0.999, baseline=None, preload=True, event_repeated="drop", verbose="error")
 epochs.set_eeg_reference("average", verbose="error")
 if write:
     epochs.save(folder / "script-epo.fif", overwrite=True, verbose="error")
@@ -169,12 +173,13 @@ print(json.dumps({"seconds": seconds, "peak_mib": peak, "epochs": len(epochs), "
 """
 
 
-def run(code: str, *words: str) -> dict:
+def run(code: str, *words: str) -> dict[str, Any]:
     """Run one measured process and return what it printed."""
     done = subprocess.run([sys.executable, "-c", code, *words], capture_output=True, text=True, check=False)
     if done.returncode:
         sys.exit(done.stderr)
-    return json.loads(done.stdout.splitlines()[-1]) if done.stdout else {}
+    found: dict[str, Any] = json.loads(done.stdout.splitlines()[-1]) if done.stdout else {}
+    return found
 
 
 def main() -> None:
@@ -200,7 +205,7 @@ def main() -> None:
         "signal, covariance": (MEND, "covariance", "signal"),
         "script's signal": (SCRIPT, "line", "signal"),
     }
-    found: dict[str, list[dict]] = {kind: [] for kind in kinds}
+    found: dict[str, list[dict[str, Any]]] = {kind: [] for kind in kinds}
     for _ in range(words.pairs):
         for kind, (code, fill, how) in kinds.items():
             found[kind].append(run(code, str(folder), str(plans[fill]), how))
@@ -220,9 +225,8 @@ def main() -> None:
         ("signal, covariance", "script's signal"),
     ):
         ratios = [b["seconds"] / a["seconds"] for a, b in zip(found[ours], found[theirs], strict=True)]
-        print(
-            f"{theirs} / {ours}: median {statistics.median(ratios):.2f} ({min(ratios):.2f} to {max(ratios):.2f})"
-        )
+        spread = f"({min(ratios):.2f} to {max(ratios):.2f})"
+        print(f"{theirs} / {ours}: median {statistics.median(ratios):.2f} {spread}")
 
 
 if __name__ == "__main__":

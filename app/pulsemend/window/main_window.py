@@ -346,7 +346,7 @@ class MainWindow(QMainWindow):
         from pulsemend.window.guide_viewer import GuideViewer
 
         if self._guide is None:
-            self._guide = GuideViewer(self.bench.theme, self)
+            self._guide = GuideViewer(self.bench.theme, parent=self)
         self._guide.show()
         self._guide.raise_()
 

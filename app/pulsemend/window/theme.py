@@ -6,7 +6,8 @@ thin lines need it.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+import dataclasses
+from dataclasses import dataclass
 
 from pulsemend.model.vocabulary import Role
 
@@ -64,7 +65,7 @@ class Theme:
     gap: str
     flank: str
     bad_stretch: str
-    roles: dict[Role, str] = field(default_factory=lambda: dict(_ROLES))
+    roles: dict[Role, str] = dataclasses.field(default_factory=lambda: dict(_ROLES))
 
 
 LIGHT = Theme(
