@@ -287,6 +287,12 @@ def user_errors(folder: Path) -> Iterator[None]:
             raise OutOfSpace(
                 "the disk is full", where=str(folder), todo="Free space; nothing was left behind"
             ) from error
+        if error.errno in (errno.EACCES, errno.EPERM, errno.EROFS, errno.ENOTDIR):
+            raise SetError(
+                f"the set cannot be written here ({error.strerror})",
+                where=str(folder.parent),
+                todo="Choose another folder, or change who may write to it",
+            ) from error
         raise SetError(error.strerror or str(error), where=str(error.filename or folder)) from error
 
 
