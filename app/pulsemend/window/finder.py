@@ -45,7 +45,7 @@ class ActionFinder(QLineEdit):
         self.setPlaceholderText("Find an action  Ctrl+K")
         self.setAccessibleName("Find an action")
         self.setToolTip("Type a few letters of what you want to do (Ctrl+K)")
-        self.setMinimumWidth(120)
+        self.setMinimumWidth(90)
         self.setSizePolicy(QSizePolicy.Policy.Preferred, QSizePolicy.Policy.Fixed)
         self.popup = _Popup(self)
         self.popup.found.itemClicked.connect(lambda _item, _column: self._run())

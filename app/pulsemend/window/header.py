@@ -54,6 +54,7 @@ class ActionButton(QToolButton):
             Qt.ToolButtonStyle.ToolButtonTextOnly if text else Qt.ToolButtonStyle.ToolButtonIconOnly
         )
         self.setFocusPolicy(Qt.FocusPolicy.TabFocus)
+        self.setSizePolicy(QSizePolicy.Policy.Minimum, QSizePolicy.Policy.Fixed)
         self.setCheckable(action.isCheckable())
         self.clicked.connect(self._press)
         action.changed.connect(self._follow)
@@ -197,7 +198,7 @@ class Header(QWidget):
         for button in self.buttons.values():
             button.setIconSize(QSize(size_px, size_px))
         self._write_units(short=False)
-        least = self.layout().minimumSize().width()
+        least = super().minimumSizeHint().width()
         self._write_units(short=event.size().width() < least + _NAME_LETTERS * size_px)
 
     def _write_units(self, *, short: bool) -> None:

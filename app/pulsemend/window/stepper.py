@@ -6,7 +6,7 @@ Long work belongs to the workers; this is for many small steps that need neither
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Generic, TypeVar
+from typing import TypeVar
 
 from PySide6.QtCore import QObject, QTimer
 
@@ -15,8 +15,8 @@ from pulsemend.progress import Work
 T = TypeVar("T")
 
 
-class Stepper(Generic[T]):
-    """Work that runs step by step until it ends or its owner is gone.
+def step_through(work: Work[T], returned: Callable[[T], None], owner: QObject) -> None:
+    """Do work step by step until it ends or its owner is gone.
 
     Parameters
     ----------
@@ -27,18 +27,15 @@ class Stepper(Generic[T]):
     owner : QObject
         While it lives the work goes on.
     """
+    timer = QTimer(owner)
 
-    def __init__(self, work: Work[T], returned: Callable[[T], None], owner: QObject) -> None:
-        self._work = work
-        self._returned = returned
-        self._timer = QTimer(owner)
-        self._timer.setInterval(0)
-        self._timer.timeout.connect(self._step)
-        self._timer.start()
-
-    def _step(self) -> None:
+    def step() -> None:
         try:
-            next(self._work)
+            next(work)
         except StopIteration as end:
-            self._timer.stop()
-            self._returned(end.value)
+            timer.stop()
+            timer.deleteLater()
+            returned(end.value)
+
+    timer.timeout.connect(step)
+    timer.start(0)

@@ -6,11 +6,13 @@ from pathlib import Path
 
 from PySide6.QtCore import Qt
 from PySide6.QtWidgets import (
+    QButtonGroup,
     QHBoxLayout,
     QHeaderView,
     QLabel,
     QPlainTextEdit,
-    QTabWidget,
+    QPushButton,
+    QStackedWidget,
     QTreeWidget,
     QTreeWidgetItem,
     QVBoxLayout,
@@ -24,7 +26,7 @@ from pulsemend.window.dialogs.details import plain_text
 from pulsemend.window.dialogs.sheet import Sheet
 from pulsemend.window.icons import pixmap
 from pulsemend.window.parts import words
-from pulsemend.window.stepper import Stepper
+from pulsemend.window.stepper import step_through
 from pulsemend.window.theme import Theme
 
 _MARK_PX = 44
@@ -55,17 +57,35 @@ class AboutDialog(Sheet):
         self.column.addLayout(head)
         self.libraries = _library_list()
         self.licence = plain_text("Choose a library to read its licence.", "Licence of the library")
-        self.tabs = QTabWidget()
-        self.tabs.setAccessibleName("Parts of About")
-        self.tabs.addTab(_notice_page(), "Safety notice")
-        self.tabs.addTab(_own_licence(), "Licence")
-        self.tabs.addTab(self._library_page(), "Libraries")
-        self.column.addWidget(self.tabs, 1)
+        self.parts: dict[str, QPushButton] = {}
+        self.pages = QStackedWidget()
+        self._group = QButtonGroup(self)
+        self._row = QHBoxLayout()
+        for name, page in (
+            ("Safety notice", _notice_page()),
+            ("Licence", _own_licence()),
+            ("Libraries", self._library_page()),
+        ):
+            self._add_part(name, page)
+        self._row.addStretch(1)
+        self.column.addLayout(self._row)
+        self.column.addWidget(self.pages, 1)
+        self.parts["Safety notice"].setChecked(True)
         close = self.add_button("Close", main=True)
         close.clicked.connect(self.accept)
         self.end_column()
         self.libraries.currentItemChanged.connect(self._show_licence)
-        Stepper(libraries(), self._take, self)
+        step_through(libraries(), self._take, self)
+
+    def _add_part(self, name: str, page: QWidget) -> None:
+        part = QPushButton(name)
+        part.setCheckable(True)
+        part.setAutoDefault(False)
+        part.clicked.connect(lambda _=False: self.pages.setCurrentWidget(page))
+        self.parts[name] = part
+        self._group.addButton(part)
+        self._row.addWidget(part)
+        self.pages.addWidget(page)
 
     def _library_page(self) -> QWidget:
         page = QWidget()

@@ -9,7 +9,7 @@ from pulsemend.session.details import fault_details
 from pulsemend.session.libraries import Library, libraries
 from pulsemend.session.messages import Level, Message
 from pulsemend.window.dialogs.sheet import Sheet
-from pulsemend.window.stepper import Stepper
+from pulsemend.window.stepper import step_through
 from pulsemend.window.workbench import Workbench
 
 
@@ -76,7 +76,7 @@ def copy_details(bench: Workbench, window: QWidget) -> None:
             )
         )
 
-    Stepper(libraries(), take, window)
+    step_through(libraries(), take, window)
 
 
 def screen_words(window: QWidget) -> str:
