@@ -7,11 +7,12 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 
 from PySide6.QtCore import QItemSelection, QItemSelectionModel, QSignalBlocker, Qt, Signal
-from PySide6.QtWidgets import QComboBox, QHBoxLayout, QLabel, QPushButton, QSizePolicy, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QComboBox, QLabel, QPushButton, QVBoxLayout, QWidget
 
 from pulsemend.mending.epoch_rows import EpochRow
 from pulsemend.model.marks import EpochKey, Marks
 from pulsemend.model.vocabulary import Fate
+from pulsemend.window.flow import flow_row
 from pulsemend.window.parts import button, words
 from pulsemend.window.sign_icons import fate_icon
 from pulsemend.window.tables import RowsModel, RowsTable
@@ -198,23 +199,15 @@ class EpochTable(QWidget):
         return made
 
     def _lay_out(self) -> None:
-        above = QHBoxLayout()
-        for label, field in (("Show", self.fates), ("of", self.rules), ("in order of", self.orders)):
-            name = QLabel(label)
-            name.setBuddy(field)
-            above.addWidget(name)
-            above.addWidget(field, 1)
-        above.addWidget(self.count)
-        below = QHBoxLayout()
-        for one in (self.leave_out, self.take_back, self.exclude, self.include):
-            below.addWidget(one)
-        below.addStretch(1)
+        filters = (("Show", self.fates), ("of", self.rules), ("in order of", self.orders))
+        above = [one for label, field in filters for one in (_name_of(label, field), field)]
+        below = (self.leave_out, self.take_back, self.exclude, self.include)
         column = QVBoxLayout(self)
         column.setContentsMargins(8, 6, 8, 6)
         column.setSpacing(6)
-        column.addLayout(above)
+        column.addWidget(flow_row(*above, self.count))
         column.addWidget(self.table, 1)
-        column.addLayout(below)
+        column.addWidget(flow_row(*below))
 
     def _listen(self) -> None:
         self.fates.currentIndexChanged.connect(self._filter)
@@ -306,13 +299,18 @@ class _Selection:
         self._table.selectionModel().select(chosen, QItemSelectionModel.SelectionFlag.ClearAndSelect)
 
 
+def _name_of(text: str, field: QWidget) -> QLabel:
+    label = QLabel(text)
+    label.setBuddy(field)
+    return label
+
+
 def _combo(name: str) -> QComboBox:
     made = QComboBox()
     made.setAccessibleName(name)
     # A long name must not make the window wide.
     made.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
-    made.setMinimumContentsLength(8)
-    made.setSizePolicy(QSizePolicy.Policy.MinimumExpanding, QSizePolicy.Policy.Fixed)
+    made.setMinimumContentsLength(14)
     return made
 
 

@@ -11,6 +11,9 @@ from PySide6.QtWidgets import QComboBox, QHBoxLayout, QLabel, QVBoxLayout, QWidg
 from pulsemend.errors import SettingError
 from pulsemend.window.parts import NumberField, words
 
+NARROWEST_PX = 80
+"""How far a field gives way to its name where text is large."""
+
 
 class PlainNumber(NumberField):
     """A number without needless zeros, so that it may have many decimals.
@@ -23,6 +26,7 @@ class PlainNumber(NumberField):
     ) -> None:
         super().__init__(name, unit, least, most, step, decimals)
         self.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
+        self.setMinimumWidth(NARROWEST_PX)
 
     def textFromValue(self, value: float) -> str:
         """Write a value in the user's own numerals."""
@@ -54,7 +58,8 @@ class Chooser(QComboBox):
         self.setAccessibleName(name)
         self.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
         self.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
-        self.setMinimumContentsLength(9)
+        self.setMinimumContentsLength(12)
+        self.setMinimumWidth(NARROWEST_PX)
         self.activated.connect(lambda _: self.chosen.emit(self.currentData()))
 
     def show_choice(self, options: Sequence[tuple[str, str]], key: str) -> None:

@@ -6,8 +6,9 @@ from collections.abc import Callable
 
 from PySide6.QtCore import Qt
 from PySide6.QtGui import QKeyEvent
-from PySide6.QtWidgets import QHBoxLayout, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QVBoxLayout, QWidget
 
+from pulsemend.window.flow import flow_row
 from pulsemend.window.parts import button, words
 
 
@@ -25,11 +26,7 @@ class Question(QWidget):
         column = QVBoxLayout(self)
         column.setContentsMargins(0, 0, 0, 0)
         column.addWidget(self.text)
-        row = QHBoxLayout()
-        row.addWidget(self.yes)
-        row.addWidget(self.no)
-        row.addStretch(1)
-        column.addLayout(row)
+        column.addWidget(flow_row(self.yes, self.no))
         self.hide()
 
     def ask(self, text: str, yes: str, no: str, does: Callable[[], object]) -> None:

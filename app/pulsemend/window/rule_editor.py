@@ -7,7 +7,7 @@ from dataclasses import replace
 
 from PySide6.QtCore import QItemSelectionModel, QSignalBlocker, Qt, Signal
 from PySide6.QtGui import QFont
-from PySide6.QtWidgets import QGridLayout, QLineEdit, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QLineEdit, QVBoxLayout, QWidget
 
 from pulsemend.errors import PlanError
 from pulsemend.mending.epoch_rows import RuleCount
@@ -16,6 +16,7 @@ from pulsemend.model.plan import EpochRule, Plan
 from pulsemend.model.plan_checks import slot_columns
 from pulsemend.model.vocabulary import PulseRule
 from pulsemend.window.fields import Chooser, Field, PlainNumber, in_words
+from pulsemend.window.flow import flow_row
 from pulsemend.window.parts import Card, Choices, button, words
 from pulsemend.window.tables import RowsModel, RowsTable
 
@@ -89,10 +90,7 @@ class RuleList(Card):
         self.model = RulesModel()
         self.table = RowsTable("Epoch rules", self.model, ("after probe", "answer1 -0.55 s"))
         self.table.setSelectionMode(RowsTable.SelectionMode.SingleSelection)
-        self.table.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
         self.add(self.table)
-        grid = QGridLayout()
-        grid.setSpacing(4)
         self.buttons = {
             "add": button("Add", self.add_wanted.emit, tooltip="Add a rule behind the chosen one"),
             "copy": button("Copy", self.copy_wanted.emit, tooltip="Add a copy of the chosen rule"),
@@ -100,10 +98,10 @@ class RuleList(Card):
             "up": button("Up", lambda: self.move_wanted.emit(-1), tooltip="Move the chosen rule up"),
             "down": button("Down", lambda: self.move_wanted.emit(1), tooltip="Move the chosen rule down"),
         }
-        for place, (name, one) in enumerate(self.buttons.items()):
+        for name, one in self.buttons.items():
             one.setAccessibleName(f"Rule: {name}")
-            grid.addWidget(one, place // 3, place % 3)
-        self.body.addLayout(grid)
+        for row in (("add", "copy", "remove"), ("up", "down")):
+            self.add(flow_row(*(self.buttons[name] for name in row)))
         self.refusal = words("", "attention")
         self.refusal.setWordWrap(True)
         self.refusal.hide()
@@ -222,7 +220,10 @@ class RuleEditor(Card):
         """
         rule = plan.epochs.rule[place]
         self._rule, self._place = rule, place
-        slots = [(slot.slot, f"{slot.slot} ({slot.role})") for slot in plan.trial]
+        slots = [
+            (slot.slot, slot.slot if slot.slot == slot.role else f"{slot.slot} ({slot.role})")
+            for slot in plan.trial
+        ]
         self.title.setText(f"Rule {rule.name}" if len(rule.name) <= 24 else f"Rule {rule.name[:23]}\u2026")
         self.title.setToolTip(rule.name)
         self._show_text(self.name, rule.name)

@@ -33,7 +33,8 @@ from pulsemend.session.changed import Changed
 from pulsemend.session.found import Selected, Stage
 from pulsemend.window.epoch_table import EpochTable
 from pulsemend.window.fields import Field, PlainNumber, in_words
-from pulsemend.window.parts import Card, EmptyState, ValueLine, scrolling_column
+from pulsemend.window.flow import column_of
+from pulsemend.window.parts import Card, EmptyState, ValueLine
 from pulsemend.window.rule_editor import RuleEditor, RuleList
 from pulsemend.window.stages.base import StagePage
 from pulsemend.window.theme import Theme
@@ -104,7 +105,7 @@ class EpochsStage(StagePage):
         self.no_plan = Card("Epochs")
         self.no_plan_words = self.no_plan.add_note()
         self._cards = (self.set_card, self.rules, self.editor, self.reasons)
-        self.settings = scrolling_column(self.no_plan, *self._cards, self.notes, name="Epochs, settings")
+        self.settings = column_of(self.no_plan, *self._cards, self.notes, name="Epochs, settings")
         self.table = EpochTable(self.bench.theme)
         self.empty = EmptyState("")
         self.picture = QWidget()

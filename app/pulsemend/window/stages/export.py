@@ -21,7 +21,8 @@ from pulsemend.session.found import Stage
 from pulsemend.session.messages import Level, Message
 from pulsemend.window.child import Children, MendOrder
 from pulsemend.window.fields import in_words
-from pulsemend.window.parts import Card, Choices, button, scrolling_column, words
+from pulsemend.window.flow import column_of, flow_row
+from pulsemend.window.parts import Card, Choices, button, words
 from pulsemend.window.question import Question
 from pulsemend.window.set_runner import SetRunner, run_words
 from pulsemend.window.set_tables import SetTables, size_words
@@ -84,10 +85,7 @@ class ExportStage(StagePage):
         self.folder.editingFinished.connect(self._take_folder)
         self.choose = button("Choose...", self._choose_folder, tooltip="Choose the folder that gets the set")
         self.where.add(self.folder)
-        row = QHBoxLayout()
-        row.addWidget(self.choose)
-        row.addStretch(1)
-        self.where.body.addLayout(row)
+        self.where.add(flow_row(self.choose))
         self.set_name = self.where.add_note()
         self._build_formats()
         self.will = Card("What it will be")
@@ -96,7 +94,7 @@ class ExportStage(StagePage):
         self.size = self.will.add_line("room kept for it, at most")
         self.left = self.will.add_line("free on the disk")
         self._build_writing()
-        self.settings = scrolling_column(
+        self.settings = column_of(
             self.where, self.formats, self.will, self.writing, self.written, name="Export, settings"
         )
         self.picture = self.tables = SetTables(self.bench.theme)
@@ -140,11 +138,7 @@ class ExportStage(StagePage):
         self.save = button("Save the plan", self._save_plan, tooltip="Write the plan to its file")
         self.write_button = button("Write the set", self.write, main=True)
         self.cancel = button("Cancel", lambda: self.runner.stop(), tooltip="Stop; no half file stays")
-        row = QHBoxLayout()
-        for one in (self.write_button, self.save, self.cancel):
-            row.addWidget(one)
-        row.addStretch(1)
-        self.writing.body.addLayout(row)
+        self.writing.add(flow_row(self.write_button, self.save, self.cancel))
         self.question = Question("Before the set is written")
         self.writing.add(self.question)
         self.bar = QProgressBar()
@@ -160,11 +154,7 @@ class ExportStage(StagePage):
         self.check_button = button(
             "Check a set...", self.check_set, tooltip="Read any epoch set back and show each check"
         )
-        both = QHBoxLayout()
-        both.addWidget(self.show_button)
-        both.addWidget(self.check_button)
-        both.addStretch(1)
-        self.written.body.addLayout(both)
+        self.written.add(flow_row(self.show_button, self.check_button))
 
     # What can be done
 
