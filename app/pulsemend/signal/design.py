@@ -1,6 +1,7 @@
 """Zero-phase FIR filters: their taps, and nothing else.
 
 All filters here are symmetric, of odd length, and centred: tap ``half`` belongs to the present sample.
+scipy.signal takes half a second to load; it is imported where it is used, so that a window opens without it.
 """
 
 from __future__ import annotations
@@ -8,7 +9,6 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
-import scipy.signal as ss
 from numpy.typing import NDArray
 
 HAMMING_FACTOR = 3.3
@@ -41,6 +41,8 @@ def hamming_length(rate_hz: float, transition_hz: float) -> int:
 
 def lowpass(rate_hz: float, cutoff_hz: float, transition_hz: float) -> Taps:
     """Hamming-windowed low-pass; gain 1 at 0 Hz and -6 dB at the cutoff."""
+    import scipy.signal as ss
+
     return ss.firwin(hamming_length(rate_hz, transition_hz), cutoff_hz, window="hamming", fs=rate_hz)
 
 
@@ -56,6 +58,8 @@ def notch(rate_hz: float, lines_hz: Sequence[float], *, half_width_hz: float = 1
 
     Lines must lie at least two half widths apart, from 0 and from half the rate.
     """
+    import scipy.signal as ss
+
     edges = [edge for line in sorted(lines_hz) for edge in (line - half_width_hz, line + half_width_hz)]
     return ss.firwin(
         hamming_length(rate_hz, half_width_hz), edges, window="hamming", pass_zero=True, fs=rate_hz
@@ -75,6 +79,8 @@ def antialias(rate_hz: float, pass_hz: float, stop_hz: float, *, attenuation_db:
 
     ``rate_hz`` is the rate the taps run at: recorded rate x the ratio's numerator.
     """
+    import scipy.signal as ss
+
     length, beta = ss.kaiserord(attenuation_db, (stop_hz - pass_hz) / (0.5 * rate_hz))
     taps = ss.firwin(length | 1, 0.5 * (pass_hz + stop_hz), window=("kaiser", beta), fs=rate_hz)
     return np.asarray(taps / taps.sum())
