@@ -45,7 +45,7 @@ LEVEL_S = 0.002
 """A level beside a gap is the mean over this time."""
 
 QUICK_WINDOWS = 6
-QUICK_CHANNELS = 16
+QUICK_CHANNELS = 8
 """A provisional picture of all channels shows so many of them, because every channel's fill is its own."""
 
 _STAGE = "aligning pulses at zero"
@@ -105,6 +105,17 @@ class PulseRequest:
     channel: str = ""
     span_ms: Window = USUAL_SPAN_MS
     most: int | None = None
+
+
+def first_batch(request: PulseRequest) -> PulseRequest:
+    """Ask for a part of the pulses that is there at once.
+
+    Parameters
+    ----------
+    request : PulseRequest
+        For all pulses.
+    """
+    return replace(request, most=FIRST_BATCH // 2 if request.pick is Pick.ALL else FIRST_BATCH)
 
 
 @dataclass(frozen=True)
@@ -234,7 +245,9 @@ def _adapted(
     rows = earlier.autocovariance
     # A few lags too few shorten the flanks a little, which a provisional picture may do.
     if rows is None or rows.shape[1] < 0.8 * _lags(setup):
-        rows = yield from _quick_autocovariance(recording, setup, _columns(setup, request))
+        ground = Ground(setup, adapted, provisional=True)
+        columns, _ = yield from _picked(recording, ground, request)
+        rows = yield from _quick_autocovariance(recording, setup, columns)
     return replace(adapted, autocovariance=rows)
 
 
@@ -291,19 +304,11 @@ def gather(recording: Recording, ground: Ground, request: PulseRequest) -> Work[
     """
     setup = ground.setup
     first, stop = _span(setup, request)
-    onsets = _inside(ground, first, stop)
-    shown = _spread_out(onsets, request.most)
+    shown = _onsets(ground, request)
     if not shown.size or not setup.groups:
         return None
-    columns = _columns(setup, request)
-    usual_windows_s = _windows_of(setup, columns)
-    leftover_v = None
-    if request.pick is not Pick.ALL:
-        steps_v = yield from _leftover_steps(recording, ground, shown, columns)
-        place = int(np.argmax(steps_v))
-        columns, leftover_v = columns[place : place + 1], float(steps_v[place])
-    elif ground.provisional:
-        columns = _spread_out(columns, QUICK_CHANNELS)
+    usual_windows_s = _windows_of(setup, _columns(setup, request))
+    columns, leftover_v = yield from _picked(recording, ground, request)
     # A provisional autocovariance is known of these channels only; otherwise all are repaired as for a set.
     of_these = _only(setup, columns) if ground.provisional else setup
     chain = Chain(recording, of_these, ground.estimates)
@@ -342,14 +347,16 @@ def _span(setup: Setup, request: PulseRequest) -> tuple[int, int]:
     return window_to_samples(0, (ms_to_s(start_ms), ms_to_s(stop_ms)), setup.facts.rate_hz)
 
 
-def _inside(ground: Ground, first: int, stop: int) -> NDArray[np.intp]:
+def _onsets(ground: Ground, request: PulseRequest) -> NDArray[np.intp]:
+    """Choose the pulses shown: of those that lie well inside the recording so many, spread evenly."""
+    first, stop = _span(ground.setup, request)
     segments = ground.setup.facts.segments
     inside = [
         onset
         for onset in ground.estimates.onsets
         if any(lo <= onset + first and onset + stop <= hi for lo, hi in segments)
     ]
-    return np.array(inside, dtype=np.intp)
+    return _spread_out(np.array(inside, dtype=np.intp), request.most)
 
 
 def _spread_out(values: NDArray[np.intp], most: int | None) -> NDArray[np.intp]:
@@ -367,6 +374,21 @@ def _columns(setup: Setup, request: PulseRequest) -> NDArray[np.intp]:
     return np.flatnonzero(good if good.any() else np.ones_like(good))
 
 
+def _picked(
+    recording: Recording, ground: Ground, request: PulseRequest
+) -> Work[tuple[NDArray[np.intp], float | None]]:
+    """Find the used channels shown, and the step left at the gap of a single one."""
+    columns = _columns(ground.setup, request)
+    if request.pick is Pick.ALL:
+        return (_spread_out(columns, QUICK_CHANNELS) if ground.provisional else columns), None
+    onsets = _onsets(ground, request)
+    if not onsets.size:
+        return columns[:1], None
+    steps_v = yield from _leftover_steps(recording, ground, onsets, columns)
+    worst = int(np.argmax(steps_v))
+    return columns[worst : worst + 1], float(steps_v[worst])
+
+
 def _leftover_steps(
     recording: Recording, ground: Ground, onsets: NDArray[np.intp], columns: NDArray[np.intp]
 ) -> Work[NDArray[np.float64]]:
@@ -377,17 +399,22 @@ def _leftover_steps(
     setup = ground.setup
     rate_hz = setup.facts.rate_hz
     width = max(1, round(LEVEL_S * rate_hz))
+    groups = [
+        (np.isin(columns, group.columns), *window_to_samples(0, group.windows_s[0], rate_hz))
+        for group in setup.groups
+    ]
+    lowest = min(start for _, start, _ in groups) - width
+    highest = max(stop for _, _, stop in groups) + width
     steps = np.empty((len(onsets), columns.size))
-    edges = [window_to_samples(0, _windows_of(setup, column[None])[0], rate_hz) for column in columns]
-    lowest, highest = min(start for start, _ in edges) - width, max(stop for _, stop in edges) + width
     for row, onset in enumerate(onsets.tolist()):
         yield Progress(_STAGE, row, len(onsets))
         a, b = max(0, onset + lowest), min(setup.facts.n_samples, onset + highest)
-        x = read_stored(recording, setup, a, b)
-        for place, (column, (start, stop)) in enumerate(zip(columns, edges, strict=True)):
+        x = read_stored(recording, setup, a, b)[:, columns]
+        for members, start, stop in groups:
+            # At an end of the recording one sample has to do.
             at, end = max(onset + start - a, 1), min(onset + stop - a, b - a - 1)
-            after, before = x[end : end + width, column], x[max(0, at - width) : at, column]
-            steps[row, place] = after.mean() - before.mean()
+            before, after = x[max(0, at - width) : at, members], x[end : end + width, members]
+            steps[row, members] = after.mean(axis=0) - before.mean(axis=0)
     return np.abs(np.median(steps, axis=0)) * setup.scale_v[columns]
 
 

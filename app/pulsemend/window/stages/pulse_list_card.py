@@ -32,6 +32,15 @@ _COLUMNS = ("Time", "After marker", "State")
 _TIMES = ((PulseTimes.MARKERS, "at their markers"), (PulseTimes.NONE, "there are no pulses"))
 
 
+_SHORT: dict[PulseState | None, str] = {
+    PulseState.ALIGNED: "in the signal",
+    PulseState.MARKED_ONLY: "not in the signal",
+    PulseState.ADDED: "added",
+    PulseState.MOVED: "moved",
+}
+"""States where there is little room; the tooltip has them whole."""
+
+
 class PulseModel(QAbstractTableModel):
     """The list as Qt's views want it."""
 
@@ -64,10 +73,11 @@ class PulseModel(QAbstractTableModel):
 
     def data(self, index: Index, role: int = Qt.ItemDataRole.DisplayRole) -> Any:
         """Give the text of a cell; the tooltip is the whole line."""
-        texts = self._texts(self.rows[index.row()])
+        row = self.rows[index.row()]
+        texts = self._texts(row)
         if role == Qt.ItemDataRole.DisplayRole:
-            return texts[index.column()]
-        if role == Qt.ItemDataRole.ToolTipRole:
+            return (*texts[:2], _SHORT.get(row.state, row.words))[index.column()]
+        if role in (Qt.ItemDataRole.ToolTipRole, Qt.ItemDataRole.AccessibleTextRole):
             return ", ".join(text for text in texts if text)
         return None
 

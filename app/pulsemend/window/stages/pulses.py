@@ -12,12 +12,12 @@ from pulsemend.mending.pulse_effect import effect
 from pulsemend.mending.pulse_gaps import Source, gap_of
 from pulsemend.mending.pulse_list import pulse_rows
 from pulsemend.mending.pulse_view import (
-    FIRST_BATCH,
     PROPOSED_MS,
     Ground,
     Pick,
     PulseRequest,
     PulseView,
+    first_batch,
     gather,
     ground_of,
     sketch,
@@ -138,7 +138,7 @@ class PulsesStage(StagePage):
 
     def _on_learned(self) -> None:
         if self.bench.learned is not None and not self.bench.provisional:
-            self._ground = ground_of(self.bench.learned)
+            self._ground = _remembering(ground_of(self.bench.learned), self._ground)
         if not self.shown:
             return
         self._show_values()
@@ -272,10 +272,10 @@ class PulsesStage(StagePage):
         if not self.shown or plan is None or plan.pulses.times is PulseTimes.NONE:
             return
         request, earlier = self._request, self._ground
-        first = replace(request, most=FIRST_BATCH)
+        first = first_batch(request)
         if bench.learned is not None and not bench.provisional:
             ground = ground_of(bench.learned)
-            if len(ground.estimates.pulses) > FIRST_BATCH and self._view_of != (session.revision, first):
+            if _is_part(first, ground) and self._view_of != (session.revision, first):
                 self._start_first(lambda recording: _with_ground(recording, ground, first))
             self._ask_all(ground, request)
             return
@@ -300,7 +300,7 @@ class PulsesStage(StagePage):
             self._show_values()
         # Where the workbench cannot learn yet, this is all there will be.
         can_learn = ground.decided and not self.bench.problem
-        if whole is not None and not can_learn and len(ground.estimates.pulses) > FIRST_BATCH:
+        if whole is not None and not can_learn and _is_part(first_batch(whole), ground):
             self._ask_all(ground, whole)
 
     def _take(self, view: PulseView | None) -> None:
@@ -333,6 +333,17 @@ class PulsesStage(StagePage):
         self.bench.start(
             "effect of the gaps", lambda recording: effect(recording, learned), self.effect_card.show_effect
         )
+
+
+def _remembering(new: Ground, old: Ground | None) -> Ground:
+    """Keep an autocovariance that the present fill does not need, for a fast picture when it does again."""
+    if old is None or new.estimates.autocovariance is not None:
+        return new
+    return replace(new, estimates=replace(new.estimates, autocovariance=old.estimates.autocovariance))
+
+
+def _is_part(first: PulseRequest, ground: Ground) -> bool:
+    return first.most is not None and len(ground.estimates.pulses) > first.most
 
 
 def _sketched(
