@@ -323,3 +323,16 @@ def test_threads_and_workers_change_nothing(recording: ArrayRecording) -> None:
         return [hashlib.sha256(read_epoch(chain, a, 0.0, 1000).data.tobytes()).hexdigest() for a in which]
 
     assert epochs(anchors) == epochs(anchors[:2]) + epochs(anchors[2:])
+
+
+def test_share_replaced_is_that_of_the_marks(recording: ArrayRecording) -> None:
+    pulses = Pulses(
+        window_ms=(-2.0, 14.0),
+        fill=Fill.LINE,
+        also=(OtherGap((14.1, 15.0)), OtherGap((248.0, 254.0))),
+        channels={"E2": (-2.0, 25.0)},
+    )
+    chain = make_chain(recording, plan(pulses=pulses))
+    for anchor in (15_001.0, 15_000.0, 20_444.0, 31_500.0):
+        cut = chain.cut(anchor, -0.1, 500)
+        assert chain.replaced_share(cut) == chain.replaced(cut).mean() > 0.0

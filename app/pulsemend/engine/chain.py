@@ -11,9 +11,10 @@ state.
 
 from __future__ import annotations
 
+import math
 from bisect import bisect_left, bisect_right
 from collections import OrderedDict
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from fractions import Fraction
 from functools import cache
@@ -94,6 +95,7 @@ class Chain:
         ]
         self._scale = setup.scale_v.astype(setup.work)[:, None]
         self._mean_of = (setup.reference_from / max(1, setup.reference_from.sum())).astype(setup.work)
+        self._subtracted_from = _runs(setup.reference_to)
         self._decimator: BandedFilter | None = None
         if setup.antialias is not None:
             self._decimator = banded(setup.antialias, setup.ratio, setup.work)
@@ -214,15 +216,34 @@ class Chain:
         -------
         bool array, shape (n_channels, n_times)
         """
-        ratio = float(self._setup.ratio)
-        at = (np.arange(cut.n_times) + (cut.first + cut.part)) / ratio
-        marked = np.zeros((len(self._setup.names), at.size), dtype=np.bool_)
-        reach = 0.5 / ratio + 1e-6
-        for repair in self._repairs:
-            for gap in repair.touching(cut.segment, at[0] - reach, at[-1] + reach):
-                a, b = np.searchsorted(at, [gap.start - reach, gap.stop - 1 + reach])
-                marked[repair.columns, a:b] = True
+        marked = np.zeros((len(self._setup.names), cut.n_times), dtype=np.bool_)
+        for columns, start, stop in self._replaced_runs(cut):
+            marked[columns, start:stop] = True
         return marked
+
+    def replaced_share(self, cut: Cut) -> float:
+        """Give the share of an epoch's samples, over all channels, that `replaced` marks."""
+        # Runs of one group may share an output sample that two gaps touch.
+        touched: dict[int, NDArray[np.bool_]] = {}
+        sizes: dict[int, int] = {}
+        for columns, start, stop in self._replaced_runs(cut):
+            touched.setdefault(id(columns), np.zeros(cut.n_times, dtype=np.bool_))[start:stop] = True
+            sizes[id(columns)] = columns.size
+        marked = sum(sizes[group] * int(times.sum()) for group, times in touched.items())
+        return marked / (len(self._setup.names) * cut.n_times)
+
+    def _replaced_runs(self, cut: Cut) -> Iterator[tuple[NDArray[np.intp], int, int]]:
+        """Places of channels, and the run [start, stop) of output samples that one gap touches in them."""
+        ratio = float(self._setup.ratio)
+        first = cut.first + cut.part
+        reach = 0.5 / ratio + 1e-6
+        lo, hi = first / ratio - reach, (first + cut.n_times - 1) / ratio + reach
+        for repair in self._repairs:
+            for gap in repair.touching(cut.segment, lo, hi):
+                start = max(0, math.ceil((gap.start - reach) * ratio - first))
+                stop = min(cut.n_times, math.floor((gap.stop - 1 + reach) * ratio - first) + 1)
+                if stop > start:
+                    yield repair.columns, start, stop
 
     def _segment_at(self, sample: int) -> int:
         segments = self._setup.facts.segments
@@ -295,7 +316,8 @@ class Chain:
             volts = np.concatenate([volts, np.zeros((1, volts.shape[1]), volts.dtype)])
         if setup.reference_from.any():
             mean = self._mean_of @ volts
-            np.subtract(volts, mean, out=volts, where=setup.reference_to[:, None])
+            for run in self._subtracted_from:
+                volts[run] -= mean
         return volts
 
     @staticmethod
@@ -419,6 +441,12 @@ def _delay(part: float, dtype: str) -> BandedFilter:
 def _one_blas_thread() -> None:
     """Keep matrix products to one thread in the whole process: here workers are what runs in parallel."""
     threadpoolctl.threadpool_limits(1)
+
+
+def _runs(chosen: NDArray[np.bool_]) -> list[slice]:
+    """List the runs of chosen places as slices, which change an array in place without a copy."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], chosen, [False]])))
+    return [slice(int(a), int(b)) for a, b in zip(edges[::2], edges[1::2], strict=True)]
 
 
 def _ceil(x: Fraction) -> int:

@@ -66,10 +66,12 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
     judged = _judged_channels(setup)
     sums = _autocovariance_sum(setup)
     scale_v = setup.scale_v.astype(np.float32)
+    short = max(2, round(STEEPNESS_S * setup.facts.rate_hz))
     means: list[NDArray[np.float64]] = []
     steep: list[NDArray[np.float64]] = []
-    for done, (start, stop) in enumerate(windows):
+    for done, (start, until) in enumerate(windows):
         yield Progress(_STAGE, done, total)
+        stop = until if sums is not None else min(until, start + short)
         # Counting from a sample of its own, single precision is enough.
         origin = read_stored(recording, setup, start, start + 1)[0]
         x = read_stored(recording, setup, start, stop, origin, np.float32)
@@ -78,7 +80,7 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         x -= mean
         x *= scale_v
         if judged.size:
-            steep.append(x[: max(2, round(STEEPNESS_S * setup.facts.rate_hz)), judged])
+            steep.append(x[:short, judged])
         if sums is not None:
             sums.add(x)
     usual = usual_steepness(steep) if steep else 0.0

@@ -151,7 +151,7 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut]) -> SetContents:
             onset_s=(candidate.anchor_sample or 0.0) / recorded_hz,
             start_s=candidate.start_s,
             shift_s=cut.shift_s or cut.remainder_s,
-            replaced_share=float(prepared.chain.replaced(cut).mean()),
+            replaced_share=prepared.chain.replaced_share(cut),
         )
         for candidate, cut in zip(prepared.kept, cuts, strict=True)
     )

@@ -347,8 +347,12 @@ class MainWindow(QMainWindow):
 
         if self._guide is None:
             self._guide = GuideViewer(self.bench.theme, parent=self)
+            self._guide.destroyed.connect(self._forget_guide)
         self._guide.show()
         self._guide.raise_()
+
+    def _forget_guide(self) -> None:
+        self._guide = None
 
     # Coming and going
 
