@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from PySide6.QtCore import QByteArray, QObject, QProcess, QTimer, Slot
+from PySide6.QtCore import QByteArray, QObject, QProcess, QTimer, Signal, Slot
 
 from pulsemend.errors import PulsemendError
 from pulsemend.progress import Progress
@@ -234,7 +234,15 @@ class ChildJob(Job):
 
 
 class Children(QObject):
-    """The child processes of one window."""
+    """The child processes of one window.
+
+    Attributes
+    ----------
+    changed : Signal()
+        One was begun.
+    """
+
+    changed = Signal()
 
     def __init__(self, parent: QObject | None = None) -> None:
         super().__init__(parent)
@@ -269,8 +277,20 @@ class Children(QObject):
             Its arguments.
         """
         job = ChildJob(kind, program, arguments, self)
-        self._jobs.append(job)
+        self.add(job)
         return job
+
+    def add(self, job: ChildJob) -> None:
+        """Take over a job that was just made: it counts as under way, and is ended with the window.
+
+        Parameters
+        ----------
+        job : ChildJob
+            The job.
+        """
+        job.setParent(self)
+        self._jobs.append(job)
+        self.changed.emit()
 
     def close(self, wait_ms: int = 5000) -> None:
         """End all and wait; afterwards each has its outcome.

@@ -103,6 +103,11 @@ class Desk(QWidget):
         for page in self.pages.values():
             page.set_theme(theme)
 
+    def close_pages(self) -> None:
+        """Let no page listen to anybody any more."""
+        for page in self.pages.values():
+            page.close()
+
     @staticmethod
     def _fill(place: QFrame, widget: QWidget) -> None:
         layout = place.layout()

@@ -16,7 +16,6 @@ from pulsemend.errors import ChangedOnDisk, PulsemendError
 from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.recording import Recording
 from pulsemend.progress import Progress
-from pulsemend.readers.opening import open_recording
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import Selected, Stage
 from pulsemend.session.messages import Level, Message
@@ -28,6 +27,7 @@ from pulsemend.window.asking import answer
 from pulsemend.window.banner import Banner
 from pulsemend.window.child import Children
 from pulsemend.window.desk import Desk, Factory
+from pulsemend.window.dialogs.notice import first_start_notice
 from pulsemend.window.dialogs.questions import (
     BRING_BACK,
     GIVE_UP,
@@ -99,6 +99,7 @@ class MainWindow(QMainWindow):
         self.link = TracesLink(self.bench, folders.cache, self)
         self.traces: TracesWidget | None = None
         self.ribbon: Ribbon | None = None
+        self._start: StartPage | None = None
         self._source: Recording | None = None
         self.cursor_s: float | None = None
         self._measuring = False
@@ -162,11 +163,13 @@ class MainWindow(QMainWindow):
         self.bench.learned_changed.connect(self.link.show_learned)
         self.bench.learned_changed.connect(self._show_ribbon_events)
         self.bench.jobs.changed.connect(self._watch_jobs)
+        self.children_.changed.connect(self._watch_jobs)
         self.link.pyramid_ready.connect(self._give_ribbon_pyramid)
         self.opener.opened.connect(self._remember)
         self.opener.recovery_found.connect(self._on_recovery)
         self.opener.marks_changed_on_disk.connect(self._on_marks_changed)
         self.status.cancel_wanted.connect(self.stop_jobs)
+        QGuiApplication.styleHints().colorSchemeChanged.connect(self.apply_looks)
         self._drops = Drops(self)
         self._drops.dropped.connect(self.handlers.open_dropped)
 
@@ -175,11 +178,10 @@ class MainWindow(QMainWindow):
     def _show_recording(self) -> None:
         """Build ribbon and traces anew for another recording."""
         self._drop_traces()
-        opened = self.session.recording
-        if opened is None:
+        self._source = self.opener.take_source()
+        if self._source is None:
             self._show_start()
             return
-        self._source = open_recording(opened.path)
         view = SessionView(self.session)
         source = TraceSource(self._source, self.link.request_repaired)
         self.traces = TracesWidget(view, source, self.bench.theme)
@@ -204,7 +206,7 @@ class MainWindow(QMainWindow):
         self.traces.setFocus()
 
     def _show_start(self) -> None:
-        start = StartPage(self.bench, self.actions_)
+        start = self._start = StartPage(self.bench, self.actions_)
         start.recent_chosen.connect(self.handlers.open_recent)
         start.sample_written.connect(lambda result: self.opener.open(result.recordings[0], result.plan))
         self.desk.put(self.desk.traces_place, start)
@@ -214,6 +216,7 @@ class MainWindow(QMainWindow):
 
     def _drop_traces(self) -> None:
         self.link.attach(None)
+        self._start = None
         self.traces = None
         self.ribbon = None
         if self._source is not None:
@@ -306,7 +309,9 @@ class MainWindow(QMainWindow):
             self.status.end_work()
 
     def _on_progress(self, progress: Progress, seconds_left: float | None) -> None:
-        self.status.show_work(progress, seconds_left)
+        running = (*self.children_.under_way, *self.bench.jobs.under_way)
+        if running and self.sender() is running[0]:
+            self.status.show_work(progress, seconds_left)
 
     def stop_jobs(self) -> None:
         """Ask everything that runs to stop."""
@@ -324,9 +329,9 @@ class MainWindow(QMainWindow):
         for part in (self.actions_, self.header, self.banner, self.rail):
             part.set_theme(self.bench.theme)
         self.desk.set_theme(self.bench.theme)
-        if self.traces is not None and self.ribbon is not None:
-            self.traces.set_theme(self.bench.theme)
-            self.ribbon.set_theme(self.bench.theme)
+        for shown in (self.traces, self.ribbon, self._start):
+            if shown is not None:
+                shown.set_theme(self.bench.theme)
 
     def change_settings(self, settings: Settings) -> None:
         """Take over and keep other settings."""
@@ -340,6 +345,16 @@ class MainWindow(QMainWindow):
 
     def _remember(self, recording: Path) -> None:
         self.change_settings(self.bench.settings.with_recent(recording, self.session.plan_path))
+
+    def show_first_notice(self) -> None:
+        """Show the safety notice, unless it was read before."""
+        notice = first_start_notice(self.bench.settings, self)
+        if notice is not None:
+            notice.accepted.connect(self._keep_notice_shown)
+            notice.open()
+
+    def _keep_notice_shown(self) -> None:
+        self.change_settings(replace(self.bench.settings, notice_shown=True))
 
     def show_guide(self) -> None:
         """Show the guide, in a window of its own that stays while this one does."""
@@ -398,6 +413,7 @@ class MainWindow(QMainWindow):
         for end in self._unsubscribe:
             end()
         self.children_.close()
+        self.desk.close_pages()
         self._drop_traces()
         self.opener.close()
         self.bench.close()

@@ -14,7 +14,7 @@ from pulsemend.mending.prepare import marks_path
 from pulsemend.model.marks import NO_MARKS
 from pulsemend.model.marks_file import MarksFile, check_files, check_samples, read_marks
 from pulsemend.model.plan_file import PlanFile, parse_plan, read_plan
-from pulsemend.model.recording import Fingerprint, RecordingFacts
+from pulsemend.model.recording import Fingerprint, Recording
 from pulsemend.progress import Progress, Work
 from pulsemend.readers.fingerprint import fingerprint
 from pulsemend.readers.opening import open_recording
@@ -30,10 +30,10 @@ SAVE_MARKS_MS = 800
 
 @dataclass(frozen=True)
 class Opened:
-    """What a worker read."""
+    """What a worker read; `source` is the recording itself, opened for the window."""
 
     recording: Path | None
-    facts: RecordingFacts | None
+    source: Recording | None
     plan: Path | None
     plan_file: PlanFile | None
     marks: MarksFile | None
@@ -69,6 +69,8 @@ class Opener(QObject):
         self._bench = bench
         self._locks = state_folder / "locks"
         self._lock: RecordingLock | None = None
+        self._source: Recording | None = None
+        self._identified: tuple[Path, Fingerprint] | None = None
         self._save = QTimer(self)
         self._save.setSingleShot(True)
         self._save.setInterval(SAVE_MARKS_MS)
@@ -78,12 +80,19 @@ class Opener(QObject):
     def open(self, recording: Path | None, plan: Path | None) -> None:
         """Open a recording, a plan, or both; what is not given stays."""
         session = self._bench.session
+        # The worker reads the marks' file; it must hold what the window shows.
+        self.save_marks()
         known = session.recording
         path = recording if recording is not None else None if known is None else known.path
         plan_path = plan if plan is not None else session.plan_path
         job = self._bench.jobs.submit("open", lambda _shelf: _read(path, plan, plan_path))
         job.returned.connect(self._take)
         job.failed.connect(self._bench.tell)
+
+    def take_source(self) -> Recording | None:
+        """Hand over the recording that a worker opened for the traces; whoever takes it closes it."""
+        source, self._source = self._source, None
+        return source
 
     def draft(self) -> None:
         """Propose a plan from the open recording, as an unsaved plan."""
@@ -97,7 +106,7 @@ class Opener(QObject):
             return draft_plan(summary.facts, pulse_evidence(summary.facts, summary.pulses_found))
 
         job = self._bench.jobs.submit("draft", work)
-        job.returned.connect(self._take_draft)
+        job.returned.connect(lambda text: self._take_draft(path, text))
         job.failed.connect(self._bench.tell)
 
     def save_marks(self) -> None:
@@ -123,27 +132,39 @@ class Opener(QObject):
 
     def _take(self, read: Opened) -> None:
         session = self._bench.session
+        same = session.recording is not None and read.recording == session.recording.path
+        if same and session.marks_path is not None and not session.marks_are_saved:
+            # Edited while the worker read the file.
+            _close(read.source)
+            self.open(read.recording, read.plan)
+            return
         self.save_marks()
         recoveries: list[Recovery | None] = []
         unplaced = session.marks if session.marks_path is None else NO_MARKS
-        same = session.recording is not None and read.recording == session.recording.path
+        view = session.view if same else None
         try:
             if read.plan_file is not None:
                 recoveries.append(session.open_plan(read.plan_file, read.plan))
                 self._offer(recoveries[-1])
-            if read.recording is not None and read.facts is not None:
-                recoveries.append(
-                    session.open_recording(read.recording, read.facts, read.marks, read.marks_path)
-                )
+            if read.recording is not None and read.source is not None:
+                self._source = read.source
+                facts = read.source.facts
+                recoveries.append(session.open_recording(read.recording, facts, read.marks, read.marks_path))
                 self._offer(recoveries[-1])
         except (PulsemendError, OSError) as error:
             self._bench.tell(error)
             return
+        finally:
+            # Where the session refused it, nobody took it.
+            _close(self.take_source())
+        if view is not None:
+            session.set_view(view)
         if same and unplaced != NO_MARKS and read.marks is None:
             session.edit_marks("Marks made before the plan was opened", unplaced)
-        if read.recording is not None and not same:
-            self._lock_it(read.recording)
-            self._identify()
+        if read.recording is not None:
+            if not same:
+                self._lock_it(read.recording)
+            self._identify(read.recording)
         for warning in () if read.plan_file is None else read.plan_file.warnings:
             session.say(Message(Level.NOTE, warning))
         if read.recording is not None:
@@ -158,8 +179,10 @@ class Opener(QObject):
         else:
             self._bench.session.recover()
 
-    def _take_draft(self, text: str) -> None:
+    def _take_draft(self, recording: Path, text: str) -> None:
         session = self._bench.session
+        if session.recording is None or session.recording.path != recording:
+            return
         try:
             session.open_plan(parse_plan(text), None)
         except PulsemendError as error:
@@ -175,16 +198,30 @@ class Opener(QObject):
         if self._lock.other is not None:
             self._bench.session.say(Message(Level.ATTENTION, self._lock.other.words))
 
-    def _identify(self) -> None:
-        """Find the fingerprint out, after everything that is waited for."""
+    def _identify(self, recording: Path) -> None:
+        """Find the fingerprint out, after everything that is waited for; edits meanwhile do not matter."""
 
         def take(found: Fingerprint) -> None:
+            self._identified = (recording, found)
+            session = self._bench.session
+            if session.recording is None or session.recording.path != recording:
+                return
             try:
-                self._bench.session.set_fingerprint(found)
+                session.set_fingerprint(found)
             except PulsemendError as error:
                 self._bench.tell(error)
 
-        self._bench.start("fingerprint", fingerprint, take)
+        if self._identified is not None and self._identified[0] == recording:
+            take(self._identified[1])
+            return
+        job = self._bench.jobs.submit("fingerprint", lambda shelf: fingerprint(shelf.recording(recording)))
+        job.returned.connect(take)
+        job.failed.connect(self._bench.tell)
+
+
+def _close(source: Recording | None) -> None:
+    if source is not None:
+        source.close()
 
 
 def _read(recording: Path | None, plan: Path | None, plan_path: Path | None) -> Work[object]:
@@ -193,13 +230,16 @@ def _read(recording: Path | None, plan: Path | None, plan_path: Path | None) -> 
     plan_file = None if plan is None else read_plan(plan)
     if recording is None:
         return Opened(None, None, plan, plan_file, None, None)
-    opened = open_recording(recording)
-    facts = opened.facts
-    opened.close()
-    at = None if plan_path is None else marks_path(plan_path, facts.stem)
-    marks = read_marks(at) if at is not None and at.exists() else None
-    if marks is not None:
-        with marks.source.located():
-            check_files(marks.marks, facts.parts)
-            check_samples(marks.marks, facts.n_samples)
-    return Opened(recording, facts, plan, plan_file, marks, at)
+    source = open_recording(recording)
+    facts = source.facts
+    try:
+        at = None if plan_path is None else marks_path(plan_path, facts.stem)
+        marks = read_marks(at) if at is not None and at.exists() else None
+        if marks is not None:
+            with marks.source.located():
+                check_files(marks.marks, facts.parts)
+                check_samples(marks.marks, facts.n_samples)
+    except BaseException:
+        source.close()
+        raise
+    return Opened(recording, source, plan, plan_file, marks, at)

@@ -48,6 +48,7 @@ def run(recording: Path | None, plan: Path | None) -> int:
     application.setWindowIcon(program_icon())
     window = open_window(user_folders(), recording, plan)
     window.show()
+    window.show_first_notice()
     # Signals from a terminal reach Python only while it runs now and then.
     waking = QTimer()
     waking.timeout.connect(lambda: None)

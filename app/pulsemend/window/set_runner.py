@@ -94,8 +94,6 @@ class SetRunner(QObject):
         super().__init__(parent)
         self._session = session
         self._children = Children(self) if children is None else children
-        # Kept to the end: a job that went within its own signal would take Qt with it.
-        self._checks: list[CheckJob] = []
         self._order: MendOrder | None = None
         self._revision = 0
         self._written_by: tuple[Path, int] | None = None
@@ -137,17 +135,6 @@ class SetRunner(QObject):
         if self.job is not None:
             self.job.cancel()
 
-    def close(self, wait_ms: int = 5000) -> None:
-        """End the checks and wait for them; those who own the other children end these.
-
-        Parameters
-        ----------
-        wait_ms : int
-            How long one may take to clean up before it is killed.
-        """
-        for job in self._checks:
-            job.close(wait_ms)
-
     def _run(self, job: ChildJob, take: Any) -> None:
         self.job, self.words = job, ""
         job.progressed.connect(self._tell_progress)
@@ -158,8 +145,8 @@ class SetRunner(QObject):
 
     def _check(self, folder: Path) -> None:
         self.checked = None
-        job = CheckJob(folder, self)
-        self._checks.append(job)
+        job = CheckJob(folder)
+        self._children.add(job)
         self._run(job, lambda result: self._take_checked(folder, result))
 
     def _take_written(self, result: dict[str, Any]) -> None:

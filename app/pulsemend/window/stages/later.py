@@ -32,11 +32,7 @@ class LaterStage(StagePage):
         self.picture = QWidget()
         column = QVBoxLayout(self.picture)
         column.addWidget(EmptyState(NOT_YET[stage]))
-        ends = [
-            bench.session.subscribe(kind, self._refresh)
-            for kind in (Changed.RECORDING, Changed.PLAN, Changed.STAGE)
-        ]
-        self.settings.destroyed.connect(lambda: [end() for end in ends])
+        self.follow(self._refresh, Changed.RECORDING, Changed.PLAN, Changed.STAGE)
         self._refresh()
 
     def _refresh(self) -> None:
