@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import replace
 
-from PySide6.QtCore import QModelIndex, QPersistentModelIndex, QSignalBlocker, Qt
+from PySide6.QtCore import QEvent, QModelIndex, QPersistentModelIndex, QSignalBlocker, Qt
 from PySide6.QtGui import QKeyEvent
 from PySide6.QtWidgets import (
     QAbstractItemView,
@@ -19,12 +19,13 @@ from PySide6.QtWidgets import (
     QWidget,
 )
 
-from pulsemend.errors import MarksError
-from pulsemend.model.marks import BadStretch, Marks
+from pulsemend.model.marks import BadStretch
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import NOTHING_SELECTED, Selected
 from pulsemend.session.view import View
-from pulsemend.window.parts import Card, NumberField, button, words
+from pulsemend.window.fields import PlainNumber
+from pulsemend.window.mark_acts import MarkActs
+from pulsemend.window.parts import Card, button, words
 from pulsemend.window.traces.clock import clock, duration
 from pulsemend.window.workbench import Workbench
 
@@ -33,20 +34,7 @@ KINDS = ("muscle", "movement", "electrode", "pause", "other")
 HOW_TO_SELECT = "Select a stretch: drag across the traces with Ctrl held down, or press Shift+Right there."
 _KIND = 2
 _ROWS_SHOWN = 5
-_DECIMALS = 3
 _Index = QModelIndex | QPersistentModelIndex
-
-
-def with_stretch(marks: Marks, stretch: BadStretch) -> Marks:
-    """Add a bad stretch; one of the same samples only gets the new kind. In order of time."""
-    kept = [one for one in marks.bad_stretches if (one.start, one.stop) != (stretch.start, stretch.stop)]
-    return with_stretches(marks, [*kept, stretch])
-
-
-def with_stretches(marks: Marks, stretches: list[BadStretch]) -> Marks:
-    """Replace all bad stretches, put in order of time."""
-    ordered = tuple(sorted(stretches, key=lambda one: (one.start, one.stop)))
-    return replace(marks, bad_stretches=ordered)
 
 
 def view_around(view: View, start_s: float, stop_s: float, whole_s: float) -> View:
@@ -73,6 +61,10 @@ def kind_field(parent: QWidget | None = None) -> QComboBox:
     box = QComboBox(parent)
     box.setEditable(True)
     box.addItems(list(KINDS))
+    box.setMinimumContentsLength(14)
+    edit = box.lineEdit()
+    if edit is not None:
+        edit.setPlaceholderText("choose or type")
     box.setAccessibleName("Why the stretch is bad")
     box.setToolTip("Choose a word or type your own")
     return box
@@ -96,6 +88,18 @@ class _StretchTable(QTableWidget):
         header.setSectionResizeMode(QHeaderView.ResizeMode.ResizeToContents)
         header.setSectionResizeMode(_KIND, QHeaderView.ResizeMode.Stretch)
         header.setHighlightSections(False)
+
+    def fit(self) -> None:
+        height = self.fontMetrics().height() + 8
+        self.verticalHeader().setMinimumSectionSize(1)
+        self.verticalHeader().setDefaultSectionSize(height)
+        shown = min(max(2, self.rowCount()), _ROWS_SHOWN)
+        self.setFixedHeight(shown * height + self.horizontalHeader().sizeHint().height() + 6)
+
+    def changeEvent(self, event: QEvent) -> None:
+        super().changeEvent(event)
+        if event.type() in (QEvent.Type.FontChange, QEvent.Type.StyleChange):
+            self.fit()
 
     def keyPressEvent(self, event: QKeyEvent) -> None:
         editing = self.state() == QAbstractItemView.State.EditingState
@@ -125,9 +129,10 @@ class BadStretchesCard(Card):
         )
         self.jump_button = button("Jump to", self.jump, tooltip="Bring this stretch into view (Return)")
         self.remove_button = button("Remove", self.remove, tooltip="This stretch is good again (Delete)")
-        self.first = NumberField("First second of the selected stretch", "s", 0.0, 0.0, 0.1, _DECIMALS)
-        self.last = NumberField("Last second of the selected stretch", "s", 0.0, 0.0, 0.1, _DECIMALS)
+        self.first = PlainNumber("First second of the selected stretch", "s", 0.0, 0.0, 0.1)
+        self.last = PlainNumber("Last second of the selected stretch", "s", 0.0, 0.0, 0.1)
         self.kind = kind_field()
+        self.kind.setCurrentIndex(-1)
         self.take_view = button(
             "Select the part in view", self._select_view, tooltip="Then change its ends below, if need be"
         )
@@ -226,31 +231,20 @@ class BadStretchesCard(Card):
                     item.setFlags(item.flags() & ~Qt.ItemFlag.ItemIsEditable)
                 item.setToolTip(f"{texts[0]} to {texts[1]}, {length}: {stretch.kind or 'no reason given'}")
                 self.table.setItem(place, column, item)
-        self.fit_rows()
-
-    def fit_rows(self) -> None:
-        """Make rows as high as the text wants, and the list as high as a few of them."""
-        height = self.table.fontMetrics().height() + 8
-        self.table.verticalHeader().setDefaultSectionSize(height)
-        shown = min(max(2, len(self._rows)), _ROWS_SHOWN)
-        self.table.setFixedHeight(shown * height + self.table.horizontalHeader().sizeHint().height() + 6)
+        self.table.fit()
 
     # What is done
 
     def mark_selected(self) -> None:
         """Mark the selected stretch bad, for the reason shown."""
-        stretch = self.bench.session.selected.stretch
-        if stretch is None:
-            return
-        kind = self.kind.currentText().strip()
-        self._edit("Mark a stretch bad", with_stretch(self.bench.session.marks, BadStretch(*stretch, kind)))
+        MarkActs(self.bench).mark_stretch(self.kind.currentText().strip())
 
     def remove(self) -> None:
         """Say that the chosen stretch is good."""
         place = self._place()
         if place >= 0:
             kept = [one for one in self._rows if one is not self._rows[place]]
-            self._edit("A stretch is good again", with_stretches(self.bench.session.marks, kept))
+            self._edit("Bad stretch removed", kept)
 
     def jump(self) -> None:
         """Bring the chosen stretch into view."""
@@ -261,20 +255,9 @@ class BadStretchesCard(Card):
         at = (stretch.start / facts.rate_hz, stretch.stop / facts.rate_hz)
         session.set_view(view_around(session.view, *at, facts.duration_s))
 
-    def ask_kind(self) -> None:
-        """Put the hand on the reason: for the action that marks a stretch."""
-        self.kind.setFocus(Qt.FocusReason.OtherFocusReason)
-        edit = self.kind.lineEdit()
-        if edit is not None:
-            edit.selectAll()
-
-    def _edit(self, label: str, marks: Marks) -> None:
-        try:
-            self.bench.session.edit_marks(label, marks)
-        except MarksError as error:
-            self.bench.tell(error)
-            self._rows = ()
-            self.show_marks()
+    def _edit(self, label: str, stretches: list[BadStretch]) -> None:
+        session = self.bench.session
+        session.edit_marks(label, replace(session.marks, bad_stretches=tuple(stretches)))
 
     def _place(self) -> int:
         chosen = self.table.selectionModel().selectedRows()
@@ -294,8 +277,8 @@ class BadStretchesCard(Card):
         stretch = self._rows[item.row()]
         kind = item.text().strip()
         if item.column() == _KIND and kind != stretch.kind:
-            marks = with_stretch(self.bench.session.marks, replace(stretch, kind=kind))
-            self._edit("Why a stretch is bad", marks)
+            edited = replace(stretch, kind=kind)
+            self._edit("Why a stretch is bad", [edited if one is stretch else one for one in self._rows])
 
     def _select_view(self) -> None:
         session = self.bench.session

@@ -98,23 +98,6 @@ def channel_rows(facts: RecordingFacts, plan: Plan | None, marks: Marks) -> tupl
     )
 
 
-def with_bad(marks: Marks, names: Iterable[str], *, bad: bool) -> Marks:
-    """Mark channels bad in this recording, or take that back.
-
-    Parameters
-    ----------
-    marks : Marks
-        As they are.
-    names : iterable of str
-        Which channels.
-    bad : bool
-        What they are to be.
-    """
-    chosen = dict.fromkeys(names)
-    kept = tuple(name for name in marks.bad if name not in chosen)
-    return replace(marks, bad=(*kept, *chosen) if bad else kept)
-
-
 def with_type(marks: Marks, row: ChannelRow, kind: ChannelType) -> Marks:
     """Give a channel a type; that of the file needs no mark.
 

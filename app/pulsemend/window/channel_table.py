@@ -17,13 +17,12 @@ from PySide6.QtCore import (
     QModelIndex,
     QPersistentModelIndex,
     QRectF,
-    QSize,
     QSortFilterProxyModel,
     Qt,
     QTimer,
     Signal,
 )
-from PySide6.QtGui import QColor, QKeyEvent, QMouseEvent, QPainter, QPen
+from PySide6.QtGui import QColor, QFont, QKeyEvent, QMouseEvent, QPainter, QPen
 from PySide6.QtWidgets import (
     QAbstractItemView,
     QComboBox,
@@ -40,6 +39,7 @@ from pulsemend.window.channel_rows import TYPE_WORDS, ChannelRow, Condition, Pla
 from pulsemend.window.theme import Theme
 
 Index = QModelIndex | QPersistentModelIndex
+_ROWS_SEEN = 8
 _NOWHERE = QModelIndex()
 _ROW = Qt.ItemDataRole.UserRole
 
@@ -126,6 +126,10 @@ class ChannelModel(QAbstractTableModel):
             return _text(row, column)
         if role == Qt.ItemDataRole.EditRole and column is Column.TYPE:
             return row.type
+        if role == Qt.ItemDataRole.FontRole and column is Column.NAME and row.is_bad:
+            font = QFont()
+            font.setStrikeOut(True)
+            return font
         if role == Qt.ItemDataRole.ToolTipRole:
             return _tip(row, column)
         if role == Qt.ItemDataRole.AccessibleTextRole:
@@ -202,11 +206,6 @@ class BadDelegate(QStyledItemDelegate):
             painter.drawText(beside, Qt.AlignmentFlag.AlignLeft | Qt.AlignmentFlag.AlignVCenter, IN_PLAN)
         painter.restore()
 
-    def sizeHint(self, option: QStyleOptionViewItem, _index: Index) -> QSize:
-        """Room for the square and the word beside it."""
-        metrics = option.fontMetrics
-        return QSize(metrics.ascent() + metrics.horizontalAdvance(IN_PLAN) + 14, metrics.height() + 8)
-
     def editorEvent(
         self, _event: QEvent, _model: QAbstractItemModel, _option: QStyleOptionViewItem, _index: Index
     ) -> bool:
@@ -279,7 +278,7 @@ class ChannelTable(QTableView):
         self.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
         self.verticalHeader().hide()
         header = self.horizontalHeader()
-        header.setSectionResizeMode(QHeaderView.ResizeMode.ResizeToContents)
+        header.setSectionResizeMode(QHeaderView.ResizeMode.Fixed)
         header.setSectionResizeMode(Column.NAME, QHeaderView.ResizeMode.Stretch)
         header.setHighlightSections(False)
         header.setSortIndicatorClearable(True)
@@ -312,13 +311,24 @@ class ChannelTable(QTableView):
         self._show_selection()
 
     def fit_rows(self) -> None:
-        """Make rows as high as the text wants."""
-        self.verticalHeader().setDefaultSectionSize(self.fontMetrics().height() + 8)
+        """Make rows as high and columns as wide as the text wants."""
+        metrics, header = self.fontMetrics(), self.horizontalHeader()
+        self.verticalHeader().setMinimumSectionSize(1)
+        self.verticalHeader().setDefaultSectionSize(metrics.height() + 8)
+        self.setMinimumHeight(_ROWS_SEEN * (metrics.height() + 8))
+        header.resizeSection(Column.BAD, metrics.ascent() + metrics.horizontalAdvance(IN_PLAN) + 18)
+        header.resizeSection(Column.TYPE, metrics.horizontalAdvance(TYPE_WORDS[ChannelType.TRIGGER]) + 18)
+        header.resizeSection(Column.POSITION, metrics.horizontalAdvance(_TITLES[Column.POSITION]) + 18)
+
+    def changeEvent(self, event: QEvent) -> None:
+        """Follow the size of the text."""
+        super().changeEvent(event)
+        if event.type() in (QEvent.Type.FontChange, QEvent.Type.StyleChange):
+            self.fit_rows()
 
     def set_theme(self, theme: Theme) -> None:
         """Take other colours."""
         self._toggles.theme = theme
-        self.fit_rows()
         self.viewport().update()
 
     def mousePressEvent(self, event: QMouseEvent) -> None:

@@ -436,24 +436,32 @@ class HeadMap(QWidget):
         return font
 
     def _names_with_room(self) -> Iterator[tuple[str, QRectF]]:
-        """All names if all have room below their shapes; otherwise the picked and bad ones that have."""
+        """All names if all have room below their shapes; otherwise the picked and bad ones that have any."""
         metrics = QFontMetricsF(self._small_font())
         spots, half = self._layout.spots, self._layout.shape / 2
-        boxes = {}
-        for name, spot in spots.items():
-            width = metrics.horizontalAdvance(name)
-            boxes[name] = QRectF(spot.x() - width / 2, spot.y() + half, width, metrics.capHeight() + 3)
+        height = metrics.capHeight() + 3
+        sizes = {name: metrics.horizontalAdvance(name) for name in spots}
+        boxes = {
+            name: QRectF(spot.x() - sizes[name] / 2, spot.y() + half, sizes[name], height)
+            for name, spot in spots.items()
+        }
         shapes = [QRectF(s.x() - half, s.y() - half, 2 * half, 2 * half) for s in spots.values()]
         if not _any_touch([*boxes.values(), *shapes]):
             yield from boxes.items()
             return
         taken: list[QRectF] = []
         for name in sorted(spots, key=lambda one: one not in self._picked):
-            box = boxes[name]
-            wanted = name in self._picked or self._channels[name].bad
-            if wanted and not any(box.intersects(other) for other in (*taken, *shapes)):
-                taken.append(box)
-                yield name, box
+            if name not in self._picked and not self._channels[name].bad:
+                continue
+            below, away = boxes[name], half + 5
+            above = below.translated(0, -height - 2 * half)
+            right = below.translated(sizes[name] / 2 + away, -(height / 2 + half))
+            left = below.translated(-sizes[name] / 2 - away, -(height / 2 + half))
+            for box in (below, above, right, left):
+                if not any(box.intersects(other) for other in (*taken, *shapes)):
+                    taken.append(box)
+                    yield name, box
+                    break
 
 
 def _any_touch(boxes: list[QRectF]) -> bool:

@@ -234,7 +234,7 @@ class SpectrumPlot(QWidget):
         metrics = QFontMetricsF(self.font())
         left = max(metrics.horizontalAdvance("0.001"), metrics.horizontalAdvance("100")) + 10
         right = self._legend_width() + 10
-        area = QRectF(self.rect()).adjusted(left, metrics.height() + 4, -right, -metrics.height() - 6)
+        area = QRectF(self.rect()).adjusted(left, metrics.height() + 9, -right, -metrics.height() - 6)
         low, high = self._range()
         return Axes(area, float(shown.frequency_hz[0]), float(shown.frequency_hz[-1]), low, high)
 
@@ -248,7 +248,8 @@ class SpectrumPlot(QWidget):
             return 0.1, 1.0
         positive = [float(np.min(values[values > 0])) for values in every if np.any(values > 0)]
         top = _round_up(highest)
-        return max(1 / _round_up(1 / min(positive)), top / 10**_MOST_DECADES), top
+        low = max(1 / _round_up(1 / min(positive)), top / 10**_MOST_DECADES)
+        return min(low, 0.1 * top), top
 
     def _lines(self) -> Iterator[tuple[str, Values]]:
         if self._shown.spread is not None:
@@ -302,7 +303,7 @@ class SpectrumPlot(QWidget):
         thin = QPen(QColor(theme.line), 1.0)
         x_free, y_free = -math.inf, math.inf
         for value in _round_numbers(axes.low, axes.high):
-            y = float(axes.y(value))
+            y = _crisp(float(axes.y(value)))
             painter.setPen(thin)
             painter.drawLine(QPointF(area.left(), y), QPointF(area.right(), y))
             if y + metrics.height() <= y_free:
@@ -314,7 +315,7 @@ class SpectrumPlot(QWidget):
                 y_free = y
         unit_left = area.right() - metrics.horizontalAdvance(" Hz")
         for hz in _round_numbers(axes.low_hz, axes.high_hz):
-            x = float(axes.x(hz))
+            x = _crisp(float(axes.x(hz)))
             painter.setPen(thin)
             painter.drawLine(QPointF(x, area.top()), QPointF(x, area.bottom()))
             half = metrics.horizontalAdvance(number(hz)) / 2
@@ -335,7 +336,7 @@ class SpectrumPlot(QWidget):
             return
         painter.setPen(QPen(QColor(self._theme.attention), 1.0, Qt.PenStyle.DashLine))
         for multiple in range(1, int(axes.high_hz / line_hz) + 1):
-            x = float(axes.x(multiple * line_hz))
+            x = _crisp(float(axes.x(multiple * line_hz)))
             painter.drawLine(QPointF(x, area.top()), QPointF(x, area.bottom()))
         if axes.low_hz <= line_hz <= axes.high_hz:
             text = f"line {line_hz:g} Hz"
@@ -361,7 +362,7 @@ class SpectrumPlot(QWidget):
     def _paint_cursor(self, painter: QPainter, axes: Axes) -> None:
         if self._at is None:
             return
-        x = float(axes.x(float(self._shown.frequency_hz[self._at])))
+        x = _crisp(float(axes.x(float(self._shown.frequency_hz[self._at]))))
         painter.setPen(QPen(QColor(self._theme.text), 1.0))
         painter.drawLine(QPointF(x, axes.area.top()), QPointF(x, axes.area.bottom()))
         painter.setBrush(QColor(self._theme.text))
@@ -436,6 +437,11 @@ class SpectrumPlot(QWidget):
         if _DASHES[place % len(_DASHES)]:
             pen.setDashPattern(_DASHES[place % len(_DASHES)])
         return pen
+
+
+def _crisp(pixel: float) -> float:
+    """Middle of a pixel, where a line of one pixel is not smeared over two."""
+    return math.floor(pixel) + 0.5
 
 
 def _path(axes: Axes, hz: Values, values: Values) -> QPainterPath:

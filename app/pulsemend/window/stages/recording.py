@@ -7,7 +7,6 @@ from dataclasses import replace
 import numpy as np
 from PySide6.QtCore import Qt
 from PySide6.QtWidgets import (
-    QComboBox,
     QHBoxLayout,
     QLineEdit,
     QSizePolicy,
@@ -17,8 +16,6 @@ from PySide6.QtWidgets import (
     QWidget,
 )
 
-from pulsemend.errors import MarksError
-from pulsemend.model.marks import Marks
 from pulsemend.model.recording import RecordingFacts
 from pulsemend.model.vocabulary import ChannelType
 from pulsemend.session.changed import Changed
@@ -33,12 +30,13 @@ from pulsemend.window.channel_rows import (
     channel_rows,
     counts_of_types,
     listed,
-    with_bad,
     with_type,
 )
 from pulsemend.window.channel_table import WHY_PLAN, ChannelTable, Column
 from pulsemend.window.elided import ElidedLabel
+from pulsemend.window.fields import Chooser
 from pulsemend.window.head_map import HeadMap, MapChannel
+from pulsemend.window.mark_acts import MarkActs
 from pulsemend.window.parts import Card, EmptyState, scrolling_column
 from pulsemend.window.spectrum_card import SpectrumCard
 from pulsemend.window.stages.base import StagePage
@@ -47,14 +45,14 @@ from pulsemend.window.traces.clock import clock, duration, number
 from pulsemend.window.workbench import Workbench
 
 OPEN_FIRST = "No recording is open. Open one with Ctrl+O, or drop its file onto this window."
+_AS_IN_FILE = "-1"
 _ORDERS = (
-    ("as in the file", -1),
-    ("bad ones first", Column.BAD),
-    ("by name", Column.NAME),
-    ("by type", Column.TYPE),
-    ("by position", Column.POSITION),
+    (_AS_IN_FILE, "as in the file"),
+    (str(Column.BAD.value), "bad ones first"),
+    (str(Column.NAME.value), "by name"),
+    (str(Column.TYPE.value), "by type"),
+    (str(Column.POSITION.value), "by position"),
 )
-_ROWS_SEEN = 8
 
 
 class FactsCard(Card):
@@ -108,10 +106,8 @@ class ChannelsCard(Card):
         self.filter.setPlaceholderText("Show only, e.g. eog bad")
         self.filter.setAccessibleName("Show only channels with these words")
         self.filter.setClearButtonEnabled(True)
-        self.order = QComboBox()
-        self.order.setAccessibleName("Order of the channels")
-        for text, column in _ORDERS:
-            self.order.addItem(text, int(column))
+        self.order = Chooser("Order of the channels")
+        self.order.show_choice(_ORDERS, _AS_IN_FILE)
         row = QHBoxLayout()
         row.addWidget(self.filter, 1)
         row.addWidget(self.order)
@@ -123,33 +119,30 @@ class ChannelsCard(Card):
         self.in_plan = self.add_note()
         self.keys = self.add_note("Space: bad or good. Return: type. Rows chosen here are picked everywhere.")
         self.filter.textChanged.connect(self._filter)
-        self.order.activated.connect(self._order)
+        self.order.chosen.connect(self._order)
         self.table.horizontalHeader().sortIndicatorChanged.connect(self._ordered)
-        self.fit_rows()
 
     def show_rows(self, rows: tuple[ChannelRow, ...]) -> None:
         """Show the channels and count the bad ones."""
         self.table.show_rows(rows)
         ours = sum(row.condition is Condition.BAD for row in rows)
         theirs = [row.name for row in rows if row.condition is Condition.BAD_IN_PLAN]
-        self.note.setText(f"{ours} bad here" + (f", {len(theirs)} bad by the plan" if theirs else ""))
+        counts = [f"{ours} bad here"] if ours else []
+        counts += [f"{len(theirs)} bad by the plan"] if theirs else []
+        self.note.setText(", ".join(counts) or "none bad")
         self.in_plan.setText(f"{listed(theirs)}: {WHY_PLAN[0].lower()}{WHY_PLAN[1:]}" if theirs else "")
         self.in_plan.setVisible(bool(theirs))
         self._filter(self.filter.text())
-
-    def fit_rows(self) -> None:
-        """Keep a few rows in sight whatever the text size."""
-        self.table.setMinimumHeight(_ROWS_SEEN * self.table.verticalHeader().defaultSectionSize())
 
     def _filter(self, text: str) -> None:
         self.table.show_matching(text)
         self.none.setVisible(self.table.order.rowCount() == 0)
 
-    def _order(self) -> None:
-        self.table.sortByColumn(self.order.currentData(), Qt.SortOrder.AscendingOrder)
+    def _order(self, column: str) -> None:
+        self.table.sortByColumn(int(column), Qt.SortOrder.AscendingOrder)
 
     def _ordered(self, column: int) -> None:
-        self.order.setCurrentIndex(max(0, self.order.findData(column)))
+        self.order.show_choice(_ORDERS, str(column))
 
 
 class RecordingStage(StagePage):
@@ -202,16 +195,10 @@ class RecordingStage(StagePage):
         self.spectrum.set_open(False)
 
     def set_theme(self, theme: Theme) -> None:
-        """Paint in other colours, and fit rows to another text size."""
+        """Paint in other colours."""
         self.map.set_theme(theme)
         self.channels.table.set_theme(theme)
         self.spectrum.plot.set_theme(theme)
-        self.channels.fit_rows()
-        self.stretches.fit_rows()
-
-    def ask_why_bad(self) -> None:
-        """Put the hand on the reason for the selected stretch: what the action for it does."""
-        self.stretches.ask_kind()
 
     # Putting it together
 
@@ -299,19 +286,11 @@ class RecordingStage(StagePage):
         session.set_view(replace(session.view, picked=picked))
 
     def _mark_bad(self, names: tuple[str, ...], bad: bool) -> None:
-        what = names[0] if len(names) == 1 else f"{len(names)} channels"
-        label = f"Mark {what} bad" if bad else f"Mark {what} good"
-        self._edit(label, with_bad(self.bench.session.marks, names, bad=bad))
+        MarkActs(self.bench).set_bad(frozenset(names), bad=bad)
 
     def _give_type(self, row: ChannelRow, kind: ChannelType) -> None:
-        label = f"{row.name} records {TYPE_WORDS[kind]}"
-        self._edit(label, with_type(self.bench.session.marks, row, kind))
-
-    def _edit(self, label: str, marks: Marks) -> None:
-        try:
-            self.bench.session.edit_marks(label, marks)
-        except MarksError as error:
-            self.bench.tell(error)
+        session = self.bench.session
+        session.edit_marks(f"{row.name} records {TYPE_WORDS[kind]}", with_type(session.marks, row, kind))
 
     def _say_why(self) -> None:
         self.bench.session.say(Message(Level.NOTE, WHY_PLAN))
