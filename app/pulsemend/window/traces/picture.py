@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 from PySide6.QtGui import QColor, QImage
 
+from pulsemend.engine.columns import Grid
 from pulsemend.session.view import Shown, View
 from pulsemend.window.theme import Theme
 from pulsemend.window.traces.geometry import Rows, TimeScale
@@ -49,8 +50,33 @@ class Drawn:
     complete: bool
 
 
+@dataclass(frozen=True)
+class _Rows:
+    """The rows of a scene in view, and what must stay the same for pixels to be used again."""
+
+    visible: tuple[int, ...]
+    places: tuple[int, ...]
+    inks: tuple[int, ...]
+    scene: Scene
+    version: int
+
+    def fits(self, other: _Rows) -> bool:
+        """Whether the other's pixels are these, but for a move in time."""
+        mine, theirs = self.scene, other.scene
+        return (
+            (self.places, self.inks, self.version) == (other.places, other.inks, other.version)
+            and mine.rows == theirs.rows
+            and replace(mine.scale, grid=theirs.scale.grid) == theirs.scale
+            and replace(mine.scale.grid, first=theirs.scale.grid.first) == theirs.scale.grid
+            and (mine.view.row_uv, mine.view.shown) == (theirs.view.row_uv, theirs.view.shown)
+        )
+
+
 class TracePicture:
     """Draws the traces of one source, and remembers around which value each row is drawn.
+
+    A picture is a function of its columns alone, counted from the recording's start: when the view has moved
+    by less than half its width, what was drawn is moved along and only the new columns are drawn.
 
     Parameters
     ----------
@@ -60,6 +86,7 @@ class TracePicture:
     def __init__(self, source: TraceSource) -> None:
         self._source = source
         self._raster = Raster(1, 1)
+        self._last: _Rows | None = None
         self._places = {channel.name: place for place, channel in enumerate(source.facts.channels)}
         self._centres = np.full(len(self._places), np.nan)
 
@@ -70,62 +97,122 @@ class TracePicture:
 
     def draw(self, scene: Scene) -> Drawn:
         """Draw the traces in view."""
+        grid = scene.scale.grid
+        rows = self._rows(scene)
+        last, self._last = self._last, None
+        if last is not None and rows.fits(last):
+            moved = grid.first - last.scene.scale.grid.first
+            if 0 < abs(moved) < grid.count // 2 and self._move_on(rows, moved):
+                self._last = rows
+                return Drawn(self._image(scene.theme), Detail.EXACT, complete=True)
         height = max(1, round(scene.rows.area * scene.scale.ratio))
-        if self._raster.pixels.shape != (height, scene.scale.grid.count):
-            self._raster = Raster(scene.scale.grid.count, height)
+        if self._raster.pixels.shape != (height, grid.count):
+            self._raster = Raster(grid.count, height)
         self._raster.clear()
-        shown = [name for name in scene.view.rows if name in self._places]
-        visible = [row for row in scene.rows.visible if row < len(shown)]
-        places = np.array([self._places[shown[row]] for row in visible], dtype=np.intp)
-        if not places.size:
+        if not rows.places:
             return Drawn(self._image(scene.theme), Detail.EXACT, complete=True)
-        inks = np.array([_ink(shown[row], scene) for row in visible])
-        both = scene.view.shown is Shown.BOTH
-        kind = Shown.REPAIRED if both else scene.view.shown
-        front = self._source.columns(kind, scene.scale.grid, places)
-        self._centre(front, places, scene)
-        if both:
-            behind = self._source.columns(Shown.RECORDED, scene.scale.grid, places)
-            self._ink(behind, places, visible, scene, np.full(len(visible), _BEHIND))
-        self._ink(front, places, visible, scene, inks)
+        passes = self._columns(rows, grid)
+        front = passes[-1]
+        self._centre(front, rows)
+        self._draw_passes(self._raster, passes, rows, grid)
+        # Seen again after a move, what is not final would stay beside what is.
+        if front.detail is Detail.EXACT and front.complete:
+            self._last = rows
         return Drawn(self._image(scene.theme), front.detail, front.complete)
 
-    def _centre(self, columns: Columns, places: NDArray[np.intp], scene: Scene) -> None:
-        """Move rows whose trace has wandered off by more than half a row: small pans move none."""
-        if not columns.lowest.shape[1]:
-            return
-        step = max(1, columns.lowest.shape[1] // _MIDDLES)
-        middles = np.median(0.5 * (columns.lowest[:, ::step] + columns.highest[:, ::step]), axis=1)
-        off = np.abs(middles - self._centres[places]) * self._source.uv_per_unit[places]
-        wandered = ~(off <= 0.5 * scene.view.row_uv)
-        self._centres[places[wandered]] = middles[wandered]
+    def _rows(self, scene: Scene) -> _Rows:
+        shown = [name for name in scene.view.rows if name in self._places]
+        visible = tuple(row for row in scene.rows.visible if row < len(shown))
+        names = [shown[row] for row in visible]
+        return _Rows(
+            visible,
+            tuple(self._places[name] for name in names),
+            tuple(_ink(name, scene) for name in names),
+            scene,
+            self._source.version,
+        )
 
-    def _ink(
-        self,
-        columns: Columns,
-        places: NDArray[np.intp],
-        visible: list[int],
-        scene: Scene,
-        inks: NDArray[np.int_],
-    ) -> None:
+    def _columns(self, rows: _Rows, grid: Grid) -> list[Columns]:
+        """Columns of a grid and one more on either side, to join with; the signal behind first."""
+        wider = Grid(grid.first - 1, grid.count + 2, grid.per_column)
+        places = np.array(rows.places, dtype=np.intp)
+        shown = rows.scene.view.shown
+        kinds = (Shown.RECORDED, Shown.REPAIRED) if shown is Shown.BOTH else (shown,)
+        return [self._source.columns(kind, wider, places) for kind in kinds]
+
+    def _move_on(self, rows: _Rows, moved: int) -> bool:
+        """Move the pixels and draw the new columns; False if those are not final or leave their rows."""
+        grid = rows.scene.scale.grid
+        first = grid.first + grid.count - moved if moved > 0 else grid.first
+        strip = Grid(first, abs(moved), grid.per_column)
+        passes = self._columns(rows, strip)
+        if (
+            any(columns.detail is not Detail.EXACT for columns in passes)
+            or self._wandered(passes[-1], rows).any()
+        ):
+            return False
+        raster = Raster(abs(moved), len(self._raster.pixels))
+        self._draw_passes(raster, passes, rows, strip)
+        pixels = self._raster.pixels
+        if moved > 0:
+            pixels[:, :-moved] = pixels[:, moved:]
+            pixels[:, -moved:] = raster.pixels
+        else:
+            pixels[:, -moved:] = pixels[:, :moved]
+            pixels[:, :-moved] = raster.pixels
+        return True
+
+    def _middles(self, columns: Columns) -> NDArray[np.float32]:
+        step = max(1, columns.lowest.shape[1] // _MIDDLES)
+        middles: NDArray[np.float32] = np.median(
+            0.5 * (columns.lowest[:, ::step] + columns.highest[:, ::step]), axis=1
+        )
+        return middles
+
+    def _wandered(self, columns: Columns, rows: _Rows) -> NDArray[np.bool_]:
+        """Rows whose trace is off their middle by more than half a row."""
+        places = np.array(rows.places, dtype=np.intp)
+        if not columns.lowest.shape[1]:
+            return np.zeros(places.size, dtype=np.bool_)
+        off = np.abs((self._middles(columns) - self._centres[places]) * self._source.uv_per_unit[places])
+        # Written so that a row without a middle yet counts as well.
+        wandered: NDArray[np.bool_] = ~(off <= 0.5 * rows.scene.view.row_uv)
+        return wandered
+
+    def _centre(self, columns: Columns, rows: _Rows) -> None:
+        """Draw rows that have wandered around another value: small moves of the view change none."""
+        wandered = self._wandered(columns, rows)
+        if wandered.any():
+            places = np.array(rows.places, dtype=np.intp)
+            self._centres[places[wandered]] = self._middles(columns)[wandered]
+
+    def _draw_passes(self, raster: Raster, passes: list[Columns], rows: _Rows, grid: Grid) -> None:
+        for columns in passes[:-1]:
+            self._ink(raster, columns, rows, grid, np.full(len(rows.inks), _BEHIND))
+        self._ink(raster, passes[-1], rows, grid, np.array(rows.inks))
+
+    def _ink(self, raster: Raster, columns: Columns, rows: _Rows, grid: Grid, inks: NDArray[np.int_]) -> None:
         """Draw columns of channels in one pass per ink, the ones to be seen best last."""
+        scene, places = rows.scene, np.array(rows.places, dtype=np.intp)
         ratio = scene.scale.ratio
         per_unit = -self._source.uv_per_unit[places] / scene.view.row_uv * scene.rows.row_height * ratio
-        middle = (np.array([scene.rows.middle(row) for row in visible]) - scene.rows.top) * ratio
+        middle = (np.array([scene.rows.middle(row) for row in rows.visible]) - scene.rows.top) * ratio
         zero = (middle - self._centres[places] * per_unit).astype(np.float32)[:, None]
         factor = per_unit.astype(np.float32)[:, None]
-        one_end, other_end = columns.lowest * factor + zero, columns.highest * factor + zero
+        bottom, top = columns.lowest * factor + zero, columns.highest * factor + zero
         # A negative resolution turns a channel upside down.
         flipped = per_unit > 0
-        top, bottom = other_end, one_end
-        top[flipped], bottom[flipped] = one_end[flipped], other_end[flipped]
+        if flipped.any():
+            top[flipped], bottom[flipped] = bottom[flipped], top[flipped]
         if not columns.lines:
             top, bottom = joined(top, bottom)
-        column = columns.first - scene.scale.grid.first
+        first = max(columns.first, grid.first)
+        wanted = slice(first - columns.first, grid.first + grid.count - columns.first)
+        top, bottom = top[:, wanted], bottom[:, wanted]
         for ink in np.unique(inks):
             of_ink = inks == ink
             ends: tuple[Spans, Spans] = (top, bottom) if of_ink.all() else (top[of_ink], bottom[of_ink])
-            self._raster.draw(*ends, int(ink), column, line=max(1.0, ratio))
+            raster.draw(*ends, int(ink), first - grid.first, line=max(1.0, ratio))
 
     def _image(self, theme: Theme) -> QImage:
         height, width = self._raster.pixels.shape

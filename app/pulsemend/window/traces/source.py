@@ -106,6 +106,8 @@ class TraceSource:
         self._patch: tuple[Patch, int] | None = None
         self._asked: tuple[int, int, int] | None = None
         self._revision = 0
+        self.version = 0
+        """Rises whenever the same columns may hold other numbers."""
         self.facts = recording.facts
         scale_v = np.array([channel.scale_v for channel in self.facts.channels], dtype=np.float64)
         self.uv_per_unit: NDArray[np.float64] = v_to_uv(scale_v)
@@ -122,16 +124,19 @@ class TraceSource:
     def set_pyramid(self, pyramid: Pyramid) -> None:
         """Draw wide views exactly from now on."""
         self._pyramid = pyramid
+        self.version += 1
 
     def set_revision(self, revision: int) -> None:
         """Take note that plan or marks changed; what was repaired before is shown until it is replaced."""
         self._revision = revision
+        self.version += 1
 
     def set_repaired(self, stretch: RepairedStretch) -> bool:
         """Take a stretch a worker repaired; False if it is stale and was thrown away."""
         if stretch.revision != self._revision:
             return False
         self._repaired = stretch
+        self.version += 1
         return True
 
     def set_repaired_overview(self, patch: Patch, revision: int) -> bool:
@@ -139,6 +144,7 @@ class TraceSource:
         if revision != self._revision:
             return False
         self._patch = (patch, revision)
+        self.version += 1
         return True
 
     def columns(self, kind: Shown, grid: Grid, rows: NDArray[np.intp]) -> Columns:
@@ -236,19 +242,27 @@ class TraceSource:
         self, kind: Shown, start: int, stop: int, *, ask: bool = True
     ) -> tuple[NDArray[np.float32], Detail]:
         """Read stored numbers of all channels, shape (stop - start, n_channels)."""
-        stored = np.empty((stop - start, len(self.facts.channels)), dtype=np.float32)
-        self._recording.read(start, stop, stored)
         if kind is not Shown.REPAIRED or self._request is None:
-            return stored, Detail.EXACT
+            return self._recorded(start, stop), Detail.EXACT
         held = self._repaired
         covered = held is not None and held.start <= start and stop <= held.stop
         current = held is not None and held.revision == self._revision
         if ask and not (covered and current):
             self._ask(start, stop)
         if held is None or not covered:
-            return stored, Detail.NOT_REPAIRED
-        stored[:, held.channels] = held.samples[start - held.start : stop - held.start]
-        return stored, Detail.EXACT if current else Detail.OLD_REPAIR
+            return self._recorded(start, stop), Detail.NOT_REPAIRED
+        detail = Detail.EXACT if current else Detail.OLD_REPAIR
+        repaired = held.samples[start - held.start : stop - held.start]
+        if np.array_equal(held.channels, np.arange(len(self.facts.channels))):
+            return repaired, detail
+        stored = self._recorded(start, stop)
+        stored[:, held.channels] = repaired
+        return stored, detail
+
+    def _recorded(self, start: int, stop: int) -> NDArray[np.float32]:
+        stored = np.empty((stop - start, len(self.facts.channels)), dtype=np.float32)
+        self._recording.read(start, stop, stored)
+        return stored
 
     def _ask(self, start: int, stop: int) -> None:
         """Ask for the stretch and as much again on either side, unless that is on its way."""
