@@ -24,8 +24,8 @@ from pulsemend.signal.gaps import merge_spans, window_to_samples
 
 WINDOW_S = 2.0
 LEAST_WINDOW_S = 0.1
-MOST_WINDOWS = 40
-"""Pulse-free signal is sampled in this many windows, spread over the recording: 80 s tell a channel's
+MOST_WINDOWS = 30
+"""Pulse-free signal is sampled in this many windows, spread over the recording: a minute tells a channel's
 offset and autocovariance; reading hours more would not change a fill."""
 
 AFTER_PULSE_S = 0.1
