@@ -81,9 +81,9 @@ class StatusLine(QWidget):
         left = "" if seconds_left is None or seconds_left < 1 else f", about {round(seconds_left)} s left"
         share = f" {min(progress.done / progress.total, 1.0):.0%}" if progress.total > 0 else ""
         self.work.setText(f"{progress.stage}{share}{left}")
-        self.bar.setRange(0, 1000 if progress.total > 0 else 0)
+        self.bar.setRange(0, 500 if progress.total > 0 else 0)
         if progress.total > 0:
-            self.bar.setValue(round(1000 * min(progress.done / progress.total, 1.0)))
+            self.bar.setValue(round(500 * min(progress.done / progress.total, 1.0)))
         for widget in (self.work, self.bar, self.cancel):
             widget.setVisible(True)
 

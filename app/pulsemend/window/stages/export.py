@@ -439,9 +439,9 @@ class ExportStage(StagePage):
         if job is None:
             return
         self.run_words.setText(run_words(job, progress, seconds_left))
-        self.bar.setRange(0, 1000 if progress.total > 0 else 0)
+        self.bar.setRange(0, 500 if progress.total > 0 else 0)
         if progress.total > 0:
-            self.bar.setValue(round(1000 * min(progress.done / progress.total, 1.0)))
+            self.bar.setValue(round(500 * min(progress.done / progress.total, 1.0)))
 
     def _show_run(self) -> None:
         job = self.runner.job
