@@ -142,7 +142,8 @@ class ChannelModel(QAbstractTableModel):
         if role == Qt.ItemDataRole.CheckStateRole:
             self.bad_asked.emit((row.name,), Qt.CheckState(value) == Qt.CheckState.Checked)
         elif role == Qt.ItemDataRole.EditRole:
-            self.type_asked.emit(row, value)
+            # On its way through Qt a word of ours became a plain text.
+            self.type_asked.emit(row, ChannelType(value))
         else:
             return False
         return True
@@ -235,7 +236,7 @@ class TypeDelegate(QStyledItemDelegate):
     def setModelData(self, editor: QWidget, model: QAbstractItemModel, index: Index) -> None:
         """Ask for the type chosen."""
         if isinstance(editor, QComboBox):
-            model.setData(index, ChannelType(editor.currentData()), Qt.ItemDataRole.EditRole)
+            model.setData(index, editor.currentData(), Qt.ItemDataRole.EditRole)
 
     def _chosen(self, box: QComboBox) -> None:
         self.commitData.emit(box)
