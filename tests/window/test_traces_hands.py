@@ -11,10 +11,11 @@ import pytest
 from PySide6.QtCore import QEvent, QPoint, QPointF, Qt
 from PySide6.QtGui import QColor, QHelpEvent, QImage, QNativeGestureEvent, QPointingDevice
 from PySide6.QtTest import QSignalSpy, QTest
-from PySide6.QtWidgets import QApplication, QToolTip
+from PySide6.QtWidgets import QApplication, QToolTip, QWidget
 from pytestqt.qtbot import QtBot
 
 from pulsemend.session.view import Shown, View
+from pulsemend.window.ribbon import Ribbon
 from pulsemend.window.theme import DARK, LIGHT
 from pulsemend.window.traces.geometry import HEADER
 from pulsemend.window.traces.model import Measure, Overlays, Reading
@@ -471,3 +472,46 @@ def test_the_widget_leaves_its_model_alone_when_it_is_gone(traces: Traces, qtbot
     other.deleteLater()
     qtbot.waitUntil(lambda: len(traces.model.listeners) == 1)
     traces.model.set_view(replace(traces.view, start_s=9.0))
+
+
+def test_three_hundred_random_acts_leave_everything_whole(traces: Traces, qtbot: QtBot) -> None:
+    rng = np.random.default_rng(17)
+    ribbon = Ribbon(traces.model, traces.source, LIGHT)
+    qtbot.addWidget(ribbon)
+    ribbon.resize(700, ribbon.sizeHint().height())
+    ribbon.set_overlays(overlays())
+    traces.widget.set_pulses_editable(editable=True)
+    keys = [
+        *(Key.Key_Left, Key.Key_Right, Key.Key_Up, Key.Key_Down, Key.Key_PageUp, Key.Key_PageDown),
+        *(Key.Key_Home, Key.Key_End, Key.Key_Return, Key.Key_Escape, Key.Key_Space),
+    ]
+    modifiers = [Mod.NoModifier, Mod.NoModifier, Mod.ControlModifier, Mod.ShiftModifier]
+    names = names_of(traces.recording)
+
+    def somewhere(widget: QWidget) -> QPoint:
+        return QPoint(int(rng.integers(widget.width())), int(rng.integers(widget.height())))
+
+    for _ in range(300):
+        widget = (traces.plot, traces.plot, traces.names, ribbon)[rng.integers(4)]
+        held = modifiers[rng.integers(4)]
+        act = rng.integers(6)
+        if act <= 1:
+            QTest.keyClick(widget, keys[rng.integers(len(keys))], held)
+        elif act == 2:
+            wheel(widget, somewhere(widget), QPoint(0, int(rng.integers(-4, 5)) * 60), modifiers=held)
+        elif act == 3:
+            QTest.mousePress(widget, Button.LeftButton, held, somewhere(widget))
+            move(widget, somewhere(widget), Button.LeftButton)
+            QTest.mouseRelease(widget, Button.LeftButton, held, somewhere(widget))
+        elif act == 4:
+            QTest.mouseClick(widget, Button.LeftButton, held, somewhere(widget))
+        else:
+            shown = list(Shown)[rng.integers(3)]
+            rows = tuple(rng.permutation(names)[: rng.integers(0, 9)].tolist())
+            traces.model.set_view(replace(traces.view, shown=shown, rows=rows))
+        traces.widget.repaint()
+        ribbon.repaint()
+        view = traces.view
+        assert view.start_s >= 0
+        assert view.start_s + view.width_s <= DURATION_S * (1 + 1e-9)
+        assert traces.plot.scale.grid.count == traces.plot.width()

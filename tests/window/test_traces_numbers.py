@@ -143,6 +143,16 @@ def test_the_repaired_signal_is_asked_for_and_shown_when_it_comes(of: ArrayRecor
     assert len(asked) == 2
 
 
+def test_a_repair_nobody_could_make_yet_is_asked_for_again(of: ArrayRecording) -> None:
+    asked: list[tuple[int, int]] = []
+    source = TraceSource(of, lambda start, stop: asked.append((start, stop)))
+    for _ in range(2):
+        source.columns(Shown.REPAIRED, Grid(1000, 200, 4.0), ALL)
+    source.set_revision(0)
+    source.columns(Shown.REPAIRED, Grid(1000, 200, 4.0), ALL)
+    assert asked == [(3200, 5600)] * 2
+
+
 def test_stale_repairs_are_thrown_away_and_old_ones_marked(of: ArrayRecording) -> None:
     asked: list[tuple[int, int]] = []
     source = TraceSource(of, lambda start, stop: asked.append((start, stop)))

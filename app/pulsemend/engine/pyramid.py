@@ -7,6 +7,7 @@ are counted from the recording's first sample and stored instant by instant: a v
 from __future__ import annotations
 
 import json
+import threading
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -31,7 +32,7 @@ _STAGE = "drawing the overview"
 
 
 class Pyramid:
-    """An open pyramid. One thread uses it; another opens it again.
+    """An open pyramid. Threads may share it: the window draws from it while a worker patches it.
 
     Parameters
     ----------
@@ -52,6 +53,7 @@ class Pyramid:
             self._file.close()
             raise
         self._shape = shape
+        self._reading = threading.Lock()
 
     @property
     def n_levels(self) -> int:
@@ -113,7 +115,8 @@ class Pyramid:
         DamagedRecording
             The file has become shorter.
         """
-        found = self._shape.read(self._file, level, start, stop)
+        with self._reading:
+            found = self._shape.read(self._file, level, start, stop)
         return found if patch is None else patch.laid_over(found, level, start)
 
     def close(self) -> None:

@@ -129,6 +129,8 @@ class TraceSource:
     def set_revision(self, revision: int) -> None:
         """Take note that plan or marks changed; what was repaired before is shown until it is replaced."""
         self._revision = revision
+        # Also for the same revision: what was asked for may not have been answerable then.
+        self._asked = None
         self.version += 1
 
     def set_repaired(self, stretch: RepairedStretch) -> bool:
