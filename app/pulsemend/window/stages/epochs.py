@@ -61,15 +61,10 @@ class EpochsStage(StagePage):
         self._counted: object = None
         self._build()
         session = bench.session
-        ends = [
-            session.subscribe(Changed.PLAN, self._show_plan),
-            session.subscribe(Changed.MARKS, lambda: self.table.show_marks(session.marks)),
-            session.subscribe(Changed.RECORDING, self._show_plan),
-        ]
-        bench.learned_changed.connect(self._show_learned)
-        bench.learning_changed.connect(self._show_learning)
-        self.settings.destroyed.connect(lambda: [end() for end in ends])
-        self.picture.destroyed.connect(self._let_go)
+        self.follow(self._show_plan, Changed.PLAN, Changed.RECORDING)
+        self.follow(lambda: self.table.show_marks(session.marks), Changed.MARKS)
+        self.hear(bench.learned_changed, self._show_learned)
+        self.hear(bench.learning_changed, self._show_learning)
         self._show_plan()
         self._show_learned()
 
@@ -126,10 +121,6 @@ class EpochsStage(StagePage):
         self.rules.move_wanted.connect(self._move)
         self.table.wanted.connect(self.go_to)
         self.table.marks_wanted.connect(self._edit_marks)
-
-    def _let_go(self) -> None:
-        self.bench.learned_changed.disconnect(self._show_learned)
-        self.bench.learning_changed.disconnect(self._show_learning)
 
     # Edits
 

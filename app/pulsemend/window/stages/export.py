@@ -54,16 +54,11 @@ class ExportStage(StagePage):
         self._chosen_folder: Path | None = None
         self._progress: tuple[Progress, float | None] | None = None
         self._build(children)
-        session = bench.session
-        ends = [
-            session.subscribe(Changed.PLAN, self._show_plan),
-            session.subscribe(Changed.RECORDING, self._show_recording),
-            session.subscribe(Changed.STAGE, self._show_written),
-            session.subscribe(Changed.HISTORY, self._show_problems),
-        ]
-        bench.learned_changed.connect(self._show_learned)
-        self.settings.destroyed.connect(lambda: [end() for end in ends])
-        self.picture.destroyed.connect(lambda: bench.learned_changed.disconnect(self._show_learned))
+        self.follow(self._show_plan, Changed.PLAN)
+        self.follow(self._show_recording, Changed.RECORDING)
+        self.follow(self._show_written, Changed.STAGE)
+        self.follow(self._show_problems, Changed.HISTORY)
+        self.hear(bench.learned_changed, self._show_learned)
         self._show_recording()
 
     def show_stage(self) -> None:

@@ -94,16 +94,10 @@ class PulsesStage(StagePage):
         self.picture.gap_moved.connect(self._move_gap)
         self.picture.gap_released.connect(self._release_gap)
         self.picture.wanted.connect(self._want)
-        session = bench.session
-        ends = [session.subscribe(kind, self._on_edit) for kind in (Changed.PLAN, Changed.MARKS)]
-        ends.append(session.subscribe(Changed.RECORDING, self._on_recording))
-        ends.append(session.subscribe(Changed.VIEW, self._on_view))
-        self.picture.destroyed.connect(lambda: [end() for end in ends])
-        # The timer dies with the picture, and takes the connection to the bench with it.
-        self._news = QTimer(self.picture)
-        self._news.setSingleShot(True)
-        self._news.timeout.connect(self._on_learned)
-        bench.learned_changed.connect(self._news.start)
+        self.follow(self._on_edit, Changed.PLAN, Changed.MARKS)
+        self.follow(self._on_recording, Changed.RECORDING)
+        self.follow(self._on_view, Changed.VIEW)
+        self.hear(bench.learned_changed, self._on_learned)
         self._on_recording()
 
     # The window's side

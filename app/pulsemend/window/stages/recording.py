@@ -173,14 +173,9 @@ class RecordingStage(StagePage):
         table.channels.bad_asked.connect(self._mark_bad)
         table.channels.type_asked.connect(self._give_type)
         self.map.picked.connect(self._pick)
-        session = bench.session
-        ended = [
-            session.subscribe(Changed.RECORDING, self._show_recording),
-            session.subscribe(Changed.PLAN, self._show_channels),
-            session.subscribe(Changed.MARKS, self._show_channels),
-            session.subscribe(Changed.VIEW, self._show_view),
-        ]
-        self.settings.destroyed.connect(lambda: [end() for end in ended])
+        self.follow(self._show_recording, Changed.RECORDING)
+        self.follow(self._show_channels, Changed.PLAN, Changed.MARKS)
+        self.follow(self._show_view, Changed.VIEW)
         bench.learned_changed.connect(self.spectrum.request)
         self._show_recording()
 
