@@ -42,6 +42,10 @@ Index = QModelIndex | QPersistentModelIndex
 _ROWS_SEEN = 8
 _NOWHERE = QModelIndex()
 _ROW = Qt.ItemDataRole.UserRole
+# Asked for thousands of times when many rows are chosen.
+_CHOOSABLE = Qt.ItemFlag.ItemIsEnabled | Qt.ItemFlag.ItemIsSelectable
+_CHECKABLE = _CHOOSABLE | Qt.ItemFlag.ItemIsUserCheckable
+_EDITABLE = _CHOOSABLE | Qt.ItemFlag.ItemIsEditable
 
 IN_PLAN = "plan"
 WHY_PLAN = "Bad in every recording: that is said in the plan (channels.bad) and changed there, not here."
@@ -107,13 +111,11 @@ class ChannelModel(QAbstractTableModel):
 
     def flags(self, index: Index) -> Qt.ItemFlag:
         """Say what can be done with a cell."""
-        flags = Qt.ItemFlag.ItemIsEnabled | Qt.ItemFlag.ItemIsSelectable
-        row = self.rows[index.row()]
-        if index.column() == Column.BAD and row.condition is not Condition.BAD_IN_PLAN:
-            flags |= Qt.ItemFlag.ItemIsUserCheckable
         if index.column() == Column.TYPE:
-            flags |= Qt.ItemFlag.ItemIsEditable
-        return flags
+            return _EDITABLE
+        if index.column() == Column.BAD and self.rows[index.row()].condition is not Condition.BAD_IN_PLAN:
+            return _CHECKABLE
+        return _CHOOSABLE
 
     def data(self, index: Index, role: int = Qt.ItemDataRole.DisplayRole) -> Any:
         """Say what a cell shows."""
@@ -319,7 +321,8 @@ class ChannelTable(QTableView):
         self.setMinimumHeight(_ROWS_SEEN * (metrics.height() + 8))
         header.resizeSection(Column.BAD, metrics.ascent() + metrics.horizontalAdvance(IN_PLAN) + 18)
         header.resizeSection(Column.TYPE, metrics.horizontalAdvance(TYPE_WORDS[ChannelType.TRIGGER]) + 18)
-        header.resizeSection(Column.POSITION, metrics.horizontalAdvance(_TITLES[Column.POSITION]) + 18)
+        places = max(metrics.horizontalAdvance(text) for text in (*Placed, _TITLES[Column.POSITION]))
+        header.resizeSection(Column.POSITION, places + 18)
 
     def changeEvent(self, event: QEvent) -> None:
         """Follow the size of the text."""

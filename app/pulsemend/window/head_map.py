@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
+from numpy.typing import NDArray
 from PySide6.QtCore import QEvent, QLineF, QPointF, QRectF, QSize, Qt, Signal
 from PySide6.QtGui import (
     QAccessible,
@@ -27,6 +28,8 @@ from PySide6.QtGui import (
 from PySide6.QtWidgets import QSizePolicy, QToolTip, QWidget
 
 from pulsemend.window.theme import Theme
+
+Boxes = NDArray[np.float64]
 
 _MARGIN = 8.0
 _LEAST_EXTENT = 1.16
@@ -106,6 +109,7 @@ class HeadMap(QWidget):
         self._hovered: str | None = None
         self._current: str | None = None
         self._layout = _Layout()
+        self._boxes: dict[str, QRectF] | None = None
         self.setMouseTracking(True)
         self.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
         self.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Expanding)
@@ -130,6 +134,7 @@ class HeadMap(QWidget):
         """Show which channels are picked."""
         if picked != self._picked:
             self._picked = picked
+            self._boxes = None
             self._describe()
             self.update()
 
@@ -147,7 +152,7 @@ class HeadMap(QWidget):
 
     def named(self) -> frozenset[str]:
         """Names that stand beside their shapes now; the others appear under the pointer."""
-        return frozenset(name for name, _ in self._names_with_room()) | frozenset(self._layout.listed)
+        return frozenset(self._name_boxes()) | frozenset(self._layout.listed)
 
     # Events
 
@@ -230,6 +235,7 @@ class HeadMap(QWidget):
         rest = [channel for channel in self._channels.values() if channel.place is None]
         area = QRectF(self.rect()).adjusted(_MARGIN, _MARGIN, -_MARGIN, -_MARGIN)
         layout = self._layout = _Layout()
+        self._boxes = None
         if rest:
             # Without any position the list has all the room.
             width = area.width() if not placed else min(self._list_width(rest), area.width() * 0.4)
@@ -346,7 +352,7 @@ class HeadMap(QWidget):
             self._paint_shape(painter, self._channels[name], spot, self._layout.shape)
         self._paint_list(painter)
         painter.setFont(self._small_font())
-        for name, box in self._names_with_room():
+        for name, box in self._name_boxes().items():
             painter.setPen(self._name_colour(name))
             painter.drawText(QPointF(box.left(), box.bottom() - 1), name)
         painter.setFont(self.font())
@@ -435,44 +441,52 @@ class HeadMap(QWidget):
         font.setPointSizeF(max(6.0, font.pointSizeF() * _SMALL))
         return font
 
-    def _names_with_room(self) -> Iterator[tuple[str, QRectF]]:
-        """All names if all have room below their shapes; otherwise the picked and bad ones that have any."""
-        metrics = QFontMetricsF(self._small_font())
-        spots, half = self._layout.spots, self._layout.shape / 2
+    def _name_boxes(self) -> dict[str, QRectF]:
+        """Lay out all names if all have room below their shapes; otherwise the picked and bad ones."""
+        if self._boxes is not None:
+            return self._boxes
+        metrics, half = QFontMetricsF(self._small_font()), self._layout.shape / 2
         height = metrics.capHeight() + 3
+        spots = self._layout.spots
+        shapes = [(spot.x() - half, spot.y() - half, 2 * half, 2 * half) for spot in spots.values()]
         sizes = {name: metrics.horizontalAdvance(name) for name in spots}
-        boxes = {
-            name: QRectF(spot.x() - sizes[name] / 2, spot.y() + half, sizes[name], height)
-            for name, spot in spots.items()
-        }
-        shapes = [QRectF(s.x() - half, s.y() - half, 2 * half, 2 * half) for s in spots.values()]
-        if not _any_touch([*boxes.values(), *shapes]):
-            yield from boxes.items()
-            return
-        taken: list[QRectF] = []
+        below = [
+            (spot.x() - sizes[name] / 2, spot.y() + half, sizes[name], height) for name, spot in spots.items()
+        ]
+        if not _any_touch(np.array([*below, *shapes]).reshape(-1, 4)):
+            self._boxes = {name: QRectF(*box) for name, box in zip(spots, below, strict=True)}
+            return self._boxes
+        self._boxes = {}
+        taken = np.array(shapes).reshape(-1, 4)
         for name in sorted(spots, key=lambda one: one not in self._picked):
             if name not in self._picked and not self._channels[name].bad:
                 continue
-            below, away = boxes[name], half + 5
-            above = below.translated(0, -height - 2 * half)
-            right = below.translated(sizes[name] / 2 + away, -(height / 2 + half))
-            left = below.translated(-sizes[name] / 2 - away, -(height / 2 + half))
-            for box in (below, above, right, left):
-                if not any(box.intersects(other) for other in (*taken, *shapes)):
-                    taken.append(box)
-                    yield name, box
+            x, y, away = spots[name].x(), spots[name].y(), half + 5
+            width = sizes[name]
+            for left, top in (
+                (x - width / 2, y + half),
+                (x - width / 2, y - half - height),
+                (x + away, y - height / 2),
+                (x - away - width, y - height / 2),
+            ):
+                box = np.array([left, top, width, height])
+                if not _touches(box, taken).any():
+                    taken = np.vstack([taken, box])
+                    self._boxes[name] = QRectF(left, top, width, height)
                     break
+        return self._boxes
 
 
-def _any_touch(boxes: list[QRectF]) -> bool:
-    ordered = sorted(boxes, key=lambda box: box.left())
-    for place, box in enumerate(ordered):
-        for other in ordered[place + 1 :]:
-            if other.left() >= box.right():
-                break
-            if box.intersects(other):
-                return True
-    return False
+def _touches(box: Boxes, others: Boxes) -> NDArray[np.bool_]:
+    """Which of other boxes (left, top, width, height) a box has more than an edge in common with."""
+    (x, y, width, height), (lefts, tops, widths, heights) = box, others.T
+    across = (lefts < x + width) & (x < lefts + widths)
+    touched: NDArray[np.bool_] = across & (tops < y + height) & (y < tops + heights)
+    return touched
+
+
+def _any_touch(boxes: Boxes) -> bool:
+    return any(_touches(box, boxes[place + 1 :]).any() for place, box in enumerate(boxes))
 
 
 def _closest(spots: list[QPointF]) -> float:

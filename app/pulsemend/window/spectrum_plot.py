@@ -321,7 +321,9 @@ class SpectrumPlot(QWidget):
             half = metrics.horizontalAdvance(number(hz)) / 2
             if x - half > x_free and x + half < unit_left:
                 painter.setPen(QColor(theme.quiet))
-                box = QRectF(x - half - 2, area.bottom() + 3, 2 * half + 4, metrics.height())
+                # The first one keeps clear of the lowest value beside the axis.
+                left = max(x - half - 2, area.left() - 2)
+                box = QRectF(left, area.bottom() + 3, 2 * half + 4, metrics.height())
                 painter.drawText(box, Qt.AlignmentFlag.AlignCenter, number(hz))
                 x_free = x + half + 6
         painter.setPen(QColor(theme.quiet))

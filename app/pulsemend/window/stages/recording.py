@@ -219,6 +219,9 @@ class RecordingStage(StagePage):
         both.setChildrenCollapsible(False)
         both.addWidget(head)
         both.addWidget(self.spectrum)
+        for card in (head, self.spectrum):
+            # The place of pictures has a frame already.
+            card.setProperty("card", "framed")
         both.setStretchFactor(0, 2)
         both.setStretchFactor(1, 3)
         stack = QStackedWidget()
