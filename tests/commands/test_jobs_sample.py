@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 from pulsemend.__main__ import main
-from support.child import pulsemend
+from support.child import SMALL_SAMPLE, pulsemend
 from support.small_lantern import SetOnDisk, Study
 
 STEM = "sub-lt01_task-lantern"
@@ -71,7 +71,7 @@ def test_draft_is_a_plan_that_mend_refuses_until_a_person_decided(study: Study, 
 def test_sample_and_demo_replace_only_what_they_wrote(tmp_path: Path) -> None:
     """One folder: a sample, a demo on it with files of somebody else in between, and the demo again."""
     folder = tmp_path / "Lantern #1 ü"
-    sampled = pulsemend("sample", folder)
+    sampled = pulsemend("sample", folder, script=SMALL_SAMPLE)
     assert sampled.code == 0
     for line in sampled.out.splitlines():
         assert Path(line.split(maxsplit=1)[1]).is_file(), line
@@ -82,7 +82,7 @@ def test_sample_and_demo_replace_only_what_they_wrote(tmp_path: Path) -> None:
         path.write_text("mine")
     stamps = {path: path.stat().st_mtime_ns for path in mine}
 
-    first = pulsemend("demo", folder, "--no-window")
+    first = pulsemend("demo", folder, "--no-window", script=SMALL_SAMPLE)
     assert first.code == 0
     written = SetOnDisk(folder / "sets" / f"{STEM}_desc-mended")
     assert "BROKEN" not in first.out
@@ -92,7 +92,8 @@ def test_sample_and_demo_replace_only_what_they_wrote(tmp_path: Path) -> None:
 
     # No display, and not told to do without a window: exit 0 either way.
     without = {key: value for key, value in os.environ.items() if key not in ("DISPLAY", "WAYLAND_DISPLAY")}
-    second = pulsemend("demo", folder, env={**without, "PYTHONIOENCODING": "utf-8"})
+    env = {**without, "PYTHONIOENCODING": "utf-8"}
+    second = pulsemend("demo", folder, env=env, script=SMALL_SAMPLE)
     assert second.code == 0
     assert written.attributes()["content_sha256"] == content
     after = {name: digest for name, (digest, _) in state(folder).items()}

@@ -242,6 +242,23 @@ def test_left_gaps_are_nan_and_fif_refuses_them(study: Study, tmp_path: Path) ->
     np.testing.assert_array_equal(np.isnan(alone.hdf5("data")), replaced)
 
 
+@pytest.mark.parametrize("highpass_hz", [0.0, 1.0])
+def test_left_gaps_are_no_step_for_the_filters(highpass_hz: float, study: Study, tmp_path: Path) -> None:
+    """They are zero while filtering, counted from the electrode's offset, in either precision."""
+    plan = changed(
+        PLAN,
+        ('fill = "line"', 'fill = "leave"'),
+        ("[epochs]", f"[filter]\nhighpass_hz = {highpass_hz}\n[epochs]"),
+    )
+    data = {}
+    for precision in ("single", "double"):
+        text = f'{plan}\n[export]\nformats = ["hdf5"]\nprecision = "{precision}"\n'
+        data[precision] = SetOnDisk(run_mend(study.recording, text, tmp_path / precision).folder).hdf5("data")
+    np.testing.assert_allclose(data["single"], data["double"], rtol=0, atol=1e-9)
+    if highpass_hz:
+        assert np.nanmax(np.abs(data["double"])) < 200e-6
+
+
 def test_provenance_tells_where_the_set_comes_from(written: SetOnDisk, study: Study) -> None:
     provenance = json.loads(written.path("provenance.json").read_text())
     assert provenance["program"]["data_version"] == DATA_VERSION

@@ -34,10 +34,26 @@ class Ended:
         return [json.loads(line) for line in self.err.splitlines()]
 
 
-def pulsemend(*words: str | Path, cwd: Path | None = None, env: Mapping[str, str] | None = None) -> Ended:
-    """Run a command line; whatever it is, it shows no traceback."""
+SMALL_SAMPLE = """\
+import sys
+from pulsemend.__main__ import main
+from pulsemend.simulate import ready, sample
+sample.LanternSpec = lambda: ready.READY
+sys.exit(main())
+"""
+"""The command line, whose sample is as small as the one that comes with the program."""
+
+
+def pulsemend(
+    *words: str | Path,
+    cwd: Path | None = None,
+    env: Mapping[str, str] | None = None,
+    script: str = "",
+) -> Ended:
+    """Run a command line, or a script around it; whatever it is, it shows no traceback."""
+    start = ["-c", script] if script else ["-m", "pulsemend"]
     process = subprocess.run(
-        [sys.executable, "-m", "pulsemend", *map(str, words)],
+        [sys.executable, *start, *map(str, words)],
         capture_output=True,
         encoding="utf-8",
         cwd=cwd,

@@ -131,7 +131,7 @@ class Chain:
         touched = [(repair, gap) for repair in self._repairs for gap in repair.touching(segment, start, stop)]
         first = min([start, *(gap.start - gap.left for _, gap in touched)])
         last = max([stop, *(gap.stop + gap.right for _, gap in touched)])
-        offset = self._estimates.offset if self._setup.work == np.float32 else None
+        offset = self._estimates.offset if self._setup.removes_offset else None
         x = read_stored(self._recording, self._setup, first, last, offset, self._setup.work)
         for repair, gap in touched:
             repair.fill(x, first, gap)
@@ -310,7 +310,7 @@ class Chain:
     def _referenced(self, volts: Samples) -> Samples:
         """Put offsets back where no high-pass removed them, then subtract the reference."""
         setup = self._setup
-        if setup.work == np.float32 and not setup.highpass_on:
+        if setup.removes_offset and not setup.highpass_on:
             volts = volts + (self._estimates.offset * setup.scale_v).astype(setup.work)[:, None]
         if setup.restored:
             volts = np.concatenate([volts, np.zeros((1, volts.shape[1]), volts.dtype)])

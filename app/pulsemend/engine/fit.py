@@ -164,7 +164,7 @@ def _offset(setup: Setup, means: list[NDArray[np.float64]]) -> NDArray[np.float6
 
     A whole number of stored units leaves integers integers: float32 then holds them without loss.
     """
-    if setup.work == np.float64 or not means:
+    if not setup.removes_offset or not means:
         return np.zeros(setup.used.size)
     offset = np.median(means, axis=0)
     return np.where(setup.scale_v == 1.0, offset, np.round(offset))
@@ -195,7 +195,7 @@ def basis_of(setup: Setup) -> dict[str, str]:
     source = [setup.facts.parts, setup.facts.n_samples, setup.used, setup.barriers]
     quiet = [*source, setup.pulses, setup.groups, setup.search_s]
     return {
-        "offset": basis(*quiet, str(setup.work)),
+        "offset": basis(*quiet, setup.removes_offset, setup.fill),
         "pulses": basis(*quiet, setup.bad),
         "usual_steepness": basis(*quiet, setup.bad),
         "autocovariance": basis(*quiet, setup.flank, setup.fill),

@@ -144,6 +144,15 @@ class Setup:
         return (*(channel.name for channel in self.channels), *restored)
 
     @property
+    def removes_offset(self) -> bool:
+        """Whether every channel's constant offset is subtracted first, and put back where no high-pass is.
+
+        Single precision would be wasted on it; and gaps left open are zero while filtering, which without it
+        would be a step of millivolts.
+        """
+        return bool(self.work == np.float32 or (self.groups and self.fill is Fill.LEAVE))
+
+    @property
     def replaced_reach_s(self) -> float:
         """How far the filters spread a replaced sample, to either side."""
         reach = 0.0

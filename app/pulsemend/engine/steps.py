@@ -23,8 +23,8 @@ class Step:
 def steps(setup: Setup, estimates: Estimates) -> tuple[Step, ...]:
     """List the steps in the order in which the chain takes them; steps that do nothing are absent."""
     taken: list[Step] = []
-    if setup.work == np.float32:
-        where = "removed before single precision; " + (
+    if setup.removes_offset:
+        where = "removed first; " + (
             "not put back, the high-pass removes it" if setup.highpass_on else "put back before the reference"
         )
         taken.append(Step("constant offset", {"of": "each channel", "handling": where}))

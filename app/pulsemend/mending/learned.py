@@ -103,6 +103,6 @@ def repaired_stored(chain: Chain, estimates: Estimates, start: int, stop: int) -
         if a < b:
             pieces.append(chain.repaired(a, b).astype(np.float32))
     stored = np.concatenate(pieces) if len(pieces) > 1 else pieces[0]
-    if setup.work == np.float32:
+    if setup.removes_offset:
         stored += estimates.offset.astype(np.float32)
     return stored

@@ -236,7 +236,7 @@ def _adapted(
             pulses.append(known)
         else:
             pulses.append(Pulse(near, expected.marked, PulseState.MARKED_ONLY))
-    offset = earlier.offset if setup.work == np.float32 else np.zeros(setup.used.size)
+    offset = earlier.offset if setup.removes_offset else np.zeros(setup.used.size)
     adapted = replace(
         earlier, offset=offset, pulses=tuple(sorted(pulses, key=lambda one: one.sample)), rests_on={}
     )
