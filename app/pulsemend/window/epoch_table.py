@@ -22,12 +22,13 @@ TITLES = ("trial", "rule", "piece", "anchor", "fate", "what exactly")
 TRIAL, RULE, PIECE, ANCHOR, FATE, DETAIL = range(6)
 _WIDTHS = ("trial 8", "after probe 12", "piece", "12345.678 s", "  across a break in the recording")
 _ORDERS = ((ANCHOR, "time"), (TRIAL, "trial"), (RULE, "rule"), (FATE, "fate"))
+_FATE_ORDER = {fate: place for place, fate in enumerate(Fate)}
 _SORT_KEYS: Mapping[int, Callable[[EpochRow], object]] = {
     TRIAL: lambda row: row.trial,
     RULE: lambda row: row.rule.casefold(),
     PIECE: lambda row: row.piece,
     ANCHOR: lambda row: row.near_s,
-    FATE: lambda row: list(Fate).index(row.fate),
+    FATE: lambda row: _FATE_ORDER[row.fate],
     DETAIL: lambda row: row.detail,
 }
 
@@ -55,10 +56,10 @@ class EpochModel(RowsModel):
         """Rows as the table has them."""
         return self._shown
 
-    def show_rows(self, rows: Sequence[EpochRow]) -> None:
-        """Show other candidates, in order of time."""
+    def show_rows(self, rows: Sequence[EpochRow], fate: Fate | None, rule: str) -> None:
+        """Show others, given in order of time: those of a fate (None: all) and of a rule (empty: all)."""
         self._all = tuple(rows)
-        self._arrange()
+        self.show_only(fate, rule)
 
     def show_only(self, fate: Fate | None, rule: str) -> None:
         """Show those of a fate (None: all) and of a rule (empty: all)."""
@@ -137,6 +138,7 @@ class EpochTable(QWidget):
         self._marks = Marks()
         self.model = EpochModel(theme)
         self.table = RowsTable("Candidate epochs", self.model, _WIDTHS)
+        self._selection = _Selection(self.table, self.model)
         self.table.setSortingEnabled(True)
         self.table.sortByColumn(ANCHOR, Qt.SortOrder.AscendingOrder)
         self.fates = _combo("Show fates")
@@ -165,14 +167,10 @@ class EpochTable(QWidget):
             As edited.
         """
         self._marks = marks
-        with _Selection(self):
-            _fill(
-                self.fates, "all fates", [(str(fate), fate, n) for fate, n in _fate_counts(rows)], len(rows)
-            )
-            rules = Counter(row.rule for row in rows)
-            _fill(self.rules, "all rules", [(rule, rule, n) for rule, n in rules.items()], len(rows))
-            self._filter_by_combos()
-            self.model.show_rows(rows)
+        _fill(self.fates, "all fates", [(str(fate), fate, n) for fate, n in _fate_counts(rows)], len(rows))
+        rules = Counter(row.rule for row in rows)
+        _fill(self.rules, "all rules", [(rule, rule, n) for rule, n in rules.items()], len(rows))
+        self.model.show_rows(rows, *self._filters())
         self._tell()
 
     def show_marks(self, marks: Marks) -> None:
@@ -224,14 +222,13 @@ class EpochTable(QWidget):
             self.orders.setCurrentIndex(self.orders.findData(column))
 
     def _filter(self) -> None:
-        with _Selection(self):
-            self._filter_by_combos()
+        self.model.show_only(*self._filters())
         self._tell()
 
-    def _filter_by_combos(self) -> None:
+    def _filters(self) -> tuple[Fate | None, str]:
         # The toolkit hands words of a list back as plain text.
         fate = self.fates.currentData()
-        self.model.show_only(Fate(fate) if fate else None, self.rules.currentData() or "")
+        return Fate(fate) if fate else None, self.rules.currentData() or ""
 
     def _tell(self) -> None:
         """Say how many there are, and what can be done with the selected ones."""
@@ -239,8 +236,9 @@ class EpochTable(QWidget):
         chosen = f", {len(rows)} selected" if rows else ""
         self.count.setText(f"{len(self.model.shown)} epochs{chosen}")
         left_out, excluded = set(self._marks.epochs_left_out), set(self._marks.trials_excluded)
-        self.leave_out.setEnabled(any(row.key not in left_out for row in rows))
-        self.take_back.setEnabled(any(row.key in left_out for row in rows))
+        by_hand = sum(row.key in left_out for row in rows)
+        self.leave_out.setEnabled(by_hand < len(rows))
+        self.take_back.setEnabled(by_hand > 0)
         self.exclude.setEnabled(any(row.trial not in excluded for row in rows))
         self.include.setEnabled(any(row.trial in excluded for row in rows))
 
@@ -276,27 +274,55 @@ class EpochTable(QWidget):
 
 
 class _Selection:
-    """Keeps the same epochs selected and current while the table's rows change."""
+    """Keeps the same epochs selected and current while the rows of a table change.
 
-    def __init__(self, owner: EpochTable) -> None:
-        self._table, self._model = owner.table, owner.model
+    Parameters
+    ----------
+    table : RowsTable
+        Its model is set already: what Qt does with a selection then comes before this.
+    model : EpochModel
+    """
 
-    def __enter__(self) -> None:
+    def __init__(self, table: RowsTable, model: EpochModel) -> None:
+        self._table, self._model = table, model
+        self._keys: set[EpochKey] = set()
+        self._current: EpochKey | None = None
+        model.modelAboutToBeReset.connect(self.remember)
+        model.modelReset.connect(self.restore)
+
+    def remember(self) -> None:
+        """Take note of what is selected."""
         shown = self._model.shown
         self._keys = {shown[row].key for row in self._table.selected_rows()}
         current = self._table.currentIndex()
         self._current = shown[current.row()].key if current.isValid() else None
 
-    def __exit__(self, *_: object) -> None:
-        chosen = QItemSelection()
-        for row, one in enumerate(self._model.shown):
+    def restore(self) -> None:
+        """Select what is still there."""
+        selection = self._table.selectionModel()
+        for row, one in enumerate(self._model.shown if self._current else ()):
             if one.key == self._current:
-                self._table.selectionModel().setCurrentIndex(
+                selection.setCurrentIndex(
                     self._model.index(row, 0), QItemSelectionModel.SelectionFlag.NoUpdate
                 )
-            if one.key in self._keys:
-                chosen.select(self._model.index(row, 0), self._model.index(row, len(TITLES) - 1))
-        self._table.selectionModel().select(chosen, QItemSelectionModel.SelectionFlag.ClearAndSelect)
+        chosen = QItemSelection()
+        rows = [
+            row for row, one in enumerate(self._model.shown if self._keys else ()) if one.key in self._keys
+        ]
+        for first, last in _runs(rows):
+            chosen.select(self._model.index(first, 0), self._model.index(last, len(TITLES) - 1))
+        selection.select(chosen, QItemSelectionModel.SelectionFlag.ClearAndSelect)
+
+
+def _runs(rows: Sequence[int]) -> list[tuple[int, int]]:
+    """Put rows that follow each other together: Qt takes long over thousands of single ones."""
+    runs: list[tuple[int, int]] = []
+    for row in rows:
+        if runs and row == runs[-1][1] + 1:
+            runs[-1] = (runs[-1][0], row)
+        else:
+            runs.append((row, row))
+    return runs
 
 
 def _name_of(text: str, field: QWidget) -> QLabel:
