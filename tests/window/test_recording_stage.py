@@ -569,12 +569,18 @@ def test_it_paints_in_both_themes_and_with_large_text(desk: Desk) -> None:
 
 
 def test_a_closed_page_listens_no_more(desk: Desk) -> None:
+    """Not to the session, and not for a spectrum that is on its way."""
     desk.open()
     counts = {kind: len(desk.session._observers._callbacks[kind]) for kind in Changed}
     other = RecordingStage(desk.bench)
     assert len(desk.session._observers._callbacks[Changed.MARKS]) > counts[Changed.MARKS]
+    other.show_stage()
+    other.spectrum.settling.flush()
+    other.close()
     for frame in (other.settings, other.picture):
         frame.deleteLater()
     desk.qtbot.waitUntil(lambda: not isValid(other.settings) and not isValid(other.picture))
     assert {kind: len(desk.session._observers._callbacks[kind]) for kind in Changed} == counts
     desk.session.edit_marks("x", replace(desk.session.marks, bad=("C3",)))
+    wait_for_spectrum(desk)
+    assert desk.session.messages == ()

@@ -20,7 +20,6 @@ from PySide6.QtWidgets import (
 )
 
 from pulsemend.model.marks import BadStretch
-from pulsemend.session.changed import Changed
 from pulsemend.session.found import NOTHING_SELECTED, Selected
 from pulsemend.session.view import View
 from pulsemend.window.fields import PlainNumber
@@ -114,10 +113,12 @@ class _StretchTable(QTableWidget):
 class BadStretchesCard(Card):
     """Lists the bad stretches and marks the one selected.
 
+    Whoever makes it calls `show_marks` and `show_selected` when these change.
+
     Parameters
     ----------
     bench : Workbench
-        Its session is listened to and edited.
+        Its session is shown and edited.
     """
 
     def __init__(self, bench: Workbench, parent: QWidget | None = None) -> None:
@@ -149,12 +150,6 @@ class BadStretchesCard(Card):
         self.table.itemChanged.connect(self._kind_edited)
         self.first.committed.connect(self._ends_edited)
         self.last.committed.connect(self._ends_edited)
-        self._ended = [
-            bench.session.subscribe(kind, self.show_marks) for kind in (Changed.RECORDING, Changed.MARKS)
-        ]
-        self._ended.append(bench.session.subscribe(Changed.VIEW, self.show_selected))
-        ended = self._ended
-        self.destroyed.connect(lambda: [end() for end in ended])
         self.show_marks()
 
     def _lay_out(self) -> None:

@@ -13,6 +13,7 @@ from pulsemend.model.vocabulary import ChannelType, PulseTimes
 from pulsemend.session.view import Shown
 from pulsemend.units import v_to_uv
 from pulsemend.window.channel_rows import ChannelRow, listed
+from pulsemend.window.job import Job
 from pulsemend.window.jobs import Debounce
 from pulsemend.window.parts import Card
 from pulsemend.window.spectrum_plot import MOST_CURVES, Curve, SpectrumPicture, SpectrumPlot, Spread
@@ -42,7 +43,7 @@ class SpectrumCard(Card):
         self.settling = Debounce(SETTLE_MS, self._ask, self)
         self._rows: tuple[ChannelRow, ...] = ()
         self._is_open = False
-        self._asked: SpectrumRequest | None = None
+        self._job: Job | None = None
         self._found: tuple[SpectrumRequest, ViewSpectrum | None] | None = None
 
     @property
@@ -55,6 +56,10 @@ class SpectrumCard(Card):
         self._is_open = is_open
         if is_open:
             self.request()
+            return
+        self.settling.drop()
+        if self._job is not None:
+            self._job.cancel()
 
     def forget(self) -> None:
         """Show nothing: another recording is open, or none."""
@@ -86,8 +91,7 @@ class SpectrumCard(Card):
         if self._found is not None and _same(self._found[0], request):
             self._show()
             return
-        self._asked = request
-        self.bench.start(
+        self._job = self.bench.start(
             "spectrum",
             lambda recording: view_spectrum(recording, request),
             lambda found: self._take(request, found),

@@ -176,8 +176,15 @@ class RecordingStage(StagePage):
         self.follow(self._show_recording, Changed.RECORDING)
         self.follow(self._show_channels, Changed.PLAN, Changed.MARKS)
         self.follow(self._show_view, Changed.VIEW)
-        bench.learned_changed.connect(self.spectrum.request)
+        self.follow(self.stretches.show_marks, Changed.RECORDING, Changed.MARKS)
+        self.follow(self.stretches.show_selected, Changed.VIEW)
+        self.hear(bench.learned_changed, self.spectrum.request)
         self._show_recording()
+
+    def close(self) -> None:
+        """Listen to nobody, and want no spectrum, any more."""
+        super().close()
+        self.spectrum.set_open(False)
 
     def show_stage(self) -> None:
         """Take note that the stage is open."""
