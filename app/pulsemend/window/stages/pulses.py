@@ -30,7 +30,8 @@ from pulsemend.progress import Work
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import Stage
 from pulsemend.window.parts import scrolling_column
-from pulsemend.window.pulse_picture import PulsePicture, Shown
+from pulsemend.window.pulse_canvas import Shown
+from pulsemend.window.pulse_picture import PulsePicture
 from pulsemend.window.stages.base import StagePage
 from pulsemend.window.stages.pulse_cards import (
     GAP_KEY,
@@ -106,6 +107,16 @@ class PulsesStage(StagePage):
         """Bring everything up to date; while another stage is open nothing is computed."""
         super().show_stage()
         self._on_recording(keep=True)
+
+    def hide_stage(self) -> None:
+        """Ask for nothing any more."""
+        super().hide_stage()
+        self._soon.stop()
+
+    def close(self) -> None:
+        """Listen to nobody and ask for nothing any more."""
+        super().close()
+        self.hide_stage()
 
     def set_theme(self, theme: Theme) -> None:
         """Paint the picture in other colours."""
