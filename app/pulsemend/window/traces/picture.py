@@ -87,6 +87,7 @@ class TracePicture:
         self._source = source
         self._raster = Raster(1, 1)
         self._last: _Rows | None = None
+        self._middles = np.empty((0, 0), dtype=np.float32)
         self._places = {channel.name: place for place, channel in enumerate(source.facts.channels)}
         self._centres = np.full(len(self._places), np.nan)
 
@@ -113,7 +114,10 @@ class TracePicture:
             return Drawn(self._image(scene.theme), Detail.EXACT, complete=True)
         passes = self._columns(rows, grid)
         front = passes[-1]
-        self._centre(front, rows)
+        self._middles = _middles(front, grid)
+        centres = self._new_centres(self._middles, rows)
+        wandered = ~np.isnan(centres)
+        self._centres[np.array(rows.places)[wandered]] = centres[wandered]
         self._draw_passes(self._raster, passes, rows, grid)
         # Seen again after a move, what is not final would stay beside what is.
         if front.detail is Detail.EXACT and front.complete:
@@ -146,11 +150,13 @@ class TracePicture:
         first = grid.first + grid.count - moved if moved > 0 else grid.first
         strip = Grid(first, abs(moved), grid.per_column)
         passes = self._columns(rows, strip)
-        if (
-            any(columns.detail is not Detail.EXACT for columns in passes)
-            or self._wandered(passes[-1], rows).any()
-        ):
+        if any(columns.detail is not Detail.EXACT for columns in passes):
             return False
+        fresh, kept = _middles(passes[-1], strip), self._middles
+        middles = np.hstack([kept[:, moved:], fresh] if moved > 0 else [fresh, kept[:, :moved]])
+        if not np.isnan(self._new_centres(middles, rows)).all():
+            return False
+        self._middles = middles
         raster = Raster(abs(moved), len(self._raster.pixels))
         self._draw_passes(raster, passes, rows, strip)
         pixels = self._raster.pixels
@@ -162,29 +168,24 @@ class TracePicture:
             pixels[:, :-moved] = raster.pixels
         return True
 
-    def _middles(self, columns: Columns) -> NDArray[np.float32]:
-        step = max(1, columns.lowest.shape[1] // _MIDDLES)
-        middles: NDArray[np.float32] = np.median(
-            0.5 * (columns.lowest[:, ::step] + columns.highest[:, ::step]), axis=1
-        )
-        return middles
+    def _new_centres(self, middles: NDArray[np.float32], rows: _Rows) -> NDArray[np.float32]:
+        """Values that rows which have wandered off are to be drawn around; NaN for all others.
 
-    def _wandered(self, columns: Columns, rows: _Rows) -> NDArray[np.bool_]:
-        """Rows whose trace is off their middle by more than half a row."""
+        Parameters
+        ----------
+        middles : array, shape (n_rows, n_columns)
+            Of the columns in view; NaN outside the recording.
+        rows : _Rows
+            The rows.
+        """
+        seen = middles[:, ~np.isnan(middles[0])]
         places = np.array(rows.places, dtype=np.intp)
-        if not columns.lowest.shape[1]:
-            return np.zeros(places.size, dtype=np.bool_)
-        off = np.abs((self._middles(columns) - self._centres[places]) * self._source.uv_per_unit[places])
+        if not seen.shape[1]:
+            return np.full(places.size, np.nan, dtype=np.float32)
+        medians = np.median(seen[:, :: max(1, seen.shape[1] // _MIDDLES)], axis=1)
+        off = np.abs((medians - self._centres[places]) * self._source.uv_per_unit[places])
         # Written so that a row without a middle yet counts as well.
-        wandered: NDArray[np.bool_] = ~(off <= 0.5 * rows.scene.view.row_uv)
-        return wandered
-
-    def _centre(self, columns: Columns, rows: _Rows) -> None:
-        """Draw rows that have wandered around another value: small moves of the view change none."""
-        wandered = self._wandered(columns, rows)
-        if wandered.any():
-            places = np.array(rows.places, dtype=np.intp)
-            self._centres[places[wandered]] = self._middles(columns)[wandered]
+        return np.where(off <= 0.5 * rows.scene.view.row_uv, np.nan, medians)
 
     def _draw_passes(self, raster: Raster, passes: list[Columns], rows: _Rows, grid: Grid) -> None:
         for columns in passes[:-1]:
@@ -221,6 +222,18 @@ class TracePicture:
         image.setColorTable(_palette(inks))
         # Painting eight-bit pictures directly takes several times as long.
         return image.convertToFormat(QImage.Format.Format_ARGB32_Premultiplied)
+
+
+def _middles(columns: Columns, grid: Grid) -> NDArray[np.float32]:
+    """Middles of the spans in the columns of a grid, shape (n_rows, n_columns); NaN outside the recording."""
+    middles = np.full((columns.lowest.shape[0], grid.count), np.nan, dtype=np.float32)
+    first = max(columns.first, grid.first)
+    last = min(columns.first + columns.lowest.shape[1], grid.first + grid.count)
+    if last > first:
+        there = slice(first - columns.first, last - columns.first)
+        both = columns.lowest[:, there] + columns.highest[:, there]
+        middles[:, first - grid.first : last - grid.first] = both * np.float32(0.5)
+    return middles
 
 
 def _ink(name: str, scene: Scene) -> int:
