@@ -129,7 +129,7 @@ def in_words(error: SettingError, field: str = "") -> str:
     field : str
         Last part of the key that belongs to the field; other keys are named.
     """
-    about = "" if field and error.key.endswith(f".{field}") else f"{error.key} "
+    about = "" if field and f".{error.key}".endswith(f".{field}") else f"{error.key} "
     parts = [f"Not taken over: {about}{error.problem}"]
     parts += [f"allowed: {error.allowed}"] if error.allowed else []
     parts += [f"received: {error.received}"] if error.received else []

@@ -281,7 +281,7 @@ class RuleEditor(Card):
         try:
             labels = labels_from_text(self.labels.text())
         except PlanError as error:
-            self.fields["labels"].refuse(in_words(error, "labels").replace("labels each", "each"))
+            self.fields["labels"].refuse(in_words(error, "labels"))
             return
         self._take("labels", "labels", labels=labels)
 
