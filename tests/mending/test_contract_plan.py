@@ -5,13 +5,15 @@ from __future__ import annotations
 import json
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from pulsemend.errors import InputError, NoEpochs, PlanError
 from pulsemend.mending.mend import dry_run
-from pulsemend.model.vocabulary import Fate
+from pulsemend.model.vocabulary import Fate, Fill
 from pulsemend.progress import finish
 from support.small_lantern import PLAN, SetOnDisk, Study, changed, make_request, run_mend
+from support.written_recordings import triplet_by_hand
 
 NO_PULSES = changed(
     PLAN,
@@ -185,3 +187,22 @@ def test_clear_span_is_kept_free_after_gaps(clear_ms: int, kept: int, study: Stu
     )
     result = run_mend(study.recording, plan, tmp_path)
     assert SetOnDisk(result.folder).table("epochs.tsv")["name"].count("after2") == kept
+
+
+@pytest.mark.parametrize("fill", list(Fill))
+def test_recording_without_any_pulse_goes_through_a_plan_with_pulses(fill: Fill, tmp_path: Path) -> None:
+    """A session without stimulation, mended like the others: nothing to learn, nothing to fill."""
+    slow = (4000 * np.sin(np.arange(4000) / 90.0)[None] * [[1.0], [0.5], [-1.0], [0.2]]).astype(np.int16)
+    recording = triplet_by_hand(tmp_path, slow, "INT_16", events=[(1500, "Stimulus", "cue")])
+    plan = (
+        'pulsemend = 1\n[markers.cue]\nrole = "cue"\n[markers.pulse]\nrole = "pulse"\n'
+        '[[trial]]\nslot = "cue"\nrole = "cue"\n'
+        f'[pulses]\nwindow_ms = [-2.0, 14.0]\nfill = "{fill}"\n'
+        "[filter]\nrate_hz = 250\nlowpass_hz = 40\n"
+        '[epochs]\nlength_s = 1.0\n[[epochs.rule]]\nname = "delay"\nanchor = "cue"\nstart_s = 0.0\n'
+        '[export]\nformats = ["hdf5"]\n'
+    )
+    written = SetOnDisk(run_mend(recording, plan, tmp_path).folder)
+    assert written.hdf5("data").shape == (1, 4, 250)
+    assert np.isfinite(written.hdf5("data")).all()
+    assert not written.hdf5("replaced").any()

@@ -364,7 +364,8 @@ def _repairs(setup: Setup, estimates: Estimates) -> list[_Repair]:
     for group in setup.groups:
         everyone = group.columns.size == setup.used.size
         filler = None
-        if setup.fill is not Fill.LEAVE:
+        # Without pulses nothing was learned for a fill, and nothing is filled.
+        if estimates.pulses and setup.fill is not Fill.LEAVE:
             known = estimates.autocovariance
             config = FillConfig(
                 kind=setup.fill,
