@@ -146,7 +146,11 @@ class ActionBar(QObject):
         self.refreshed.emit()
 
     def _make(self, action: Action) -> QAction:
-        made = QAction(action.title, self._window)
+        if action.id == RECENT_MENU:
+            made = self.recent_menu.menuAction()
+            made.setText(action.title)
+        else:
+            made = QAction(action.title, self._window)
         made.setObjectName(action.id)
         made.setToolTip(action.full_tooltip)
         made.setStatusTip(action.tooltip)

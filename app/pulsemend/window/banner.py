@@ -73,6 +73,7 @@ class Banner(QFrame):
         self._column.setContentsMargins(0, 0, 0, 0)
         self._column.setSpacing(4)
         self._area = QScrollArea()
+        self._area.setObjectName("messages")
         self._area.setAccessibleName("List of messages")
         self._area.setFocusPolicy(Qt.FocusPolicy.NoFocus)
         self._area.setWidgetResizable(True)
@@ -108,7 +109,7 @@ class Banner(QFrame):
             self._column.addWidget(row)
             row.show()
         n_older = len(self._shown) - 1
-        self.older.setText("Show the newest only" if self._all else f"Show {n_older} older")
+        self.older.setText("Show the newest only" if self._all else f"Show {max(n_older, 0)} older")
         self.older.setVisible(n_older > 0)
         self.put_all_away.setVisible(n_older > 0)
         self.setAccessibleDescription(self.rows[0].accessibleName() if self.rows else "")

@@ -37,6 +37,9 @@ def style_sheet(theme: Theme, text_pt: float) -> str:
     QLabel[kind="value"] {{ font-weight: 600; }}
     QLabel[kind="attention"] {{ color: {theme.attention}; font-weight: 600; }}
     QScrollArea, QScrollArea > QWidget > QWidget {{ background: transparent; border: none; }}
+    QScrollArea {{ border: 2px solid transparent; border-radius: {RADIUS_PX}px; }}
+    QScrollArea:focus {{ border-color: {theme.accent}; }}
+    #messages {{ border: none; }}
     QPushButton, QToolButton {{
         background: {theme.field}; border: 1px solid {theme.line}; border-radius: {RADIUS_PX}px;
         padding: 4px 10px;
@@ -62,6 +65,9 @@ def style_sheet(theme: Theme, text_pt: float) -> str:
     QComboBox QAbstractItemView {{ background: {theme.panel}; border: 1px solid {theme.line}; }}
     QPushButton:focus, QToolButton:focus, QLineEdit:focus, QAbstractSpinBox:focus, QComboBox:focus,
     QAbstractItemView:focus, QPlainTextEdit:focus, QTextBrowser:focus {{ border: 2px solid {theme.accent}; }}
+    QPushButton[kind="main"]:focus, QPushButton:checked:focus, QToolButton:checked:focus {{
+        border: 2px solid {theme.text};
+    }}
     QRadioButton:focus, QCheckBox:focus {{ color: {theme.accent}; text-decoration: underline; }}
     QAbstractItemView {{
         background: {theme.panel}; alternate-background-color: {theme.window}; border: 1px solid {theme.line};

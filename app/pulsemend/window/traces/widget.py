@@ -77,11 +77,14 @@ class TracesWidget(QWidget):
         layout.addWidget(self.plot, 1)
         layout.addWidget(self._bar)
         self.setTabOrder(self.names, self.plot)
-        self.setFocusProxy(self.plot)
         self._connect()
         unsubscribe = model.subscribe(self._on_view)
         self.destroyed.connect(lambda: unsubscribe())
         self._lay_out()
+
+    def setFocus(self, reason: Qt.FocusReason = Qt.FocusReason.OtherFocusReason) -> None:
+        """Give the focus to the traces; as a focus proxy they would keep Tab from the channels' names."""
+        self.plot.setFocus(reason)
 
     def set_overlays(self, overlays: Overlays) -> None:
         """Show other events, bands and bad channels."""
