@@ -88,7 +88,15 @@ class RuleList(Card):
     def __init__(self) -> None:
         super().__init__("Rules")
         self.model = RulesModel()
-        self.table = RowsTable("Epoch rules", self.model, ("after probe", "answer1 -0.55 s"))
+        self.table = RowsTable("Epoch rules", self.model, ())
+        # A long name gives way; numbers do not.
+        header = self.table.horizontalHeader()
+        header.setStretchLastSection(False)
+        header.setMinimumSectionSize(40)
+        for column, mode in enumerate(
+            (header.ResizeMode.Stretch, *2 * (header.ResizeMode.ResizeToContents,))
+        ):
+            header.setSectionResizeMode(column, mode)
         self.table.setSelectionMode(RowsTable.SelectionMode.SingleSelection)
         self.add(self.table)
         self.buttons = {
