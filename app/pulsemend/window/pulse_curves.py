@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from PySide6.QtCore import QLineF, QRectF
+from PySide6.QtCore import QLineF, QRectF, Qt
 from PySide6.QtGui import QColor, QPainter, QPen
 
 from pulsemend.model.plan import Window
@@ -88,7 +88,15 @@ def draw_curve(
         if len(x) > 2.0 * frame.area.width():
             starts = _columns(x)
             lowest, highest = np.minimum.reduceat(y, starts), np.maximum.reduceat(y, starts)
-            x, y = np.repeat(x[starts], 2), np.column_stack([lowest, highest]).ravel()
+            # Neighbouring columns meet, as the curve itself does.
+            lowest[1:], highest[1:] = (
+                np.minimum(lowest[1:], highest[:-1]),
+                np.maximum(highest[1:], lowest[:-1]),
+            )
+            # A level curve is as thick as its pen.
+            highest = np.maximum(highest, lowest + pen.widthF())
+            _draw_columns(painter, pen, np.floor(x[starts]), lowest, highest)
+            continue
         points = list(zip(x.tolist(), y.tolist(), strict=True))
         painter.drawLines([QLineF(*a, *b) for a, b in itertools.pairwise(points)])
 
@@ -115,10 +123,6 @@ def draw_band(
     color : QColor
         May be translucent: no pixel is painted twice.
     """
-    painter.save()
-    painter.setRenderHint(QPainter.RenderHint.Antialiasing, on=False)
-    pen = QPen(color, 1.0)
-    painter.setPen(pen)
     lower_v, upper_v = edges_v
     for run in _runs(_visible(frame, times_s), lower_v):
         x, low, high = frame.xs(times_s[run]), frame.ys(lower_v[run]), frame.ys(upper_v[run])
@@ -126,11 +130,19 @@ def draw_band(
             starts = _columns(x)
             low, high = np.maximum.reduceat(low, starts), np.minimum.reduceat(high, starts)
             x = x[starts]
-        at = np.arange(math.ceil(x[0]), math.floor(x[-1]) + 1)
-        bottoms, tops = np.interp(at, x, low).tolist(), np.interp(at, x, high).tolist()
-        painter.drawLines(
-            [QLineF(a, bottom, a, top) for a, bottom, top in zip(at.tolist(), bottoms, tops, strict=True)]
-        )
+        at = np.arange(math.ceil(x[0]), math.floor(x[-1]) + 1, dtype=np.float64)
+        _draw_columns(painter, QPen(color, 1.0), at, np.interp(at, x, high), np.interp(at, x, low))
+
+
+def _draw_columns(painter: QPainter, pen: QPen, x: Values, tops: Values, bottoms: Values) -> None:
+    """Draw one upright line per column of pixels; flat ends keep translucent neighbours apart."""
+    painter.save()
+    painter.setRenderHint(QPainter.RenderHint.Antialiasing, on=False)
+    pen = QPen(pen)
+    pen.setCapStyle(Qt.PenCapStyle.FlatCap)
+    painter.setPen(pen)
+    columns = zip(x.tolist(), tops.tolist(), bottoms.tolist(), strict=True)
+    painter.drawLines([QLineF(at, top, at, bottom) for at, top, bottom in columns])
     painter.restore()
 
 

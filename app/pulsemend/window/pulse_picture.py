@@ -111,7 +111,7 @@ class PulsePicture(QWidget):
         column.addWidget(self.canvas, 1)
         column.addWidget(self.message, 1)
         self.message.hide()
-        self.chooser.currentIndexChanged.connect(lambda _index: self.wanted.emit())
+        self.chooser.currentIndexChanged.connect(lambda _index: self._on_chosen())
         canvas.span_changed.connect(self._on_span)
         for handle, is_start in ((canvas.start, True), (canvas.stop, False)):
             handle.moved.connect(lambda ms, is_start=is_start: self._move_to(ms, is_start=is_start))
@@ -181,6 +181,10 @@ class PulsePicture(QWidget):
         """Change the colours."""
         self.canvas.theme = theme
         self.canvas.update()
+
+    def _on_chosen(self) -> None:
+        self.chooser.setToolTip(f"{self.chooser.currentText()}\n{WORST_MEANS}")
+        self.wanted.emit()
 
     def _on_span(self) -> None:
         view = self.canvas.view

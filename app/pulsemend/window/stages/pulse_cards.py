@@ -6,7 +6,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 from functools import partial
 
-from PySide6.QtCore import QSignalBlocker, QSize, Signal
+from PySide6.QtCore import QSignalBlocker, QSize, Qt, Signal
 from PySide6.QtWidgets import QHBoxLayout, QLabel, QListWidget, QVBoxLayout, QWidget
 
 from pulsemend.errors import PulsemendError
@@ -177,6 +177,7 @@ class GapCard(Card):
         self.add(words("Exceptions of single channels"))
         self.list = QListWidget()
         self.list.setAccessibleName("Gap: exceptions of single channels")
+        self.list.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
         self.add(self.list)
         self.own = WindowFields("the exception")
         self.add(self.own)
@@ -214,7 +215,11 @@ class GapCard(Card):
         self._show_list(exceptions(plan, marks))
         names = picked or ([self.channel] if self.channel else [])
         self.add_picked.setEnabled(bool(names) and decided)
-        self.add_picked.setText(f"Add {_listed(names)}" if names else "Add")
+        wanted = f"Add {_listed(names)}" if names else "Add"
+        room = self.fontMetrics().averageCharWidth() * 20
+        self.add_picked.setText(self.fontMetrics().elidedText(wanted, Qt.TextElideMode.ElideRight, room))
+        self.add_picked.setAccessibleName(wanted)
+        self.add_picked.setToolTip(f"{wanted}: a gap of its own" if names else "")
         text = (
             "" if names else "Pick channels by their names, or choose one in the picture, to add them here."
         )

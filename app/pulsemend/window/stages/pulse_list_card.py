@@ -28,7 +28,7 @@ from pulsemend.window.stages.pulse_cards import Edits, MsField, SlimField
 
 Index = QModelIndex | QPersistentModelIndex
 _ROOT = QModelIndex()
-_COLUMNS = ("Time", "After marker", "State")
+_COLUMNS = ("Time", "Latency", "State")
 _TIMES = ((PulseTimes.MARKERS, "at their markers"), (PulseTimes.NONE, "there are no pulses"))
 
 
@@ -67,9 +67,11 @@ class PulseModel(QAbstractTableModel):
         self, section: int, orientation: Qt.Orientation, role: int = Qt.ItemDataRole.DisplayRole
     ) -> Any:
         """Name the columns."""
-        if orientation is Qt.Orientation.Horizontal and role == Qt.ItemDataRole.DisplayRole:
-            return _COLUMNS[section]
-        return None
+        if orientation is not Qt.Orientation.Horizontal:
+            return None
+        if role == Qt.ItemDataRole.ToolTipRole and _COLUMNS[section] == "Latency":
+            return "How long after its marker the pulse is"
+        return _COLUMNS[section] if role == Qt.ItemDataRole.DisplayRole else None
 
     def data(self, index: Index, role: int = Qt.ItemDataRole.DisplayRole) -> Any:
         """Give the text of a cell; the tooltip is the whole line."""
@@ -199,8 +201,8 @@ class PulseListCard(Card):
     def _fit_columns(self) -> None:
         """Fit to the text of now, whatever size it has; without asking every row."""
         metrics = self.table.fontMetrics()
-        for column, widest in enumerate(("0000.0000 s", _COLUMNS[1])):
-            self.table.setColumnWidth(column, metrics.horizontalAdvance(widest) + 18)
+        for column, widest in enumerate(("0000.0000 s", "00.00 ms")):
+            self.table.setColumnWidth(column, metrics.horizontalAdvance(widest) + 12)
         height = metrics.height() + 8
         self.table.verticalHeader().setDefaultSectionSize(height)
         self.table.setFixedHeight(7 * height + 4)
