@@ -215,6 +215,9 @@ def test_add_copy_move_remove(qtbot: QtBot, page: EpochsStage) -> None:
     click(qtbot, page.rules.buttons["down"])
     assert names() == ["after2", "delay1", "epoch1"]
     assert not page.rules.buttons["down"].isEnabled()
+    page.rules.move_wanted.emit(1)
+    assert page.editor.title.text() == "Rule epoch1"
+    assert rule(page, page._place).name == "epoch1"
     click(qtbot, page.rules.buttons["copy"])
     assert names() == ["after2", "delay1", "epoch1", "epoch2"]
     for _ in range(3):

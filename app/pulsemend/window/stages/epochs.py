@@ -157,10 +157,11 @@ class EpochsStage(StagePage):
     def _change_rules(self, label: str, change: Callable[[Plan], Plan], place: int) -> bool:
         """Add, copy, remove or move; the rule at `place` is chosen afterwards."""
         plan, before = self.bench.session.plan, self._place
-        if plan is None:
+        new = plan if plan is None else change(plan)
+        if new is None or new == plan:
             return False
         self._place = place
-        refusal = self._edit("", label, change(plan))
+        refusal = self._edit("", label, new)
         if refusal:
             self._place = before
         self.rules.refuse(refusal)
