@@ -8,6 +8,19 @@ from collections.abc import Iterator
 import pytest
 
 
+@pytest.fixture(autouse=True, scope="session")
+def loaded_for_good() -> Iterator[None]:
+    """Look no more at what is loaded: otherwise looking takes longer than most tests."""
+    import scipy.signal  # noqa: F401
+
+    import pulsemend.window.main_window  # noqa: F401
+
+    gc.collect()
+    gc.freeze()
+    yield
+    gc.unfreeze()
+
+
 @pytest.fixture(autouse=True)
 def garbage_is_collected_here() -> Iterator[None]:
     """As `pulsemend.window.garbage` does: no worker may destroy what an earlier test left."""
