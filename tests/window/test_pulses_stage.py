@@ -504,6 +504,21 @@ def test_first_drag_decides_an_undecided_gap(make: Callable[..., Room]) -> None:
     assert canvas.state_words == "gap proposed, not decided yet"
 
 
+def test_pulses_are_shown_while_other_parts_of_the_plan_are_open(make: Callable[..., Room]) -> None:
+    text = PLAN.replace('[markers."arrow left"]\nrole = "cue"', '[markers."arrow left"]\nrole = "undecided"')
+    assert text != PLAN
+    room = make(parse_plan(text))
+    room.wait(lambda: bool(room.bench.problem))
+    room.wait_shown()
+    view = room.picture.canvas.view
+    assert view is not None
+    assert view.repaired is not None
+    assert (view.n_shown, view.n_pulses) == (N_PULSES, N_PULSES)
+    assert room.picture.canvas.state_words == "provisional"
+    assert room.page.list_card.aligned.value.text() == str(N_PULSES - 1)
+    assert "arrow left" in room.page.effect_card.note.text()
+
+
 def test_proposed_gap_can_be_taken(make: Callable[..., Room]) -> None:
     room = make(undecided())
     room.click(room.page.gap_card.propose)
