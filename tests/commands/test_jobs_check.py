@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import errno
 import json
+import os
 import shutil
 from pathlib import Path
 
 import pytest
 
 from pulsemend.__main__ import main
+from pulsemend.export import found_set
+from pulsemend.export.checksums import file_sha256
 from support.child import pulsemend
 from support.small_lantern import PLAN, SetOnDisk, Study, run_mend
 
@@ -96,6 +100,24 @@ def test_a_missing_file_is_1_and_named(
     damaged.path(name).unlink()
     assert main(["check", str(damaged.folder)]) == 1
     assert name in capsys.readouterr().out
+
+
+def test_a_file_that_may_not_be_read_is_not_called_changed_or_missing(
+    damaged: SetOnDisk, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Root may read everything, so the system's refusal is made up."""
+
+    def refuse(path: Path) -> str:
+        if path.name.endswith("epochs.h5"):
+            raise PermissionError(errno.EACCES, os.strerror(errno.EACCES), str(path))
+        return file_sha256(path)
+
+    monkeypatch.setattr(found_set, "file_sha256", refuse)
+    assert main(["check", str(damaged.folder)]) == 1
+    shown = capsys.readouterr().out
+    assert "epochs.h5 cannot be read" in shown
+    assert "is missing" not in shown
+    assert "was changed" not in shown
 
 
 @pytest.mark.parametrize("share", [0.0, 0.3, 0.99])

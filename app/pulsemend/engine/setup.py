@@ -326,7 +326,11 @@ def _reference(
     if wanted == "average":
         mean_of = np.concatenate([eeg & ~bad, extra])
         if not mean_of.any():
-            raise UnusableChannels("no good EEG channel is left for the average reference")
+            raise UnusableChannels(
+                "no good EEG channel is left for the average reference",
+                where="channels.reference",
+                todo='Choose reference = "as recorded", or call fewer channels bad',
+            )
         return restored, mean_of, to
     all_names = [*names, restored] if restored else list(names)
     mean_of = np.isin(all_names, wanted)

@@ -169,7 +169,10 @@ def read_found(folder: Path, prefix: str) -> Work[FoundSet]:
     if path.name in found.present:
         with found.reading(names.EPOCHS_H5):
             # The HDF5 library may never return from a file with damaged structures.
-            if found.listed is not None and found.listed.get(path.name) != found.digests.get(path.name):
+            digest = found.digests.get(path.name)
+            if digest is None:
+                raise ValueError("cannot be read, so it is not opened")
+            if found.listed is not None and found.listed.get(path.name) != digest:
                 raise ValueError("was changed after it was written, so it is not opened")
             found.hdf5 = read_hdf5(path)
     if found.path(names.EPO_FIF).name in found.present:

@@ -86,7 +86,11 @@ def check_checksums(found: FoundSet) -> CheckItem:
         return integrity_item("checksums", title, "none", limit, problems)
     listed, digests = found.listed, found.digests
     problems = [f"{name} was changed" for name in listed if digests.get(name, listed[name]) != listed[name]]
-    problems += [f"{name} is missing" for name in listed if name not in digests]
+    problems += [
+        f"{name} {'cannot be read' if name in found.present else 'is missing'}"
+        for name in listed
+        if name not in digests
+    ]
     wanted = (found.path(name).name for name in (*names.CONTAINERS.values(), *names.SIDE_FILES))
     problems += [f"{name} is not listed" for name in wanted if name in digests and name not in listed]
     value = f"{sum(digests.get(name) == digest for name, digest in listed.items())} of {len(listed)}"
