@@ -85,29 +85,34 @@ class PulsePicture(QWidget):
         self.chooser.view().setAccessibleName("Channels to choose from")
         self.chooser.setToolTip(WORST_MEANS)
         self.chooser.setSizeAdjustPolicy(QComboBox.SizeAdjustPolicy.AdjustToMinimumContentsLengthWithIcon)
-        self.chooser.setMinimumContentsLength(18)
+        self.chooser.setMinimumContentsLength(8)
+        self.chooser.setMaximumWidth(320)
+        self.chooser.setSizePolicy(QSizePolicy.Policy.Expanding, QSizePolicy.Policy.Fixed)
         self.message = words("", "quiet")
         self.message.setAlignment(Qt.AlignmentFlag.AlignCenter)
+        label = words("Channel")
+        label.setBuddy(self.chooser)
         head = QHBoxLayout()
         head.addWidget(words("All pulses at zero", "title"))
         head.addStretch(1)
-        label = words("Channel")
-        label.setBuddy(self.chooser)
         head.addWidget(label)
-        head.addWidget(self.chooser)
+        head.addWidget(self.chooser, 2)
         canvas = self.canvas
-        head.addWidget(words("Time"))
-        head.addWidget(_zoom_button("\u2212", "Show more time", lambda: canvas.zoom_time(1.0 / ZOOM)))
-        head.addWidget(_zoom_button("+", "Show less time", lambda: canvas.zoom_time(ZOOM)))
-        head.addWidget(words("Voltage"))
-        head.addWidget(_zoom_button("\u2212", "Show more voltage", lambda: canvas.zoom_volts(1.0 / ZOOM)))
-        head.addWidget(_zoom_button("+", "Show less voltage", lambda: canvas.zoom_volts(ZOOM)))
-        head.addWidget(_zoom_button("Whole", "Show the usual span and voltage again", canvas.show_whole))
+        below = QHBoxLayout()
+        below.addWidget(self.info, 1)
+        for text, name, does in (
+            ("ms \u2212", "Show less time", lambda: canvas.zoom_time(ZOOM)),
+            ("ms +", "Show more time", lambda: canvas.zoom_time(1.0 / ZOOM)),
+            ("\u00b5V \u2212", "Show less voltage", lambda: canvas.zoom_volts(ZOOM)),
+            ("\u00b5V +", "Show more voltage", lambda: canvas.zoom_volts(1.0 / ZOOM)),
+            ("Whole", "Show the usual span and voltage again", canvas.show_whole),
+        ):
+            below.addWidget(_zoom_button(text, name, does))
         column = QVBoxLayout(self)
         column.setContentsMargins(12, 6, 12, 6)
         column.setSpacing(2)
         column.addLayout(head)
-        column.addWidget(self.info)
+        column.addLayout(below)
         column.addWidget(self.canvas, 1)
         column.addWidget(self.message, 1)
         self.message.hide()

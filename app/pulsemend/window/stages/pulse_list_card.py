@@ -33,8 +33,8 @@ _TIMES = ((PulseTimes.MARKERS, "at their markers"), (PulseTimes.NONE, "there are
 
 
 _SHORT: dict[PulseState | None, str] = {
-    PulseState.ALIGNED: "in the signal",
-    PulseState.MARKED_ONLY: "not in the signal",
+    PulseState.ALIGNED: "in signal",
+    PulseState.MARKED_ONLY: "not in signal",
     PulseState.ADDED: "added",
     PulseState.MOVED: "moved",
 }
