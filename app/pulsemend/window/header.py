@@ -93,8 +93,9 @@ class ElidedName(QLabel):
         self.updateGeometry()
 
     def minimumSizeHint(self) -> QSize:
-        """Room for a few letters."""
-        return QSize(4 * self.fontMetrics().averageCharWidth(), super().minimumSizeHint().height())
+        """Room for a few letters, or for a short name."""
+        few = 10 * self.fontMetrics().averageCharWidth()
+        return QSize(min(few, self.sizeHint().width()), super().minimumSizeHint().height())
 
     def sizeHint(self) -> QSize:
         """Room for the whole name, as long as it is no novel."""
@@ -118,7 +119,9 @@ class PlainNumberField(NumberField):
         super().__init__(name, unit, least, most, 1.0, 3)
         self.setStepType(QAbstractSpinBox.StepType.AdaptiveDecimalStepType)
         self.setToolTip(f"{name}; type a number or press the arrows up and down")
-        # Arrow keys and wheel do what the buttons would, and the line has little room.
+        # Arrow keys and wheel do what the buttons would, and the line has little room. Buttons of no width
+        # instead of none: without any, a style sheet leaves the number no room.
+        self.setButtonSymbols(QAbstractSpinBox.ButtonSymbols.UpDownArrows)
         self.setStyleSheet(
             "QAbstractSpinBox::up-button, QAbstractSpinBox::down-button { width: 0; border: none; }"
         )

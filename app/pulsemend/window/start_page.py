@@ -7,10 +7,9 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from PySide6.QtCore import QStandardPaths, Qt, Signal
-from PySide6.QtGui import QResizeEvent
+from PySide6.QtGui import QResizeEvent, QShowEvent
 from PySide6.QtWidgets import (
     QFileDialog,
-    QGridLayout,
     QHBoxLayout,
     QLabel,
     QLineEdit,
@@ -25,6 +24,7 @@ from PySide6.QtWidgets import (
 from pulsemend.progress import Progress, Work
 from pulsemend.session.settings import Recent
 from pulsemend.window.action_bar import ActionBar, recent_title
+from pulsemend.window.flow import flow_row
 from pulsemend.window.icons import icon, pixmap
 from pulsemend.window.job import Job
 from pulsemend.window.parts import Card, button, set_kind, words
@@ -90,7 +90,6 @@ class StartPage(QScrollArea):
         self.progress.setAccessibleName("Progress of the sample")
         self.words = words("", "quiet")
         self.setWidget(self._inside())
-        self.setFocusProxy(self.openers[0])
         self._show_running()
         self.set_theme(bench.theme)
 
@@ -105,6 +104,23 @@ class StartPage(QScrollArea):
         self.mark.setPixmap(pixmap("mark", theme.accent, _MARK_PX, self.devicePixelRatioF()))
         self.write.setIcon(icon("lantern", theme))
         self._drop_sign.setPixmap(pixmap("drop", theme.quiet, 28, self.devicePixelRatioF()))
+
+    def showEvent(self, event: QShowEvent) -> None:
+        """Begin with the first way to begin."""
+        super().showEvent(event)
+        self.setFocus()
+
+    def setFocus(self, reason: Qt.FocusReason = Qt.FocusReason.OtherFocusReason) -> None:
+        """Give the focus to the first way to begin."""
+        self.openers[0].setFocus(reason)
+
+    def resizeEvent(self, event: QResizeEvent) -> None:
+        """Scroll where wrapped texts need more height than there is."""
+        super().resizeEvent(event)
+        around = self.widget()
+        layout = None if around is None else around.layout()
+        if around is not None and layout is not None:
+            around.setMinimumHeight(layout.totalHeightForWidth(self.viewport().width()))
 
     def write_sample(self) -> None:
         """Let a worker write the sample into the folder that is named."""
@@ -139,10 +155,13 @@ class StartPage(QScrollArea):
         column.setSpacing(12)
         column.addStretch(1)
         column.addWidget(self.mark, 0, Qt.AlignmentFlag.AlignHCenter)
-        column.addWidget(self._drop_card())
+        cards = [self._drop_card(), self._sample_card()]
         if self._bench.settings.recent:
-            column.addWidget(self._recent_card())
-        column.addWidget(self._sample_card())
+            cards.insert(1, self._recent_card())
+        for card in cards:
+            # As high as their wrapped texts, which a card of the settings' column is not.
+            card.setSizePolicy(QSizePolicy.Policy.Preferred, QSizePolicy.Policy.Minimum)
+            column.addWidget(card)
         column.addStretch(2)
         around = QWidget()
         row = QHBoxLayout(around)
@@ -161,11 +180,7 @@ class StartPage(QScrollArea):
         line.addWidget(self._drop_sign)
         line.addWidget(text, 1)
         card.body.addLayout(line)
-        row = QHBoxLayout()
-        for one in self.openers:
-            row.addWidget(one)
-        row.addStretch(1)
-        card.body.addLayout(row)
+        card.add(flow_row(*self.openers))
         return card
 
     def _recent_card(self) -> Card:
@@ -182,14 +197,12 @@ class StartPage(QScrollArea):
         label = QLabel("Folder")
         label.setBuddy(self.folder)
         self.folder.setAccessibleName("Folder of the sample")
-        grid = QGridLayout()
-        grid.addWidget(label, 0, 0)
-        grid.addWidget(self.folder, 0, 1)
-        grid.addWidget(self.choose, 0, 2)
-        grid.addWidget(self.write, 0, 3)
-        grid.addWidget(self.progress, 1, 1, 1, 2)
-        grid.addWidget(self.stop, 1, 3)
-        card.body.addLayout(grid)
+        row = QHBoxLayout()
+        row.addWidget(label)
+        row.addWidget(self.folder, 1)
+        card.body.addLayout(row)
+        card.add(flow_row(self.choose, self.write, self.stop))
+        card.add(self.progress)
         card.add(self.words)
         return card
 
