@@ -78,6 +78,27 @@ def style_sheet(theme: Theme, text_pt: float) -> str:
         background: {theme.panel}; color: {theme.quiet}; border: none; border-bottom: 1px solid {theme.line};
         padding: 3px 6px; font-size: {small:.1f}pt;
     }}
+    QRadioButton::indicator, QCheckBox::indicator {{
+        width: 12px; height: 12px; border: 1px solid {theme.quiet}; background: {theme.field};
+    }}
+    QRadioButton::indicator {{ border-radius: 7px; }}
+    QCheckBox::indicator {{ border-radius: 3px; }}
+    QRadioButton::indicator:checked {{
+        width: 6px; height: 6px; border: 4px solid {theme.accent}; background: {theme.field};
+    }}
+    QCheckBox::indicator:checked {{ border-color: {theme.accent}; background: {theme.accent}; }}
+    QRadioButton::indicator:disabled, QCheckBox::indicator:disabled {{ border-color: {theme.line}; }}
+    QAbstractSpinBox::up-button, QAbstractSpinBox::down-button {{ width: 0; border: none; }}
+    QComboBox::drop-down {{ border: none; width: 20px; }}
+    QComboBox::down-arrow {{
+        width: 0; height: 0; border-left: 4px solid {theme.field}; border-right: 4px solid {theme.field};
+        border-top: 6px solid {theme.quiet};
+    }}
+    QListView::indicator {{
+        width: 12px; height: 12px; border: 1px solid {theme.quiet}; border-radius: 3px;
+        background: {theme.field};
+    }}
+    QListView::indicator:checked {{ background: {theme.accent}; border: 3px solid {theme.field}; }}
     QMenuBar, QMenu {{ background: {theme.panel}; }}
     QMenuBar::item:selected, QMenu::item:selected {{
         background: {theme.accent_soft}; color: {theme.accent};
