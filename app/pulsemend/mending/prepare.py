@@ -28,6 +28,7 @@ from pulsemend.model.recording import Channel, Fingerprint, Recording, Recording
 from pulsemend.model.vocabulary import PulseState, Role
 from pulsemend.progress import Work
 from pulsemend.readers.fingerprint import fingerprint
+from pulsemend.readers.names import standard_positions
 from pulsemend.readers.opening import open_recording
 from pulsemend.signal.gaps import window_to_samples
 from pulsemend.trials.candidates import GapSpan, Geometry, candidates, set_order, stale_decisions
@@ -247,9 +248,6 @@ def with_positions(facts: RecordingFacts) -> RecordingFacts:
     """Give channels without a position of their own that of their name in the extended 10-20 system."""
     if all(channel.position_m is not None for channel in facts.channels):
         return facts
-    # The table of positions comes with the reader library, which takes a second to load.
-    from pulsemend.readers.names import standard_positions
-
     known = standard_positions([channel.name for channel in facts.channels])
     placed = (
         replace(channel, position_m=channel.position_m or known.get(channel.name))

@@ -105,7 +105,8 @@ class MainWindow(QMainWindow):
         self._measuring = False
         self._guide: QWidget | None = None
         self.setMinimumSize(900, 600)
-        self.resize(1440, 900)
+        room = self.screen().availableGeometry()
+        self.resize(min(1440, room.width()), min(900, room.height()))
         self.restoreGeometry(QByteArray.fromBase64(settings.geometry.encode()))
         self._build()
         self._listen()

@@ -57,7 +57,7 @@ class Card(QFrame):
         super().__init__(parent)
         self.setProperty("card", "true")
         self.setAccessibleName(title)
-        self.setSizePolicy(QSizePolicy.Policy.Preferred, QSizePolicy.Policy.Maximum)
+        self.setSizePolicy(QSizePolicy.Policy.Preferred, QSizePolicy.Policy.Minimum)
         self.body = QVBoxLayout(self)
         self.body.setContentsMargins(12, 8, 12, 10)
         self.body.setSpacing(6)
