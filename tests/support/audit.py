@@ -189,6 +189,18 @@ def without_visible_focus(window: QWidget) -> list[str]:
     return found
 
 
+def numbers_cut_off(window: QWidget) -> list[str]:
+    """Fields of numbers that are shown without room for what is in them."""
+    found = []
+    for field in window.findChildren(QAbstractSpinBox):
+        inner = field.findChild(QLineEdit)
+        if inner is None or not field.isVisibleTo(window):
+            continue
+        if inner.width() < inner.fontMetrics().horizontalAdvance(field.text()):
+            found.append(described(field))
+    return found
+
+
 def picture(widget: QWidget) -> QImage:
     """What a widget looks like now."""
     return widget.grab().toImage()

@@ -162,6 +162,7 @@ def check(window: MainWindow) -> None:
         "actions without key and menu": audit.unreachable_actions(window),
         "missed by Tab": audit.missed_by_tab(window),
         "without visible focus": audit.without_visible_focus(window),
+        "number cut off": audit.numbers_cut_off(window),
     }
     assert [f"{kind}: {one}" for kind, found in findings.items() for one in found] == []
 
