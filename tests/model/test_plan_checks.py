@@ -263,3 +263,14 @@ def test_warnings() -> None:
     assert optional.warnings == ('slot "p" is optional and no code has its role "probe"',)
     wide = parse_plan(TEXT.replace("lowpass_hz = 0\nrate_hz = 0", "lowpass_hz = 420\nrate_hz = 1000"))
     assert "above 0.4 x rate_hz" in wide.warnings[0]
+
+
+def test_a_plan_without_a_gap_can_be_read_but_not_carried_out() -> None:
+    """The gap has no default; until a person decides it, the plan can be shown and edited."""
+    text = TEXT.replace("window_ms = [-2.0, 14.0]", "").replace("window_ms = [-2, 14]", "")
+    read = parse_plan(text, "open.toml")
+    assert read.plan.pulses.window_ms is None
+    with pytest.raises(PlanError, match="must be decided") as caught, read.source.located():
+        check_decided(read.plan)
+    assert caught.value.key == "pulses.window_ms"
+    assert caught.value.line is not None

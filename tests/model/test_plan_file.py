@@ -395,7 +395,6 @@ CROSS = [
     ("optional = true", "", "trial[3]", None),
     ('role = "pulse"\n\n', 'role = "other"\n\n', "trial[3].role", None),
     ('role = "cue"\nlabels', 'role = "probe"\nlabels', "trial[2].role", "no code under [markers]"),
-    ("window_ms = [-2.0, 14.0]", "", "pulses.window_ms", "is missing: the gap"),
     ('fill = "covariance"', 'fill = "leave"', "pulses.fill", "FIF cannot hold"),
     ("lowpass_hz = 100.0", "lowpass_hz = 1.0", "filter.lowpass_hz", "is out of range"),
     ("highpass_hz = 1.0", "highpass_hz = 100.0", "filter.lowpass_hz", "must be above highpass_hz"),

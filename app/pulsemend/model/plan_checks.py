@@ -48,7 +48,9 @@ def check_plan(plan: Plan) -> tuple[str, ...]:
 
 
 def check_decided(plan: Plan) -> None:
-    """Refuse codes whose role is still undecided.
+    """Refuse what a person still has to decide: roles of codes, and the gap around every pulse.
+
+    A plan with such open ends can be read, shown and edited, but not carried out.
 
     Parameters
     ----------
@@ -58,7 +60,7 @@ def check_decided(plan: Plan) -> None:
     Raises
     ------
     PlanError
-        Lists them; the first one's line is given.
+        A role is undecided (lists all; the first one's line is given), or the gap is.
     """
     undecided = [marker.code for marker in plan.markers if marker.role is Role.UNDECIDED]
     if undecided:
@@ -66,6 +68,12 @@ def check_decided(plan: Plan) -> None:
             key_text(("markers", undecided[0], "role")),
             "still undecided: " + ", ".join(show(code) for code in undecided),
             allowed=" | ".join(show(role) for role in Role if role is not Role.UNDECIDED),
+        )
+    if plan.pulses.times is not PulseTimes.NONE and plan.pulses.window_ms is None:
+        raise PlanError(
+            "pulses.window_ms",
+            "is missing: the gap around every pulse has no default and must be decided",
+            allowed='[from, to] in ms, or times = "none" for a recording without pulses',
         )
 
 
@@ -234,12 +242,6 @@ def _check_pulses(plan: Plan) -> None:
     pulses = plan.pulses
     if pulses.times is PulseTimes.NONE:
         return
-    if pulses.window_ms is None:
-        raise PlanError(
-            "pulses.window_ms",
-            "is missing: the gap around every pulse has no default and must be decided",
-            allowed='[from, to] in ms, or times = "none" for a recording without pulses',
-        )
     if pulses.fill is Fill.LEAVE and Format.FIF in plan.export.formats:
         raise PlanError(
             "pulses.fill",
