@@ -267,8 +267,7 @@ def test_warnings() -> None:
 
 def test_a_plan_without_a_gap_can_be_read_but_not_carried_out() -> None:
     """The gap has no default; until a person decides it, the plan can be shown and edited."""
-    text = TEXT.replace("window_ms = [-2.0, 14.0]", "").replace("window_ms = [-2, 14]", "")
-    read = parse_plan(text, "open.toml")
+    read = with_row('times = "none"', 'times = "markers"')
     assert read.plan.pulses.window_ms is None
     with pytest.raises(PlanError, match="must be decided") as caught, read.source.located():
         check_decided(read.plan)

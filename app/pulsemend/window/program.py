@@ -13,6 +13,7 @@ from PySide6.QtWidgets import QApplication
 from pulsemend.session.messages import Level, Message
 from pulsemend.session.session import Session
 from pulsemend.session.settings import load_settings
+from pulsemend.window.garbage import Garbage
 from pulsemend.window.icons import program_icon
 from pulsemend.window.main_window import Folders, MainWindow
 
@@ -46,6 +47,7 @@ def run(recording: Path | None, plan: Path | None) -> int:
     application = QApplication(sys.argv[:1])
     application.setApplicationName("Pulsemend")
     application.setWindowIcon(program_icon())
+    Garbage(application)
     window = open_window(user_folders(), recording, plan)
     window.show()
     window.show_first_notice()

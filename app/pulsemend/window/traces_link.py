@@ -10,9 +10,13 @@ from numpy.typing import NDArray
 from PySide6.QtCore import QObject, Signal
 
 from pulsemend.engine.chain import Chain
+from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.pyramid import Patch, Pyramid, patch, pyramid
 from pulsemend.engine.store import Store
 from pulsemend.mending.learned import Learned, repaired_stored
+from pulsemend.mending.pulse_view import PulseRequest, ground_of, sketch
+from pulsemend.model.marks import Marks
+from pulsemend.model.plan import Plan
 from pulsemend.model.recording import Recording
 from pulsemend.model.vocabulary import Role
 from pulsemend.progress import Progress, Work
@@ -164,18 +168,33 @@ class TracesLink(QObject):
             return
         bench = self._bench
         self._traces.set_overlays(overlays(bench.session, bench.learned))
+        self._traces.set_revision(self._stamp)
         if not bench.provisional:
-            self._traces.set_revision(bench.session.revision)
             self._patch_overview()
 
+    @property
+    def _stamp(self) -> int:
+        """Number of the state that repaired samples belong to: a learned one follows its provisional one."""
+        return 2 * self._bench.session.revision + (not self._bench.provisional)
+
     def request_repaired(self, start: int, stop: int) -> None:
-        """Let a worker repair a stretch."""
-        learned, revision = self._bench.learned, self._bench.session.revision
-        if learned is None or self._bench.provisional:
+        """Let a worker repair a stretch; until the present settings are learned with earlier estimates."""
+        bench, session, stamp = self._bench, self._bench.session, self._stamp
+        learned, plan, marks = bench.learned, session.plan, session.marks
+        if learned is None or plan is None:
             return
-        self._bench.start(
+        if bench.provisional:
+            bench.start(
+                "repaired stretch",
+                lambda recording: _sketched(recording, plan, marks, learned, (start, stop), stamp),
+                self._take_repaired,
+                _nothing,
+                urgent=True,
+            )
+            return
+        bench.start(
             "repaired stretch",
-            lambda recording: _repaired(recording, learned, start, stop, revision),
+            lambda recording: _repaired(recording, learned, (start, stop), stamp),
             self._take_repaired,
             urgent=True,
         )
@@ -193,24 +212,37 @@ class TracesLink(QObject):
 
     def _patch_overview(self) -> None:
         """Work out what repair changes in the overview, as soon as both are known."""
-        learned, of, revision = self._bench.learned, self._pyramid, self._bench.session.revision
+        learned, of, stamp = self._bench.learned, self._pyramid, self._stamp
         if learned is None or of is None or self._bench.provisional:
             return
 
         def take(found: Patch) -> None:
             if self._traces is not None:
-                self._traces.set_repaired_overview(found, revision)
+                self._traces.set_repaired_overview(found, stamp)
 
         self._bench.start("repaired overview", lambda recording: _patched(recording, learned, of), take)
 
 
 def _repaired(
-    recording: Recording, learned: Learned, start: int, stop: int, revision: int
+    recording: Recording, learned: Learned, span: tuple[int, int], stamp: int
 ) -> Work[RepairedStretch]:
     yield Progress("repairing what is in view", 0, 1)
-    chain: Chain = learned.chain(recording)
-    samples = repaired_stored(chain, learned.estimates, start, stop)
-    return RepairedStretch(start, samples, learned.setup.used, revision)
+    return _stretch(learned.chain(recording), learned.estimates, span, stamp)
+
+
+def _sketched(
+    recording: Recording, plan: Plan, marks: Marks, learned: Learned, span: tuple[int, int], stamp: int
+) -> Work[RepairedStretch]:
+    ground = yield from sketch(recording, plan, marks, ground_of(learned), PulseRequest())
+    return _stretch(Chain(recording, ground.setup, ground.estimates), ground.estimates, span, stamp)
+
+
+def _stretch(chain: Chain, estimates: Estimates, span: tuple[int, int], stamp: int) -> RepairedStretch:
+    return RepairedStretch(span[0], repaired_stored(chain, estimates, *span), chain.setup.used, stamp)
+
+
+def _nothing(_error: BaseException) -> None:
+    """Plan and marks may not go together while they are edited; learning says so in its place."""
 
 
 def _patched(recording: Recording, learned: Learned, of: Pyramid) -> Work[Patch]:

@@ -6,10 +6,7 @@ from dataclasses import replace
 
 from pulsemend.session.session import Session
 from pulsemend.session.view import Shown, View
-from pulsemend.window.traces.navigation import SMALL_STEP, Extent, louder
-
-FACTOR = 2.0
-"""How much wider or narrower a menu or key makes the view."""
+from pulsemend.window.traces.navigation import FACTOR, SMALL_STEP, Extent, louder
 
 
 class ViewActs:

@@ -8,7 +8,7 @@ from PySide6.QtCore import QPointF, Qt
 from PySide6.QtGui import QWheelEvent
 
 from pulsemend.session.view import View
-from pulsemend.window.traces.navigation import NOTCH, SMALL_STEP, Extent, louder
+from pulsemend.window.traces.navigation import FACTOR, NOTCH, SMALL_STEP, Extent, louder
 
 _NOTCH_ANGLE = 120.0
 _ZOOM_PIXELS = 60.0
@@ -24,10 +24,12 @@ def moved_by_key(key: int, modifiers: Qt.KeyboardModifier, view: View, extent: E
     """View after a key, or None if the key does not move it.
 
     Arrows move by a tenth, Page Up and Page Down by the width, Home and End to the recording's ends. With
-    Ctrl, Page Up and Page Down zoom about the middle, Up and Down change the height of the traces.
+    Ctrl, Up and Down zoom about the middle; with Shift besides they change the height of the traces. The
+    table of actions has the same keys, and in the window its actions come first.
     """
     middle_s = view.start_s + 0.5 * view.width_s
     none, control = Qt.KeyboardModifier.NoModifier, Qt.KeyboardModifier.ControlModifier
+    both = control | Qt.KeyboardModifier.ShiftModifier
     moves: dict[tuple[Qt.KeyboardModifier, Qt.Key], Callable[[], View]] = {
         (none, Qt.Key.Key_Left): lambda: extent.stepped(view, -SMALL_STEP),
         (none, Qt.Key.Key_Right): lambda: extent.stepped(view, SMALL_STEP),
@@ -35,10 +37,10 @@ def moved_by_key(key: int, modifiers: Qt.KeyboardModifier, view: View, extent: E
         (none, Qt.Key.Key_PageDown): lambda: extent.stepped(view, 1.0),
         (none, Qt.Key.Key_Home): lambda: extent.at_start(view),
         (none, Qt.Key.Key_End): lambda: extent.at_end(view),
-        (control, Qt.Key.Key_PageUp): lambda: extent.zoomed(view, NOTCH, middle_s),
-        (control, Qt.Key.Key_PageDown): lambda: extent.zoomed(view, 1 / NOTCH, middle_s),
-        (control, Qt.Key.Key_Up): lambda: louder(view, 1),
-        (control, Qt.Key.Key_Down): lambda: louder(view, -1),
+        (control, Qt.Key.Key_Up): lambda: extent.zoomed(view, FACTOR, middle_s),
+        (control, Qt.Key.Key_Down): lambda: extent.zoomed(view, 1 / FACTOR, middle_s),
+        (both, Qt.Key.Key_Up): lambda: louder(view, 1),
+        (both, Qt.Key.Key_Down): lambda: louder(view, -1),
     }
     for (wanted, code), move in moves.items():
         if plain(modifiers) == wanted and key == code.value:

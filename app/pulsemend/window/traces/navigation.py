@@ -11,6 +11,8 @@ SMALL_STEP = 0.1
 """Share of the width that an arrow key or a notch of the wheel moves."""
 NOTCH = 1.25
 """Factor of one notch of zooming."""
+FACTOR = 2.0
+"""How much wider or narrower a key or a menu makes the view."""
 LEAST_WIDTH_S = 0.02
 _ROW_UV = (0.1, 100_000.0)
 
