@@ -435,7 +435,7 @@ def _mirrored(
 
 @cache
 def _delay(part: float, dtype: str) -> BandedFilter:
-    return banded(fractional_delay(part, DELAY_HALF)[::-1], Fraction(1), dtype, least_block=64)
+    return banded(fractional_delay(part, DELAY_HALF)[::-1], Fraction(1), dtype, least_block=16)
 
 
 @cache

@@ -133,7 +133,8 @@ class FftFilter:
 
     def __init__(self, taps: Taps, dtype: DTypeLike) -> None:
         self.margin = taps.size // 2
-        self._size = max(4096, 1 << int(np.ceil(np.log2(4 * taps.size))))
+        # Measured: six times the taps cost least; more leave the cache, fewer repeat too much of the margins.
+        self._size = int(sf.next_fast_len(max(4096, 6 * taps.size), real=True))
         self.block = self._size - 2 * self.margin
         kernel = np.zeros(self._size)
         kernel[: self.margin + 1] = taps[self.margin :]
