@@ -84,7 +84,12 @@ def wait_until(condition: Callable[[], bool], most_ms: int = WAIT_MS) -> None:
     """Let the window live until something holds."""
     loop = QEventLoop()
     looking = QTimer()
-    looking.timeout.connect(lambda: condition() and loop.quit())
+
+    def look() -> None:
+        if condition():
+            loop.quit()
+
+    looking.timeout.connect(look)
     looking.start(20)
     late = QTimer()
     late.setSingleShot(True)
@@ -139,13 +144,14 @@ def one_for_the_guide(studio: Studio, recording: Path, plan: Path) -> None:
     """The picture in the README: the stage Pulses, recorded and repaired, in light colours."""
     window = studio.open(recording, plan)
     session = window.session
-    session.set_view(replace(session.view, width_s=1.2, shown=Shown.BOTH, row_uv=80.0))
+    session.set_view(replace(session.view, width_s=1.2, shown=Shown.BOTH, row_uv=100.0))
     window.handlers.next_pulse()
     session.open_stage(Stage.PULSES)
     window.handlers.set_theme(ThemeChoice.LIGHT.value)
     wait_quiet(window)
-    picture = window.grab().toImage().convertToFormat(QImage.Format.Format_Indexed8)
-    picture.save(str(Path(pulsemend.__file__).parent / "guide" / "window.png"))
+    picture = window.grab().toImage().convertToFormat(QImage.Format.Format_RGB888)
+    smallest = 0  # a "quality" that means compression here: the picture is shipped
+    picture.save(str(Path(pulsemend.__file__).parent / "guide" / "window.png"), "PNG", smallest)
     close(window)
 
 
@@ -254,7 +260,7 @@ def main() -> None:
         many_channels(studio, place / "sample", plan)
         broken_file(studio, recording, plan)
         bare = place / "bare"
-        shutil.copytree(place / "sample", bare)
+        shutil.copytree(place / "sample", bare, ignore=shutil.ignore_patterns("marks", "sets"))
         no_events(studio, bare / recording.name, bare / plan.name)
     del application
 

@@ -4,16 +4,17 @@ from __future__ import annotations
 
 from collections.abc import Callable
 
-from PySide6.QtCore import Qt
-from PySide6.QtWidgets import QFrame, QSplitter, QStackedWidget, QVBoxLayout, QWidget
+from PySide6.QtCore import QSize, Qt
+from PySide6.QtWidgets import QFrame, QSizePolicy, QSplitter, QStackedWidget, QVBoxLayout, QWidget
 
 from pulsemend.session.found import Stage
 from pulsemend.window.parts import GAP_PX
 from pulsemend.window.stages.base import StagePage
 from pulsemend.window.theme import Theme
 
-RIBBON_PX = 62
 SETTINGS_PX = 318
+MOST_NEEDED_PX = 560
+"""A picture that asks for more width than this is cut off where text is very large; nothing else is."""
 
 Factory = Callable[[], StagePage]
 
@@ -36,10 +37,10 @@ class Desk(QWidget):
         self.pages: dict[Stage, StagePage] = {}
         self._open: StagePage | None = None
         self.ribbon_place = _frame("Whole recording")
-        self.ribbon_place.setFixedHeight(RIBBON_PX)
+        self.ribbon_place.setSizePolicy(QSizePolicy.Policy.Preferred, QSizePolicy.Policy.Fixed)
         self.traces_place = _frame("Traces")
-        self.settings = QStackedWidget()
-        self.pictures = QStackedWidget()
+        self.settings = Pages()
+        self.pictures = Pages(MOST_NEEDED_PX)
         self.picture_place = _frame("Picture of the stage")
         self._fill(self.picture_place, self.pictures)
         self.below = QSplitter(Qt.Orientation.Vertical)
@@ -103,6 +104,11 @@ class Desk(QWidget):
         for page in self.pages.values():
             page.set_theme(theme)
 
+    def fit_text(self, percent: int) -> None:
+        """Give the settings the width that text of a size needs, and the middle the rest."""
+        settings = SETTINGS_PX * percent // 100
+        self.beside.setSizes([max(1, self.beside.width() - settings), settings])
+
     def close_pages(self) -> None:
         """Let no page listen to anybody any more."""
         for page in self.pages.values():
@@ -116,6 +122,32 @@ class Desk(QWidget):
             layout.setContentsMargins(1, 1, 1, 1)
         layout.addWidget(widget)
         widget.show()
+
+
+class Pages(QStackedWidget):
+    """Pages of which only the open one needs room.
+
+    Parameters
+    ----------
+    most_px : int
+        Least width that is granted to a page at most.
+    """
+
+    def __init__(self, most_px: int = 10_000) -> None:
+        super().__init__()
+        self._most_px = most_px
+        self.currentChanged.connect(self.updateGeometry)
+
+    def sizeHint(self) -> QSize:
+        """Room for the open page."""
+        page = self.currentWidget()
+        return super().sizeHint() if page is None else page.sizeHint()
+
+    def minimumSizeHint(self) -> QSize:
+        """Least room for the open page."""
+        page = self.currentWidget()
+        least = super().minimumSizeHint() if page is None else page.minimumSizeHint()
+        return least.boundedTo(QSize(self._most_px, least.height()))
 
 
 def _frame(name: str) -> QFrame:

@@ -103,6 +103,7 @@ class MainWindow(QMainWindow):
         self._source: Recording | None = None
         self.cursor_s: float | None = None
         self._measuring = False
+        self._text_percent = 100
         self._guide: QWidget | None = None
         self.setMinimumSize(900, 600)
         room = self.screen().availableGeometry()
@@ -327,6 +328,9 @@ class MainWindow(QMainWindow):
         self.bench.theme = theme_for(settings.theme)
         points = self._system_points() * settings.text_percent / 100
         self.setStyleSheet(style_sheet(self.bench.theme, points))
+        if settings.text_percent != self._text_percent:
+            self._text_percent = settings.text_percent
+            self.desk.fit_text(settings.text_percent)
         for part in (self.actions_, self.header, self.banner, self.rail):
             part.set_theme(self.bench.theme)
         self.desk.set_theme(self.bench.theme)

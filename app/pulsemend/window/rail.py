@@ -54,6 +54,10 @@ class StageButton(QAbstractButton):
         width = max(64, metrics.horizontalAdvance(self.text()) + 20)
         return QSize(width, RING_PX + metrics.height() + 22)
 
+    def minimumSizeHint(self) -> QSize:
+        """Never narrower than its name."""
+        return self.sizeHint()
+
     def paintEvent(self, _event: QPaintEvent) -> None:
         """Draw ring, sign and name."""
         theme, state = self._theme, self._state.state
@@ -102,6 +106,7 @@ class Rail(QWidget):
         self.setObjectName("rail")
         self.setAttribute(Qt.WidgetAttribute.WA_StyledBackground)
         self.setAccessibleName("Stages")
+        self.setSizePolicy(QSizePolicy.Policy.Fixed, QSizePolicy.Policy.Expanding)
         self._session = session
         self._group = QButtonGroup(self)
         self.buttons: dict[Stage, StageButton] = {}

@@ -99,11 +99,11 @@ class Ribbon(QWidget):
 
     def sizeHint(self) -> QSize:
         """As high as events, envelope and times need."""
-        return QSize(600, _EVENTS + _ENVELOPE + _TIMES)
+        return QSize(600, _EVENTS + _ENVELOPE + max(_TIMES, self.fontMetrics().height()))
 
     def minimumSizeHint(self) -> QSize:
         """Narrower, but not lower."""
-        return QSize(200, _EVENTS + _ENVELOPE + _TIMES)
+        return QSize(200, self.sizeHint().height())
 
     def set_overlays(self, overlays: Overlays) -> None:
         """Show other events, bad stretches and bad channels."""

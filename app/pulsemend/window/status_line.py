@@ -9,6 +9,7 @@ from pulsemend.progress import Progress
 from pulsemend.session.changed import Changed
 from pulsemend.session.session import Session
 from pulsemend.units import s_to_ms
+from pulsemend.window.elided import ElidedLabel
 from pulsemend.window.parts import button, words
 from pulsemend.window.traces.model import Measure, Reading
 
@@ -39,11 +40,9 @@ class StatusLine(QWidget):
         self.cursor_words.setMinimumWidth(210)
         self.facts = words("", "quiet")
         self.facts.setWordWrap(False)
-        self.notice = words(ONE_LINE_NOTICE, "quiet")
-        self.notice.setWordWrap(False)
         # The notice gives way first where there is little room; its dialog holds the whole.
+        self.notice = ElidedLabel(ONE_LINE_NOTICE, "quiet")
         self.notice.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Preferred)
-        self.notice.setToolTip(ONE_LINE_NOTICE)
         self.work = words("", "quiet")
         self.work.setWordWrap(False)
         self.bar = QProgressBar()

@@ -102,9 +102,8 @@ class RowNames(QWidget):
         painter.setClipRect(QRectF(0, self._rows.top, self.width(), self._rows.area))
         metrics = QFontMetricsF(self.font())
         step = thinned(len(self._names), self._rows.row_height, 0.92 * metrics.height())
-        for row in self._rows.visible:
-            if row % step == 0 and row < len(self._names):
-                self._paint_row(painter, row, metrics)
+        for row in self._labelled(step):
+            self._paint_row(painter, row, metrics)
         for special in {self._hovered, self._current if self.hasFocus() else None}:
             if special is not None and special < len(self._names):
                 row = special
@@ -114,6 +113,25 @@ class RowNames(QWidget):
         if self.hasFocus() and self._names:
             painter.setPen(QPen(QColor(self._theme.accent), 1.5))
             painter.drawRect(self._box(self._current, metrics).adjusted(1, 0.5, -1, -0.5))
+
+    def _labelled(self, step: int) -> list[int]:
+        """Rows whose names are painted where not all have room: bad and picked ones first."""
+        visible = [row for row in self._rows.visible if row < len(self._names)]
+        if step == 1:
+            return visible
+        marked = self._bad | self._picked
+        chosen: set[int] = set()
+        for row in sorted(visible, key=lambda row: (self._names[row] not in marked, row)):
+            regular = row % step == 0 or self._names[row] in marked
+            if regular and chosen.isdisjoint(range(row - step + 1, row + step)):
+                chosen.add(row)
+        return sorted(chosen)
+
+    def _middle(self, row: int, metrics: QFontMetricsF) -> float:
+        """Middle of a row's name: moved a little where an end of the rows would cut it."""
+        middle, half = self._rows.middle(row), metrics.height() / 2
+        within = min(max(middle, self._rows.top + half), self._rows.top + self._rows.area - half)
+        return within if abs(within - middle) < 0.4 * metrics.height() else middle
 
     def mousePressEvent(self, event: QMouseEvent) -> None:
         """Pick, or toggle bad."""
@@ -206,12 +224,12 @@ class RowNames(QWidget):
 
     def _box(self, row: int, metrics: QFontMetricsF) -> QRectF:
         height = max(self._rows.row_height, metrics.height())
-        return QRectF(0, self._rows.middle(row) - height / 2, self.width(), height)
+        return QRectF(0, self._middle(row, metrics) - height / 2, self.width(), height)
 
     def _paint_row(self, painter: QPainter, row: int, metrics: QFontMetricsF) -> None:
         name = self._names[row]
         bad, picked = name in self._bad, name in self._picked
-        middle = self._rows.middle(row)
+        middle = self._middle(row, metrics)
         colour = self._theme.trace_bad if bad else self._theme.trace_picked if picked else self._theme.quiet
         if picked:
             painter.fillRect(QRectF(0, middle - 6, _MARK, 12), QColor(self._theme.trace_picked))
