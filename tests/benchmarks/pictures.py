@@ -19,7 +19,7 @@ from pathlib import Path
 os.environ.setdefault("QT_QPA_PLATFORM", "offscreen")
 
 import numpy as np
-from PySide6.QtCore import QEventLoop, QTimer
+from PySide6.QtCore import QEventLoop, Qt, QTimer
 from PySide6.QtGui import QImage
 from PySide6.QtWidgets import QApplication
 
@@ -149,10 +149,19 @@ def one_for_the_guide(studio: Studio, recording: Path, plan: Path) -> None:
     session.open_stage(Stage.PULSES)
     window.handlers.set_theme(ThemeChoice.LIGHT.value)
     wait_quiet(window)
-    picture = window.grab().toImage().convertToFormat(QImage.Format.Format_RGB888)
-    smallest = 0  # a "quality" that means compression here: the picture is shipped
-    picture.save(str(Path(pulsemend.__file__).parent / "guide" / "window.png"), "PNG", smallest)
+    picture = few_colours(window.grab().toImage())
+    picture.save(str(Path(pulsemend.__file__).parent / "guide" / "window.png"))
     close(window)
+
+
+def few_colours(image: QImage) -> QImage:
+    """Keep the 256 most frequent colours, and for others the nearest: half the bytes."""
+    plain = image.convertToFormat(QImage.Format.Format_RGB32)
+    values = np.array(plain.constBits(), np.uint8).view(np.uint32)
+    colours, counts = np.unique(values, return_counts=True)
+    frequent = colours[np.argsort(counts)[::-1][:256]]
+    flat = Qt.ImageConversionFlag.ThresholdDither | Qt.ImageConversionFlag.AvoidDither
+    return plain.convertToFormat(QImage.Format.Format_Indexed8, [int(one) for one in frequent], flat)
 
 
 def nothing_open(studio: Studio) -> None:
