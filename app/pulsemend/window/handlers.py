@@ -30,7 +30,7 @@ from pulsemend.window.dialogs.notice import NoticeDialog
 from pulsemend.window.dialogs.pick_channels import PickChannels
 from pulsemend.window.dialogs.questions import SAVE_AS, TAKE_THEIRS, WRITE_OVER, changed_question
 from pulsemend.window.dialogs.which_events import WhichEvents
-from pulsemend.window.traces_link import PULSE_KEYS_FROM, overlays
+from pulsemend.window.traces_link import PULSE_KEYS_FROM
 from pulsemend.window.view_acts import ViewActs
 
 if TYPE_CHECKING:
@@ -225,7 +225,7 @@ class Handlers(ViewActs):
         return view.start_s + 0.5 * view.width_s
 
     def _to_pulse(self, step: int) -> None:
-        events = overlays(self._session, self._window.bench.learned).events
+        events = self._window.link.overlays.events
         found = [
             (float(time_s), key)
             for time_s, key in zip(events.time_s, events.keys, strict=True)

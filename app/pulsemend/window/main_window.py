@@ -59,7 +59,7 @@ from pulsemend.window.traces.model import Reading
 from pulsemend.window.traces.plot import Hand
 from pulsemend.window.traces.source import TraceSource
 from pulsemend.window.traces.widget import TracesWidget
-from pulsemend.window.traces_link import PULSE_KEYS_FROM, SessionView, TracesLink, overlays
+from pulsemend.window.traces_link import PULSE_KEYS_FROM, SessionView, TracesLink
 from pulsemend.window.workbench import Workbench
 
 log = logging.getLogger(__name__)
@@ -233,7 +233,7 @@ class MainWindow(QMainWindow):
 
     def _show_ribbon_events(self) -> None:
         if self.ribbon is not None:
-            self.ribbon.set_overlays(overlays(self.session, self.bench.learned))
+            self.ribbon.set_overlays(self.link.overlays)
 
     def _give_ribbon_pyramid(self, ready: Pyramid) -> None:
         if self.ribbon is not None:

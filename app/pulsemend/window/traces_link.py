@@ -148,6 +148,7 @@ class TracesLink(QObject):
         self._bench = bench
         self._cache = cache
         self._traces: TracesWidget | None = None
+        self._overlays: tuple[tuple[object, ...], Overlays] | None = None
         self._pyramid: Pyramid | None = None
 
     def attach(self, traces: TracesWidget | None) -> None:
@@ -162,12 +163,22 @@ class TracesLink(QObject):
         job.returned.connect(self._take_pyramid)
         job.failed.connect(self._bench.tell)
 
+    @property
+    def overlays(self) -> Overlays:
+        """What lies over the traces now; put together once for each state of plan, marks and estimates."""
+        session, learned = self._bench.session, self._bench.learned
+        rests_on = (session.recording, session.plan, session.marks, learned)
+        held = self._overlays
+        if held is None or any(a is not b for a, b in zip(held[0], rests_on, strict=True)):
+            held = self._overlays = (rests_on, overlays(session, learned))
+        return held[1]
+
     def show_learned(self) -> None:
         """Show overlays of now, and have the repaired signal computed anew."""
         if self._traces is None:
             return
         bench = self._bench
-        self._traces.set_overlays(overlays(bench.session, bench.learned))
+        self._traces.set_overlays(self.overlays)
         self._traces.set_revision(self._stamp)
         if not bench.provisional:
             self._patch_overview()
