@@ -187,7 +187,7 @@ def no_events(studio: Studio, recording: Path, plan: Path) -> None:
 
 def many_channels(studio: Studio, folder: Path, plan: Path) -> None:
     """256 channels with names of 60 letters."""
-    names = tuple(f"{n:03d}-an-electrode-with-an-extraordinarily-long-name-at-the-left" for n in range(256))
+    names = tuple(f"{n:03d}-an-electrode-with-an-extraordinarily-long-name-at-the-le" for n in range(256))
     header = folder / "sub-lt09_task-lantern_eeg.vhdr"
     values = np.random.default_rng(1).normal(0, 200, (20_000, 256)).astype(np.int16)
     with TripletWriter(TripletPaths.beside(header), TripletFormat(names, 2000.0, 0.1), ()) as writer:

@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from PySide6.QtCore import QMimeData, QPoint, QPointF, Qt, QUrl
+from PySide6.QtCore import QMimeData, QPoint, QPointF, QSize, Qt, QUrl
 from PySide6.QtGui import QDragEnterEvent, QDropEvent
 from PySide6.QtTest import QTest
 from PySide6.QtWidgets import QApplication, QDoubleSpinBox, QPushButton
@@ -170,9 +170,9 @@ def test_another_gap_is_provisional_and_then_learned(place: Place) -> None:
     place.wait_learned(window)
     assert window.bench.learned is not before
     gaps = window.bench.learned.decision.geometry.gaps  # type: ignore[union-attr]
-    # The gap around the pulse; the plan's other gaps are shorter.
-    longest = max(gap.stop - gap.start for gap in gaps)
-    assert longest == round((21.0 - plan.pulses.window_ms[0]) * 5) + 1
+    lengths = {gap.stop - gap.start for gap in gaps}
+    # Samples of 0.2 ms, both ends replaced; the sample's plan gives P3 a gap to 25 ms.
+    assert {round((stop_ms - plan.pulses.window_ms[0]) * 5) + 1 for stop_ms in (21.0, 25.0)} <= lengths
     press("undo", window)
     assert window.session.plan.pulses.window_ms == plan.pulses.window_ms
 
@@ -478,7 +478,7 @@ def test_another_recording_replaces_the_first_cleanly(place: Place) -> None:
 
 def test_256_channels_with_long_names_at_any_size(place: Place) -> None:
     names = [
-        f"{number:03d}-an-electrode-with-an-extraordinarily-long-name-at-the-left" for number in range(256)
+        f"{number:03d}-an-electrode-with-an-extraordinarily-long-name-at-the-le" for number in range(256)
     ]
     assert len(names[0]) == 60
     header = many_channels(place, names)
@@ -487,7 +487,7 @@ def test_256_channels_with_long_names_at_any_size(place: Place) -> None:
     window.resize(900, 600)
     for stage in Stage:
         click_stage(window, stage)
-        assert window.width() <= 1000, f"{stage} widens the window to {window.width()}"
+        assert window.width() == 900, f"{stage} widens the window to {window.width()}"
     assert window.traces is not None
     wheel(window.traces.plot, QPoint(200, 100), QPoint(0, -120))
     place.wait_quiet(window)
@@ -503,12 +503,14 @@ def many_channels(place: Place, names: list[str]) -> Path:
     return header
 
 
-@pytest.mark.parametrize("percent", [100, 200])
-def test_small_windows_and_large_text_cut_nothing_off(place: Place, percent: int) -> None:
+@pytest.mark.parametrize(("percent", "width", "height"), [(100, 900, 600), (200, 1280, 800)])
+def test_small_windows_and_large_text_cut_nothing_off(
+    place: Place, percent: int, width: int, height: int
+) -> None:
     window = place.learned()
     window.change_settings(replace(window.bench.settings, text_percent=percent))
     window.apply_looks()
-    window.resize(900, 600)
+    window.resize(width, height)
     for stage in Stage:
         click_stage(window, stage)
         place.wait_quiet(window)
@@ -518,7 +520,8 @@ def test_small_windows_and_large_text_cut_nothing_off(place: Place, percent: int
             if one.isVisible() and one.width() < one.minimumSizeHint().width()
         ]
         assert not short, f"{stage}: {short}"
-        assert window.width() <= 1100
+        assert window.size() == QSize(width, height)
+        assert window.rail.width() >= window.rail.sizeHint().width()
 
 
 # Closing
@@ -578,3 +581,32 @@ def test_the_program_ends_without_a_word(place: Place) -> None:
     )
     said = [line for line in ended.stderr.splitlines() if "propagateSizeHints" not in line]
     assert (ended.returncode, said) == (0, [])
+
+
+FIRST_FRAME = """
+import sys
+from pathlib import Path
+from pulsemend.window import program
+from pulsemend.window.traces.canvas import TraceView
+real = TraceView.paintEvent
+def paint(self, event):
+    real(self, event)
+    print([name for name in ("mne", "scipy.signal") if name in sys.modules], flush=True)
+    sys.stdout.flush()
+    import os
+    os._exit(0)
+TraceView.paintEvent = paint
+program.run(Path(sys.argv[1]), Path(sys.argv[2]))
+"""
+
+
+def test_the_first_frame_waits_for_no_large_library(place: Place) -> None:
+    ended = subprocess.run(
+        [sys.executable, "-c", FIRST_FRAME, str(place.recording), str(place.plan)],
+        capture_output=True,
+        text=True,
+        timeout=100,
+        check=False,
+        env=os.environ | {"QT_QPA_PLATFORM": "offscreen"},
+    )
+    assert ended.stdout == "[]\n", ended.stderr

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 
-from PySide6.QtCore import QSignalBlocker, QSize, Qt, Signal
+from PySide6.QtCore import QEvent, QSignalBlocker, QSize, Qt, Signal
+from PySide6.QtGui import QKeyEvent, QKeySequence
 from PySide6.QtWidgets import (
     QButtonGroup,
     QDoubleSpinBox,
@@ -154,11 +155,24 @@ class NumberField(QDoubleSpinBox):
         self.setSingleStep(step)
         self.setKeyboardTracking(False)
         self.valueChanged.connect(self.committed)
+        self.editingFinished.connect(self._end_typing)
 
     def show_value(self, value: float) -> None:
         """Show a value without committing it."""
         with QSignalBlocker(self):
             self.setValue(value)
+
+    def event(self, event: QEvent) -> bool:
+        """Leave the keys of undo and redo to the window, unless something is typed and not committed yet."""
+        if isinstance(event, QKeyEvent) and event.type() == QEvent.Type.ShortcutOverride:
+            steps = (QKeySequence.StandardKey.Undo, QKeySequence.StandardKey.Redo)
+            if any(event.matches(key) for key in steps) and not self.lineEdit().isModified():
+                event.ignore()
+                return False
+        return super().event(event)
+
+    def _end_typing(self) -> None:
+        self.lineEdit().setModified(False)
 
 
 class Choices(QWidget):
