@@ -376,11 +376,11 @@ class MainWindow(QMainWindow):
 
     # Coming and going
 
-    def may_leave_plan(self) -> bool:
-        """Whether another plan may be opened: unsaved changes are asked about."""
+    def may_leave_plan(self, *, closes: bool = False) -> bool:
+        """Whether the plan may be left: unsaved changes are asked about."""
         if self.session.plan is None or self.session.plan_is_saved:
             return True
-        choice = answer(unsaved_question(self.session, self))
+        choice = answer(unsaved_question(self.session, self, closes=closes))
         return choice == GIVE_UP or (choice == SAVE and self.handlers.save_plan())
 
     def _on_recovery(self, recovery: Recovery) -> None:
@@ -399,7 +399,7 @@ class MainWindow(QMainWindow):
         if running and answer(running_question(running[0].kind, self)) != STOP_AND_CLOSE:
             event.ignore()
             return
-        if not self.may_leave_plan():
+        if not self.may_leave_plan(closes=True):
             event.ignore()
             return
         self.opener.save_marks()

@@ -19,8 +19,8 @@ BRING_BACK, THROW_AWAY = "bring back", "throw away"
 OPEN_ANYWAY, STOP_AND_CLOSE = "open anyway", "stop and close"
 
 
-def unsaved_question(session: Session, parent: QWidget | None = None) -> Question:
-    """Ask what becomes of unsaved changes of the plan when the window closes.
+def unsaved_question(session: Session, parent: QWidget | None = None, *, closes: bool = True) -> Question:
+    """Ask what becomes of unsaved changes of the plan when the window closes, or opens another plan.
 
     Parameters
     ----------
@@ -28,12 +28,15 @@ def unsaved_question(session: Session, parent: QWidget | None = None) -> Questio
         The window's.
     parent : QWidget or None
         The window.
+    closes : bool
+        Whether the window closes; otherwise another plan is opened.
 
     Returns
     -------
     Question
         Answers `SAVE`, `GIVE_UP` or `STAY`.
     """
+    does, what = ("close", "the window closes") if closes else ("open", "another is opened")
     name = session.plan_path.name if session.plan_path else "The plan"
     last = f" The last change was: {session.next_undo}." if session.next_undo else ""
     has_file = session.plan_path is not None
@@ -43,12 +46,20 @@ def unsaved_question(session: Session, parent: QWidget | None = None) -> Questio
         else f"The plan was never saved to a file.{last} Marks are saved by themselves."
     )
     return Question(
-        "Save the plan before the window closes?",
+        f"Save the plan before {what}?",
         text,
         (
-            (GIVE_UP, "Close without saving", "The plan's file stays as it is; the changes are lost"),
-            (STAY, "Stay here", "Close nothing"),
-            (SAVE, "Save and close" if has_file else "Save as and close...", "Write the plan to its file"),
+            (
+                GIVE_UP,
+                f"{does.capitalize()} without saving",
+                "The plan's file stays as it is; the changes are lost",
+            ),
+            (STAY, "Stay here", f"{does.capitalize()} nothing"),
+            (
+                SAVE,
+                f"Save and {does}" if has_file else f"Save as and {does}...",
+                "Write the plan to its file",
+            ),
         ),
         STAY,
         parent=parent,
