@@ -21,7 +21,6 @@ import edfio
 import mne
 import numpy as np
 import pybv
-import pyedflib
 import pytest
 import spharapy.datasets
 from numpy.typing import NDArray
@@ -30,6 +29,8 @@ from pulsemend.readers.opening import open_recording
 from support.small_lantern import SetOnDisk, run_mend
 from support.written_recordings import FORMATS
 
+# It has no wheels for Python 3.13 and later yet.
+pyedflib = pytest.importorskip("pyedflib")
 STRANGERS = sorted((Path(pyedflib.__file__).parent / "tests" / "data").glob("*.?df"))
 
 

@@ -9,7 +9,6 @@ from pathlib import Path
 
 import mne
 import numpy as np
-import pyedflib
 import pytest
 from numpy.typing import NDArray
 
@@ -18,6 +17,8 @@ from pulsemend.model.recording import RecordingFacts
 from pulsemend.readers.opening import open_recording
 from pulsemend.readers.tal import parse_tals
 
+# It has no wheels for Python 3.13 and later yet.
+pyedflib = pytest.importorskip("pyedflib")
 STRANGERS = sorted((Path(pyedflib.__file__).parent / "tests" / "data").glob("*.?df"))
 """Generated signals of known shape that come inside pyedflib; nobody here wrote them."""
 
