@@ -28,6 +28,8 @@ def here(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
 
 def run(example: str) -> dict[str, Any]:
     names: dict[str, Any] = {}
+    # The guide names a rule of the sample's plan; the small set here has another.
+    example = example.replace('"delay1"', '"delay"')
     exec(compile(example, str(PAGE), "exec"), names)
     return names
 

@@ -257,6 +257,8 @@ def test_warnings() -> None:
     assert len(pulses) == 2
     assert "does not contain the onset" in pulses[0]
     assert 'no code has role "pulse"' in pulses[1]
+    seconds = with_row('times = "none"', "window_ms = [-0.002, 0.014]").warnings
+    assert "given in milliseconds" in seconds[0]
     optional = with_row(
         "[pulses]", '[[trial]]\nslot="p"\nrole="probe"\nafter_s=[1,2]\noptional=true\n[pulses]'
     )

@@ -55,7 +55,7 @@ def test_a_crash_loses_nothing_and_says_so(desk: Desk, session: Session) -> None
     assert offer is not None
     assert (offer.steps, offer.last, offer.needs_a_look) == (5, "C3 bad", False)
     assert re.fullmatch(
-        r"Pulsemend ended unexpectedly; the work of \d{4}-\d\d-\d\d \d\d:\d\d is kept \(5 steps\)\. "
+        r"Pulsemend ended unexpectedly; the work of \d{4}-\d\d-\d\d \d\d:\d\d was kept \(5 steps\)\. "
         r"The last change was: C3 bad\.",
         offer.words,
     )

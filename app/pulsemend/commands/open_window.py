@@ -20,7 +20,13 @@ _WITHOUT_SCREEN = ("offscreen", "minimal")
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the recording to open and its plan."""
-    parser.add_argument("recording", nargs="?", type=Path, metavar="RECORDING", help="recording to open")
+    parser.add_argument(
+        "recording",
+        nargs="?",
+        type=Path,
+        metavar="RECORDING",
+        help="recording, plan, or folder with both, to open",
+    )
     parser.add_argument("--plan", type=Path, metavar="PLAN", help="plan (TOML) to open with it")
 
 
@@ -53,7 +59,15 @@ def run(args: argparse.Namespace) -> int:
             f"the window's libraries cannot be loaded ({error})",
             todo=f"On Debian: apt-get install {QT_PACKAGES}",
         ) from error
-    return run_window(args.recording, args.plan)
+    recording, plan = args.recording, args.plan
+    if recording is not None and (recording.is_dir() or recording.suffix.lower() == ".toml"):
+        from pulsemend.session.dropped import what_is
+
+        found = what_is([recording])
+        if found.recording is None and found.plan is None:
+            raise InputError(found.words.rstrip("."), where=str(recording), todo="Name a recording or a plan")
+        recording, plan = found.recording, plan or found.plan
+    return run_window(recording, plan)
 
 
 def display_exists() -> bool:

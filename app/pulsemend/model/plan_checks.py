@@ -15,6 +15,9 @@ from pulsemend.model.toml_lines import key_text
 from pulsemend.model.vocabulary import Fill, Format, PulseTimes, Role
 
 WHOLE_WITHIN = 1e-6
+SHORTEST_GAP_MS = 1.0
+"""A gap below is a slip, such as seconds for milliseconds (pulse spikes: facts of 0.4 ms and more)."""
+
 LARGEST_BAND = 0.4
 """Highest low-pass at a reduced rate, as a share of that rate."""
 
@@ -48,7 +51,7 @@ def check_plan(plan: Plan) -> tuple[str, ...]:
 
 
 def check_decided(plan: Plan) -> None:
-    """Refuse what a person still has to decide: roles of codes, and the gap around every pulse.
+    """Refuse what a person still has to decide: roles, slots, epoch rules, and the gap around every pulse.
 
     A plan with such open ends can be read, shown and edited, but not carried out.
 
@@ -60,7 +63,8 @@ def check_decided(plan: Plan) -> None:
     Raises
     ------
     PlanError
-        A role is undecided (lists all; the first one's line is given), or the gap is.
+        A role is undecided (lists all; the first one's line is given), there is no slot or no rule, or the
+        gap is undecided.
     """
     undecided = [marker.code for marker in plan.markers if marker.role is Role.UNDECIDED]
     if undecided:
@@ -69,12 +73,48 @@ def check_decided(plan: Plan) -> None:
             "still undecided: " + ", ".join(show(code) for code in undecided),
             allowed=" | ".join(show(role) for role in Role if role is not Role.UNDECIDED),
         )
+    need_slots(plan)
+    need_rules(plan)
     if plan.pulses.times is not PulseTimes.NONE and plan.pulses.window_ms is None:
         raise PlanError(
             "pulses.window_ms",
             "is missing: the gap around every pulse has no default and must be decided",
             allowed='[from, to] in ms, or times = "none" for a recording without pulses',
         )
+
+
+def need_slots(plan: Plan) -> None:
+    """Refuse a plan without a slot.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to check.
+
+    Raises
+    ------
+    PlanError
+        There is none.
+    """
+    if not plan.trial:
+        raise PlanError("trial", "has no slot; at least one [[trial]] is needed")
+
+
+def need_rules(plan: Plan) -> None:
+    """Refuse a plan without an epoch rule.
+
+    Parameters
+    ----------
+    plan : Plan
+        What to check.
+
+    Raises
+    ------
+    PlanError
+        There is none.
+    """
+    if not plan.epochs.rule:
+        raise PlanError("epochs.rule", "has no rule; at least one [[epochs.rule]] is needed")
 
 
 def check_against_rate(plan: Plan, recorded_rate_hz: float) -> float:
@@ -190,8 +230,6 @@ def _near(name: str, names: Iterable[str]) -> str:
 
 
 def _check_slots(plan: Plan) -> None:
-    if not plan.trial:
-        raise PlanError("trial", "has no slot; at least one [[trial]] is needed")
     roles = {marker.role for marker in plan.markers}
     earlier: list[str] = []
     for place, slot in enumerate(plan.trial, start=1):
@@ -275,8 +313,6 @@ def _check_reference(plan: Plan) -> None:
 
 
 def _check_rules(plan: Plan) -> None:
-    if not plan.epochs.rule:
-        raise PlanError("epochs.rule", "has no rule; at least one [[epochs.rule]] is needed")
     slots = [slot.slot for slot in plan.trial]
     allowed = " | ".join(show(name) for name in slots)
     names: set[str] = set()
@@ -364,7 +400,12 @@ def _warnings(plan: Plan) -> tuple[str, ...]:
     window_ms, roles = plan.pulses.window_ms, {marker.role for marker in plan.markers}
     has_pulses = plan.pulses.times is not PulseTimes.NONE
     if has_pulses and window_ms is not None and not window_ms[0] <= 0.0 <= window_ms[1]:
-        found.append("pulses.window_ms does not contain the onset of the pulse (0 ms)")
+        found.append("pulses.window_ms does not contain the onset of the pulse (0 ms): the spike stays")
+    if has_pulses and window_ms is not None and window_ms[1] - window_ms[0] < SHORTEST_GAP_MS:
+        found.append(
+            f"pulses.window_ms is shorter than {SHORTEST_GAP_MS:g} ms: it is given in milliseconds, "
+            "and a pulse's spike lasts longer"
+        )
     if has_pulses and Role.PULSE not in roles:
         found.append('no code has role "pulse", so no pulse is known; say times = "none" if there are none')
     found += [

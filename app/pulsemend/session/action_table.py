@@ -142,7 +142,7 @@ _TRACES = (
         for number, (shown, title, tooltip) in enumerate(
             (
                 (Shown.RECORDED, "Show as recorded", "Show the samples of the file"),
-                (Shown.REPAIRED, "Show repaired", "Show what would be written"),
+                (Shown.REPAIRED, "Show repaired", "Show the signal with its gaps filled, not yet filtered"),
                 (Shown.BOTH, "Show both", "Show the repaired signal over the recorded one"),
             ),
             start=1,

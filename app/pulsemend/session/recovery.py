@@ -57,7 +57,7 @@ class Recovery:
         """What happened and what comes back, in a few sentences."""
         when = time.strftime("%Y-%m-%d %H:%M", time.localtime(self.written_s))
         steps = "1 step" if self.steps == 1 else f"{self.steps} steps"
-        text = [f"Pulsemend ended unexpectedly; the work of {when} is kept ({steps})."]
+        text = [f"Pulsemend ended unexpectedly; the work of {when} was kept ({steps})."]
         if self.last:
             text.append(f"The last change was: {self.last}.")
         changed = [

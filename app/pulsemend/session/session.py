@@ -453,7 +453,8 @@ class Session(Surroundings):
         self._values, self._history = left.values, left.history
         self._revision += 1
         self._keeper.settle(self._values, self._history)
-        self.say(Message(Level.ATTENTION if offer.needs_a_look else Level.NOTE, offer.words))
+        words = f"{offer.words} It was brought back; undo takes it back step by step."
+        self.say(Message(Level.ATTENTION if offer.needs_a_look else Level.NOTE, words))
         self._observers.tell(Changed.PLAN, Changed.MARKS, Changed.HISTORY)
 
     def drop_recovery(self) -> None:

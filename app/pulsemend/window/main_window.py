@@ -64,6 +64,8 @@ from pulsemend.window.workbench import Workbench
 
 log = logging.getLogger(__name__)
 
+FRAME_PX = 16
+
 
 @dataclass(frozen=True)
 class Folders:
@@ -107,7 +109,8 @@ class MainWindow(QMainWindow):
         self._guide: QWidget | None = None
         self.setMinimumSize(900, 600)
         room = self.screen().availableGeometry()
-        self.resize(min(1440, room.width()), min(900, room.height()))
+        # The window manager's frame needs room, too.
+        self.resize(min(1440, room.width() - FRAME_PX), min(900, room.height() - 2 * FRAME_PX))
         self.restoreGeometry(QByteArray.fromBase64(settings.geometry.encode()))
         self._build()
         self._listen()

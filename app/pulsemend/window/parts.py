@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 
 from PySide6.QtCore import QEvent, QSignalBlocker, QSize, Qt, Signal
-from PySide6.QtGui import QKeyEvent, QKeySequence
+from PySide6.QtGui import QKeyEvent, QKeySequence, QWheelEvent
 from PySide6.QtWidgets import (
     QButtonGroup,
     QDoubleSpinBox,
@@ -154,6 +154,7 @@ class NumberField(QDoubleSpinBox):
         self.setRange(least, most)
         self.setSingleStep(step)
         self.setKeyboardTracking(False)
+        self.setFocusPolicy(Qt.FocusPolicy.StrongFocus)
         self.valueChanged.connect(self.committed)
         self.editingFinished.connect(self._end_typing)
 
@@ -161,6 +162,13 @@ class NumberField(QDoubleSpinBox):
         """Show a value without committing it."""
         with QSignalBlocker(self):
             self.setValue(value)
+
+    def wheelEvent(self, event: QWheelEvent) -> None:
+        """Leave the wheel to what scrolls, unless the field was chosen before: nothing changes in passing."""
+        if self.hasFocus():
+            super().wheelEvent(event)
+        else:
+            event.ignore()
 
     def event(self, event: QEvent) -> bool:
         """Leave the keys of undo and redo to the window, unless something is typed and not committed yet."""
