@@ -61,7 +61,8 @@ def test_a_crash_loses_nothing_and_says_so(desk: Desk, session: Session) -> None
     )
     again.recover()
     assert (window(again), again.marks.bad) == ((-2, 15), ("C3",))
-    assert [(message.level, message.text) for message in again.messages] == [(Level.NOTE, offer.words)]
+    told = f"{offer.words} It was brought back; undo takes it back step by step."
+    assert [(message.level, message.text) for message in again.messages] == [(Level.NOTE, told)]
     assert not again.is_saved
     assert again.redo() == "Gap to 17 ms"
     assert window(again) == (-2, 17)
