@@ -138,9 +138,11 @@ def test_what_cannot_be_told_is_undecided_and_stops_mend() -> None:
     text = draft_plan(session(NUMBERED))
     assert set(roles(text).values()) == {"undecided"}
     assert text.count('role = "undecided"   # decide:') == 7
-    # Not a plan yet: neither gap nor trial.
-    with pytest.raises(PlanError, match="no slot"):
-        parse_plan(text)
+    # It can be read and shown, but roles, trial, rules and gap are still open.
+    with pytest.raises(PlanError, match="still undecided"):
+        check_decided(parse_plan(text).plan)
+    with pytest.raises(PlanError, match="trial: has no slot"):
+        check_decided(with_roles(text))
     trial = '[[trial]]\nslot = "a"\nrole = "sample"\n'
     rule = '[[epochs.rule]]\nname = "a"\nanchor = "a"\nstart_s = 0\n'
     whole = text.replace('role = "undecided"', 'role = "sample"', 1).replace("# window_ms", "window_ms")
@@ -284,8 +286,11 @@ def test_recording_without_markers() -> None:
     facts = RecordingFacts(**{**vars(session(n_trials=1)), "markers": ()})
     text = draft_plan(facts, NO_EVIDENCE)
     assert "no markers" in text
-    with pytest.raises(PlanError, match="has no slot"):
-        parse_plan(text)
+    plan = parse_plan(text).plan
+    assert plan.trial == ()
+    assert plan.epochs.rule == ()
+    with pytest.raises(PlanError, match=r"trial: has no slot; at least one \[\[trial\]\] is needed"):
+        check_decided(plan)
 
 
 def test_one_marker_and_odd_codes() -> None:

@@ -92,3 +92,4 @@ def test_why_there_is_no_trial(learned: Learned) -> None:
     assert "no code has it" in why_no_trial(replace(plan, markers=plan.markers[1:]), facts)
     silent: RecordingFacts = replace(facts, markers=())
     assert "no markers at all" in why_no_trial(plan, silent)
+    assert "has no slot" in why_no_trial(replace(plan, trial=()), facts)

@@ -59,7 +59,17 @@ def test_moving_stops_at_both_ends(plan: Plan) -> None:
 
 
 def test_removing_and_replacing(plan: Plan) -> None:
-    assert names(without_rule(plan, 0)) == ["delay1"]
+    left = without_rule(plan, 0)
+    assert names(left) == ["delay1"]
+    with pytest.raises(PlanError, match="has no rule; at least one"):
+        without_rule(left, 0)
+
+
+def test_first_rule_of_a_plan_and_none_without_slots(plan: Plan) -> None:
+    bare = replace(plan, epochs=replace(plan.epochs, rule=()))
+    assert names(with_new_rule(bare, 0)) == ["epoch1"]
+    with pytest.raises(PlanError, match="has no slot"):
+        with_new_rule(replace(bare, trial=()), 0)
     other = replace(plan.epochs.rule[0], start_s=0.25)
     changed = with_rule(plan, 0, other)
     assert changed.epochs.rule == (other, plan.epochs.rule[1])

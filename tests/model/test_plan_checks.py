@@ -275,3 +275,27 @@ def test_a_plan_without_a_gap_can_be_read_but_not_carried_out() -> None:
         check_decided(read.plan)
     assert caught.value.key == "pulses.window_ms"
     assert caught.value.line is not None
+
+
+def test_a_plan_without_slots_or_rules_can_be_read_but_not_carried_out() -> None:
+    """A recording whose trials nobody has described yet can be looked at with its plan."""
+    bare = parse_plan('pulsemend = 1\n[pulses]\ntimes = "none"\n[epochs]\nlength_s = 1.0\n')
+    assert bare.plan.trial == ()
+    assert bare.plan.epochs.rule == ()
+    assert bare.warnings == ()
+    assert slot_columns(bare.plan) == rule_columns(bare.plan) == ()
+    with pytest.raises(PlanError, match=r"has no slot; at least one \[\[trial\]\] is needed") as caught:
+        check_decided(bare.plan)
+    assert caught.value.key == "trial"
+    ruleless = replace(PLAN, epochs=replace(PLAN.epochs, rule=()))
+    with pytest.raises(PlanError, match=r"has no rule; at least one \[\[epochs.rule\]\] is needed") as caught:
+        check_decided(ruleless)
+    assert caught.value.key == "epochs.rule"
+
+
+def test_a_rule_needs_a_slot_to_start_at() -> None:
+    with pytest.raises(PlanError, match="must name a slot of the trial"):
+        parse_plan(
+            "pulsemend = 1\n[epochs]\nlength_s = 1.0\n[[epochs.rule]]\n"
+            'name = "a"\nanchor = "cue"\nstart_s = 0.0\n'
+        )

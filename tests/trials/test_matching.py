@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
@@ -11,6 +13,7 @@ from pulsemend.model.marks import Marks, MovedPulse
 from pulsemend.model.plan import Plan
 from pulsemend.model.plan_file import parse_plan
 from pulsemend.model.recording import Marker
+from pulsemend.trials.candidates import Geometry, candidates, stale_decisions
 from pulsemend.trials.matching import match_trials
 
 RATE_HZ = 1000.0
@@ -242,3 +245,15 @@ def test_every_marker_of_a_trial_role_is_used_once_or_left_over(words: list[tupl
         assert set(trial.missing) == required - set(trial.markers)
         times = [trial.markers[slot.slot].sample for slot in PLAN.trial if slot.slot in trial.markers]
         assert times == sorted(times)
+
+
+def test_without_slots_there_are_no_trials_and_nothing_is_left_over() -> None:
+    plan = replace(PLAN, trial=(), epochs=replace(PLAN.epochs, rule=()))
+    markers = [Marker(1000.0, "L"), Marker(2500.0, "A"), Marker(3000.0, "new")]
+    found = match_trials(markers, plan, RATE_HZ, Marks(pulses_added=(500,)))
+    assert found.trials == ()
+    assert found.extra == ()
+    assert found.unnamed == {"new": 1}
+    geometry = Geometry(RATE_HZ, RATE_HZ, ((0, 5000),))
+    assert candidates(found, plan, geometry) == ()
+    assert stale_decisions(found, plan, geometry) == ()

@@ -16,6 +16,7 @@ from shiboken6 import isValid
 from pulsemend.mending.epoch_rows import EpochRow
 from pulsemend.model.marks import EpochKey, Marks
 from pulsemend.model.plan import EpochRule
+from pulsemend.model.plan_file import parse_plan, plan_text, read_plan
 from pulsemend.model.vocabulary import Fate, PulseRule
 from pulsemend.session.found import Stage
 from pulsemend.window.desk import Desk
@@ -227,6 +228,33 @@ def test_add_copy_move_remove(qtbot: QtBot, page: EpochsStage) -> None:
     assert names() == ["after2"]
     assert "at least one" in page.rules.refusal.text()
     assert page.bench.session.next_undo == "Remove rule delay1"
+
+
+def test_plan_without_slots_and_rules_is_shown(
+    qtbot: QtBot, bench: Workbench, study: Study, tmp_path: Path
+) -> None:
+    """The draft of a recording whose trials could not be made out."""
+    path = open_study(bench, study, tmp_path)
+    page = put_up(qtbot, bench)
+    wait_learned(qtbot, bench)
+    bare = parse_plan('pulsemend = 1\n[pulses]\ntimes = "none"\n[epochs]\nlength_s = 1.0\n')
+    bench.session.open_plan(bare, path)
+    qtbot.waitUntil(lambda: bool(bench.problem), timeout=LEARN_MS)
+    assert "has no slot" in bench.problem
+    assert not page.editor.isVisible()
+    assert not page.rules.buttons["remove"].isEnabled()
+    assert not page.rules.buttons["copy"].isEnabled()
+    click(qtbot, page.rules.buttons["add"])
+    assert "has no slot" in page.rules.refusal.text()
+    # With slots the first rule can be added, and is the one that is edited.
+    slots = read_plan(study.plan).plan
+    bench.session.open_plan(
+        parse_plan(plan_text(replace(slots, epochs=replace(slots.epochs, rule=())))), path
+    )
+    click(qtbot, page.rules.buttons["add"])
+    assert page.editor.isVisible()
+    assert rule(page, 0).name == "epoch1"
+    wait_learned(qtbot, bench)
 
 
 def test_length_of_the_set(qtbot: QtBot, page: EpochsStage) -> None:

@@ -130,6 +130,8 @@ def why_no_trial(plan: Plan, facts: RecordingFacts) -> str:
     facts : RecordingFacts
         The recording's markers.
     """
+    if not plan.trial:
+        return "The plan has no slot: name the markers of one trial in order, each under a [[trial]]."
     first = plan.trial[0]
     codes = [marker.code for marker in plan.markers if marker.role is first.role]
     found = Counter(marker.code for marker in facts.markers)

@@ -8,7 +8,7 @@ from dataclasses import replace
 
 from pulsemend.errors import PlanError
 from pulsemend.model.plan import EpochRule, Plan
-from pulsemend.model.plan_checks import check_against_rate
+from pulsemend.model.plan_checks import check_against_rate, need_rules, need_slots
 
 
 def with_length(plan: Plan, length_s: float) -> Plan:
@@ -50,7 +50,13 @@ def with_new_rule(plan: Plan, place: int) -> Plan:
         The plan before.
     place : int
         From 0; the number of rules for the end.
+
+    Raises
+    ------
+    PlanError
+        The plan has no slot that a rule could start at.
     """
+    need_slots(plan)
     taken = [rule.name for rule in plan.epochs.rule]
     return _with_inserted(plan, place, EpochRule(free_name("epoch", taken), plan.trial[0].slot, 0.0))
 
@@ -80,8 +86,15 @@ def without_rule(plan: Plan, place: int) -> Plan:
         The plan before.
     place : int
         From 0.
+
+    Raises
+    ------
+    PlanError
+        It is the last one.
     """
-    return _with_rules(plan, [rule for i, rule in enumerate(plan.epochs.rule) if i != place])
+    new = _with_rules(plan, [rule for i, rule in enumerate(plan.epochs.rule) if i != place])
+    need_rules(new)
+    return new
 
 
 def with_moved_rule(plan: Plan, place: int, to: int) -> Plan:

@@ -7,7 +7,7 @@ from dataclasses import replace
 
 from PySide6.QtWidgets import QStackedWidget, QVBoxLayout, QWidget
 
-from pulsemend.errors import InputError, SettingError
+from pulsemend.errors import InputError, PlanError, SettingError
 from pulsemend.mending.epoch_rows import (
     EpochRow,
     epoch_rows,
@@ -157,7 +157,11 @@ class EpochsStage(StagePage):
     def _change_rules(self, label: str, change: Callable[[Plan], Plan], place: int) -> bool:
         """Add, copy, remove or move; the rule at `place` is chosen afterwards."""
         plan, before = self.bench.session.plan, self._place
-        new = plan if plan is None else change(plan)
+        try:
+            new = plan if plan is None else change(plan)
+        except PlanError as error:
+            self.rules.refuse(in_words(error))
+            return False
         if new is None or new == plan:
             return False
         self._place = place
@@ -168,7 +172,7 @@ class EpochsStage(StagePage):
         return not refusal
 
     def _add(self) -> None:
-        place = self._place + 1
+        place = self._place + 1  # the first one where the plan has no rule yet
         if self._change_rules("Add a rule", lambda plan: with_new_rule(plan, place), place):
             self.editor.name.setFocus()
             self.editor.name.selectAll()
@@ -240,11 +244,14 @@ class EpochsStage(StagePage):
             self.notes.hide()
             self._show_learned()
             return
-        self._place = min(self._place, len(plan.epochs.rule) - 1)
+        # A plan may have no rule yet: then none is chosen.
+        self._place = min(max(self._place, 0), len(plan.epochs.rule) - 1)
         self.length.show_value(plan.epochs.length_s)
         self.length_field.refuse("")
         self.rules.refuse("")
-        self.editor.show_rule(plan, self._place)
+        self.editor.setVisible(self._place >= 0)
+        if self._place >= 0:
+            self.editor.show_rule(plan, self._place)
         self._show_counts(plan)
 
     def _show_counts(self, plan: Plan) -> None:
@@ -326,7 +333,7 @@ class EpochsStage(StagePage):
         """Let a worker count what the chosen rule would keep under each choice about gaps."""
         learned, plan = self.bench.learned, self.bench.session.plan
         self.editor.show_kept(None)
-        if not self.shown or learned is None or plan is None or self.bench.provisional:
+        if not self.shown or learned is None or self._place < 0 or plan is None or self.bench.provisional:
             return
         place = self._place
 
