@@ -75,12 +75,25 @@ def test_pulses(desk: Desk) -> None:
     session.set_found(Found(n_pulses=0))
     state = state_of(session, Stage.PULSES)
     assert (state.state, state.label) == (State.ATTENTION, "1 needs attention")
+    session.set_found(Found(n_pulses=7, n_not_in_signal=2))
+    state = state_of(session, Stage.PULSES)
+    assert (state.state, state.count) == (State.ATTENTION, 2)
+    assert state.words == "2 of 7 pulses: marked, but not in the signal."
     session.set_found(Found(n_pulses=7))
     assert state_of(session, Stage.PULSES) == StageState(
         Stage.PULSES, State.DONE, "7 pulses, gap from -2 to 14 ms."
     )
     none = with_plan(desk, PLAN.replace("[pulses]", '[pulses]\ntimes = "none"'))
     assert state_of(none, Stage.PULSES).state is State.DONE
+
+
+def test_what_is_undecided_is_told_once(desk: Desk) -> None:
+    open_gap = with_plan(
+        desk, PLAN.replace("window_ms = [-2, 14]", "").replace("window_ms = [-2.0, 14.0]", "")
+    )
+    open_gap.set_found(Found(problems=("pulses.window_ms: is missing",)))
+    assert state_of(open_gap, Stage.PULSES).count == 1
+    assert state_of(open_gap, Stage.RECORDING).state is State.DONE
 
 
 def test_rules_without_epochs_need_attention(desk: Desk) -> None:

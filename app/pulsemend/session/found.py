@@ -70,6 +70,8 @@ class Found:
         Epochs kept per rule, in the plan's order; None until they were counted.
     n_pulses : int or None
         Pulses known; None until they were looked for.
+    n_not_in_signal : int
+        Pulses among them that have a marker, but no artifact.
     written : WrittenSet or None
         The set written last.
     """
@@ -77,6 +79,7 @@ class Found:
     problems: tuple[str, ...] = ()
     kept: tuple[tuple[str, int], ...] | None = None
     n_pulses: int | None = None
+    n_not_in_signal: int = 0
     written: WrittenSet | None = None
 
 

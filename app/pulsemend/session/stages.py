@@ -85,11 +85,20 @@ def recording_state(session: Session) -> StageState:
         return StageState(Stage.RECORDING, State.UNTOUCHED, "No recording is open.")
     facts = session.recording.facts
     problems = session.found.problems
-    if problems:
+    if problems and not _has_open_ends(session):
         return _attention(Stage.RECORDING, problems)
     n_bad = len(session.marks.bad)
     words = f"{facts.stem}: {len(facts.channels)} channels, {facts.duration_s:.0f} s at {facts.rate_hz:g} Hz."
     return StageState(Stage.RECORDING, State.DONE, f"{words} {n_bad} marked bad by hand." if n_bad else words)
+
+
+def _has_open_ends(session: Session) -> bool:
+    """Whether other stages already say what of the plan is undecided."""
+    plan = session.plan
+    if plan is None:
+        return False
+    no_gap = plan.pulses.times is not PulseTimes.NONE and plan.pulses.window_ms is None
+    return no_gap or any(marker.role is Role.UNDECIDED for marker in plan.markers)
 
 
 def markers_state(session: Session) -> StageState:
@@ -134,13 +143,16 @@ def pulses_state(session: Session) -> StageState:
         return _waiting(session, Stage.PULSES)
     if plan.pulses.times is PulseTimes.NONE:
         return StageState(Stage.PULSES, State.DONE, "The plan says that there are no pulses.")
-    n_pulses = session.found.n_pulses
+    if plan.pulses.window_ms is None:
+        return _attention(Stage.PULSES, ["The gap around every pulse is not decided yet."])
+    n_pulses, n_missing = session.found.n_pulses, session.found.n_not_in_signal
     if n_pulses is None:
         return StageState(Stage.PULSES, State.UNTOUCHED, "Pulses were not looked for yet.")
     if n_pulses == 0:
         return _attention(Stage.PULSES, ["No pulse is known, although the plan expects some."])
-    if plan.pulses.window_ms is None:
-        return _attention(Stage.PULSES, ["The gap around every pulse is not decided yet."])
+    if n_missing:
+        words = f"{n_missing} of {n_pulses} pulses: marked, but not in the signal."
+        return StageState(Stage.PULSES, State.ATTENTION, words, n_missing)
     start_ms, stop_ms = plan.pulses.window_ms
     words = f"{n_pulses} pulses, gap from {start_ms:g} to {stop_ms:g} ms."
     return StageState(Stage.PULSES, State.DONE, words)

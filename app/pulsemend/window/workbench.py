@@ -15,6 +15,7 @@ from PySide6.QtCore import QObject, QTimer, Signal
 
 from pulsemend.errors import PulsemendError
 from pulsemend.mending.learned import Learned, learn
+from pulsemend.mending.prepare import marked_only
 from pulsemend.model.recording import Recording
 from pulsemend.progress import Work
 from pulsemend.readers.opening import open_recording
@@ -174,6 +175,7 @@ class Workbench(QObject):
                 problems=(),
                 kept=tuple(counts.items()),
                 n_pulses=len(learned.estimates.pulses),
+                n_not_in_signal=marked_only(learned.estimates),
             )
         )
         self.session.set_estimates_revision(self.session.revision)
@@ -184,6 +186,6 @@ class Workbench(QObject):
             self.tell(error)
             return
         self.learned, self.problem = None, str(error)
-        self.session.set_found(Found((str(error),), None, None, self.session.found.written))
+        self.session.set_found(Found(problems=(str(error),), written=self.session.found.written))
         self.session.set_estimates_revision(None)
         self.learned_changed.emit()
