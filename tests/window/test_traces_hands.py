@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import replace
 from pathlib import Path
 
@@ -18,12 +18,21 @@ from pulsemend.session.view import Shown, View
 from pulsemend.window.ribbon import Ribbon
 from pulsemend.window.theme import DARK, LIGHT
 from pulsemend.window.traces.geometry import HEADER
-from pulsemend.window.traces.model import Measure, Overlays, Reading
+from pulsemend.window.traces.model import Bands, Measure, Overlays, Reading
 from pulsemend.window.traces.plot import Hand
 from pulsemend.window.traces.source import Detail, RepairedStretch, TraceSource
 from pulsemend.window.traces.widget import TracesWidget
 from support.hands import move, pixels, wheel
-from support.trace_cases import DURATION_S, RATE_HZ, Model, names_of, overlays, pyramid_of, recording
+from support.trace_cases import (
+    DURATION_S,
+    PULSES_S,
+    RATE_HZ,
+    Model,
+    names_of,
+    overlays,
+    pyramid_of,
+    recording,
+)
 
 Key, Mod, Button = Qt.Key, Qt.KeyboardModifier, Qt.MouseButton
 VIEW = View(start_s=2.0, width_s=8.0, row_uv=60.0)
@@ -401,6 +410,38 @@ def test_bad_and_picked_rows_have_their_colours(traces: Traces) -> None:
         assert 0.5 < n_rows * count_of(after, colour) / count_of(before, LIGHT.trace) < 2.0
     traces.widget.set_theme(DARK)
     assert count_of(traces.plot.grab().toImage(), DARK.trace_bad) > 100
+
+
+def gap_widths(traces: Traces, rows: Sequence[int]) -> list[int]:
+    """Widest run of the gap's colour in some line of each row, where no trace covers it, in pixels."""
+    is_gap = (pixels(traces.plot.grab().toImage()) & 0xFFFFFF) == (QColor(LIGHT.gap).rgb() & 0xFFFFFF)
+    height = traces.plot.rows.row_height
+    tops = [traces.plot.rows.middle(row) - 0.5 * height for row in rows]
+    return [int(is_gap[int(top + 2) : int(top + height - 2)].sum(axis=1).max()) for top in tops]
+
+
+def test_gaps_are_as_long_as_the_rows_own(traces: Traces) -> None:
+    own = Bands(PULSES_S - 0.002, PULSES_S + 0.025)
+    usual = Bands(PULSES_S - 0.002, PULSES_S + 0.014)
+    traces.widget.set_overlays(Overlays(gaps=usual, own_gaps={"E4": own, "E5": own, "E7": Bands()}))
+    traces.model.set_view(replace(traces.view, start_s=4.95, width_s=0.1))
+    names = traces.plot.shown_names
+    wanted_s = [{"E4": 0.027, "E5": 0.027, "E7": 0.0}.get(name, 0.016) for name in names]
+    px_per_s = traces.plot.width() / 0.1
+    assert gap_widths(traces, range(8)) == pytest.approx([px_per_s * wanted for wanted in wanted_s], abs=2)
+    # Other rows, other order: the gap goes with its channel.
+    traces.model.set_view(replace(traces.view, rows=("E5", "E1", "E4")))
+    assert gap_widths(traces, range(3)) == pytest.approx([px_per_s * s for s in (0.027, 0.016, 0.027)], abs=2)
+
+
+def test_short_gaps_of_a_row_stay_seen(traces: Traces) -> None:
+    own = Bands(PULSES_S, PULSES_S + 0.020)
+    traces.widget.set_overlays(Overlays(own_gaps={"E4": own}))
+    traces.model.set_view(replace(traces.view, start_s=0.0, width_s=20.0))
+    place = traces.plot.shown_names.index("E4")
+    widths = gap_widths(traces, range(8))
+    assert widths[place] >= 2 * 2  # two pulses, each a marker of 3 px across pixels' edges
+    assert sum(widths) == widths[place]
 
 
 def test_both_signals_lie_over_each_other(traces: Traces) -> None:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from pathlib import Path
 
 import numpy as np
@@ -12,6 +12,7 @@ from PySide6.QtCore import QObject, Signal
 from pulsemend.engine.chain import Chain
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.pyramid import Patch, Pyramid, patch, pyramid
+from pulsemend.engine.setup import GapGroup
 from pulsemend.engine.store import Store
 from pulsemend.mending.learned import Learned, repaired_stored
 from pulsemend.mending.pulse_view import PulseRequest, ground_of, sketch
@@ -23,7 +24,7 @@ from pulsemend.progress import Progress, Work
 from pulsemend.session.changed import Changed
 from pulsemend.session.session import Session
 from pulsemend.session.view import View
-from pulsemend.signal.gaps import merge_spans
+from pulsemend.signal.gaps import merge_spans, window_to_samples
 from pulsemend.window.traces.model import Bands, Events, Overlays
 from pulsemend.window.traces.source import RepairedStretch
 from pulsemend.window.traces.widget import TracesWidget
@@ -60,10 +61,12 @@ def overlays(session: Session, learned: Learned | None) -> Overlays:
         return Overlays()
     rate_hz = opened.facts.rate_hz
     plan, marks = session.plan, session.marks
+    gaps, own_gaps = _gap_bands(learned)
     stretches = sorted((s.start / rate_hz, s.stop / rate_hz, s.kind) for s in marks.bad_stretches)
     return Overlays(
         events=_events(session, learned),
-        gaps=_gap_bands(learned),
+        gaps=gaps,
+        own_gaps=own_gaps,
         bad_stretches=Bands(
             np.array([s[0] for s in stretches]),
             np.array([s[1] for s in stretches]),
@@ -103,11 +106,31 @@ def _events(session: Session, learned: Learned | None) -> Events:
     )
 
 
-def _gap_bands(learned: Learned | None) -> Bands:
-    if learned is None:
-        return Bands()
+def _gap_bands(learned: Learned | None) -> tuple[Bands, Mapping[str, Bands]]:
+    """Gaps that most channels have, and those of the channels that have others or are not processed."""
+    if learned is None or not learned.setup.groups:
+        return Bands(), {}
+    setup = learned.setup
+    usual = max(setup.groups, key=lambda group: group.columns.size)
+    nothing = Bands()
+    used = {channel.name for channel in setup.channels}
+    own = {channel.name: nothing for channel in setup.facts.channels if channel.name not in used}
+    for group in setup.groups:
+        if group is not usual:
+            bands = _bands_of(group, learned)
+            own.update((setup.channels[column].name, bands) for column in group.columns)
+    return _bands_of(usual, learned), own
+
+
+def _bands_of(group: GapGroup, learned: Learned) -> Bands:
     rate_hz = learned.setup.facts.rate_hz
-    spans = merge_spans([(gap.start, gap.stop) for gap in learned.decision.geometry.gaps])
+    spans = merge_spans(
+        [
+            window_to_samples(onset, window_s, rate_hz)
+            for onset in learned.estimates.onsets
+            for window_s in group.windows_s
+        ]
+    )
     return Bands(np.array([a / rate_hz for a, _ in spans]), np.array([b / rate_hz for _, b in spans]))
 
 

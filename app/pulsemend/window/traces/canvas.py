@@ -141,7 +141,7 @@ class TraceView(QWidget):
 
     def _paint(self, canvas: paint.Canvas, drawn: Drawn) -> None:
         canvas.painter.fillRect(self.rect(), QColor(self._theme.panel))
-        paint.paint_behind(canvas, self._overlays)
+        paint.paint_behind(canvas, self._overlays, self.shown_names)
         canvas.painter.drawImage(QPointF(0, canvas.rows.top), drawn.image)
         paint.paint_band_labels(canvas, self._overlays)
         self._hidden_labels = paint.paint_events(canvas, self._overlays.events, self._current_event)

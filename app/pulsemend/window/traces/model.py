@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Protocol
 
@@ -97,11 +97,13 @@ class Overlays:
     ----------
     events : Events
     gaps : Bands
-        What is replaced around pulses.
+        What is replaced around pulses, in every channel without gaps of its own.
     bad_stretches : Bands
     epochs : Bands
     bad : frozenset of str
         Names of the bad channels.
+    own_gaps : mapping of str to Bands
+        By name of the channel, for channels with other gaps; channels with the same gaps share one object.
     """
 
     events: Events = field(default_factory=Events)
@@ -109,6 +111,7 @@ class Overlays:
     bad_stretches: Bands = field(default_factory=Bands)
     epochs: Bands = field(default_factory=Bands)
     bad: frozenset[str] = frozenset()
+    own_gaps: Mapping[str, Bands] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import groupby
 
 import numpy as np
 from numpy.typing import NDArray
@@ -60,8 +62,18 @@ class Canvas:
         return QFontMetricsF(self.painter.font())
 
 
-def paint_behind(canvas: Canvas, overlays: Overlays) -> None:
-    """Paint bad stretches, epochs and gaps, to scale."""
+def paint_behind(canvas: Canvas, overlays: Overlays, names: Sequence[str]) -> None:
+    """Paint bad stretches, epochs and gaps, to scale.
+
+    Parameters
+    ----------
+    canvas : Canvas
+        Where.
+    overlays : Overlays
+        What.
+    names : sequence of str
+        Names of all rows, top to bottom.
+    """
     area = QRectF(0, canvas.rows.top, canvas.width, canvas.rows.area)
     painter = canvas.painter
     for box in _boxes(canvas, overlays.epochs, area):
@@ -71,8 +83,9 @@ def paint_behind(canvas: Canvas, overlays: Overlays) -> None:
         # A hatch as well, so that the colour does not stand alone.
         box.setHeight(5)
         painter.fillRect(box, QBrush(QColor(canvas.theme.attention), Qt.BrushStyle.BDiagPattern))
-    for box in _boxes(canvas, overlays.gaps, area):
-        painter.fillRect(box, QColor(canvas.theme.gap))
+    for bands, part in _gap_parts(canvas, overlays, names):
+        for box in _boxes(canvas, bands, part):
+            painter.fillRect(box, QColor(canvas.theme.gap))
 
 
 def paint_band_labels(canvas: Canvas, overlays: Overlays) -> None:
@@ -231,6 +244,24 @@ def _spans(canvas: Canvas, bands: Bands) -> tuple[NDArray[np.intp], NDArray[np.f
     )
 
 
+def _gap_parts(canvas: Canvas, overlays: Overlays, names: Sequence[str]) -> list[tuple[Bands, QRectF]]:
+    """Gaps and the part of the widget they hold in: everything, or runs of rows with the same gaps."""
+    rows, usual = canvas.rows, overlays.gaps
+    bottom = float(rows.top + rows.area)
+    of_rows = [overlays.own_gaps.get(names[row], usual) for row in rows.visible]
+    if all(bands is usual for bands in of_rows):
+        return [(usual, QRectF(0, rows.top, canvas.width, rows.area))]
+    parts: list[tuple[Bands, QRectF]] = []
+    row = rows.visible.start
+    for _, run in groupby(of_rows, key=id):
+        same = list(run)
+        half = 0.5 * rows.row_height
+        top = max(float(rows.top), rows.middle(row) - half)
+        row += len(same)
+        parts.append((same[0], QRectF(0, top, canvas.width, min(bottom, rows.middle(row - 1) + half) - top)))
+    return parts
+
+
 def _boxes(canvas: Canvas, bands: Bands, area: QRectF) -> list[QRectF]:
     """Boxes of the bands in view, to scale; narrow ones are markers of one width, merged where they touch."""
     _, left, right = _spans(canvas, bands)
@@ -240,9 +271,9 @@ def _boxes(canvas: Canvas, bands: Bands, area: QRectF) -> list[QRectF]:
         for a, b in zip(left[~narrow], right[~narrow], strict=True)
     ]
     middle = 0.5 * (left[narrow] + right[narrow])
-    # So many that they would hide the rest stay a row of marks along the upper edge.
+    # So many that they would hide the rest stay a row of marks along the upper edge of their rows.
     reach_down = middle.size * LEAST_BAND <= _SPARSE_SHARE * canvas.width
-    height = area.height() if reach_down else _MARK_HEIGHT
+    height = area.height() if reach_down else min(_MARK_HEIGHT, area.height())
     starts = middle - LEAST_BAND / 2
     firsts = np.flatnonzero(np.diff(starts, prepend=-np.inf) > LEAST_BAND)
     lasts = np.append(firsts[1:], starts.size)[: firsts.size] - 1
