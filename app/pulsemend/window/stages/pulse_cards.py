@@ -267,6 +267,9 @@ class GapCard(Card):
                 (start_ms, stop_ms), plan.pulses.window_ms or PROPOSED_MS, self.gap_fields.rate_hz
             )
             self._edits.pulses("Gap", replace(plan.pulses, window_ms=window), GAP_KEY)
+            # An edge that could not pass the other may change nothing: then nobody else corrects the field.
+            now = self._edits.bench.session.plan or plan
+            self.gap_fields.show_window(now.pulses.window_ms or window)
 
     def _take_proposed(self) -> None:
         plan = self._edits.bench.session.plan
@@ -278,6 +281,7 @@ class GapCard(Card):
         if current is not None:
             window = _ordered((start_ms, stop_ms), current.window_ms, self.own.rate_hz)
             set_exceptions(self._edits, [current.channel], window, current.source, GAP_KEY)
+            self.own.show_window((self._current or current).window_ms)
 
     def _choose_place(self, key: str) -> None:
         """Let the exception hold elsewhere; both files change, so these are two entries."""
@@ -540,6 +544,7 @@ class OtherGapsCard(Card):
         gaps = list(self._now)
         gaps[place] = OtherGap(_ordered(window_ms, gaps[place].window_ms, self._rate_hz))
         self._set("Further gap", tuple(gaps), f"also {place}")
+        self.rows[place].show_window(self._now[place].window_ms)
 
     def _remove(self, place: int) -> None:
         self._set("Further gap removed", tuple(gap for i, gap in enumerate(self._now) if i != place))
