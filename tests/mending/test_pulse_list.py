@@ -23,6 +23,7 @@ from pulsemend.mending.pulse_list import (
     as_found,
     count_pulses,
     pulse_rows,
+    refusal_to_add,
     with_added,
     with_moved,
     with_removed,
@@ -202,3 +203,17 @@ def test_shortened_flanks_and_rules_without_epochs_are_told(study: Study) -> Non
     # Between the gap and the recharge are 234 ms, so all of them are short of 300 ms.
     assert done.n_shortened == done.n_gaps > 0
     assert done.replaced["delay1"] is None
+
+
+def test_a_pulse_is_added_two_milliseconds_from_every_other_and_no_nearer() -> None:
+    rows = pulse_rows(FACTS, plan(), NO_MARKS)
+    onset, rate_hz = rows[0].onset, FACTS.rate_hz
+    near = round(0.002 * rate_hz)
+    assert near > 1
+    assert not refusal_to_add(onset + near, rows, rate_hz)
+    assert not refusal_to_add(onset - near, rows, rate_hz)
+    for sample in (onset, onset + near - 1, onset - near + 1):
+        assert f"there is one at {onset / rate_hz:.4f} s already" in refusal_to_add(sample, rows, rate_hz)
+    removed = pulse_rows(FACTS, plan(), with_removed(NO_MARKS, rows[0]))
+    assert not refusal_to_add(onset, removed, rate_hz)
+    assert not refusal_to_add(onset, (), rate_hz)

@@ -20,8 +20,10 @@ from pulsemend.model.plan_file import PlanFile, parse_plan
 from pulsemend.model.vocabulary import Fill, Format, PulseTimes, Side
 from pulsemend.readers.opening import open_recording
 from pulsemend.session.found import Selected
+from pulsemend.session.messages import Level
 from pulsemend.session.session import Session
 from pulsemend.session.settings import Settings
+from pulsemend.window.mark_acts import MarkActs
 from pulsemend.window.pulse_canvas import EdgeHandle
 from pulsemend.window.pulse_picture import PulsePicture
 from pulsemend.window.stages.pulses import PulsesStage
@@ -424,6 +426,41 @@ def test_pulse_is_added_at_the_selected_time(room: Room) -> None:
     view = room.picture.canvas.view
     assert view is not None
     assert view.n_pulses == N_PULSES + 1
+    room.session.undo()
+    assert room.session.marks == NO_MARKS
+
+
+def test_a_pulse_is_not_added_beside_another(room: Room) -> None:
+    card = room.page.list_card
+    onset = card.model.rows[2].onset
+    acts = MarkActs(room.bench)
+    for sample in (onset, onset - 9, onset + 9):
+        room.session.select(Selected(stretch=(sample, sample + 100)))
+        room.click(card.add_button)
+        acts.add_pulse(sample)
+        assert room.session.marks == NO_MARKS
+        assert room.session.messages[-1].level is Level.ATTENTION
+        assert f"there is one at {onset / 5000.0:.4f} s already" in room.session.messages[-1].text
+    assert room.session.next_undo == ""
+    # 10 samples are 2 ms: far enough.
+    acts.add_pulse(onset + 10)
+    assert room.session.marks.pulses_added == (onset + 10,)
+    acts.add_pulse(onset + 11)
+    assert room.session.marks.pulses_added == (onset + 10,)
+
+
+def test_delete_in_the_list_removes_the_pulse(room: Room) -> None:
+    card = room.page.list_card
+    row = card.model.rows[1]
+    card.table.setFocus()
+    card.table.setCurrentIndex(card.model.index(1, 0))
+    QTest.keyClick(card.table, Qt.Key.Key_Delete)
+    assert row.marked is not None
+    assert room.session.marks.pulses_removed == (round(row.marked),)
+    undo = room.session.next_undo
+    # It stays in the list as removed; once more changes nothing.
+    QTest.keyClick(card.table, Qt.Key.Key_Delete)
+    assert room.session.next_undo == undo
     room.session.undo()
     assert room.session.marks == NO_MARKS
 

@@ -11,10 +11,14 @@ from pulsemend.model.marks import Marks, MovedPulse
 from pulsemend.model.plan import Plan
 from pulsemend.model.recording import RecordingFacts
 from pulsemend.model.vocabulary import PulseState, PulseTimes, Role
-from pulsemend.units import s_to_ms
+from pulsemend.units import ms_to_s, s_to_ms
 
 REMOVED = "removed by hand"
 NOT_YET = "not looked for yet"
+
+LEAST_APART_MS = 2.0
+"""A pulse is not added nearer than this to another one; common practice: none known. The gap around either
+covers the other."""
 
 
 @dataclass(frozen=True)
@@ -151,6 +155,33 @@ def count_pulses(rows: Sequence[PulseRow], rate_hz: float) -> PulseCounts:
 def with_added(marks: Marks, *samples: int) -> Marks:
     """Add pulses at onsets (recorded samples)."""
     return replace(marks, pulses_added=tuple(sorted({*marks.pulses_added, *samples})))
+
+
+def refusal_to_add(sample: int, rows: Sequence[PulseRow], rate_hz: float) -> str:
+    """Say why no pulse can be added at an onset: another one is there, or hardly beside it.
+
+    Parameters
+    ----------
+    sample : int
+        Recorded sample of the onset.
+    rows : sequence of PulseRow
+        From `pulse_rows`; those removed by hand are in nobody's way.
+    rate_hz : float
+        Recorded rate.
+
+    Returns
+    -------
+    str
+        A sentence; empty where the pulse can be added.
+    """
+    onsets = [row.onset for row in rows if not row.is_removed]
+    nearest = min(onsets, key=lambda onset: abs(onset - sample), default=None)
+    if nearest is None or abs(nearest - sample) >= ms_to_s(LEAST_APART_MS) * rate_hz:
+        return ""
+    return (
+        f"No pulse was added at {sample / rate_hz:.4f} s: there is one at {nearest / rate_hz:.4f} s already. "
+        f"Two pulses are at least {LEAST_APART_MS:g} ms apart; the one there can be moved or removed."
+    )
 
 
 def with_moved(marks: Marks, row: PulseRow, to: int) -> Marks:

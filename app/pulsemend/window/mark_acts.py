@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+from pulsemend.mending.pulse_list import PulseRow, pulse_rows, refusal_to_add, with_added
 from pulsemend.model.epochs import Pulse, nearest_sample
 from pulsemend.model.marks import BadStretch, Marks, MovedPulse
+from pulsemend.model.recording import RecordingFacts
 from pulsemend.session.found import NOTHING_SELECTED, Selected
 from pulsemend.session.messages import Level, Message
 from pulsemend.session.session import Session
@@ -60,10 +62,16 @@ class MarkActs:
         session.select(NOTHING_SELECTED)
 
     def add_pulse(self, sample: int) -> None:
-        """Add a pulse whose onset is at a recorded sample."""
+        """Add a pulse whose onset is at a recorded sample, unless one is there already."""
         session = self._session
-        added = tuple(sorted({*session.marks.pulses_added, sample}))
-        session.edit_marks("Pulse added", replace(session.marks, pulses_added=added))
+        opened = session.recording
+        if opened is None:
+            return
+        refusal = refusal_to_add(sample, self._rows(opened.facts), opened.facts.rate_hz)
+        if refusal:
+            session.say(Message(Level.ATTENTION, refusal))
+        else:
+            session.edit_marks("Pulse added", with_added(session.marks, sample))
 
     def move_pulse(self, sample: int, to: int, merge_key: str | None = None) -> None:
         """Give the pulse whose onset is at a sample another onset."""
@@ -105,6 +113,14 @@ class MarkActs:
             kept = tuple(s for s in session.marks.bad_stretches if s.stop <= start or s.start >= stop)
             session.edit_marks("Bad stretch removed", replace(session.marks, bad_stretches=kept))
             session.select(NOTHING_SELECTED)
+
+    def _rows(self, facts: RecordingFacts) -> tuple[PulseRow, ...]:
+        """List the pulses as the Pulses stage does."""
+        session, learned = self._session, self._bench.learned
+        if session.plan is None:
+            return ()
+        known = () if learned is None else learned.estimates.pulses
+        return pulse_rows(facts, session.plan, session.marks, known)
 
     def pulse_at(self, sample: int) -> Pulse | None:
         """Find the known pulse whose onset is at a sample."""

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 from typing import Any
 
 from PySide6.QtCore import QAbstractTableModel, QModelIndex, QPersistentModelIndex, Qt
+from PySide6.QtGui import QKeyEvent
 from PySide6.QtWidgets import QAbstractItemView, QHBoxLayout, QHeaderView, QTableView, QVBoxLayout, QWidget
 
 from pulsemend.mending.pulse_list import (
@@ -14,6 +15,7 @@ from pulsemend.mending.pulse_list import (
     PulseRow,
     as_found,
     count_pulses,
+    refusal_to_add,
     with_added,
     with_moved,
     with_removed,
@@ -22,6 +24,7 @@ from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.marks import Marks
 from pulsemend.model.vocabulary import PulseState, PulseTimes
 from pulsemend.session.found import NOTHING_SELECTED, Selected
+from pulsemend.session.messages import Level, Message
 from pulsemend.units import ms_to_s, s_to_ms
 from pulsemend.window.parts import Card, Choices, button, words
 from pulsemend.window.stages.pulse_cards import Edits, MsField, SlimField
@@ -89,6 +92,22 @@ class PulseModel(QAbstractTableModel):
         return f"{row.onset / self.rate_hz:.4f} s", latency, row.words
 
 
+class _PulseTable(QTableView):
+    """The list; Delete removes, Return jumps there."""
+
+    def __init__(self, remove: Callable[[], None], jump: Callable[[], None]) -> None:
+        super().__init__()
+        self._remove, self._jump = remove, jump
+
+    def keyPressEvent(self, event: QKeyEvent) -> None:
+        if event.key() == Qt.Key.Key_Delete:
+            self._remove()
+        elif event.key() in (Qt.Key.Key_Return, Qt.Key.Key_Enter):
+            self._jump()
+        else:
+            super().keyPressEvent(event)
+
+
 class PulseListCard(Card):
     """Counts, the list, and what can be done to it.
 
@@ -114,10 +133,10 @@ class PulseListCard(Card):
         self.add_all = button("Add them as pulses", self._add_unmarked)
         self.add(self.add_all)
         self.model = PulseModel()
-        self.table = QTableView()
+        self.chosen = _Chosen(self._edits)
+        self.table = _PulseTable(self.chosen.remove_pulse, self._jump)
         self._set_up_table()
         self.add(self.table)
-        self.chosen = _Chosen(self._edits)
         self.add(self.chosen)
         self.new_s = SlimField("Onset of a new pulse", "s", 0.0, 9_999_999.0, 0.001, decimals=4)
         self.add_field("A new pulse at", self.new_s)
@@ -185,7 +204,7 @@ class PulseListCard(Card):
         table.setTabKeyNavigation(False)
         table.setWordWrap(False)
         table.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
-        table.setToolTip("Click a pulse, or press Return on it, to bring it into view")
+        table.setToolTip("Click a pulse, or press Return on it, to bring it into view; Delete removes it")
         table.verticalHeader().hide()
         table.verticalHeader().setSectionResizeMode(QHeaderView.ResizeMode.Fixed)
         table.horizontalHeader().setStretchLastSection(True)
@@ -193,7 +212,6 @@ class PulseListCard(Card):
             Qt.AlignmentFlag.AlignLeft | Qt.AlignmentFlag.AlignVCenter
         )
         table.clicked.connect(lambda _index: self._jump())
-        table.activated.connect(lambda _index: self._jump())
         table.selectionModel().currentRowChanged.connect(
             lambda _new, _old: self.chosen.show_row(self.current, self.model.rate_hz, self._n_samples)
         )
@@ -246,6 +264,10 @@ class PulseListCard(Card):
     def _add(self) -> None:
         sample = nearest_sample(self.new_s.value() * self.model.rate_hz)
         session = self._edits.bench.session
+        refusal = refusal_to_add(sample, self.model.rows, self.model.rate_hz)
+        if refusal:
+            session.say(Message(Level.ATTENTION, refusal))
+            return
         self._edits.marks("Pulse added", with_added(session.marks, sample))
         session.select(Selected(pulse=sample))
 
@@ -271,7 +293,7 @@ class _Chosen(QWidget):
         self.after_marker.setToolTip("Another onset, counted from the marker")
         self.sample = SlimField("Onset of the chosen pulse as a recorded sample", "", 0, 9e12, 1, decimals=0)
         self.sample.setToolTip("Another onset, as a recorded sample from 0")
-        self.remove = button("Remove", self._remove, tooltip="Say that this is no pulse")
+        self.remove = button("Remove", self.remove_pulse, tooltip="Say that this is no pulse (Delete)")
         self.back = button("As found", self._back, tooltip="Take back what was done to this pulse by hand")
         self.name = words("")
         fields, buttons = QHBoxLayout(), QHBoxLayout()
@@ -323,8 +345,9 @@ class _Chosen(QWidget):
         self._edit("Pulse moved", with_moved(session.marks, row, to), f"move pulse {row.marked}")
         session.select(Selected(pulse=to))
 
-    def _remove(self) -> None:
-        if self._row is not None:
+    def remove_pulse(self) -> None:
+        """Say that the chosen pulse is none, unless that was said before."""
+        if self._row is not None and not self._row.is_removed:
             self._edit("Pulse removed", with_removed(self._edits.bench.session.marks, self._row))
             self._edits.bench.session.select(NOTHING_SELECTED)
 
