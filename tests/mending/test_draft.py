@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 import tomllib
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -13,7 +14,7 @@ from pulsemend.errors import PlanError, UsageError
 from pulsemend.mending.draft import NO_EVIDENCE, draft_plan, pulse_evidence, write_draft
 from pulsemend.model.plan import Plan
 from pulsemend.model.plan_checks import check_against_rate, check_decided
-from pulsemend.model.plan_file import parse_plan
+from pulsemend.model.plan_file import parse_plan, update_text
 from pulsemend.model.recording import Channel, Marker, RecordingFacts
 from pulsemend.model.vocabulary import ChannelType, Fate, PulseTimes, Role
 from pulsemend.progress import finish
@@ -335,3 +336,19 @@ def test_plans_are_never_replaced(tmp_path: Path) -> None:
     assert out.read_text(encoding="utf-8") == "mine"
     with pytest.raises(UsageError, match="is no folder"):
         finish(write_draft(tmp_path / "none.vhdr", tmp_path / "missing" / "plan.toml"))
+
+
+def test_deciding_the_gap_keeps_every_comment_of_a_draft() -> None:
+    text = draft_plan(session())
+    plan = parse_plan(text).plan
+    gap = replace(plan, pulses=replace(plan.pulses, window_ms=(-1.5, 20.0), flank_ms=40.0))
+    lines = update_text(text, gap).split("\n")
+    before = text.split("\n")
+    new = ["window_ms = [-1.5, 20.0]", "flank_ms = 40.0"]
+    assert [line for line in lines if line not in new] == before
+    for line in new:
+        place = lines.index(line)
+        # Right below the line that named the key before it was decided.
+        assert lines[place - 1].startswith(f"# {line.split(' ')[0]} = ")
+        assert lines.index("[pulses]") < place < lines.index("# Recorded at 1000 Hz.")
+    check_decided(parse_plan("\n".join(lines)).plan)

@@ -6,6 +6,7 @@ import re
 import sys
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import pytest
 from hypothesis import given, settings
@@ -321,6 +322,73 @@ def test_any_plan_survives_writing_and_any_text_can_become_any_plan(first: Plan,
         # The editing itself has to be right, without the fall-back to a text without comments.
         edited = updated_text(start, plan_tree(second), key_defaults(PLAN_KEYS), named)
         assert same(parse_plan(edited).plan, second)
+
+
+# --- new keys and the comments around them ----------------------------------------------------------
+
+SECTIONS = """\
+pulsemend = 1
+[pulses]
+times = "markers"
+search_ms = [-10.0, 10.0]   # wide
+# decide: the gap, for example:
+# window_ms = [-2.0, 14.0]   # replaced
+fill = "line"
+# of the fill
+decay = "none"
+# the last word on pulses
+
+# Recorded at 5000 Hz.
+[filter]
+rate_hz = 0
+# what comes out
+[epochs]
+length_s = 1.0
+"""
+
+
+def edited(text: str, pulses: dict[str, Any]) -> list[str]:
+    plan = parse_plan(text).plan
+    new = replace(plan, pulses=replace(plan.pulses, **pulses))
+    changed = update_text(text, new)
+    assert same(parse_plan(changed).plan, new)
+    assert comments(changed) == comments(text)
+    return changed.split("\n")
+
+
+def test_new_key_stands_below_its_commented_example() -> None:
+    lines = edited(SECTIONS, {"window_ms": (-1.0, 9.0)})
+    place = lines.index("window_ms = [-1.0, 9.0]")
+    assert lines[place - 1] == "# window_ms = [-2.0, 14.0]   # replaced"
+    assert [*lines[:place], *lines[place + 1 :]] == SECTIONS.split("\n")
+
+
+def test_new_key_stands_behind_the_one_before_it_in_the_table_of_keys() -> None:
+    lines = edited(SECTIONS, {"side": Side.BEFORE})
+    assert lines[lines.index('side = "before"') - 1] == 'fill = "line"'
+    lines = edited(SECTIONS.replace('decay = "none"\n', ""), {"flank_ms": 20.0})
+    assert lines[lines.index("flank_ms = 20.0") - 1] == 'fill = "line"'
+    lines = edited(SECTIONS.replace('times = "markers"\n', ""), {"times": PulseTimes.NONE})
+    assert lines[lines.index('times = "none"') - 1] == "[pulses]"
+
+
+def test_new_table_stands_before_the_comment_of_the_next_one() -> None:
+    more = {"also": (OtherGap((20.0, 30.0)),), "channels": {"C3": (-2.0, 25.0)}}
+    lines = edited(SECTIONS, more)
+    for header in ("[[pulses.also]]", "[pulses.channels]"):
+        assert lines.index("# the last word on pulses") < lines.index(header)
+        assert lines.index(header) < lines.index("# Recorded at 5000 Hz.")
+    assert lines[lines.index("[filter]") - 1] == "# Recorded at 5000 Hz."
+    # Dotted keys behind the new header would belong to it.
+    edited(SECTIONS.replace("# of the fill", "channels.C4 = [-2.0, 9.0]"), {"also": more["also"]})
+
+
+def test_new_keys_in_a_text_with_carriage_returns() -> None:
+    plan = parse_plan(SECTIONS).plan
+    new = replace(plan, pulses=replace(plan.pulses, window_ms=(-1.0, 9.0)))
+    changed = update_text(SECTIONS.replace("\n", "\r\n"), new)
+    assert changed.replace("\r\n", "\n") == update_text(SECTIONS, new)
+    assert "\n" not in changed.replace("\r\n", "")
 
 
 # --- files that are no plans ------------------------------------------------------------------------

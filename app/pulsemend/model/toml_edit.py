@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, MutableMapping, Sequence
+import re
+from collections.abc import Collection, Iterable, Mapping, MutableMapping, Sequence
 from dataclasses import dataclass
 from enum import Enum
 from typing import Any
 
 import tomlkit
-from tomlkit.items import AoT, InlineTable, Item, Table
+from tomlkit.container import Container
+from tomlkit.items import AoT, Comment, InlineTable, Item, Key, Table
 
 Tree = Mapping[str, Any]
 
@@ -71,6 +73,7 @@ class _Rules:
 
 def _update(table: MutableMapping[str, Any], tree: Tree, path: str, rules: _Rules) -> None:
     """Make a table of a document hold the values of a tree."""
+    earlier: list[str] = []
     for name, value in tree.items():
         below = rules.below(path, name)
         if isinstance(value, Mapping):
@@ -83,10 +86,66 @@ def _update(table: MutableMapping[str, Any], tree: Tree, path: str, rules: _Rule
             elif _plain(table[name]) != _plain(value):
                 table[name] = _plain(value)
         elif not rules.is_default(below, value):
-            table[name] = _plain(value)
+            _add(table, name, _plain(value), earlier)
+        earlier.append(name)
     if rules.takes_any_name(path):
         for name in [name for name in table if name not in tree]:
             del table[name]
+
+
+def _add(table: MutableMapping[str, Any], name: str, value: object, earlier: Collection[str]) -> None:
+    """Add a key or a table within a table's own part.
+
+    The library itself adds at the end, where the comments of the next table stand already.
+    """
+    container = table.value if isinstance(table, Table) else table
+    if isinstance(container, Container):
+        is_table = isinstance(value, (Table, AoT))
+        place = _table_place(container.body) if is_table else _key_place(container.body, name, earlier)
+        # Tables of the document itself can only stand at its end.
+        if place is not None and place < len(container.body) and not (is_table and container is table):
+            if isinstance(value, (Table, AoT)):
+                (value[0] if isinstance(value, AoT) else value).trivia.indent = "\n"
+            # The library's own way to put a key behind another; it has no public name.
+            container._insert_at(place, name, value)
+            return
+    table[name] = value
+
+
+_Body = Sequence[tuple[Key | None, Item]]
+
+
+def _own_keys(body: _Body) -> int:
+    """Place behind the last key of a table itself, tables below it not counted."""
+    end = next((i for i, (_, item) in enumerate(body) if isinstance(item, (Table, AoT))), len(body))
+    return max((i + 1 for i in range(end) if body[i][0] is not None), default=0)
+
+
+def _own_end(body: _Body) -> int:
+    """Place behind a table's own keys and the comments that follow them without an empty line."""
+    place = _own_keys(body)
+    while place < len(body) and isinstance(body[place][1], Comment):
+        place += 1
+    return place
+
+
+def _table_place(body: _Body) -> int | None:
+    """Where a table below another belongs; None if that has no keys of its own, or dotted ones."""
+    # Behind the header of a table, dotted keys would belong to it.
+    if any(key is not None and key.is_dotted() for key, _ in body):
+        return None
+    return _own_end(body) if _own_keys(body) else None
+
+
+def _key_place(body: _Body, name: str, earlier: Collection[str]) -> int:
+    """Below the key's own commented-out line, else behind the last key that comes before it."""
+    place = 0
+    for i, (key, item) in enumerate(body[: _own_end(body)]):
+        if isinstance(item, Comment) and re.match(rf"#\s*{re.escape(name)}\s*=", item.trivia.comment):
+            return i + 1
+        if key is not None and key.key in earlier:
+            place = i + 1
+    return place
 
 
 def _update_table(table: MutableMapping[str, Any], name: str, tree: Tree, path: str, rules: _Rules) -> None:
@@ -96,7 +155,7 @@ def _update_table(table: MutableMapping[str, Any], name: str, tree: Tree, path: 
     new = _new_table(tree, path, rules)
     # A code without labels and with no role cannot be, so an empty table says nothing.
     if new:
-        table[name] = new
+        _add(table, name, new, ())
 
 
 def _new_table(tree: Tree, path: str, rules: _Rules) -> Table | InlineTable:
@@ -117,7 +176,7 @@ def _update_array(
     if not isinstance(old, AoT):
         new = [_plain(_new_table(tree, path, rules)) for tree in wanted]
         if name not in table:
-            table[name] = _tables(_new_table(tree, path, rules) for tree in wanted)
+            _add(table, name, _tables(_new_table(tree, path, rules) for tree in wanted), ())
         elif _plain(old) != new:
             table[name] = new
         return
