@@ -24,6 +24,7 @@ from pulsemend.mending.pulse_view import (
     ground_of,
     on_sample_ms,
     sketch,
+    step_left,
 )
 from pulsemend.model.marks import NO_MARKS, Marks, MovedPulse
 from pulsemend.model.plan import (
@@ -122,6 +123,18 @@ def test_worst_channel_keeps_the_largest_step() -> None:
     view = view_of(ground_of(learned()), PulseRequest(Pick.WORST))
     assert view.channel == "Pz"
     assert view.leftover_v == pytest.approx(40e-6, abs=0.5e-6)
+
+
+def test_step_left_is_that_of_the_worst_channel() -> None:
+    left = finish(step_left(steps_recording(), ground_of(learned())))
+    assert left is not None
+    assert left.channel == "Pz"
+    assert left.step_v == pytest.approx(40e-6, abs=0.5e-6)
+    # The steps last 65 ms; a gap that outlasts them leaves nothing.
+    longer = ground_of(learned(with_pulses(window_ms=(-2.0, 70.0))))
+    nothing = finish(step_left(steps_recording(), longer))
+    assert nothing is not None
+    assert nothing.step_v < 2e-6
 
 
 def test_bad_channel_is_never_the_worst_nor_part_of_all() -> None:

@@ -132,6 +132,8 @@ def build(qtbot: QtBot, study: Study, plan: PlanFile | None, *, recording: bool 
         source.close()
     if plan is not None:
         session.open_plan(plan, None)
+    assert page.picture.pick is Pick.WORST
+    page.picture.choose("all channels (median)")
     desk.show()
     qtbot.waitExposed(desk)
     return Room(qtbot, session, bench, page, desk)
@@ -293,13 +295,37 @@ def test_result_of_an_earlier_edit_is_never_shown(room: Room) -> None:
 def test_channel_chosen_by_keys_is_shown(room: Room) -> None:
     chooser = room.picture.chooser
     chooser.setFocus()
-    QTest.keyClick(chooser, Qt.Key.Key_Down)
+    QTest.keyClick(chooser, Qt.Key.Key_Up)
     assert room.picture.pick is Pick.WORST
     room.wait(lambda: _request_pick(room) is Pick.WORST)
     assert "step left at the gap" in room.picture.info.toolTip()
     assert "largest step" in chooser.toolTip()
     QTest.keyClick(chooser, Qt.Key.Key_Down)
+    assert chooser.currentText() == "all channels (median)"
+    QTest.keyClick(chooser, Qt.Key.Key_Down)
     room.wait(lambda: _channel(room) == "F3")
+
+
+def test_what_the_gap_leaves_in_the_worst_channel_is_told_beside_it(room: Room) -> None:
+    said = room.page.gap_card.left
+    room.wait(lambda: said.isVisibleTo(room.page.gap_card))
+    room.picture.choose("the worst channel")
+    room.wait(lambda: _request_pick(room) is Pick.WORST)
+    room.wait_final()
+    view = room.picture.canvas.view
+    assert view is not None
+    assert view.leftover_v is not None
+    assert view.leftover_v > 20e-6
+    step = f"{view.channel}: {view.leftover_v * 1e6:.0f} \u00b5V step left at the gap's end"
+    assert said.text() == f"{step}: decay outlasts the gap"
+    # 40 ms outlast the decay.
+    room.session.edit_plan("Gap", replace(room.plan, pulses=replace(room.pulses, window_ms=(-2.0, 40.0))))
+    room.wait(lambda: not said.isVisibleTo(room.page.gap_card))
+    room.wait_final()
+    view = room.picture.canvas.view
+    assert view is not None
+    assert view.leftover_v is not None
+    assert view.leftover_v < 20e-6
 
 
 def test_drag_with_a_channel_that_has_an_exception_changes_that(room: Room) -> None:
@@ -316,7 +342,7 @@ def test_drag_with_a_channel_that_has_an_exception_changes_that(room: Room) -> N
 
 
 def test_worst_channel_does_not_change_under_the_hand(room: Room) -> None:
-    room.picture.chooser.setCurrentIndex(1)
+    room.picture.choose("the worst channel")
     room.wait(lambda: _request_pick(room) is Pick.WORST)
     worst = _channel(room)
     handle = room.picture.canvas.stop

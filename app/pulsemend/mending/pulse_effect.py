@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from pulsemend.mending.learned import Learned
+from pulsemend.mending.pulse_view import StepLeft, ground_of, step_left
 from pulsemend.model.recording import Recording
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.gaps import shortened, window_to_samples
@@ -26,6 +27,8 @@ class Effect:
         Gaps in a channel, other gaps included; overlapping ones count once.
     n_shortened : int
         Gaps of these with less good signal beside them than the fill wants.
+    left : StepLeft or None
+        What the gap leaves at its end in the worst channel.
     replaced : mapping of str to float or None
         By rule, in the plan's order: share of its kept epochs' samples that rest on replaced ones; None
         without kept epochs.
@@ -35,11 +38,12 @@ class Effect:
     gap_ms: float
     n_gaps: int
     n_shortened: int
+    left: StepLeft | None
     replaced: Mapping[str, float | None]
 
 
 def effect(recording: Recording, learned: Learned) -> Work[Effect]:
-    """Count gaps and replaced samples; no sample is read.
+    """Count gaps and replaced samples, and measure what is left beside the gaps.
 
     Parameters
     ----------
@@ -66,6 +70,7 @@ def effect(recording: Recording, learned: Learned) -> Work[Effect]:
         onsets = learned.estimates.onsets
         gaps = [gap for segment in setup.facts.segments for gap in setup.lay(usual, onsets, segment)]
         n_gaps, n_shortened = len(gaps), sum(shortened(gap, setup.flank) for gap in gaps)
+    left = yield from step_left(recording, ground_of(learned))
     chain = learned.chain(recording)
     n_times = round(plan.epochs.length_s * setup.rate_hz)
     shares: dict[str, list[float]] = {rule.name: [] for rule in plan.epochs.rule}
@@ -79,5 +84,6 @@ def effect(recording: Recording, learned: Learned) -> Work[Effect]:
         gap_ms=s_to_ms(size / setup.facts.rate_hz),
         n_gaps=n_gaps,
         n_shortened=n_shortened,
+        left=left,
         replaced={name: sum(of) / len(of) if of else None for name, of in shares.items()},
     )

@@ -44,6 +44,9 @@ FIRST_BATCH = 40
 LEVEL_S = 0.002
 """A level beside a gap is the mean over this time."""
 
+LARGE_STEP_UV = 20.0
+"""A step left at a gap's end above this is told; common practice: none known."""
+
 QUICK_WINDOWS = 6
 QUICK_CHANNELS = 8
 """A provisional picture of all channels shows so many of them, because every channel's fill is its own."""
@@ -387,6 +390,46 @@ def _picked(
     steps_v = yield from _leftover_steps(recording, ground, onsets, columns)
     worst = int(np.argmax(steps_v))
     return columns[worst : worst + 1], float(steps_v[worst])
+
+
+@dataclass(frozen=True)
+class StepLeft:
+    """The largest step left at the gap's end, over the good EEG channels.
+
+    Parameters
+    ----------
+    channel : str
+    step_v : float
+        Level after the gap minus that before it, size of the median over the pulses.
+    """
+
+    channel: str
+    step_v: float
+
+
+def step_left(recording: Recording, ground: Ground) -> Work[StepLeft | None]:
+    """Find the worst channel and the step left in it, as the picture of the worst channel has them.
+
+    Parameters
+    ----------
+    recording : Recording
+        Read by the caller alone.
+    ground : Ground
+        What is known.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    StepLeft or None
+        None without gaps, or without a pulse far enough from the recording's ends.
+    """
+    if not ground.setup.groups:
+        return None
+    columns, step_v = yield from _picked(recording, ground, PulseRequest(Pick.WORST))
+    return None if step_v is None else StepLeft(ground.setup.channels[columns[0]].name, step_v)
 
 
 def _leftover_steps(

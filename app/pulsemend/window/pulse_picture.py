@@ -128,11 +128,8 @@ class PulsePicture(QWidget):
     @property
     def pick(self) -> Pick:
         """Which channels are chosen."""
-        return (
-            (Pick.ALL, Pick.WORST)[self.chooser.currentIndex()]
-            if self.chooser.currentIndex() < 2
-            else Pick.ONE
-        )
+        index = self.chooser.currentIndex()
+        return Pick.ONE if index > 1 else Pick.ALL if index == 1 else Pick.WORST
 
     @property
     def channel(self) -> str:
@@ -146,7 +143,7 @@ class PulsePicture(QWidget):
 
     def show_channels(self, names: Sequence[str]) -> None:
         """Offer other channels; the one chosen stays if it is among them."""
-        entries = [_ALL, _WORST, *names]
+        entries = [_WORST, _ALL, *names]
         if entries == [self.chooser.itemText(i) for i in range(self.chooser.count())]:
             return
         chosen = self.chooser.currentText()

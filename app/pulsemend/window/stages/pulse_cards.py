@@ -18,12 +18,12 @@ from pulsemend.mending.pulse_gaps import (
     marks_with_exceptions,
     plan_with_exceptions,
 )
-from pulsemend.mending.pulse_view import PROPOSED_MS, edge_ms, on_sample_ms
+from pulsemend.mending.pulse_view import LARGE_STEP_UV, PROPOSED_MS, StepLeft, edge_ms, on_sample_ms
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import OtherGap, Plan, Pulses, Window
 from pulsemend.model.vocabulary import Fill, Format, Side
 from pulsemend.signal.fills import default_flank_s
-from pulsemend.units import s_to_ms
+from pulsemend.units import s_to_ms, v_to_uv
 from pulsemend.window.parts import Card, Choices, NumberField, ValueLine, button, set_kind, words
 from pulsemend.window.workbench import Workbench
 
@@ -172,6 +172,10 @@ class GapCard(Card):
         self.gap_fields = WindowFields("the gap")
         self.add(self.gap_fields)
         self.add_note("Since the onset of each pulse; both ends are replaced too.")
+        self.left = words("", "attention")
+        self.left.setWordWrap(True)
+        self.left.hide()
+        self.add(self.left)
         self.propose = button("Take the proposed gap", self._take_proposed, main=True)
         self.add(self.propose)
         self.add(words("Exceptions of single channels"))
@@ -226,6 +230,17 @@ class GapCard(Card):
         self.hint.setText(text)
         self.hint.setVisible(bool(text))
         self._names = tuple(names)
+
+    def show_left(self, left: StepLeft | None) -> None:
+        """Say beside the gap what it leaves in the worst channel, if that is much."""
+        step_uv = 0.0 if left is None else v_to_uv(left.step_v)
+        large = left is not None and step_uv > LARGE_STEP_UV
+        self.left.setText(
+            f"{left.channel}: {step_uv:.0f} \u00b5V step left at the gap's end: decay outlasts the gap"
+            if left is not None and large
+            else ""
+        )
+        self.left.setVisible(large)
 
     def _show_list(self, shown: tuple[GapException, ...]) -> None:
         current = self._current

@@ -8,7 +8,7 @@ from dataclasses import replace
 from PySide6.QtCore import QTimer
 
 from pulsemend.errors import PulsemendError
-from pulsemend.mending.pulse_effect import effect
+from pulsemend.mending.pulse_effect import Effect, effect
 from pulsemend.mending.pulse_gaps import Source, gap_of
 from pulsemend.mending.pulse_list import pulse_rows
 from pulsemend.mending.pulse_view import (
@@ -173,6 +173,7 @@ class PulsesStage(StagePage):
             self.picture.show_message(_NO_RECORDING if opened is None else _NO_PLAN)
             self.list_card.show_unmarked(())
             self.effect_card.show_effect(None)
+            self.gap_card.show_left(None)
             return
         facts = opened.facts
         known = () if self._ground is None else self._ground.estimates.pulses
@@ -334,10 +335,17 @@ class PulsesStage(StagePage):
         if learned is None or self.bench.provisional:
             waiting = self.bench.problem or "being computed"
             self.effect_card.show_effect(None, waiting if self.bench.session.plan is not None else "")
+            if self.bench.problem:
+                self.gap_card.show_left(None)
+            # Otherwise what was left before stays until it is measured anew: nothing moves under the hand.
             return
         self.bench.start(
-            "effect of the gaps", lambda recording: effect(recording, learned), self.effect_card.show_effect
+            "effect of the gaps", lambda recording: effect(recording, learned), self._take_effect
         )
+
+    def _take_effect(self, found: Effect) -> None:
+        self.effect_card.show_effect(found)
+        self.gap_card.show_left(found.left)
 
 
 def _remembering(new: Ground, old: Ground | None) -> Ground:
