@@ -146,7 +146,7 @@ REFUSED = [
     ("stop = 9001", "stop = 9000", "bad_stretches[2].stop", "must be above start"),
     ("piece = 2", "piece = 0", "epochs_left_out[2].piece", "is out of range"),
     ('trial = 4\nrule = "delay1"', "trial = 4", "epochs_left_out[1].rule", "is missing"),
-    ("pulsemend_marks = 1", "pulsemend_marks = 2", "pulsemend_marks", "is out of range"),
+    ("pulsemend_marks = 1", "pulsemend_marks = 2", "pulsemend_marks", "is from a newer version"),
     ("pulsemend_marks = 1", "pulsemend = 1", "pulsemend", "is unknown"),
 ]
 

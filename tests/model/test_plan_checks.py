@@ -75,6 +75,13 @@ def refusal(plan: Plan, rate_hz: float) -> PlanError:
     return caught.value
 
 
+def seconds(allowed: str) -> list[float]:
+    """Values of a refusal, each with its unit."""
+    values = allowed.split(" | ")
+    assert all(value.endswith(" s") for value in values)
+    return [float(value.removesuffix(" s")) for value in values]
+
+
 def test_label_columns() -> None:
     assert slot_columns(PLAN) == ("sample.colour", "cue1.item", "cue1.side", "cue2.item", "cue2.side")
     assert rule_columns(PLAN) == ("a", "z")
@@ -113,8 +120,8 @@ def test_starts_and_lengths_are_whole_numbers_of_output_samples() -> None:
     # 0.3 s at 512 Hz are 153.6 samples.
     error = refusal(PLAN, 512.0)
     assert error.key == "epochs.rule[1].start_s"
-    assert error.received == "0.3"
-    low, high = (float(text) for text in error.allowed.split(" | "))
+    assert error.received == "0.3 s"
+    low, high = seconds(error.allowed)
     assert (low, high) == (153 / 512, 154 / 512)
     for value in (low, high):
         rules = tuple(replace(rule, start_s=value) for rule in PLAN.epochs.rule)
@@ -122,10 +129,8 @@ def test_starts_and_lengths_are_whole_numbers_of_output_samples() -> None:
     error = refusal(PLAN, 1000.4)
     assert error.key == "epochs.length_s"
     # 1000 / 1000.4 and 1001 / 1000.4, with digits enough to be accepted themselves.
-    assert [float(text) for text in error.allowed.split(" | ")] == pytest.approx(
-        [0.99960015993602559, 1.0005997600959616], abs=1e-13
-    )
-    assert refusal(replace(PLAN, epochs=replace(PLAN.epochs, length_s=0.004)), 100.0).allowed == "0.01"
+    assert seconds(error.allowed) == pytest.approx([0.99960015993602559, 1.0005997600959616], abs=1e-13)
+    assert refusal(replace(PLAN, epochs=replace(PLAN.epochs, length_s=0.004)), 100.0).allowed == "0.01 s"
 
 
 def test_whole_within_a_millionth_of_a_sample() -> None:
@@ -138,7 +143,7 @@ def test_whole_within_a_millionth_of_a_sample() -> None:
 def test_negative_start_names_values_on_both_sides() -> None:
     rules = (replace(PLAN.epochs.rule[0], start_s=-0.3),)
     error = refusal(replace(PLAN, epochs=replace(PLAN.epochs, rule=rules)), 512.0)
-    low, high = (float(text) for text in error.allowed.split(" | "))
+    low, high = seconds(error.allowed)
     assert low < -0.3 < high
 
 

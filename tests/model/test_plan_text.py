@@ -396,8 +396,27 @@ def test_new_keys_in_a_text_with_carriage_returns() -> None:
 NO_PLANS: list[tuple[str, bytes, str, int | None]] = [
     ("empty", b"", "pulsemend: is missing", None),
     ("no toml", b"pulsemend = 1\nhello\n", "not valid TOML", 2),
-    ("duplicate key", b"pulsemend = 1\n[about]\nname = 'a'\nname = 'b'\n", "not valid TOML", 4),
-    ("duplicate table", b"pulsemend = 1\n[about]\nname = 'a'\n[about]\nline_hz = 50\n", "not valid TOML", 4),
+    (
+        "duplicate key",
+        b"pulsemend = 1\n[about]\nname = 'a'\nname = 'b'\n",
+        "TOML: the key name stands twice",
+        4,
+    ),
+    ("key and table", b"pulsemend = 1\nabout = 1\n[about]\n", "TOML: the key about stands twice", 3),
+    ("dotted twice", b"about.name = 'a'\nabout . name = '='\n", "TOML: the key about . name stands twice", 2),
+    ("key of lines", b"a = 1\na = [\n1\n]\n", "TOML: a key stands twice", 4),
+    (
+        "duplicate table",
+        b"pulsemend = 1\n[about]\nname = 'a'\n[about]\nline_hz = 50\n",
+        "TOML: the table [about] stands twice",
+        4,
+    ),
+    (
+        "duplicate code",
+        b"[markers.'S 1']\nrole = 'cue'\n[markers.'S 1']\n",
+        'TOML: the table [markers."S 1"] stands twice',
+        3,
+    ),
     ("open string", b'pulsemend = 1\n[about]\nname = "a\n', "not valid TOML", 3),
     ("ends early", b"pulsemend = 1\n[pulses]\nwindow_ms = [1,\n\n", "not valid TOML", None),
     ("latin", "pulsemend = 1\n# für\n".encode("latin-1"), "is not UTF-8", 2),
@@ -410,8 +429,11 @@ NO_PLANS: list[tuple[str, bytes, str, int | None]] = [
     ("deep table", b"a = " + b"{a = " * 5000 + b"1" + b"}" * 5000, "nested too deeply", None),
     ("huge", b"# " + b"x" * 1_100_000, "is larger than 1000 kB", None),
     ("huge number", b"pulsemend = " + b"9" * 6000, "not valid TOML", None),
-    ("big number", b"pulsemend = " + b"9" * 400, "pulsemend: is out of range", 1),
-    ("later format", b"pulsemend = 2\n", "pulsemend: is out of range", 1),
+    ("big number", b"pulsemend = " + b"9" * 400, "pulsemend: is from a newer version", 1),
+    ("format 0", b"pulsemend = 0\n", "pulsemend: is out of range", 1),
+    ("later format", b"pulsemend = 2\n", "pulsemend: is from a newer version of the program", 1),
+    ("later format and keys", b"pulsemend = 2\n[new]\na = 1\n", "is from a newer version", 1),
+    ("format as text", b"pulsemend = '2'\n", "pulsemend: must be a whole number", 1),
     ("date", b"pulsemend = 1\n[about]\nname = 1979-05-27\n", "about.name: must be text", 3),
     ("section as value", b"pulsemend = 1\nabout = 3\n", "about: must be a table", 2),
     (
@@ -462,9 +484,34 @@ def test_byte_order_mark_is_passed_over(tmp_path: Path) -> None:
 
 
 def test_file_that_cannot_be_opened(tmp_path: Path) -> None:
-    for path in (tmp_path / "none.toml", tmp_path):
-        with pytest.raises(PlanError, match="cannot be read"):
+    with pytest.raises(PlanError, match="cannot be read: there is no such file; check its name and folder"):
+        read_plan(tmp_path / "none.toml")
+    with pytest.raises(PlanError, match="cannot be read: it is a folder; name the file in it"):
+        read_plan(tmp_path)
+    # What a missing file would have been plays no part.
+    with pytest.raises(PlanError, match="there is no such file"):
+        read_plan(tmp_path / "none.vhdr")
+
+
+def test_recording_given_as_plan(tmp_path: Path) -> None:
+    header = b"Some Words, Header File Version 1.0\n; made by hand\n[Common Infos]\nCodepage=UTF-8\n"
+    for name, data in (
+        ("a.vhdr", b"[Common Infos]\nCodepage=UTF-8\n"),
+        ("renamed.txt", header),
+        ("a.EEG", bytes(range(256)) * 8),
+        ("a.fif.gz", b"\x1f\x8b" + b"0" * 1_100_000),
+    ):
+        path = tmp_path / name
+        path.write_bytes(data)
+        with pytest.raises(PlanError, match="is a recording, not a plan; name the plan's file") as caught:
             read_plan(path)
+        assert str(caught.value).startswith(str(path))
+    # Any other text that is no plan keeps its own reason, and a plan under any name is read.
+    (tmp_path / "notes.txt").write_text("the header of a file\n")
+    with pytest.raises(PlanError, match="not valid TOML"):
+        read_plan(tmp_path / "notes.txt")
+    (tmp_path / "plan.eeg").write_text(TEXT, encoding="utf-8")
+    assert read_plan(tmp_path / "plan.eeg").plan == PLAN
 
 
 def refusal_of(text: str) -> PlanError | None:

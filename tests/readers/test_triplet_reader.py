@@ -144,6 +144,19 @@ def test_renamed_parts_are_found_and_told(header: Path, tmp_path: Path) -> None:
     )
 
 
+def test_missing_parts_are_named_once(header: Path) -> None:
+    for part in (".eeg", ".vmrk"):
+        header.with_suffix(part).rename(header.with_name(f"away{part}"))
+        with pytest.raises(MissingPart) as caught:
+            open_recording(header)
+        assert caught.value.what == f"the file lt01{part}, named in the header, is not there"
+        header.with_name(f"away{part}").rename(header.with_suffix(part))
+    edit(header, "DataFile=lt01.eeg", "DataFile=other.eeg")
+    header.with_suffix(".eeg").unlink()
+    with pytest.raises(MissingPart, match=r"file other\.eeg, .* is not there, nor is lt01\.eeg"):
+        open_recording(header)
+
+
 def test_no_marker_file_named(header: Path) -> None:
     edit(header, "MarkerFile=lt01.vmrk\n", "")
     facts = facts_of(header)

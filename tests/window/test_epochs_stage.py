@@ -155,7 +155,7 @@ def test_a_refused_start_says_why_beside_the_field_and_changes_nothing(
     said = page.editor.fields["start_s"].refusal
     assert said.isVisible()
     assert "no whole number of output samples at 1000 Hz" in said.text()
-    assert "allowed: 0 | 0.001" in said.text()
+    assert "allowed: 0 s | 0.001 s" in said.text()
     assert "plan.toml" not in said.text()
     assert page.editor.start.value() == -0.1
     assert page.editor.start.accessibleDescription() == said.text()

@@ -390,8 +390,8 @@ def _check_whole(key: str, seconds: float, rate_hz: float, least: float = -math.
     raise PlanError(
         key,
         f"is no whole number of output samples at {rate_hz:.12g} Hz",
-        allowed=" | ".join(f"{whole / rate_hz:.15g}" for whole in nearest),
-        received=f"{seconds:.15g}",
+        allowed=" | ".join(f"{whole / rate_hz:.15g} s" for whole in nearest),
+        received=f"{seconds:.15g} s",
     )
 
 

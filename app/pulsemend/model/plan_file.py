@@ -27,6 +27,7 @@ from pulsemend.model.plan_keys import LATER_PLAN_KEYS, PLAN_KEYS, SCHEMA
 from pulsemend.model.toml_edit import new_text, updated_text
 from pulsemend.model.toml_tables import Source, parse, read_text, write_text
 
+_RECORDINGS = (".vhdr", ".eeg", ".vmrk", ".edf", ".bdf", ".fif", ".fif.gz")
 _NAMED_BY = {"trial": "slot", "epochs.rule": "name", "pulses.also": ""}
 
 
@@ -70,7 +71,28 @@ def read_plan(path: Path) -> PlanFile:
     PlanError
         The file cannot be read, or a key is unknown, missing, impossible or of a later version.
     """
-    return parse_plan(read_text(path, PlanError), str(path))
+    try:
+        return parse_plan(read_text(path, PlanError), str(path))
+    except PlanError as error:
+        if path.is_file() and _is_recording(path):
+            raise PlanError(
+                "",
+                "is a recording, not a plan; name the plan's file (.toml), or draft one from the recording",
+                path=str(path),
+            ) from error
+        raise
+
+
+def _is_recording(path: Path) -> bool:
+    """Whether a file that is no plan says by its extension or its first line that it is a recording."""
+    if path.name.lower().endswith(_RECORDINGS):
+        return True
+    try:
+        with path.open("rb") as file:
+            first = file.readline(200)
+    except OSError:
+        return False
+    return any(words in first for words in (b"Header File", b"Marker File"))
 
 
 def parse_plan(text: str, name: str = "") -> PlanFile:

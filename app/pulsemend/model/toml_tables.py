@@ -5,6 +5,7 @@ Every refusal is one line: full path of the key, what is wrong, what is allowed,
 
 from __future__ import annotations
 
+import ast
 import difflib
 import os
 import re
@@ -20,6 +21,8 @@ from pulsemend.model.keys import REQUIRED, Key, Refusal, convert, show
 from pulsemend.model.toml_lines import KeyPath, key_lines, key_text, line_of
 
 LARGEST_BYTES = 1_000_000
+_TABLE_TWICE = re.compile(r"Cannot declare (\(.*\)) twice$")
+_KEY_OF_LINE = re.compile(r"\s*\[*\s*([^\s=#\[\]](?:[^=#\]]*[^\s=#\]])?)\s*[=\]]")
 _PARSER_PLACE = re.compile(r" \(at (?:line (\d+), column \d+|end of document)\)$")
 
 
@@ -75,8 +78,16 @@ def read_text(path: Path, error: type[SettingError]) -> str:
     try:
         with path.open("rb") as file:
             data = file.read(LARGEST_BYTES + 1)
+    except FileNotFoundError as problem:
+        raise error(
+            "", "cannot be read: there is no such file; check its name and folder", path=name
+        ) from problem
     except OSError as problem:
-        raise error("", f"cannot be read ({problem.strerror or problem})", path=name) from problem
+        if path.is_dir():
+            reason = "cannot be read: it is a folder; name the file in it"
+        else:
+            reason = f"cannot be read ({problem.strerror or problem})"
+        raise error("", reason, path=name) from problem
     if len(data) > LARGEST_BYTES:
         raise error("", f"is larger than {LARGEST_BYTES // 1000} kB: not the file that was meant", path=name)
     try:
@@ -119,7 +130,7 @@ def parse(
     name : str
         The file's name for messages.
     keys : sequence of Key
-        All that may stand there.
+        All that may stand there; the first one is the version of the format.
     later : collection of str
         Key paths of later versions.
     error : type of SettingError
@@ -135,6 +146,7 @@ def parse(
         raw = _toml(text, name, error)
         lines = key_lines(text)
         with _located(lines, name, error):
+            _check_version(raw, keys[0], error)
             tree = _Checker(error, frozenset(later)).table(_schema(keys), raw, ())
     except RecursionError:
         raise error("", "is nested too deeply", path=name) from None
@@ -168,8 +180,32 @@ def _toml(text: str, name: str, error: type[SettingError]) -> dict[str, Any]:
         if place:
             line = int(place[1]) if place[1] else text.rstrip("\r\n").count("\n") + 1
             message = message[: place.start()]
-        message = message.split("; use sys.", maxsplit=1)[0]
+        message = _in_words(message.split("; use sys.", maxsplit=1)[0], text, line)
         raise error("", f"not valid TOML: {message}", line=line, path=name) from None
+
+
+def _in_words(message: str, text: str, line: int | None) -> str:
+    """Say in the user's words what the parser says of a key or a table that stands twice."""
+    table = _TABLE_TWICE.match(message)
+    if table:
+        names = tuple(str(name) for name in ast.literal_eval(table[1]))
+        return f"the table [{key_text(names)}] stands twice"
+    if message != "Cannot overwrite a value" or line is None:
+        return message
+    key = _KEY_OF_LINE.match(text.split("\n")[line - 1])
+    return f"the key {key[1]} stands twice" if key else "a key stands twice"
+
+
+def _check_version(raw: Mapping[str, Any], key: Key, error: type[SettingError]) -> None:
+    """Refuse a file of a later version as such, before its keys are refused one by one."""
+    value = raw.get(key.path)
+    if isinstance(value, int) and not isinstance(value, bool) and key.high is not None and value > key.high:
+        raise error(
+            key.path,
+            "is from a newer version of the program",
+            allowed=key.allowed,
+            received=show(value),
+        )
 
 
 @dataclass

@@ -301,8 +301,9 @@ def find_part(header: Path, written: str, suffix: str) -> tuple[Path, str]:
     own = header.with_suffix(suffix)
     if own.is_file():
         return own, f"The header names {written}, which is not there; {own.name} was taken instead."
+    nor = "" if own.name == written else f", nor is {own.name}"
     raise MissingPart(
-        f"the file {written}, named in the header, is not there, nor is {own.name}",
+        f"the file {written}, named in the header, is not there{nor}",
         where=header.name,
         todo="Put all files of the recording into one folder",
     )
