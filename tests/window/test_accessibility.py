@@ -6,15 +6,18 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
-from PySide6.QtWidgets import QMainWindow, QPushButton, QVBoxLayout, QWidget
+from PySide6.QtGui import QColor
+from PySide6.QtWidgets import QCheckBox, QMainWindow, QPushButton, QVBoxLayout, QWidget
 from pytestqt.qtbot import QtBot
 
 from pulsemend.errors import ChangedOnDisk
+from pulsemend.progress import Progress
 from pulsemend.session.event_choice import ALL_EVENTS
 from pulsemend.session.found import Stage
 from pulsemend.session.lock import Holder
 from pulsemend.session.messages import Level, Message
 from pulsemend.session.recovery import Recovery
+from pulsemend.session.session import Session
 from pulsemend.window.action_bar import missing_handlers
 from pulsemend.window.dialogs import questions
 from pulsemend.window.dialogs.about import AboutDialog
@@ -28,6 +31,7 @@ from pulsemend.window.guide_viewer import GuideViewer
 from pulsemend.window.handlers import Handlers
 from pulsemend.window.main_window import Folders, MainWindow
 from pulsemend.window.program import open_window
+from pulsemend.window.status_line import StatusLine
 from pulsemend.window.style import style_sheet
 from pulsemend.window.theme import DARK, LIGHT, Theme
 from pulsemend.window.workbench import Workbench
@@ -168,6 +172,42 @@ def check(window: MainWindow) -> None:
 
 
 # The audit itself
+
+
+@THEMES
+def test_a_checked_box_has_another_shape(qtbot: QtBot, theme: Theme) -> None:
+    """An outline, a ring of the ground, a box inside; a free box has no box inside."""
+    rows = []
+    for checked in (False, True):
+        box = QCheckBox("as it is")
+        qtbot.addWidget(box)
+        box.setStyleSheet(style_sheet(theme, 10.0))
+        box.setChecked(checked)
+        box.resize(box.sizeHint())
+        image = box.grab().toImage()
+        y = image.height() // 2
+        rows.append([image.pixelColor(x, y).name() for x in range(14)])
+    free, checked_ = rows
+    accent = QColor(theme.accent).name()
+    assert accent not in free
+    assert len({*free[2:12]}) == 1, "free boxes are empty"
+    changes = [a for a, b in zip(checked_, ["", *checked_], strict=False) if (a == accent) != (b == accent)]
+    # Accent, ground, accent, ground, accent from left to right.
+    assert [one == accent for one in changes] == [True, False, True, False, True]
+
+
+def test_the_status_line_keeps_its_height_when_work_starts(qtbot: QtBot) -> None:
+    line = StatusLine(Session())
+    shown(qtbot, line)
+    for text_pt in (10.0, 18.0):
+        line.setStyleSheet(style_sheet(LIGHT, text_pt))
+        line.end_work()
+        idle = line.sizeHint().height()
+        line.show_work(Progress("aligning pulses at zero", 3, 7), 12.0)
+        assert line.cancel.isVisible()
+        assert line.sizeHint().height() == idle
+        line.end_work()
+        assert line.sizeHint().height() == idle
 
 
 def test_audit_finds_what_is_missing(qtbot: QtBot) -> None:

@@ -50,6 +50,10 @@ class StatusLine(QWidget):
         self.bar.setTextVisible(False)
         self.bar.setFixedWidth(110)
         self.cancel = button("Cancel", self.cancel_wanted.emit, tooltip="Stop what is running")
+        # The tallest part keeps its room: the line must not grow, and move everything, whenever work starts.
+        kept = self.cancel.sizePolicy()
+        kept.setRetainSizeWhenHidden(True)
+        self.cancel.setSizePolicy(kept)
         row.addWidget(self.cursor_words)
         row.addWidget(self.facts)
         row.addWidget(self.notice, 1)

@@ -86,19 +86,23 @@ def style_sheet(theme: Theme, text_pt: float) -> str:
     QRadioButton::indicator:checked {{
         width: 6px; height: 6px; border: 4px solid {theme.accent}; background: {theme.field};
     }}
-    QCheckBox::indicator:checked {{ border-color: {theme.accent}; background: {theme.accent}; }}
+    QListView::indicator {{
+        width: 12px; height: 12px; border: 1px solid {theme.quiet}; border-radius: 3px;
+        background: {theme.field};
+    }}
+    /* Checked is a box in a box, so that the colour does not stand alone. */
+    QCheckBox::indicator:checked, QListView::indicator:checked {{
+        width: 8px; height: 8px; padding: 2px; border-radius: 2px; border: 1px solid {theme.accent};
+        background: {theme.accent}; background-clip: content; background-origin: content;
+    }}
     QRadioButton::indicator:disabled, QCheckBox::indicator:disabled {{ border-color: {theme.line}; }}
+    QCheckBox::indicator:checked:disabled {{ background-color: {theme.quiet}; }}
     QAbstractSpinBox::up-button, QAbstractSpinBox::down-button {{ width: 0; border: none; }}
     QComboBox::drop-down {{ border: none; width: 20px; }}
     QComboBox::down-arrow {{
         width: 0; height: 0; border-left: 4px solid {theme.field}; border-right: 4px solid {theme.field};
         border-top: 6px solid {theme.quiet};
     }}
-    QListView::indicator {{
-        width: 12px; height: 12px; border: 1px solid {theme.quiet}; border-radius: 3px;
-        background: {theme.field};
-    }}
-    QListView::indicator:checked {{ background: {theme.accent}; border: 3px solid {theme.field}; }}
     QMenuBar, QMenu {{ background: {theme.panel}; }}
     QMenuBar::item:selected, QMenu::item:selected {{
         background: {theme.accent_soft}; color: {theme.accent};
