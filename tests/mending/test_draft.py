@@ -163,7 +163,8 @@ def test_pulses_are_told_by_the_signal() -> None:
     text = draft_plan(facts, evidence)
     assert roles(text)["S 99"] == "pulse"
     assert '"S 99": 115 of 120 markers have one, 3.0 ms after the marker' in text
-    assert "decide: 1 have no marker" in text
+    assert "# 116 pulse-like events in the signal." in text
+    assert "decide: 1 of them has no marker; if it is a pulse, add it" in text
 
 
 def test_event_belongs_to_the_nearest_marker_only() -> None:
@@ -352,3 +353,24 @@ def test_deciding_the_gap_keeps_every_comment_of_a_draft() -> None:
         assert lines[place - 1].startswith(f"# {line.split(' ')[0]} = ")
         assert lines.index("[pulses]") < place < lines.index("# Recorded at 1000 Hz.")
     check_decided(parse_plan("\n".join(lines)).plan)
+
+
+def test_comments_of_a_draft_are_sentences_for_one_and_many() -> None:
+    facts = session(NAMED)
+    pulses = [int(marker.sample) + 3 for marker in facts.markers if marker.code == "pulse"]
+    text = draft_plan(facts, pulse_evidence(facts, [pulses[0]]))
+    assert "# 1 pulse-like event in the signal." in text
+    assert '"pulse": 1 of 120 markers has one, 3.0 ms after the marker' in text
+    text = draft_plan(facts, pulse_evidence(facts, [pulses[0], 100, 200, facts.n_samples - 10]))
+    assert "# 4 pulse-like events in the signal." in text
+    assert "decide: 3 of them have no marker; add those that are pulses" in text
+    assert (
+        "optional = true   # decide: is a trial complete without it? It was found in 60 of 60 trials" in text
+    )
+    # Every decision says what has to be decided.
+    for draft in (text, draft_plan(session(NUMBERED)), draft_plan(replace(facts, markers=()))):
+        assert not re.search(r"decide:?\s*$", draft, re.MULTILINE)
+        head = draft.split("\n")[1:3]
+        assert "refuses this plan while a role is undecided, or a trial, an epoch rule or the" in head[0]
+        assert "gap around the pulses is missing" in head[1]
+        assert "proposals" in head[1]

@@ -1,7 +1,7 @@
 """A first plan for a recording: everything that can be told, and every decision left open marked as such.
 
-A draft of a recording with pulses is no finished plan on purpose: `mend` refuses it until a person has
-decided the gap and the roles of the codes that the markers do not explain.
+A draft of a recording with pulses is no finished plan on purpose: it can be opened and edited, but `mend`
+refuses it until a person has decided the gap and the roles of the codes that the markers do not explain.
 """
 
 from __future__ import annotations
@@ -173,7 +173,8 @@ def draft_plan(facts: RecordingFacts, evidence: PulseEvidence = NO_EVIDENCE) -> 
 def _head(facts: RecordingFacts) -> list[str]:
     return [
         f"# First plan, drafted from {show(facts.stem)}.",
-        "# A person has to settle every line marked `decide:`; `pulsemend mend` refuses what is still open.",
+        "# `pulsemend mend` refuses this plan while a role is undecided, or a trial, an epoch rule or the",
+        "# gap around the pulses is missing. All other lines marked `decide:` are proposals: check them.",
         f"pulsemend = {SCHEMA}",
         "",
         "[about]",
@@ -221,14 +222,19 @@ def _trial(found: Guess) -> list[str]:
             "# after_s = [1.0, 2.0]",
         ]
     lines = [
-        f"# One trial: its markers in order, as in most of {found.n_trials} trials. decide: right?",
+        "# One trial: its markers in order, "
+        + (f"as in most of {found.n_trials} trials." if found.n_trials > 1 else "as in the only trial.")
+        + " decide: right?",
         "# after_s counts from the nearest earlier slot that is not optional.",
     ]
     for one in found.slots:
         lines += ["", "[[trial]]", f"slot = {show(one.slot.slot)}", f'role = "{one.slot.role}"']
         lines += _slot_limits(one)
         if one.slot.optional:
-            lines.append(f"optional = true   # decide: found in {one.found} of {found.n_trials} trials")
+            lines.append(
+                "optional = true   # decide: is a trial complete without it?"
+                f" It was found in {one.found} of {_counted(found.n_trials, 'trial')}"
+            )
     return lines
 
 
@@ -242,15 +248,21 @@ def _slot_limits(one: SlotGuess) -> list[str]:
 
 
 def _pulses(found: Guess, evidence: PulseEvidence) -> list[str]:
-    lines = [f"# {evidence.n_events} pulse-like events in the signal."] if evidence.n_events else []
+    lines = (
+        [f"# {_counted(evidence.n_events, 'pulse-like event')} in the signal."] if evidence.n_events else []
+    )
     lines += [
-        f"# {show(one.code)}: {one.n_in_signal} of {one.n_markers} markers have one,"
+        f"# {show(one.code)}: {one.n_in_signal} of {_counted(one.n_markers, 'marker')}"
+        f" {'has' if one.n_in_signal == 1 else 'have'} one,"
         f" {one.latency_ms:.1f} ms after the marker ({one.least_ms:.1f} to {one.most_ms:.1f})."
         for one in evidence.codes
     ]
     if evidence.unmarked:
         lines.append(
-            f"# decide: {evidence.unmarked} have no marker; they can be added in the recording's marks."
+            "# decide: 1 of them has no marker; if it is a pulse, add it in the recording's marks."
+            if evidence.unmarked == 1
+            else f"# decide: {evidence.unmarked} of them have no marker; add those that are pulses in the"
+            " recording's marks."
         )
     roles = {one.role for one in found.codes}
     if Role.PULSE not in roles and Role.UNDECIDED not in roles and found.codes and not evidence.n_events:
@@ -285,7 +297,7 @@ def _epochs(found: Guess, rate_hz: float) -> list[str]:
             *lines,
             "# decide: rules need the slots of a trial.",
             "[epochs]",
-            "length_s = 1.0   # decide",
+            "length_s = 1.0   # decide: how long every epoch is, in s",
             "# [[epochs.rule]]",
             '# name = "delay1"',
             '# anchor = "cue1"',
@@ -316,7 +328,7 @@ def _length_s(slots: Sequence[SlotGuess], cues: Sequence[int], rate_hz: float) -
 def _rule(name: str, anchor: str, start_s: float, what: str, stop_before: str = "") -> list[str]:
     lines = [
         "",
-        f"[[epochs.rule]]   # decide: {what}",
+        f"[[epochs.rule]]   # decide: right? {what}",
         f'name = "{name}"',
         f"anchor = {show(anchor)}",
         f"start_s = {start_s:.15g}",
@@ -339,6 +351,10 @@ def _section(name: str, **settled: str | list[str]) -> list[str]:
         else:
             lines.append(f"{own} = {value}   # {_meaning(key)}")
     return lines
+
+
+def _counted(count: int, noun: str) -> str:
+    return f"{count} {noun}" if count == 1 else f"{count} {noun}s"
 
 
 def _meaning(key: Key) -> str:
