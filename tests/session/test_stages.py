@@ -96,6 +96,16 @@ def test_what_is_undecided_is_told_once(desk: Desk) -> None:
     assert state_of(open_gap, Stage.RECORDING).state is State.DONE
 
 
+def test_plan_without_slots_and_rules_is_told_where_it_belongs(desk: Desk) -> None:
+    bare = with_plan(desk, 'pulsemend = 1\n[pulses]\ntimes = "none"\n[epochs]\nlength_s = 1.0\n')
+    bare.set_found(Found(problems=("trial: has no slot",)))
+    assert state_of(bare, Stage.RECORDING).state is State.DONE
+    for stage, words in ((Stage.MARKERS, "has no slot yet"), (Stage.EPOCHS, "has no epoch rule yet")):
+        state = state_of(bare, stage)
+        assert (state.state, state.count) == (State.ATTENTION, 1)
+        assert words in state.words
+
+
 def test_rules_without_epochs_need_attention(desk: Desk) -> None:
     session = with_plan(desk, PLAN)
     assert state_of(session, Stage.EPOCHS).state is State.UNTOUCHED

@@ -98,11 +98,12 @@ def _has_open_ends(session: Session) -> bool:
     if plan is None:
         return False
     no_gap = plan.pulses.times is not PulseTimes.NONE and plan.pulses.window_ms is None
-    return no_gap or any(marker.role is Role.UNDECIDED for marker in plan.markers)
+    no_trials = not plan.trial or not plan.epochs.rule
+    return no_gap or no_trials or any(marker.role is Role.UNDECIDED for marker in plan.markers)
 
 
 def markers_state(session: Session) -> StageState:
-    """Needs attention for every code without a role, and for codes the recording lacks.
+    """Needs attention for every code without a role, for codes the recording lacks, and without any slot.
 
     Parameters
     ----------
@@ -121,6 +122,8 @@ def markers_state(session: Session) -> StageState:
         for marker in plan.markers
         if marker.code not in recorded
     ]
+    if not plan.trial:
+        problems.append("The plan has no slot yet: its file has to name the markers of a trial.")
     if problems:
         return _attention(Stage.MARKERS, problems)
     others = sorted(recorded - {marker.code for marker in plan.markers})
@@ -159,7 +162,7 @@ def pulses_state(session: Session) -> StageState:
 
 
 def epochs_state(session: Session) -> StageState:
-    """Needs attention for every rule that keeps no epoch.
+    """Needs attention for every rule that keeps no epoch, and without any rule.
 
     Parameters
     ----------
@@ -168,6 +171,8 @@ def epochs_state(session: Session) -> StageState:
     """
     if session.plan is None or session.recording is None:
         return _waiting(session, Stage.EPOCHS)
+    if not session.plan.epochs.rule:
+        return _attention(Stage.EPOCHS, ["The plan has no epoch rule yet."])
     kept = session.found.kept
     if kept is None:
         return StageState(Stage.EPOCHS, State.UNTOUCHED, "Epochs were not counted yet.")
