@@ -444,6 +444,17 @@ def test_short_gaps_of_a_row_stay_seen(traces: Traces) -> None:
     assert sum(widths) == widths[place]
 
 
+def test_crowded_gaps_are_marks_along_the_upper_edge_once(traces: Traces) -> None:
+    often_s = np.arange(0.0, 100.0, 0.5)
+    own = Bands(often_s, often_s + 0.027)
+    traces.widget.set_overlays(Overlays(gaps=Bands(often_s, often_s + 0.016), own_gaps={"E4": own}))
+    traces.model.set_view(replace(traces.view, start_s=0.0, width_s=100.0))
+    is_gap = (pixels(traces.plot.grab().toImage()) & 0xFFFFFF) == (QColor(LIGHT.gap).rgb() & 0xFFFFFF)
+    lines = np.flatnonzero(is_gap.any(axis=1))
+    assert lines.min() >= HEADER
+    assert lines.max() < HEADER + 6
+
+
 def test_both_signals_lie_over_each_other(traces: Traces) -> None:
     traces.model.set_view(replace(traces.view, shown=Shown.BOTH))
     traces.plot.grab()

@@ -83,9 +83,13 @@ def paint_behind(canvas: Canvas, overlays: Overlays, names: Sequence[str]) -> No
         # A hatch as well, so that the colour does not stand alone.
         box.setHeight(5)
         painter.fillRect(box, QBrush(QColor(canvas.theme.attention), Qt.BrushStyle.BDiagPattern))
+    marked = False
     for bands, part in _gap_parts(canvas, overlays, names):
-        for box in _boxes(canvas, bands, part):
+        # One row of marks is enough: all rows have gaps at the same pulses.
+        is_crowded = _is_crowded(canvas, bands)
+        for box in _boxes(canvas, bands, part, marks=not (is_crowded and marked)):
             painter.fillRect(box, QColor(canvas.theme.gap))
+        marked = marked or is_crowded
 
 
 def paint_band_labels(canvas: Canvas, overlays: Overlays) -> None:
@@ -262,7 +266,13 @@ def _gap_parts(canvas: Canvas, overlays: Overlays, names: Sequence[str]) -> list
     return parts
 
 
-def _boxes(canvas: Canvas, bands: Bands, area: QRectF) -> list[QRectF]:
+def _is_crowded(canvas: Canvas, bands: Bands) -> bool:
+    """Whether narrow bands are so many that they are marks along the upper edge."""
+    _, left, right = _spans(canvas, bands)
+    return int((right - left < LEAST_BAND).sum()) * LEAST_BAND > _SPARSE_SHARE * canvas.width
+
+
+def _boxes(canvas: Canvas, bands: Bands, area: QRectF, *, marks: bool = True) -> list[QRectF]:
     """Boxes of the bands in view, to scale; narrow ones are markers of one width, merged where they touch."""
     _, left, right = _spans(canvas, bands)
     narrow = right - left < LEAST_BAND
@@ -270,9 +280,11 @@ def _boxes(canvas: Canvas, bands: Bands, area: QRectF) -> list[QRectF]:
         QRectF(a, area.top(), b - a, area.height())
         for a, b in zip(left[~narrow], right[~narrow], strict=True)
     ]
+    if not marks:
+        return boxes
     middle = 0.5 * (left[narrow] + right[narrow])
-    # So many that they would hide the rest stay a row of marks along the upper edge of their rows.
-    reach_down = middle.size * LEAST_BAND <= _SPARSE_SHARE * canvas.width
+    # So many that they would hide the rest stay a row of marks along the upper edge.
+    reach_down = not _is_crowded(canvas, bands)
     height = area.height() if reach_down else min(_MARK_HEIGHT, area.height())
     starts = middle - LEAST_BAND / 2
     firsts = np.flatnonzero(np.diff(starts, prepend=-np.inf) > LEAST_BAND)
