@@ -282,6 +282,9 @@ class Hands:
 
 def undone_to_the_start(session: Session) -> tuple[int, bool]:
     """Undo everything and do it again; gives the steps and whether the end was found again."""
+    # The last random step may have been an undo: what it left to be done again is part of the way.
+    while session.redo():
+        pass
     end = (session.plan, session.marks)
     steps = 0
     while session.undo():

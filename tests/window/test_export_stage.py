@@ -193,6 +193,7 @@ def test_empty_states_say_what_to_do(qtbot: QtBot, bench: Workbench, study: Stud
 # Writing
 
 
+@pytest.mark.slow  # the whole window's tests do the same through the real window
 def test_a_set_is_written_and_checked_item_by_item(
     qtbot: QtBot, page: ExportStage, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

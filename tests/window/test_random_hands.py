@@ -49,8 +49,8 @@ def use_it(folder: Path, steps: int, seed: int) -> None:
     assert "Traceback" not in ended.stderr
 
 
-def test_150_random_steps(tmp_path: Path) -> None:
-    use_it(tmp_path, 150, seed=1)
+def test_60_random_steps(tmp_path: Path) -> None:
+    use_it(tmp_path, 60, seed=1)
 
 
 @pytest.mark.slow
