@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import importlib.metadata
+import importlib.util
 import tomllib
 from pathlib import Path
 
@@ -23,10 +24,13 @@ def found() -> tuple[Library, ...]:
 
 def test_every_dependency_is_there_and_none_of_the_tests(found: tuple[Library, ...]) -> None:
     names = {one.name.lower().replace("_", "-") for one in found}
-    for need in PROJECT["dependencies"]:
-        assert need.split(">")[0].lower() in names
+    # Everything outside the window is tested once with Qt uninstalled; then it cannot be listed.
+    with_qt = importlib.util.find_spec("PySide6") is not None
+    needed = [need.split(">")[0].lower() for need in PROJECT["dependencies"]]
+    for name in needed:
+        assert name in names or (not with_qt and name in {"pyside6-essentials", "pyqtgraph"})
     assert names.isdisjoint({"pytest", "ruff", "mypy", "pulsemend"})
-    assert "shiboken6" in names  # needed through another
+    assert "tornado" in names  # needed through another
 
 
 def test_versions_and_licences_are_stated(found: tuple[Library, ...]) -> None:
