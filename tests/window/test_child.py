@@ -280,6 +280,7 @@ def sample_order(out: Path) -> MendOrder:
     return MendOrder(SAMPLE / "sub-lt01_task-lantern_eeg.vhdr", SAMPLE / "lantern.toml", out)
 
 
+@pytest.mark.slow
 def test_the_real_command_mends_the_sample(qtbot: QtBot, children: Children, tmp_path: Path) -> None:
     job = children.start_mend(sample_order(tmp_path))
     ears = Ears(job)
@@ -293,6 +294,7 @@ def test_the_real_command_mends_the_sample(qtbot: QtBot, children: Children, tmp
     assert ears.progress[-1][0].done == ears.progress[-1][0].total
 
 
+@pytest.mark.slow
 def test_the_real_command_cancelled_leaves_nothing(qtbot: QtBot, children: Children, tmp_path: Path) -> None:
     job = children.start_mend(sample_order(tmp_path))
     ears = Ears(job)

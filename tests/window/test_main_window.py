@@ -448,6 +448,7 @@ def test_a_recording_read_through_the_reader_library(place: Place, tmp_path: Pat
     place.wait_quiet(window)
 
 
+@pytest.mark.slow
 def test_another_recording_replaces_the_first_cleanly(place: Place) -> None:
     window = place.learned()
     for stage in Stage:
@@ -580,6 +581,7 @@ sys.exit(program.run(Path(sys.argv[1]), Path(sys.argv[2])))
 """
 
 
+@pytest.mark.slow
 def test_the_program_ends_without_a_word(place: Place) -> None:
     ended = subprocess.run(
         [sys.executable, "-X", "dev", "-c", PROGRAM, str(place.recording), str(place.plan)],
