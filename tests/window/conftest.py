@@ -17,14 +17,16 @@ def loaded_for_good() -> Iterator[None]:
 
     gc.collect()
     gc.freeze()
+    gc.disable()
     yield
+    gc.enable()
     gc.unfreeze()
 
 
 @pytest.fixture(autouse=True)
 def garbage_is_collected_here() -> Iterator[None]:
     """As `pulsemend.window.garbage` does: no worker may destroy what an earlier test left."""
-    gc.disable()
+    gc.disable()  # a test may have turned it on
     yield
+    # Never on its own, not even between two tests, where a worker may still be at it.
     gc.collect()
-    gc.enable()
