@@ -6,7 +6,7 @@ Long work belongs to the workers; this is for many small steps that need neither
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import TypeVar
+from typing import Any, TypeVar
 
 from PySide6.QtCore import QObject, QTimer
 
@@ -27,15 +27,26 @@ def step_through(work: Work[T], returned: Callable[[T], None], owner: QObject) -
     owner : QObject
         While it lives the work goes on.
     """
-    timer = QTimer(owner)
+    _Steps(work, returned, owner)
 
-    def step() -> None:
+
+class _Steps(QTimer):
+    """Takes a step whenever there is nothing else to do; lives as long as its owner, or until the end."""
+
+    def __init__(self, work: Work[Any], returned: Callable[[Any], None], owner: QObject) -> None:
+        super().__init__(owner)
+        self._work = work
+        self._returned: Callable[[Any], None] | None = returned
+        self.timeout.connect(self._step)
+        self.start(0)
+
+    def _step(self) -> None:
         try:
-            next(work)
+            next(self._work)
         except StopIteration as end:
-            timer.stop()
-            timer.deleteLater()
-            returned(end.value)
-
-    timer.timeout.connect(step)
-    timer.start(0)
+            self.stop()
+            # Let go of before the timer dies: what it calls may hold the owner, whose child the timer is.
+            returned, self._returned = self._returned, None
+            if returned is not None:
+                returned(end.value)
+            self.deleteLater()
