@@ -101,7 +101,9 @@ class Fate(StrEnum):
 
     KEPT = "kept"
     TRIAL_INCOMPLETE = "trial incomplete"
+    TRIAL_DOUBTFUL = "trial doubtful"
     TRIAL_EXCLUDED = "trial excluded by hand"
+    SET_ASIDE = "trial set aside"
     NO_ANCHOR = "no anchor in this trial"
     OUTSIDE = "outside the recording"
     ACROSS_BREAK = "across a break in the recording"
@@ -109,6 +111,7 @@ class Fate(StrEnum):
     TOUCHES_GAP = "touches a gap"
     NOT_BEFORE_STOP = "does not end before its stop"
     BY_HAND = "left out by hand"
+    BALANCE = "left out for balance"
 
 
 class PulseState(StrEnum):
@@ -118,3 +121,42 @@ class PulseState(StrEnum):
     MARKED_ONLY = "marked, not in the signal"
     ADDED = "added by hand"
     MOVED = "moved by hand"
+    FOUND = "found in the signal, no marker"
+
+
+class StandIn(StrEnum):
+    """What stands in as anchor for a slot that was not found."""
+
+    NONE = "none"
+    FIXED = "fixed"
+    DRAWN = "drawn"
+
+
+class TimeUnit(StrEnum):
+    """How a log writes its times."""
+
+    SECONDS = "s"
+    MILLISECONDS = "ms"
+    CLOCK = "clock"
+
+
+class OnsetUse(StrEnum):
+    """How a measured onset moves the markers of a code: all by their median, or each to its own."""
+
+    MEDIAN = "median"
+    EACH = "each"
+
+
+class Choose(StrEnum):
+    """How epochs are chosen where conditions are matched in number."""
+
+    SPREAD = "spread"
+    DRAWN = "drawn"
+
+
+class Stimulation(StrEnum):
+    """What was given; as the plan says, never judged."""
+
+    ACTIVE = "active"
+    SHAM = "sham"
+    NONE = "none"
