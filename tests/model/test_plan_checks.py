@@ -10,12 +10,11 @@ from pulsemend.errors import MarksError, PlanError
 from pulsemend.model.marks import NO_MARKS, Marks
 from pulsemend.model.marks_file import parse_marks
 from pulsemend.model.plan import Plan
+from pulsemend.model.label_columns import rule_columns, slot_columns
 from pulsemend.model.plan_checks import (
     check_against_rate,
     check_channels,
     check_decided,
-    rule_columns,
-    slot_columns,
 )
 from pulsemend.model.plan_file import PlanFile, parse_plan
 from pulsemend.model.vocabulary import ChannelType

@@ -74,11 +74,38 @@ class Trial:
         By slot name; slots that were not found are absent.
     missing : tuple of str
         Required slots that were not found.
+    kind : str
+        Empty where the plan has one kind of trial.
+    doubts : tuple of str
+        Where another explanation is as good, which: one phrase each, e.g. "cue1 at 12.304 s or 12.391 s".
+    stand_ins : mapping of str to float
+        Recorded sample of the anchor of slots that were not found, where the plan wants one.
+    block : int
+        From 1; 0 where the plan knows no blocks.
+    place_in_block, place : int
+        Place of the trial in its block and in the recording, from 1.
+    set_aside : str
+        Why the trial is none of the experiment's, e.g. "practice"; empty: it is.
+    log : mapping of str to str
+        Its row of the log, by column (``answer``, or ``cue1.answer`` where rows belong to slots).
     """
 
     number: int
     markers: Mapping[str, Marker]
     missing: tuple[str, ...] = ()
+    kind: str = ""
+    doubts: tuple[str, ...] = ()
+    stand_ins: Mapping[str, float] = field(default_factory=dict)
+    block: int = 0
+    place_in_block: int = 0
+    place: int = 0
+    set_aside: str = ""
+    log: Mapping[str, str] = field(default_factory=dict)
+
+    @property
+    def first_sample(self) -> float:
+        """Recorded sample of the earliest marker."""
+        return min((marker.sample for marker in self.markers.values()), default=0.0)
 
 
 @dataclass(frozen=True)

@@ -30,6 +30,7 @@ class Kind(Enum):
     TEXTS = "a list of texts"
     WORDS = "a list of words"
     WHOLES = "a list of whole numbers"
+    NUMBERS = "a list of numbers"
 
 
 class _Required(Enum):
@@ -259,6 +260,10 @@ def _wholes(key: Key, value: object) -> tuple[int, ...]:
     return _distinct(_each(key, value, _whole), value)
 
 
+def _numbers(key: Key, value: object) -> tuple[float, ...]:
+    return _distinct(_each(key, value, _number), value)
+
+
 def _word_or_texts(key: Key, value: object) -> str | tuple[str, ...]:
     if not isinstance(value, list):
         return _word(key, value)
@@ -301,4 +306,5 @@ _CONVERTERS: dict[Kind, Callable[[Key, object], object]] = {
     Kind.TEXTS: _texts,
     Kind.WORDS: _words,
     Kind.WHOLES: _wholes,
+    Kind.NUMBERS: _numbers,
 }

@@ -39,6 +39,14 @@ class MovedPulse:
 
 
 @dataclass(frozen=True)
+class MarkerKey:
+    """Names a marker by recorded sample (nearest) and code, as the file has it."""
+
+    sample: int
+    code: str
+
+
+@dataclass(frozen=True)
 class Marks:
     """Everything decided about one recording by hand.
 
@@ -59,6 +67,16 @@ class Marks:
     trials_excluded : tuple of int
         From 1.
     epochs_left_out : tuple of EpochKey
+    markers_ignored, markers_added : tuple of MarkerKey
+        Markers of the recording that count for nothing, and markers that it lacks.
+    cures_accepted, cures_refused : tuple of str
+        Keys of trigger faults whose cure was decided about.
+    log_file : str
+        The behavioural log, over the plan's: absolute, or beside the recording. Empty: as the plan says.
+    log_rows_excluded : tuple of int
+        Rows of the log, from 1, that are not joined.
+    run : str
+        Label of this run where several files belong together; empty: as the file's name says.
     """
 
     fingerprint: Fingerprint | None = None
@@ -71,6 +89,13 @@ class Marks:
     bad_stretches: tuple[BadStretch, ...] = ()
     trials_excluded: tuple[int, ...] = ()
     epochs_left_out: tuple[EpochKey, ...] = ()
+    markers_ignored: tuple[MarkerKey, ...] = ()
+    markers_added: tuple[MarkerKey, ...] = ()
+    cures_accepted: tuple[str, ...] = ()
+    cures_refused: tuple[str, ...] = ()
+    log_file: str = ""
+    log_rows_excluded: tuple[int, ...] = ()
+    run: str = ""
 
 
 NO_MARKS = Marks()

@@ -10,13 +10,20 @@ from typing import Any
 
 from pulsemend.errors import MarksError
 from pulsemend.model.keys import key_defaults, show
-from pulsemend.model.marks import BadStretch, EpochKey, Marks, MovedPulse
+from pulsemend.model.marks import BadStretch, EpochKey, MarkerKey, Marks, MovedPulse
 from pulsemend.model.marks_keys import LATER_MARKS_KEYS, MARKS_KEYS, SCHEMA
 from pulsemend.model.recording import FilePart, Fingerprint
 from pulsemend.model.toml_edit import new_text, updated_text
 from pulsemend.model.toml_tables import Source, parse, read_text, write_text
 
-_NAMED_BY = {"fingerprint": "name", "pulses.moved": "sample", "bad_stretches": "", "epochs_left_out": ""}
+_NAMED_BY = {
+    "fingerprint": "name",
+    "pulses.moved": "sample",
+    "bad_stretches": "",
+    "epochs_left_out": "",
+    "markers_ignored": "",
+    "markers_added": "",
+}
 _SHA256 = re.compile(r"[0-9a-f]{64}")
 _OTHER_RECORDING = "These marks belong to another recording or to an earlier state of this one"
 
@@ -223,6 +230,8 @@ def check_samples(marks: Marks, n_samples: int) -> None:
         (f"bad_stretches[{place}].stop", bad.stop - 1)
         for place, bad in enumerate(marks.bad_stretches, start=1)
     ]
+    for table, markers in (("ignored", marks.markers_ignored), ("added", marks.markers_added)):
+        named += [(f"markers_{table}[{place}].sample", m.sample) for place, m in enumerate(markers, start=1)]
     for key, sample in named:
         if sample >= n_samples:
             raise MarksError(
@@ -260,6 +269,11 @@ def marks_tree(marks: Marks) -> dict[str, Any]:
         },
         "bad_stretches": [vars(stretch) for stretch in marks.bad_stretches],
         "epochs_left_out": [vars(key) for key in marks.epochs_left_out],
+        "run": marks.run,
+        "markers_ignored": [vars(key) for key in marks.markers_ignored],
+        "markers_added": [vars(key) for key in marks.markers_added],
+        "cures": {"accepted": marks.cures_accepted, "refused": marks.cures_refused},
+        "log": {"file": marks.log_file, "rows_excluded": marks.log_rows_excluded},
     }
 
 
@@ -277,6 +291,13 @@ def _marks(tree: Mapping[str, Any]) -> Marks:
         bad_stretches=tuple(BadStretch(**stretch) for stretch in tree["bad_stretches"]),
         trials_excluded=tree["trials_excluded"],
         epochs_left_out=tuple(EpochKey(**key) for key in tree["epochs_left_out"]),
+        markers_ignored=tuple(MarkerKey(**key) for key in tree["markers_ignored"]),
+        markers_added=tuple(MarkerKey(**key) for key in tree["markers_added"]),
+        cures_accepted=tree["cures"]["accepted"],
+        cures_refused=tree["cures"]["refused"],
+        log_file=tree["log"]["file"],
+        log_rows_excluded=tree["log"]["rows_excluded"],
+        run=tree["run"],
     )
 
 
@@ -300,6 +321,9 @@ def _check(marks: Marks) -> None:
             problem = "is moved twice" if moved.sample in seen else "is removed as well"
             raise MarksError(f"pulses.moved[{place}].sample", problem, received=str(moved.sample))
         seen.add(moved.sample)
+    for place, key in enumerate(marks.cures_refused, start=1):
+        if key in marks.cures_accepted:
+            raise MarksError(f"cures.refused[{place}]", "is accepted as well", received=show(key))
     for place, stretch in enumerate(marks.bad_stretches, start=1):
         if stretch.stop <= stretch.start:
             raise MarksError(

@@ -42,7 +42,40 @@ MARKS_KEYS: tuple[Key, ...] = (
     Key("epochs_left_out[].trial", Kind.WHOLE, "trial of an epoch left out, from 1", low=1, high=1_000_000.0),
     Key("epochs_left_out[].rule", Kind.NAME, "name of its rule"),
     Key("epochs_left_out[].piece", Kind.WHOLE, "its piece, from 1", default=1, low=1, high=10000),
+    Key("run", Kind.TEXT, "label of this run, over the one in the file's name", default=""),
+    Key(
+        "markers_ignored[].sample",
+        Kind.WHOLE,
+        "recorded sample of a marker that counts for nothing",
+        low=0,
+        high=_LAST_SAMPLE,
+    ),
+    Key("markers_ignored[].code", Kind.TEXT, "its code, as the file has it", filled=True),
+    Key(
+        "markers_added[].sample",
+        Kind.WHOLE,
+        "recorded sample of a marker the recording lacks",
+        low=0,
+        high=_LAST_SAMPLE,
+    ),
+    Key("markers_added[].code", Kind.TEXT, "its code", filled=True),
+    Key(
+        "cures.accepted",
+        Kind.TEXTS,
+        "faults of markers whose cure is applied, as `pulsemend facts` names them",
+        default=(),
+    ),
+    Key("cures.refused", Kind.TEXTS, "faults whose cure is not wanted", default=()),
+    Key("log.file", Kind.TEXT, "behavioural log of this recording, over the plan's", default=""),
+    Key(
+        "log.rows_excluded",
+        Kind.WHOLES,
+        "rows of the log, from 1, that are not joined",
+        default=(),
+        low=1,
+        high=1_000_000.0,
+    ),
 )
 
-LATER_MARKS_KEYS = frozenset({"good", "positions", "log", "cures", "epochs_kept"})
+LATER_MARKS_KEYS = frozenset({"good", "positions", "epochs_kept"})
 """Keys that a later version has: refused as "not in this version" instead of as unknown."""

@@ -7,11 +7,12 @@ import math
 from collections.abc import Collection, Iterable
 
 from pulsemend.errors import MarksError, PlanError, SettingError
-from pulsemend.model.epochs import FIXED_COLUMNS
 from pulsemend.model.keys import show
 from pulsemend.model.marks import Marks
-from pulsemend.model.plan import EpochRule, Plan
+from pulsemend.model.plan import Plan
 from pulsemend.model.toml_lines import key_text
+from pulsemend.model.trial_checks import check_trials
+from pulsemend.model.trial_kinds import slot_names
 from pulsemend.model.vocabulary import Fill, Format, PulseTimes, Role
 
 WHOLE_WITHIN = 1e-6
@@ -40,7 +41,7 @@ def check_plan(plan: Plan) -> tuple[str, ...]:
     PlanError
         Keys contradict each other.
     """
-    _check_slots(plan)
+    check_trials(plan)
     _check_pulses(plan)
     _check_filter(plan)
     _check_reference(plan)
@@ -229,53 +230,6 @@ def _near(name: str, names: Iterable[str]) -> str:
     )
 
 
-def _check_slots(plan: Plan) -> None:
-    roles = {marker.role for marker in plan.markers}
-    earlier: list[str] = []
-    for place, slot in enumerate(plan.trial, start=1):
-        path = ("trial", place)
-        if slot.slot in earlier or slot.slot == "log":
-            problem = "names an earlier slot too" if slot.slot in earlier else "is kept for the log's columns"
-            raise PlanError(key_text((*path, "slot")), problem, received=show(slot.slot))
-        if place == 1:
-            _check_first_slot(plan)
-        elif slot.after_s is None:
-            raise PlanError(
-                key_text((*path, "after_s")),
-                "is missing; every slot but the first needs its time limits",
-                allowed="[least, most] in s",
-            )
-        if slot.after and slot.after not in earlier:
-            raise PlanError(
-                key_text((*path, "after")),
-                "must name an earlier slot",
-                allowed=" | ".join(show(name) for name in earlier),
-                received=show(slot.after),
-            )
-        if slot.role not in roles and not slot.optional:
-            raise PlanError(
-                key_text((*path, "role")),
-                "no code under [markers] has this role, so every trial would be incomplete",
-                allowed=" | ".join(show(role) for role in Role if role in roles),
-                received=show(slot.role),
-            )
-        earlier.append(slot.slot)
-
-
-def _check_first_slot(plan: Plan) -> None:
-    first = plan.trial[0]
-    if first.after_s is not None or first.after:
-        key = "after_s" if first.after_s is not None else "after"
-        raise PlanError(f"trial[1].{key}", "the first slot starts the trial: nothing comes before it")
-    if first.optional:
-        raise PlanError(
-            "trial[1].optional",
-            "the first slot starts the trial and cannot be optional",
-            allowed="false",
-            received="true",
-        )
-
-
 def _check_pulses(plan: Plan) -> None:
     pulses = plan.pulses
     if pulses.times is PulseTimes.NONE:
@@ -313,7 +267,7 @@ def _check_reference(plan: Plan) -> None:
 
 
 def _check_rules(plan: Plan) -> None:
-    slots = [slot.slot for slot in plan.trial]
+    slots = slot_names(plan)
     allowed = " | ".join(show(name) for name in slots)
     names: set[str] = set()
     for place, rule in enumerate(plan.epochs.rule, start=1):
@@ -329,51 +283,6 @@ def _check_rules(plan: Plan) -> None:
                     allowed=allowed,
                     received=show(slot),
                 )
-        _check_rule_labels(plan, rule, path)
-
-
-def _check_rule_labels(plan: Plan, rule: EpochRule, path: tuple[str | int, ...]) -> None:
-    known = slot_columns(plan)
-    for column, source in rule.labels.items():
-        key = key_text((*path, "labels", column))
-        if column in FIXED_COLUMNS:
-            raise PlanError(key, "is the name of a fixed column; choose another", received=show(column))
-        if "." in column or not column:
-            raise PlanError(key, "a column made by a rule has no point in its name", received=show(column))
-        if source.startswith("log."):
-            raise PlanError(key, "labels from a log are not in this version", received=show(source))
-        if source not in known:
-            raise PlanError(
-                key,
-                "must name a label of a slot's codes, slot.label",
-                allowed=" | ".join(known) or "none: no code of a slot has labels",
-                received=show(source),
-            )
-
-
-def slot_columns(plan: Plan) -> tuple[str, ...]:
-    """Label columns that come from markers, ``slot.label``: slots in order, their labels sorted.
-
-    Parameters
-    ----------
-    plan : Plan
-        Slots, codes and their labels.
-    """
-    labels: dict[Role, set[str]] = {}
-    for marker in plan.markers:
-        labels.setdefault(marker.role, set()).update(marker.labels)
-    return tuple(f"{slot.slot}.{label}" for slot in plan.trial for label in sorted(labels.get(slot.role, ())))
-
-
-def rule_columns(plan: Plan) -> tuple[str, ...]:
-    """Label columns that come from epoch rules, sorted.
-
-    Parameters
-    ----------
-    plan : Plan
-        Rules and their labels.
-    """
-    return tuple(sorted({column for rule in plan.epochs.rule for column in rule.labels}))
 
 
 def _check_whole_samples(plan: Plan, rate_hz: float) -> None:

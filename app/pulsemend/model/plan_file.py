@@ -8,27 +8,36 @@ from pathlib import Path
 from typing import Any
 
 from pulsemend.errors import PlanError
-from pulsemend.model.keys import key_defaults
+from pulsemend.model.keys import key_defaults, show
 from pulsemend.model.plan import (
     About,
+    Balance,
+    BitField,
+    Blocks,
     Channels,
+    DerivedLabel,
     EpochRule,
     Epochs,
     Export,
     Filter,
+    Group,
+    Log,
     MarkerPlan,
+    OnsetRule,
     OtherGap,
     Plan,
     Pulses,
     Slot,
+    StimulationFacts,
 )
 from pulsemend.model.plan_checks import check_plan
 from pulsemend.model.plan_keys import LATER_PLAN_KEYS, PLAN_KEYS, SCHEMA
 from pulsemend.model.toml_edit import new_text, updated_text
+from pulsemend.model.toml_lines import key_text
 from pulsemend.model.toml_tables import Source, parse, read_text, write_text
 
 _RECORDINGS = (".vhdr", ".eeg", ".vmrk", ".edf", ".bdf", ".fif", ".fif.gz")
-_NAMED_BY = {"trial": "slot", "epochs.rule": "name", "pulses.also": ""}
+_NAMED_BY = {"trial": "slot", "epochs.rule": "name", "pulses.also": "", "onset": ""}
 
 
 @dataclass(frozen=True)
@@ -115,8 +124,8 @@ def parse_plan(text: str, name: str = "") -> PlanFile:
         A key is unknown, missing, impossible or of a later version.
     """
     source = parse(text, name, PLAN_KEYS, LATER_PLAN_KEYS, PlanError)
-    plan = _plan(source.tree)
     with source.located():
+        plan = _plan(source.tree)
         warnings = check_plan(plan)
     return PlanFile(plan, source, warnings)
 
@@ -206,7 +215,15 @@ def plan_tree(plan: Plan) -> dict[str, Any]:
         "pulsemend": SCHEMA,
         "about": vars(plan.about),
         "markers": {m.code: {"role": m.role, "labels": dict(m.labels)} for m in plan.markers},
+        "bits": {
+            bits.name: {"at": bits.at, "names": dict(bits.names), "roles": dict(bits.roles)}
+            for bits in plan.bits
+        },
         "trial": [vars(slot) for slot in plan.trial],
+        "group": {group.name: {"times": group.times, "between_s": group.between_s} for group in plan.groups},
+        "blocks": vars(plan.blocks),
+        "log": vars(plan.log),
+        "onset": [vars(rule) for rule in plan.onset],
         "pulses": {
             **vars(plan.pulses),
             "also": [vars(gap) for gap in plan.pulses.also],
@@ -218,8 +235,17 @@ def plan_tree(plan: Plan) -> dict[str, Any]:
             "length_s": plan.epochs.length_s,
             "rule": [{**vars(rule), "labels": dict(rule.labels)} for rule in plan.epochs.rule],
         },
+        "labels": {label.name: _label_tree(label) for label in plan.labels},
+        "balance": vars(plan.balance),
+        "stimulation": {**vars(plan.stimulation), "columns": dict(plan.stimulation.columns)},
         "export": vars(plan.export),
     }
+
+
+def _label_tree(label: DerivedLabel) -> dict[str, Any]:
+    tree = {**vars(label), "values": dict(label.values)}
+    del tree["name"]
+    return tree
 
 
 def _plan(tree: Mapping[str, Any]) -> Plan:
@@ -236,4 +262,26 @@ def _plan(tree: Mapping[str, Any]) -> Plan:
             rule=tuple(EpochRule(**rule) for rule in tree["epochs"]["rule"]),
         ),
         export=Export(**tree["export"]),
+        bits=tuple(
+            BitField(name, _wholes(values["at"], "bits", name, "at"), values["names"], values["roles"])
+            for name, values in tree["bits"].items()
+        ),
+        groups=tuple(
+            Group(name, _wholes(values["times"], "group", name, "times"), values["between_s"])
+            for name, values in tree["group"].items()
+        ),
+        blocks=Blocks(**tree["blocks"]),
+        log=Log(**tree["log"]),
+        labels=tuple(DerivedLabel(name, **values) for name, values in tree["labels"].items()),
+        onset=tuple(OnsetRule(**rule) for rule in tree["onset"]),
+        balance=Balance(**tree["balance"]),
+        stimulation=StimulationFacts(**tree["stimulation"]),
     )
+
+
+def _wholes(pair: tuple[float, float], *path: str) -> tuple[int, int]:
+    """Give two whole numbers, where TOML may write decimals too."""
+    low, high = (round(number) for number in pair)
+    if (low, high) != pair:
+        raise PlanError(key_text(path), "must be two whole numbers", received=show(pair))
+    return low, high

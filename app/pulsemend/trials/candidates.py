@@ -10,9 +10,9 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 from pulsemend.model.epochs import NOT_AVAILABLE, Candidate, Trial, Trials, nearest_sample
+from pulsemend.model.label_columns import rule_columns, slot_columns
 from pulsemend.model.marks import BadStretch, EpochKey
 from pulsemend.model.plan import EpochRule, Plan
-from pulsemend.model.plan_checks import rule_columns, slot_columns
 from pulsemend.model.vocabulary import Fate, PulseRule, Role
 from pulsemend.units import ms_to_s
 

@@ -12,8 +12,8 @@ from PySide6.QtWidgets import QLineEdit, QVBoxLayout, QWidget
 from pulsemend.errors import PlanError
 from pulsemend.mending.epoch_rows import RuleCount
 from pulsemend.mending.rule_edits import labels_from_text, labels_text
+from pulsemend.model.label_columns import slot_columns
 from pulsemend.model.plan import EpochRule, Plan
-from pulsemend.model.plan_checks import slot_columns
 from pulsemend.model.vocabulary import PulseRule
 from pulsemend.window.fields import Chooser, Field, PlainNumber, in_words
 from pulsemend.window.flow import flow_row
