@@ -330,7 +330,9 @@ def test_extension_that_lies(kind: str, tmp_path: Path, extension: str) -> None:
     ("name", "content", "what"),
     [
         ("a.edf", b"\x89HDF\r\n\x1a\n" + bytes(300), "HDF5"),
-        ("a.mat", b"MATLAB 5.0 MAT-file", "MAT"),
+        ("a.mat", b"MATLAB 5.0 MAT-file", "told more than the file holds"),
+        ("a.xyz", b"MATLAB 5.0 MAT-file", "seems to be MAT"),
+        ("a.gdf", b"GDF 2.10" + bytes(20), "no reader knows its contents"),
         ("a.vhdr", b"[Common Infos]\n", "not the header of a triplet"),
         ("a.txt", b"onset\tduration\n", "no reader knows"),
         ("a.fif", bytes(300), "not FIF"),

@@ -28,6 +28,18 @@ class Channel:
         Position on the head in metres (x right, y front, z up), if the file holds one.
     unit : str
         Unit as the file writes it.
+    impedance_ohm : float or None
+        Electrode impedance that the recorder measured last before or after the samples.
+    highpass_hz, lowpass_hz : float or None
+        Filters of the recorder, before the samples were stored; a high-pass of 0 is off. None: not said.
+    coupling : str
+        "DC" or "AC", where the file says so.
+    reference : str
+        The electrode it was recorded against, where the file names it.
+    gain : float or None
+        Of the amplifier, where the file gives one.
+    status : str
+        "good" or "bad", where the file or a table beside it says so; bad channels are not left out by that.
     """
 
     name: str
@@ -35,6 +47,13 @@ class Channel:
     scale_v: float = 1.0
     position_m: tuple[float, float, float] | None = None
     unit: str = "V"
+    impedance_ohm: float | None = None
+    highpass_hz: float | None = None
+    lowpass_hz: float | None = None
+    coupling: str = ""
+    reference: str = ""
+    gain: float | None = None
+    status: str = ""
 
 
 @dataclass(frozen=True)
@@ -59,7 +78,7 @@ class Marker:
 
 @dataclass(frozen=True)
 class FilePart:
-    """One file that makes up a recording: its name (without folder) and size in bytes."""
+    """One file that makes up a recording: its name, without the recording's own folder, and size in bytes."""
 
     name: str
     size: int
@@ -88,6 +107,8 @@ class RecordingFacts:
         Every file that belongs to the recording.
     notes : tuple of str
         What a reader had to decide, one sentence each (shown by ``facts``).
+    reference : str
+        The electrode the whole recording refers to, where the header names one.
     """
 
     stem: str
@@ -99,6 +120,7 @@ class RecordingFacts:
     boundaries: tuple[int, ...] = ()
     parts: tuple[FilePart, ...] = ()
     notes: tuple[str, ...] = ()
+    reference: str = ""
 
     @property
     def segments(self) -> tuple[tuple[int, int], ...]:

@@ -105,8 +105,8 @@ def check_finite(
     )
 
 
-def file_part(path: Path) -> FilePart:
-    """Name and size of a file.
+def file_part(path: Path, folder: Path | None = None) -> FilePart:
+    """Name and size of a file; ``folder`` is the recording itself where that is a folder.
 
     Raises
     ------
@@ -114,7 +114,8 @@ def file_part(path: Path) -> FilePart:
         It is not there or cannot be reached.
     """
     try:
-        return FilePart(path.name, path.stat().st_size)
+        name = path.relative_to(folder).as_posix() if folder else path.name
+        return FilePart(name, path.stat().st_size)
     except OSError as error:
         raise missing(path, error) from error
 

@@ -42,7 +42,7 @@ def fingerprint(recording: Recording) -> Work[Fingerprint]:
     view = memoryview(buffer)
     parts = []
     done = 0
-    for path in paths:
+    for path, named in zip(paths, recording.facts.parts, strict=True):
         digest, size = hashlib.sha256(), 0
         try:
             with path.open("rb", buffering=0) as file:
@@ -53,5 +53,5 @@ def fingerprint(recording: Recording) -> Work[Fingerprint]:
                     yield Progress(_STAGE, done, total)
         except OSError as error:
             raise missing(path, error) from error
-        parts.append((path.name, size, digest.hexdigest()))
+        parts.append((named.name, size, digest.hexdigest()))
     return Fingerprint(tuple(parts))

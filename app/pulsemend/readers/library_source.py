@@ -22,7 +22,7 @@ from pulsemend.readers.tal import Timeline, read_timeline
 
 Found = tuple[float, str, str]
 
-_FIF_TYPES = {
+_LIBRARY_TYPES = {
     "eeg": ChannelType.EEG,
     "eog": ChannelType.EOG,
     "ecg": ChannelType.ECG,
@@ -31,7 +31,7 @@ _FIF_TYPES = {
 }
 _FIF_CHANNEL, _FIF_LAST = 203, -1  # kind of a channel's entry; link of the last entry of a file
 _PACKED_CHUNK = 1 << 20
-_JOINS = ("bad boundary", "edge boundary")
+_JOINS = ("bad boundary", "edge boundary", "boundary")
 _SKIP = "bad_acq_skip"
 _WHOLE_WITHIN = 1e-6  # samples; what a product of seconds and rate may miss a whole number by
 
@@ -91,8 +91,10 @@ def edf_source(header: EdfHeader) -> Source:
     )
 
 
-def fif_source(path: Path, raw: Any) -> Source:
-    """Describe a FIF recording that the reader library has opened.
+def raw_source(
+    path: Path, raw: Any, kind: str, paths: tuple[Path, ...], warned: tuple[str, ...] = ()
+) -> Source:
+    """Describe a recording that the reader library has opened.
 
     Parameters
     ----------
@@ -100,6 +102,12 @@ def fif_source(path: Path, raw: Any) -> Source:
         The file that was named.
     raw : mne.io.Raw
         The same, opened.
+    kind : str
+        The kind of file, in words.
+    paths : tuple of Path
+        All files it consists of.
+    warned : tuple of str
+        Further notes.
 
     Raises
     ------
@@ -107,7 +115,7 @@ def fif_source(path: Path, raw: Any) -> Source:
     """
     rate_hz, n_samples = float(raw.info["sfreq"]), int(raw.n_times)
     check_names(raw.ch_names, path.name)
-    channels = tuple(map(_fif_channel, raw.info["chs"], raw.get_channel_types()))
+    channels = tuple(map(_library_channel, raw.info["chs"], raw.get_channel_types()))
     marks: list[tuple[float | None, str]] = []
     boundaries: set[int] = set()
     coarsest = 0.0
@@ -116,10 +124,12 @@ def fif_source(path: Path, raw: Any) -> Source:
         # Onsets are kept in 32 bits: a whole sample within their rounding is that sample.
         rounding = float(np.spacing(np.float32(onset_s))) * rate_hz / 2
         sample = _whole_if_close(onset_s * rate_hz - raw.first_samp, max(rounding, _WHOLE_WITHIN))
-        if text.lower() in (*_JOINS, _SKIP):
-            boundaries.add(round(sample))
-            if text.lower() == _SKIP:
-                boundaries.add(round(sample + float(entry["duration"]) * rate_hz))
+        if text.lower() in _JOINS:
+            # Some write the joint between two samples: the later one starts the next segment.
+            boundaries.add(math.ceil(sample))
+            continue
+        if text.lower() == _SKIP:
+            boundaries |= {round(sample), round(sample + float(entry["duration"]) * rate_hz)}
             continue
         coarsest = max(coarsest, rounding)
         marks.append((sample, text))
@@ -130,14 +140,14 @@ def fif_source(path: Path, raw: Any) -> Source:
     if others:
         notes.append(f"Taken as misc: {', '.join(others)}.")
     return Source(
-        format="FIF",
+        format=kind,
         rate_hz=rate_hz,
         n_samples=n_samples,
         channels=channels,
         found=found,
         boundaries=tuple(sorted(sample for sample in boundaries if 0 < sample < n_samples)),
-        paths=tuple(map(Path, raw.filenames)),
-        notes=tuple(notes),
+        paths=paths,
+        notes=(*warned, *notes),
     )
 
 
@@ -197,10 +207,10 @@ def _cut_short(path: Path) -> DamagedRecording:
     )
 
 
-def _fif_channel(described: Any, kind: str) -> Channel:
+def _library_channel(described: Any, kind: str) -> Channel:
     place = np.asarray(described["loc"][:3], dtype=np.float64)
     known = bool(np.isfinite(place).all() and place.any())
-    kind_here = _FIF_TYPES.get(kind, ChannelType.MISC)
+    kind_here = _LIBRARY_TYPES.get(kind, ChannelType.MISC)
     return Channel(
         name=str(described["ch_name"]),
         type=kind_here,

@@ -12,12 +12,14 @@ from pulsemend.readers.common import missing
 from pulsemend.readers.triplet import TripletRecording
 
 _HEADER, _DATA, _MARKERS = "the header of a triplet", "the samples of a triplet", "the markers of a triplet"
-_EDF, _BDF, _FIF = "EDF", "BDF", "FIF"
+_EDF, _BDF, _FIF, _ALONE = "EDF", "BDF", "FIF", "a recording without header file"
 
 _BY_EXTENSION = {
     ".vhdr": _HEADER,
     ".eeg": _DATA,
     ".vmrk": _MARKERS,
+    ".ahdr": _HEADER,
+    ".amrk": _MARKERS,
     ".edf": _EDF,
     ".bdf": _BDF,
     ".fif": _FIF,
@@ -25,6 +27,7 @@ _BY_EXTENSION = {
 }
 _USUAL_EXTENSION = {_HEADER: ".vhdr", _MARKERS: ".vmrk", _EDF: ".edf", _BDF: ".bdf", _FIF: ".fif"}
 _FIF_FIRST_TAG = bytes((0, 0, 0, 100, 0, 0, 0, 31))  # kind "file id", type "id structure", big-endian
+_EEG_WITHOUT_HEADER = b"EEG-"  # what else ends in .eeg starts with the name of its recorder
 _OTHER_STARTS = (
     (b"\x89HDF\r\n\x1a\n", "HDF5"),
     (b"MATLAB", "MAT"),
@@ -40,8 +43,8 @@ def open_recording(path: Path) -> Recording:
     Parameters
     ----------
     path : Path
-        A header, data or marker file of a triplet (.vhdr, .eeg, .vmrk), or a file that
-        ends in .edf, .bdf, .fif or .fif.gz.
+        A header, data or marker file of a triplet (.vhdr, .eeg, .vmrk), a file that ends in .edf, .bdf, .fif
+        or .fif.gz, or any other file or folder that the reader library opens.
 
     Raises
     ------
@@ -50,21 +53,48 @@ def open_recording(path: Path) -> Recording:
     MissingPart, DamagedRecording, UnusableChannels
         The file, or another that belongs to it, cannot be used.
     """
+    if path.is_dir():
+        return _folder(path)
     extension = _extension(path)
     expected = _BY_EXTENSION.get(extension)
     found = _contents(path)
     if expected == _DATA:
-        return TripletRecording(_header_beside(path, found))
-    if expected is None or found != expected:
+        header = _header_beside(path, found)
+        return _through_library(path) if header is None else TripletRecording(header)
+    if expected is None and found not in _USUAL_EXTENSION:
+        return _any_other(path, extension, found)
+    if found != expected:
         raise _wrong_kind(path, extension, expected, found)
     if expected == _MARKERS:
-        return TripletRecording(_header_beside(path, found))
-    if expected == _HEADER:
-        return TripletRecording(path)
+        return TripletRecording(_header_beside(path, found) or path)
+    return TripletRecording(path) if expected == _HEADER else _through_library(path)
+
+
+def _through_library(path: Path) -> Recording:
     # The reader library takes a second to load; plain triplets do without it.
     from pulsemend.readers.through_library import LibraryRecording
 
     return LibraryRecording(path)
+
+
+def _folder(path: Path) -> Recording:
+    """Open a folder, if it is of a kind whose recordings are folders."""
+    from pulsemend.readers.library_formats import library_extension
+
+    if not library_extension(path):
+        raise UnknownFormat(
+            "it is a folder, not a recording", where=path.name, todo="Name the file inside it"
+        )
+    return _through_library(path)
+
+
+def _any_other(path: Path, extension: str, found: str | None) -> Recording:
+    """Open a file of a format that is not read here, if the reader library knows its extension."""
+    from pulsemend.readers.library_formats import library_extension
+
+    if not library_extension(path):
+        raise _wrong_kind(path, extension, None, found)
+    return _through_library(path)
 
 
 def _extension(path: Path) -> str:
@@ -74,10 +104,6 @@ def _extension(path: Path) -> str:
 
 def _contents(path: Path) -> str | None:
     """Tell what a file is by its first bytes; None where they say nothing."""
-    if path.is_dir():
-        raise UnknownFormat(
-            "it is a folder, not a recording", where=path.name, todo="Name the file inside it"
-        )
     try:
         with path.open("rb") as file:
             head = file.read(256)
@@ -103,14 +129,19 @@ def _contents(path: Path) -> str | None:
         return _EDF
     if head.startswith(_FIF_FIRST_TAG):
         return _FIF
+    if head.startswith(_EEG_WITHOUT_HEADER):
+        return _ALONE
     return next((kind for start, kind in _OTHER_STARTS if head.startswith(start)), None)
 
 
-def _header_beside(path: Path, found: str | None) -> Path:
-    """Find the header that belongs to a data or marker file."""
+def _header_beside(path: Path, found: str | None) -> Path | None:
+    """Find the header that belongs to a data or marker file; None where the file needs none."""
+    for suffix in (".vhdr", ".ahdr"):
+        if path.with_suffix(suffix).is_file():
+            return path.with_suffix(suffix)
+    if found == _ALONE:
+        return None
     header = path.with_suffix(".vhdr")
-    if header.is_file():
-        return header
     if found in (_EDF, _BDF, _FIF, _HEADER):
         raise _wrong_kind(path, _extension(path), _BY_EXTENSION[_extension(path)], found)
     raise MissingPart(
@@ -129,10 +160,16 @@ def _wrong_kind(path: Path, extension: str, expected: str | None, found: str | N
             if expected
             else f"{ending}, and no reader knows its contents"
         )
-        return UnknownFormat(what, where=path.name, todo=f"Recordings are read from {known}")
+        return UnknownFormat(
+            what,
+            where=path.name,
+            todo=f"Recordings are read from {known} and what else the reader library opens",
+        )
     if found not in _USUAL_EXTENSION:
         return UnknownFormat(
-            f"it seems to be {found}", where=path.name, todo=f"Recordings are read from {known}"
+            f"it seems to be {found}",
+            where=path.name,
+            todo=f"Recordings are read from {known} and what else the reader library opens",
         )
     todo = f"Rename it to end in {_USUAL_EXTENSION[found]}"
     return UnknownFormat(f"it seems to be {found}, but {ending}", where=path.name, todo=todo)

@@ -1,11 +1,8 @@
-"""EDF(+), BDF(+) and FIF files, their samples read by the reader library (mne)."""
+"""EDF(+), BDF(+), FIF and all further files, their samples read by the reader library (mne)."""
 
 from __future__ import annotations
 
-import struct
-import zlib
 from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -13,21 +10,17 @@ import mne
 import numpy as np
 from numpy.typing import NDArray
 
-from pulsemend.errors import DamagedRecording, MissingPart
 from pulsemend.model.recording import FloatArray, RecordingFacts
 from pulsemend.model.vocabulary import ChannelType
 from pulsemend.readers.codes import coded
 from pulsemend.readers.common import check_finite, check_request, file_part, stem_of
 from pulsemend.readers.edf_header import EdfHeader, read_edf_header
-from pulsemend.readers.library_source import Found, Source, check_fif, edf_source, fif_source
+from pulsemend.readers.library_errors import own_errors
+from pulsemend.readers.library_formats import files_of, library_extension, open_by_extension
+from pulsemend.readers.library_source import Found, Source, check_fif, edf_source, raw_source
 from pulsemend.readers.triggers import LOW_16_BITS, trigger_events
 
 _TRIGGER_BLOCK = 1 << 16  # samples per piece when a trigger channel is searched
-# What the library lets through where a file is not as it expects.
-_LIBRARY_FAULTS = (
-    ValueError, RuntimeError, OSError, LookupError, TypeError, AssertionError, EOFError, OverflowError,
-    struct.error, zlib.error,
-)  # fmt: skip
 
 
 class LibraryRecording:
@@ -36,11 +29,11 @@ class LibraryRecording:
     Parameters
     ----------
     path : Path
-        An .edf, .bdf, .fif or .fif.gz file.
+        An .edf, .bdf, .fif or .fif.gz file, or any other that the library opens by its extension.
 
     Raises
     ------
-    MissingPart, DamagedRecording, UnusableChannels
+    UnknownFormat, MissingPart, DamagedRecording, UnusableChannels
     """
 
     def __init__(self, path: Path) -> None:
@@ -50,11 +43,16 @@ class LibraryRecording:
         if path.suffix.lower() in (".edf", ".bdf"):
             self._header = read_edf_header(path)
             source = edf_source(self._header)
-        else:
+        elif _is_fif(path):
             check_fif(path)
             raw = self._library()
-            with _own_errors(path):
-                source = fif_source(path, raw)
+            with own_errors(path):
+                source = raw_source(path, raw, "FIF", tuple(map(Path, raw.filenames)))
+        else:
+            self._raw, warned = open_by_extension(path)
+            with own_errors(path):
+                kind = f"{library_extension(path)} {'folder' if path.is_dir() else 'file'}"
+                source = raw_source(path, self._raw, kind, files_of(path, self._raw), warned)
         self._n_samples = source.n_samples
         self._paths = source.paths
         events, trigger_notes = self._trigger_markers(source)
@@ -66,7 +64,7 @@ class LibraryRecording:
             channels=source.channels,
             markers=coded([*source.found, *events]),
             boundaries=source.boundaries,
-            parts=tuple(map(file_part, source.paths)),
+            parts=tuple(file_part(part, path if path.is_dir() else None) for part in source.paths),
             notes=(*source.notes, *trigger_notes),
         )
 
@@ -98,13 +96,13 @@ class LibraryRecording:
     def _library(self) -> Any:
         """Open the file in the library, if it is not."""
         if self._raw is None:
-            with _own_errors(self._path):
+            with own_errors(self._path):
                 self._raw = _open(self._path, self._header)
         return self._raw
 
     def _volts(self, rows: slice | list[int], start: int, stop: int) -> NDArray[np.float64]:
         raw = self._library()
-        with _own_errors(self._path):
+        with own_errors(self._path):
             if raw.n_times != self._n_samples:
                 raise ValueError(f"{raw.n_times} samples instead of {self._n_samples}")
             block: NDArray[np.float64] = raw[rows, start:stop][0]
@@ -136,6 +134,8 @@ class LibraryRecording:
 
 
 def _open(path: Path, header: EdfHeader | None) -> Any:
+    if header is None and not _is_fif(path):
+        return open_by_extension(path)[0]
     if header is None:
         return mne.io.read_raw_fif(path, preload=False, verbose="error")
     read = mne.io.read_raw_edf if header.sample_bytes == 2 else mne.io.read_raw_bdf
@@ -150,32 +150,5 @@ def _open(path: Path, header: EdfHeader | None) -> Any:
     )
 
 
-@contextmanager
-def _own_errors(path: Path) -> Iterator[None]:
-    """Turn what the library raises on files it cannot read into errors for the user: the one place for it."""
-    try:
-        # Broken numbers end up in fields that are not used here; the warning would reach nobody.
-        with np.errstate(all="ignore"):
-            yield
-    except FileNotFoundError as error:
-        raise MissingPart(
-            f"the file {Path(error.filename or path).name} is not there",
-            where=path.name,
-            todo="Put all files of the recording into one folder",
-        ) from error
-    except Exception as error:
-        # The library also raises the base class itself; any other class would be a fault of this program.
-        if type(error) is not Exception and not isinstance(error, _LIBRARY_FAULTS):
-            raise
-        told = " ".join(str(error).split()) or type(error).__name__
-        if "Split raw file" in told:  # the library has no class of its own for it
-            raise MissingPart(
-                "the file that continues this recording is not there",
-                where=path.name,
-                todo="Put all files of the recording into one folder",
-            ) from error
-        raise DamagedRecording(
-            f"the reader library cannot read it ({told.rstrip('.')})",
-            where=path.name,
-            todo="Copy the file again, or export it again",
-        ) from error
+def _is_fif(path: Path) -> bool:
+    return path.name.lower().endswith((".fif", ".fif.gz"))
