@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 from pulsemend.model.plan import Plan, Slot
 
@@ -26,7 +26,7 @@ class Variant:
     """
 
     kind: str
-    repeats: Mapping[str, int]
+    repeats: Mapping[str, int] = field(hash=False)
     slots: tuple[Slot, ...]
 
 
