@@ -13,6 +13,7 @@ from pulsemend.model.epochs import NOT_AVAILABLE, Candidate, Trial, Trials, near
 from pulsemend.model.label_columns import rule_columns, slot_columns
 from pulsemend.model.marks import BadStretch, EpochKey
 from pulsemend.model.plan import EpochRule, Plan
+from pulsemend.model.trial_kinds import expanded_slots, variants
 from pulsemend.model.vocabulary import Fate, PulseRule, Role
 from pulsemend.units import ms_to_s
 
@@ -112,15 +113,17 @@ def candidates(trials: Trials, plan: Plan, geometry: Geometry) -> tuple[Candidat
     Returns
     -------
     tuple of Candidate
-        One for each trial, rule and piece, in this order. Where several reasons hold, the fate is the first
-        of: trial excluded by hand, trial incomplete, no anchor, outside the recording, across a break, not
-        before its stop, touches a gap, touches a bad stretch, left out by hand.
+        One for each trial, rule and piece, in this order; none where the trial's kind has no such anchor.
+        Where several reasons hold, the fate is the first of: trial excluded by hand, trial set aside, trial
+        incomplete, trial doubtful, no anchor, outside the recording, across a break, not before its stop,
+        touches a gap, touches a bad stretch, left out by hand.
     """
     cutter = _Cutter(plan, geometry)
     return tuple(
         cutter.candidate(trial, index, piece)
         for trial in trials.trials
         for index, rule in enumerate(plan.epochs.rule)
+        if cutter.has_slot(trial, rule.anchor)
         for piece in range(1, rule.count + 1)
     )
 
@@ -204,11 +207,17 @@ class _Cutter:
         for gap in self.gaps:
             self.gap_of.setdefault(gap.pulse, gap.start)
         self.longest_gap = max((gap.stop - gap.start for gap in self.gaps), default=0)
-        self.pulse_slots = [slot.slot for slot in plan.trial if slot.role is Role.PULSE]
+        self.pulse_slots = [slot.slot for slot in expanded_slots(plan) if slot.role is Role.PULSE]
+        self.slots_of: dict[str, set[str]] = {}  # by kind, of all numbers of repeats
+        for way in variants(plan):
+            self.slots_of.setdefault(way.kind, set()).update(slot.slot for slot in way.slots)
         self.slot_columns = slot_columns(plan)
         self.rule_columns = rule_columns(plan)
         self.excluded = set(geometry.trials_excluded)
         self.left_out = set(geometry.epochs_left_out)
+
+    def has_slot(self, trial: Trial, slot: str) -> bool:
+        return slot in self.slots_of.get(trial.kind, ())
 
     def candidate(self, trial: Trial, index: int, piece: int) -> Candidate:
         rule = self.plan.epochs.rule[index]
@@ -230,10 +239,10 @@ class _Cutter:
         )
 
     def instant(self, trial: Trial, slot: str) -> float | None:
-        """Give the recorded sample of a slot: its marker, or the aligned onset of a pulse."""
+        """Give the recorded sample of a slot: its marker, the aligned onset of a pulse, or its stand-in."""
         marker = trial.markers.get(slot)
         if marker is None:
-            return None
+            return trial.stand_ins.get(slot)
         if slot in self.pulse_slots:
             return float(self.geometry.onsets.get(marker.sample, marker.sample))
         return marker.sample
@@ -243,8 +252,12 @@ class _Cutter:
     ) -> tuple[Fate, str]:
         if trial.number in self.excluded:
             return Fate.TRIAL_EXCLUDED, ""
+        if trial.set_aside:
+            return Fate.SET_ASIDE, trial.set_aside
         if trial.missing:
             return Fate.TRIAL_INCOMPLETE, "no " + ", ".join(trial.missing)
+        if trial.doubts:
+            return Fate.TRIAL_DOUBTFUL, "; ".join(trial.doubts)
         if anchor is None:
             return Fate.NO_ANCHOR, f"no {rule.anchor} in this trial"
         first = self.geometry.first_sample(anchor, start_s)
