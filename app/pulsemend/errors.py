@@ -12,6 +12,7 @@
         SettingError               a plan or marks key: path, allowed, received, line
           PlanError
           MarksError
+        LogError                   a behavioural log: no table, no such column, no such value
         NoEpochs                   nothing is kept, so nothing is written
         SetError                   the folder of an epoch set: exists already, is none, is damaged
         ChangedOnDisk              a plan or marks file that somebody else changed since it was read
@@ -148,6 +149,10 @@ class PlanError(SettingError):
 
 class MarksError(SettingError):
     """A key of a recording's marks, or marks that belong to another recording."""
+
+
+class LogError(InputError):
+    """A behavioural log that cannot be read as a table, or a column that does not hold what it should."""
 
 
 class NoEpochs(InputError):

@@ -1,0 +1,98 @@
+"""What a joined log is told in: rows count from 1 below the header, as a spreadsheet without it does."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import replace
+
+from pulsemend.model.log import ClockFit, LogJoin, LogTimes, TrialTime
+from pulsemend.units import s_to_ms
+
+_MOST_NAMED = 20
+
+
+def row_name(row: int) -> str:
+    """Name a row by its number below the header."""
+    return f"row {row + 1}"
+
+
+def distance(seconds: float) -> str:
+    """Write a short time in milliseconds."""
+    return f"{s_to_ms(seconds):.3g} ms"
+
+
+def joined_words(join: LogJoin, log: LogTimes, trials: Sequence[TrialTime]) -> LogJoin:
+    """Give a join its words."""
+    n_rows, n_trials = len(log.times_s), len(trials)
+    lines = [
+        f"{log.name}: {len(join.pairs)} of {n_rows} rows joined with {len(join.pairs)} of {n_trials} trials, "
+        f"by {join.by}."
+    ]
+    if join.clock is not None:
+        lines.append(_clock_words(join.clock))
+    if join.by_order and join.by != "order":
+        names = [f"{row_name(row)} with {trials[trial].name}" for row, trial in join.by_order]
+        lines.append(f"By their place between two neighbours, for want of a time: {_listed(names)}.")
+    if join.rows_alone:
+        lines.append(f"Rows without a trial: {_listed(str(row + 1) for row in join.rows_alone)}.")
+    if join.trials_alone:
+        lines.append(f"Without a row: {_listed(trials[trial].name for trial in join.trials_alone)}.")
+    if join.doubtful:
+        lines.append("Doubtful, not joined:")
+    for doubt in join.doubtful:
+        names = [*map(row_name, doubt.rows), *(trials[trial].name for trial in doubt.trials)]
+        lines.append(f"  {_listed(names)}: {doubt.why}.")
+    return replace(join, words="\n".join(lines))
+
+
+def _clock_words(clock: ClockFit) -> str:
+    # Microseconds per second are parts per million.
+    drift, drift_se = (s_to_ms(s_to_ms(value)) for value in (clock.drift, clock.drift_se))
+    return (
+        f"Clock: recording = log {clock.offset_s:+.4f} s (standard error {distance(clock.offset_se_s)}) "
+        f"at log time {clock.centre_s:.3f} s; drift {drift:+.2f} ppm (standard error {drift_se:.2g} ppm); "
+        f"residual spread {distance(clock.residual_sd_s)}, {clock.n} pairs."
+    )
+
+
+def not_found(n_rows: int, n_trials: int) -> str:
+    """Say that no clock fits."""
+    return (
+        f"The intervals between its {n_rows} rows with a time and those between {n_trials} trials do not fit each "
+        "other under any clock by more than chance. Is it the log of this recording, and is this the column "
+        "with the times of these markers?"
+    )
+
+
+def contradiction(n_same: int, most_drift: float) -> str:
+    """Say that trial numbers and times cannot both be right."""
+    return (
+        f"Trial numbers and times contradict each other: {n_same} rows have the number of a trial, and no clock "
+        f"within {most_drift:.1%} brings half of them together. "
+        "Correct the numbers, or leave them out of the plan to join by time alone."
+    )
+
+
+def rival_words(
+    trials: Sequence[TrialTime], best: list[tuple[int, int]], rival: list[tuple[int, int]]
+) -> str:
+    """Name two explanations of a log by what they make of the same row."""
+    other = dict(rival)
+    both = next(((row, trial) for row, trial in best if other.get(row, trial) != trial), None)
+    if both is None:
+        row, trial = best[0]
+        second = f"{row_name(rival[0][0])} with {trials[rival[0][1]].name}"
+    else:
+        row, trial = both
+        second = f"{row_name(row)} with {trials[other[row]].name}"
+    return (
+        f"Two explanations fit about equally well: {row_name(row)} with {trials[trial].name} "
+        f"({len(best)} rows joined), or {second} ({len(rival)} rows joined). "
+        "Trial numbers in both, or an event at irregular times, would decide."
+    )
+
+
+def _listed(names: Iterable[str]) -> str:
+    every = list(names)
+    rest = len(every) - _MOST_NAMED
+    return ", ".join(every) if rest <= 0 else f"{', '.join(every[:_MOST_NAMED])} and {rest} more"
