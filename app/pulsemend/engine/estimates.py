@@ -6,11 +6,13 @@ import hashlib
 import json
 from dataclasses import asdict, dataclass, field
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend import DATA_VERSION
+from pulsemend.engine.onsets import OnsetShift
 from pulsemend.errors import SetError
 from pulsemend.model.epochs import Pulse
 from pulsemend.model.vocabulary import PulseState
@@ -34,6 +36,8 @@ class Estimates:
         In volts squared; None where the fill does not need it.
     unmarked : tuple of int
         Recorded samples of pulse-like events, looked for only where no pulse is known.
+    stimulus_onsets : tuple of OnsetShift
+        Onsets of stimuli, measured in a sensor's channel, where the plan wants it.
     notes : tuple of str
         What the fit had to decide, one sentence each.
     rests_on : mapping of str to str
@@ -45,6 +49,7 @@ class Estimates:
     usual_steepness: float
     autocovariance: NDArray[np.float64] | None = None
     unmarked: tuple[int, ...] = ()
+    stimulus_onsets: tuple[OnsetShift, ...] = ()
     notes: tuple[str, ...] = ()
     rests_on: dict[str, str] = field(default_factory=dict)
 
@@ -62,6 +67,7 @@ class Estimates:
             file.attrs["usual_steepness"] = self.usual_steepness
             file.attrs["rests_on"] = json.dumps(self.rests_on, sort_keys=True)
             file.attrs["notes"] = json.dumps(self.notes)
+            file.attrs["stimulus_onsets"] = json.dumps([asdict(shift) for shift in self.stimulus_onsets])
             file["offset"] = self.offset
             file["unmarked"] = np.array(self.unmarked, dtype=np.int64)
             file["pulses/sample"] = np.array(self.onsets, dtype=np.int64)
@@ -102,11 +108,20 @@ class Estimates:
                     usual_steepness=float(file.attrs["usual_steepness"]),
                     autocovariance=file["autocovariance"][()] if "autocovariance" in file else None,
                     unmarked=tuple(int(n) for n in file["unmarked"][()]),
+                    stimulus_onsets=_onset_shifts(str(file.attrs.get("stimulus_onsets", "[]"))),
                     notes=tuple(json.loads(file.attrs["notes"])),
                     rests_on=json.loads(file.attrs["rests_on"]),
                 )
         except (OSError, KeyError, ValueError) as error:
             raise SetError(f"no estimates can be read from it ({error})", where=path.name) from error
+
+
+def _onset_shifts(text: str) -> tuple[OnsetShift, ...]:
+    written: list[dict[str, Any]] = json.loads(text)
+    return tuple(
+        OnsetShift(**{**shift, "shifts_s": tuple(shift["shifts_s"]), "notes": tuple(shift["notes"])})
+        for shift in written
+    )
 
 
 def basis(*parts: object) -> str:

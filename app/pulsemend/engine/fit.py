@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
+from bisect import bisect_right
 from collections.abc import Iterator, Sequence
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend.engine.estimates import Estimates, basis
+from pulsemend.engine.onsets import OnsetShift, measure_onsets
 from pulsemend.engine.reading import read_stored
 from pulsemend.engine.scan import find_pulse_like
 from pulsemend.engine.setup import ExpectedPulse, Setup
@@ -21,6 +23,7 @@ from pulsemend.signal.autocovariance import AutocovarianceSum
 from pulsemend.signal.fills import lags_needed
 from pulsemend.signal.find import align_onset, usual_steepness
 from pulsemend.signal.gaps import merge_spans, window_to_samples
+from pulsemend.units import ms_to_s
 
 WINDOW_S = 2.0
 LEAST_WINDOW_S = 0.1
@@ -30,6 +33,9 @@ offset and autocovariance; reading hours more would not change a fill."""
 
 AFTER_PULSE_S = 0.1
 """Kept free after a pulse's last gap, besides the gap itself, because artifacts outlast it."""
+
+_FOUND_SEARCH_S = (-0.005, 0.005)
+"""The onset of a pulse found in the signal lies this near to where it was found."""
 
 STEEPNESS_S = 0.25
 """Of each window as much is used for the usual steepness."""
@@ -61,10 +67,15 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
     InputError
         No stretch free of pulses is long enough to learn from.
     """
-    windows = quiet_windows(setup)
-    total = len(windows) + len(setup.pulses)
     judged = _judged_channels(setup)
-    sums = _autocovariance_sum(setup)
+    found: tuple[int, ...] = ()
+    if setup.seeks_pulses and judged.size:
+        events = yield from find_pulse_like(recording, setup.used[judged])
+        found = _unmarked(events, setup)
+    expected = (*setup.pulses, *(ExpectedPulse(float(sample), None, PulseState.FOUND) for sample in found))
+    windows = quiet_windows(setup, found)
+    total = len(windows) + len(expected)
+    sums = _autocovariance_sum(setup) if expected else None
     scale_v = setup.scale_v.astype(np.float32)
     short = max(2, round(STEEPNESS_S * setup.facts.rate_hz))
     means: list[NDArray[np.float64]] = []
@@ -85,11 +96,11 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
             sums.add(x)
     usual = usual_steepness(steep) if steep else 0.0
     pulses = []
-    for done, expected in enumerate(setup.pulses):
+    for done, one in enumerate(expected):
         yield Progress(_STAGE, len(windows) + done, total)
-        pulses.append(_align(recording, setup, expected, usual, judged))
+        pulses.append(_align(recording, setup, one, usual, judged))
     unmarked: tuple[int, ...] = ()
-    if setup.pulses_known and not setup.pulses and judged.size:
+    if setup.pulses_known and not setup.seeks_pulses and not setup.pulses and judged.size:
         unmarked = yield from find_pulse_like(recording, setup.used[judged])
     if sums is not None and not sums.n_samples:
         raise InputError(
@@ -97,24 +108,34 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
             where=setup.facts.stem,
             todo='Choose a fill that does not need one, such as pulses.fill = "cubic"',
         )
+    onsets, notes = yield from _measure_onsets(recording, setup)
     return Estimates(
         offset=_offset(setup, means),
         pulses=tuple(sorted(pulses, key=lambda pulse: pulse.sample)),
         usual_steepness=usual,
         autocovariance=None if sums is None else sums.result(),
         unmarked=unmarked,
+        stimulus_onsets=onsets,
+        notes=notes,
         rests_on=basis_of(setup),
     )
 
 
-def quiet_windows(setup: Setup) -> list[tuple[int, int]]:
-    """Windows without pulses and bad stretches, spread evenly over the recording, as sample spans."""
+def quiet_windows(setup: Setup, found: Sequence[int] = ()) -> list[tuple[int, int]]:
+    """Windows without pulses and bad stretches, spread evenly over the recording, as sample spans.
+
+    Parameters
+    ----------
+    setup : Setup
+        Pulses, gaps and bad stretches.
+    found : sequence of int
+        Further pulses, found in the signal.
+    """
     rate = setup.facts.rate_hz
     closed = [*setup.barriers]
-    edges = [window_s for group in setup.groups for window_s in group.windows_s]
-    first = min([setup.search_s[0], *(w[0] for w in edges)])
-    last = max([0.0, *(w[1] for w in edges)]) + max(setup.search_s[1], 0.0) + AFTER_PULSE_S
-    closed += [window_to_samples(nearest_sample(p.sample), (first, last), rate) for p in setup.pulses]
+    around_s = _around_pulse_s(setup)
+    pulses = [*(nearest_sample(pulse.sample) for pulse in setup.pulses), *found]
+    closed += [window_to_samples(sample, around_s, rate) for sample in pulses]
     length, least = round(WINDOW_S * rate), max(2, round(LEAST_WINDOW_S * rate))
     windows: list[tuple[int, int]] = []
     for start, stop in _open_stretches(setup.facts.segments, merge_spans(closed)):
@@ -128,6 +149,40 @@ def quiet_windows(setup: Setup) -> list[tuple[int, int]]:
     # The longest serve best; among equals an even spread.
     chosen = np.linspace(0, len(windows) - 1, MOST_WINDOWS).round().astype(int)
     return [windows[i] for i in chosen]
+
+
+def _around_pulse_s(setup: Setup) -> tuple[float, float]:
+    """Where around a marker its pulse, the pulse's gaps and what outlasts them may be."""
+    edges = [window_s for group in setup.groups for window_s in group.windows_s]
+    first = min([setup.search_s[0], *(w[0] for w in edges)])
+    last = max([0.0, *(w[1] for w in edges)]) + max(setup.search_s[1], 0.0) + AFTER_PULSE_S
+    return first, last
+
+
+def _unmarked(events: Sequence[int], setup: Setup) -> tuple[int, ...]:
+    """Pulse-like events that belong to no known pulse, nor to one another's gaps."""
+    first, last = (round(edge_s * setup.facts.rate_hz) for edge_s in _around_pulse_s(setup))
+    known = sorted(pulse.sample for pulse in setup.pulses)
+    found: list[int] = []
+    for event in events:
+        if found and event - found[-1] <= last:
+            continue
+        place = bisect_right(known, event - first)
+        if place == 0 or event - known[place - 1] > last:
+            found.append(event)
+    return tuple(found)
+
+
+def _measure_onsets(
+    recording: Recording, setup: Setup
+) -> Work[tuple[tuple[OnsetShift, ...], tuple[str, ...]]]:
+    """Measure the onsets that the plan wants; what is left as it was says so."""
+    shifts: list[OnsetShift] = []
+    for rule in setup.onset_rules:
+        markers = [marker for marker in setup.facts.markers if marker.code in rule.codes]
+        search_s = (ms_to_s(rule.search_ms[0]), ms_to_s(rule.search_ms[1]))
+        shifts += yield from measure_onsets(recording, rule.channel, markers, search_s)
+    return tuple(shifts), tuple(note for shift in shifts for note in shift.notes)
 
 
 def _open_stretches(
@@ -152,7 +207,7 @@ def _judged_channels(setup: Setup) -> NDArray[np.intp]:
 
 
 def _autocovariance_sum(setup: Setup) -> AutocovarianceSum | None:
-    if setup.fill is not Fill.COVARIANCE or not setup.pulses:
+    if setup.fill is not Fill.COVARIANCE:
         return None
     spans = [window_to_samples(0, w, setup.facts.rate_hz) for g in setup.groups for w in g.windows_s]
     longest = max(stop - start for start, stop in spans)
@@ -174,29 +229,36 @@ def _align(
     recording: Recording, setup: Setup, expected: ExpectedPulse, usual: float, judged: NDArray[np.intp]
 ) -> Pulse:
     """Find a pulse's onset near its marker; it stays at the marker where the signal shows none."""
-    if expected.placed is not None:
+    search_s = setup.search_s
+    if expected.placed is PulseState.FOUND:
+        search_s = _FOUND_SEARCH_S
+    elif expected.placed is not None:
         return Pulse(nearest_sample(expected.sample), expected.marked, expected.placed)
     near = nearest_sample(expected.sample)
     rate = setup.facts.rate_hz
     lo, hi = next((s for s in setup.facts.segments if s[0] <= near < s[1]), (0, setup.facts.n_samples))
-    first = max(lo, near + math.floor(setup.search_s[0] * rate) - 1)
-    stop = min(hi, near + math.ceil(setup.search_s[1] * rate) + 1)
+    first = max(lo, near + math.floor(search_s[0] * rate) - 1)
+    stop = min(hi, near + math.ceil(search_s[1] * rate) + 1)
     onset = None
     if stop - first >= 2 and judged.size:
         x = read_stored(recording, setup, first, stop)[:, judged] * setup.scale_v[judged]
         onset = align_onset(x, usual)
     if onset is None:
-        return Pulse(min(max(near, 0), setup.facts.n_samples - 1), expected.marked, PulseState.MARKED_ONLY)
-    return Pulse(first + 1 + onset, expected.marked, PulseState.ALIGNED)
+        state = expected.placed or PulseState.MARKED_ONLY
+        return Pulse(min(max(near, 0), setup.facts.n_samples - 1), expected.marked, state)
+    return Pulse(first + 1 + onset, expected.marked, expected.placed or PulseState.ALIGNED)
 
 
 def basis_of(setup: Setup) -> dict[str, str]:
     """Hash, for every estimate, the settings it rests on."""
     source = [setup.facts.parts, setup.facts.n_samples, setup.used, setup.barriers]
-    quiet = [*source, setup.pulses, setup.groups, setup.search_s]
+    quiet = [*source, setup.pulses, setup.groups, setup.search_s, setup.seeks_pulses]
     return {
         "offset": basis(*quiet, setup.removes_offset, setup.fill),
         "pulses": basis(*quiet, setup.bad),
         "usual_steepness": basis(*quiet, setup.bad),
         "autocovariance": basis(*quiet, setup.flank, setup.fill),
+        "stimulus_onsets": basis(
+            *source, setup.onset_rules, setup.facts.markers if setup.onset_rules else ()
+        ),
     }

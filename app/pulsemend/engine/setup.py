@@ -6,7 +6,7 @@ The only place where the plan meets the signal room's numbers; from here on noth
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 
 import numpy as np
@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from pulsemend.errors import PlanError, UnusableChannels
 from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.marks import Marks
-from pulsemend.model.plan import Plan
+from pulsemend.model.plan import OnsetRule, Plan
 from pulsemend.model.recording import Channel, RecordingFacts
 from pulsemend.model.vocabulary import ChannelType, Fill, Precision, PulseState, PulseTimes, Role, Side
 from pulsemend.signal import design
@@ -89,6 +89,10 @@ class Setup:
         In order of time.
     pulses_known : bool
         Whether the plan says where pulses come from; False with ``times = "none"``.
+    seeks_pulses : bool
+        Whether pulses without a marker are looked for in the signal, as slots with ``from_signal`` want.
+    onset_rules : tuple of OnsetRule
+        Codes whose onsets are measured in a sensor's channel.
     barriers : tuple of (int, int)
         Bad stretches.
     antialias, band : arrays or None
@@ -120,6 +124,8 @@ class Setup:
     search_s: tuple[float, float]
     pulses: tuple[ExpectedPulse, ...]
     pulses_known: bool
+    seeks_pulses: bool
+    onset_rules: tuple[OnsetRule, ...]
     barriers: tuple[tuple[int, int], ...]
     antialias: design.Taps | None
     band: design.Taps | None
@@ -184,8 +190,7 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         No channel of a usable type.
     """
     typed = tuple(
-        Channel(c.name, marks.types.get(c.name, c.type), c.scale_v, c.position_m, c.unit)
-        for c in facts.channels
+        replace(channel, type=marks.types.get(channel.name, channel.type)) for channel in facts.channels
     )
     used = np.array([i for i, c in enumerate(typed) if c.type in RECORDED_TYPES], dtype=np.intp)
     if not used.size:
@@ -219,6 +224,9 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         search_s=(ms_to_s(plan.pulses.search_ms[0]), ms_to_s(plan.pulses.search_ms[1])),
         pulses=_expected_pulses(facts, plan, marks),
         pulses_known=plan.pulses.times is not PulseTimes.NONE,
+        seeks_pulses=plan.pulses.times is not PulseTimes.NONE
+        and any(slot.from_signal for slot in plan.trial),
+        onset_rules=plan.onset,
         barriers=tuple((stretch.start, stretch.stop) for stretch in marks.bad_stretches),
         antialias=antialias,
         band=band,
