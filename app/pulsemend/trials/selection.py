@@ -79,7 +79,10 @@ class NumberDifference:
 
     @property
     def notable(self) -> bool:
-        """Whether the interval leaves out 0; by chance alone about 1 of 20 does."""
+        """Whether the interval leaves out 0; by chance alone about 1 of 20 does.
+
+        Of skewed numbers (reaction times) in groups of four or five it is up to 1 of 10.
+        """
         return _leaves_out_zero(self.interval)
 
 
