@@ -180,6 +180,7 @@ def test_struct_with_samples_inside_or_beside(tmp_path: Path, apart: bool) -> No
     assert [(m.sample, m.code) for m in facts.markers] == [(249, "S 1"), (750, "S 2")]
     assert facts.boundaries == (500,)
     assert [channel.name for channel in facts.channels] == list(NAMES)
+    assert [channel.type.value for channel in facts.channels] == ["eeg", "eeg", "eeg", "eog"]
 
 
 def test_missing_second_file(tmp_path: Path) -> None:

@@ -1,4 +1,4 @@
-"""What all readers share: names, channel types by name, and the checks every recording must pass."""
+"""What all readers share: names, and the checks every recording must pass."""
 
 from __future__ import annotations
 
@@ -12,29 +12,19 @@ from numpy.typing import NDArray
 
 from pulsemend.errors import MissingPart, UnusableChannels, UnusableSamples
 from pulsemend.model.recording import FilePart, FloatArray, RecordingFacts
-from pulsemend.model.vocabulary import ChannelType
 
-_BY_NAME = (
-    (re.compile(r"eog", re.IGNORECASE), ChannelType.EOG),
-    (re.compile(r"ecg|ekg", re.IGNORECASE), ChannelType.ECG),
-    (re.compile(r"emg", re.IGNORECASE), ChannelType.EMG),
-)
+_FIRST_PART = re.compile(r"_split-0*1$")
 
 
 def stem_of(path: Path) -> str:
-    """Name of a recording: the file's name without its extension and without a trailing ``_eeg``."""
+    """Name of a recording: its file's name without extension, ``_eeg`` and the number of a first part."""
     name = path.name[: -len(".gz")] if path.name.lower().endswith(".gz") else path.name
-    return Path(name).stem.removesuffix("_eeg")
+    return _FIRST_PART.sub("", Path(name).stem.removesuffix("_eeg"))
 
 
 def power_of_ten(exponent: int) -> float:
     """Ten to a whole power, rounded correctly (repeated division would not be)."""
     return float(f"1e{exponent}")
-
-
-def type_by_name(name: str) -> ChannelType:
-    """Type of a voltage channel whose file says no more than its name."""
-    return next((kind for pattern, kind in _BY_NAME if pattern.search(name)), ChannelType.EEG)
 
 
 def check_names(names: Sequence[str], where: str) -> None:

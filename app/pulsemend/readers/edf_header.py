@@ -21,7 +21,8 @@ from pathlib import Path
 from pulsemend.errors import DamagedRecording, UnusableChannels
 from pulsemend.model.recording import Channel
 from pulsemend.model.vocabulary import ChannelType
-from pulsemend.readers.common import check_names, missing, power_of_ten, type_by_name
+from pulsemend.readers.channel_types import misc_notes, type_of
+from pulsemend.readers.common import check_names, missing, power_of_ten
 
 ANNOTATION_LABELS = ("EDF Annotations", "BDF Annotations")
 _TRIGGER_LABELS = ("status", "trigger", "trig", "stim", "sti 014")
@@ -50,7 +51,9 @@ class Signal:
     @property
     def is_trigger(self) -> bool:
         """Whether its numbers are trigger levels."""
-        return self.label.lower() in _TRIGGER_LABELS
+        if self.label.lower() in _TRIGGER_LABELS:
+            return True
+        return self.unit not in _VOLT_EXPONENTS and type_of(self.label, in_volts=False) is ChannelType.TRIGGER
 
 
 @dataclass(frozen=True)
@@ -172,13 +175,7 @@ def _with_counted_records(header: EdfHeader, size: int) -> EdfHeader:
     if header.left_out:
         rates = (f"{signal.label} ({signal.per_record / header.record_s:g} Hz)" for signal in header.left_out)
         notes.append(f"Left out, because their rate is not {header.rate_hz:g} Hz: {', '.join(rates)}.")
-    others = [
-        f"{channel.name} ({channel.unit})"
-        for channel in header.channels()
-        if channel.type is ChannelType.MISC
-    ]
-    if others:
-        notes.append(f"Not in volts, so taken as misc with the numbers as written: {', '.join(others)}.")
+    notes += misc_notes(header.channels(), _VOLT_EXPONENTS)
     return replace(header, n_records=n_records, notes=tuple(notes))
 
 
@@ -219,10 +216,11 @@ def _channel(signal: Signal) -> Channel:
     name, unit = _name(signal), signal.unit
     if signal.is_trigger:
         return Channel(name, ChannelType.TRIGGER, unit=unit)
+    kind = type_of(name, in_volts=unit in _VOLT_EXPONENTS)
     if unit not in _VOLT_EXPONENTS:
-        return Channel(name, ChannelType.MISC, unit=unit or "no unit")
+        return Channel(name, kind, unit=unit or "no unit")
     scale_v = 1.0 if unit in _CONVERTED else power_of_ten(_VOLT_EXPONENTS[unit])
-    return Channel(name, type_by_name(name), scale_v=scale_v, unit=unit)
+    return Channel(name, kind, scale_v=scale_v, unit=unit)
 
 
 def _name(signal: Signal) -> str:

@@ -12,9 +12,10 @@ from typing import IO, Any, cast
 
 import numpy as np
 
-from pulsemend.errors import DamagedRecording
+from pulsemend.errors import DamagedRecording, UnknownFormat
 from pulsemend.model.recording import Channel
 from pulsemend.model.vocabulary import ChannelType
+from pulsemend.readers.channel_types import LIBRARY_TYPES, type_by_name
 from pulsemend.readers.codes import split_at_slash
 from pulsemend.readers.common import check_names, missing
 from pulsemend.readers.edf_header import EdfHeader
@@ -22,14 +23,8 @@ from pulsemend.readers.tal import Timeline, read_timeline
 
 Found = tuple[float, str, str]
 
-_LIBRARY_TYPES = {
-    "eeg": ChannelType.EEG,
-    "eog": ChannelType.EOG,
-    "ecg": ChannelType.ECG,
-    "emg": ChannelType.EMG,
-    "stim": ChannelType.TRIGGER,
-}
 _FIF_CHANNEL, _FIF_LAST = 203, -1  # kind of a channel's entry; link of the last entry of a file
+_FIF_ROLE, _FIF_FOLLOWS = 115, bytes((0, 0, 0, 1))  # kind and content of the entry that names an earlier part
 _PACKED_CHUNK = 1 << 20
 _JOINS = ("bad boundary", "edge boundary", "boundary")
 _SKIP = "bad_acq_skip"
@@ -151,15 +146,22 @@ def raw_source(
     )
 
 
-def check_fif(path: Path) -> None:
+def check_fif(path: Path, *, first: bool = True) -> None:
     """Follow the entries of a FIF file to its last, and look at the channel names on the way.
 
-    The reader library reads a file that was cut short as if it were whole, and renames channels that share
-    a name.
+    The reader library reads a file that was cut short as if it were whole, renames channels that share a
+    name, and opens a later part of a split recording as if it were all of it.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    first : bool
+        Whether it must not continue another file.
 
     Raises
     ------
-    MissingPart, DamagedRecording, UnusableChannels
+    UnknownFormat, MissingPart, DamagedRecording, UnusableChannels
     """
     names: list[str] = []
     opener = gzip.open if path.name.lower().endswith(".gz") else open
@@ -168,10 +170,16 @@ def check_fif(path: Path) -> None:
             link = 0
             while link != _FIF_LAST:
                 kind, size, link = _fif_entry(file, path)
-                content = file.read(size) if kind == _FIF_CHANNEL else b""
+                content = file.read(size) if kind in (_FIF_CHANNEL, _FIF_ROLE) else b""
+                if first and kind == _FIF_ROLE and content == _FIF_FOLLOWS:
+                    raise UnknownFormat(
+                        "it continues another file of the same recording",
+                        where=path.name,
+                        todo="Open the first file of the recording; the others are found by themselves",
+                    )
                 if kind == _FIF_CHANNEL:
                     names.append(content[80:96].split(b"\0")[0].decode("latin-1"))
-                elif size:
+                elif size and not content:
                     # Reading its last byte shows whether the entry is whole; seeking alone would not.
                     file.seek(size - 1, 1)
                     content = file.read(1)
@@ -210,9 +218,12 @@ def _cut_short(path: Path) -> DamagedRecording:
 def _library_channel(described: Any, kind: str) -> Channel:
     place = np.asarray(described["loc"][:3], dtype=np.float64)
     known = bool(np.isfinite(place).all() and place.any())
-    kind_here = _LIBRARY_TYPES.get(kind, ChannelType.MISC)
+    name = str(described["ch_name"])
+    kind_here = LIBRARY_TYPES.get(kind, ChannelType.MISC)
+    if kind_here is ChannelType.EEG:  # what the library says where a file says nothing
+        kind_here = type_by_name(name)
     return Channel(
-        name=str(described["ch_name"]),
+        name=name,
         type=kind_here,
         position_m=(float(place[0]), float(place[1]), float(place[2])) if known else None,
         unit="no unit" if kind_here in (ChannelType.TRIGGER, ChannelType.MISC) else "V",

@@ -46,6 +46,8 @@ class LibraryRecording:
         elif _is_fif(path):
             check_fif(path)
             raw = self._library()
+            for part in raw.filenames[1:]:
+                check_fif(Path(part), first=False)
             with own_errors(path):
                 source = raw_source(path, raw, "FIF", tuple(map(Path, raw.filenames)))
         else:

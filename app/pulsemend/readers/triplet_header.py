@@ -15,8 +15,8 @@ import numpy as np
 
 from pulsemend.errors import DamagedRecording, MissingPart, UnknownFormat
 from pulsemend.model.recording import Channel
-from pulsemend.model.vocabulary import ChannelType
-from pulsemend.readers.common import check_names, missing, power_of_ten, type_by_name
+from pulsemend.readers.channel_types import misc_notes, type_of
+from pulsemend.readers.common import check_names, missing, power_of_ten
 
 SampleType = np.dtype[np.int16] | np.dtype[np.int32] | np.dtype[np.float32]
 
@@ -232,9 +232,7 @@ def _channels(entries: _Entries) -> tuple[tuple[Channel, ...], tuple[str, ...]]:
     check_names([channel.name for channel in channels], entries.path.name)
     if f"ch{n_channels + 1}" in entries.sections.get("channel infos", {}):
         raise entries.damaged(f"it describes more channels than its NumberOfChannels, {n_channels}")
-    others = [f"{channel.name} ({channel.unit})" for channel in channels if channel.type is ChannelType.MISC]
-    notes = [f"Not in volts, so taken as misc with the numbers as written: {', '.join(others)}."]
-    return channels, tuple(notes if others else ())
+    return channels, misc_notes(channels, _VOLTS)
 
 
 def _channel(entries: _Entries, number: int) -> Channel:
@@ -253,7 +251,7 @@ def _channel(entries: _Entries, number: int) -> Channel:
         raise entries.damaged(f"the resolution of channel {name} is {resolution}")
     return Channel(
         name=name,
-        type=type_by_name(name) if unit in _VOLTS else ChannelType.MISC,
+        type=type_of(name, in_volts=unit in _VOLTS),
         scale_v=per_step * _VOLTS.get(unit, 1.0),
         position_m=_position(entries, number),
         unit=unit,
