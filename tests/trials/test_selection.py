@@ -87,8 +87,8 @@ def test_welch_agrees_with_scipy() -> None:
     rng = np.random.default_rng(1)
     for n_kept, n_left_out in ((2, 2), (2, 40), (17, 5), (100, 300)):
         kept, left_out = rng.normal(1.0, 0.5, n_kept), rng.normal(1.3, 2.0, n_left_out)
-        # Outside reference: scipy's comparison of several means with unequal spreads (Games and Howell), which
-        # for two groups is Welch's interval, reached through the studentised range instead of t.
+        # Outside reference: scipy's comparison of several means with unequal spreads (Games and Howell)
+        # which for two groups is Welch's interval, reached through the studentised range instead of t.
         both = stats.tukey_hsd(kept, left_out, equal_var=False).confidence_interval(0.95)
         low, high = welch_interval(kept.tolist(), left_out.tolist())
         assert (low, high) == pytest.approx(
