@@ -124,7 +124,7 @@ def measure_onsets(
         raise InputError(
             f'no channel "{channel}" to measure onsets in',
             where=facts.stem,
-            todo=f"Name the photodiode's or microphone's channel; there are: {', '.join(names)}",
+            todo=f"Name the photodiode's or microphone's channel; it has {', '.join(names)}",
         )
     by_code: dict[str, list[Marker]] = {}
     for marker in markers:
@@ -139,7 +139,9 @@ def measure_onsets(
             x, first = _window(recording, names.index(channel), marker, search_s, rules)
             at = marker.sample - first
             windows.append(x)
-            searched.append((at + search_s[0] * facts.rate_hz, at + search_s[1] * facts.rate_hz))
+            # Both ends count, whatever the last digit of seconds times rate.
+            first_at, last_at = (at + end_s * facts.rate_hz for end_s in search_s)
+            searched.append((first_at - 1e-6, last_at + 1e-6))
             expected.append(at)
         crossings = find_crossings(windows, searched, facts.rate_hz, rules)
         shifts_s = (crossings.samples - np.array(expected)) / facts.rate_hz
@@ -169,7 +171,7 @@ def shifted(
     Returns
     -------
     tuple of Marker
-        In order of time; between samples where the onset is.
+        In order of time; between samples where a median or a marker is.
 
     Raises
     ------
@@ -247,15 +249,10 @@ def _judged(
     missing = Counter(reason for reason in crossings.reasons if reason is not None)
     n_markers = len(crossings.reasons)
     n_found = n_markers - missing.total()
-    stays = "its markers stay where they are"
+    stays = "these markers stay where they are"
     if shift_s is None:
-        why = (
-            "it never changes by more than it does by itself" if set(missing) <= {NotFound.NO_CHANGE} else ""
-        )
-        why = why or _listed(missing)
-        return (
-            f'{channel} shows no onset at any of the {n_markers} markers "{code}" ({why}): {stays}',
-        ), False
+        none = f'{channel} shows no onset at any of the {n_markers} markers "{code}"'
+        return (f"{none} ({_listed(missing)}): {stays}",), False
     notes = []
     if missing:
         notes.append(
@@ -276,4 +273,4 @@ def _judged(
 
 
 def _listed(missing: Counter[NotFound]) -> str:
-    return ", ".join(f"{count} {reason.value}" for reason, count in missing.most_common())
+    return ", ".join(f"{reason.value} at {count}" for reason, count in missing.most_common())

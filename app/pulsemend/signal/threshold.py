@@ -50,6 +50,8 @@ class CrossingRules:
     least_ratio : float
         The swing must be so many times the range that the channel covers within `rest_s` at rest, so flicker
         may reach a third of the swing to either side.
+    least_ratio_either : float
+        The same where the change goes either way: the envelope that is judged there is steadier at rest.
     rest_s : float
         Rest is judged in two stretches of this length before the search.
     after_s : float
@@ -62,6 +64,7 @@ class CrossingRules:
     high: float = 0.75
     most_rise_s: float = 0.02
     least_ratio: float = 1.5
+    least_ratio_either: float = 3.0
     rest_s: float = 0.05
     after_s: float = 0.05
 
@@ -81,8 +84,7 @@ class Crossings:
     Parameters
     ----------
     samples : array, shape (n_events,)
-        Where each event's level is half-way from rest to active, in samples of its window, decimal; NaN where
-        no onset was found.
+        First sample of each window that is half-way from rest to the active state; NaN without an onset.
     reasons : tuple of NotFound or None
         None for events found.
     polarity : Polarity
@@ -103,12 +105,15 @@ def find_crossings(
     rate_hz: float,
     rules: CrossingRules = DEFAULT_RULES,
 ) -> Crossings:
-    """Find the instant at which each event's level has come half-way from rest to its active state.
+    """Find the first sample at which each event's level is half-way from rest to its active state.
 
-    The direction and the swing are those of all events together: medians over the events that show a
-    change. Rest is each event's own, so that a baseline which drifts from event to event does no harm.
-    A change that goes both ways (a tone; a patch that is white, black, white from event to event) is
-    judged by the envelope of the distance from rest. The first onset within the search counts.
+    Whole samples, as those of a marker, which is the first sample that shows its code: were the edge
+    interpolated, every onset would be half a sample early by comparison.
+
+    Direction and swing are those of all events together: medians over the events that show a change. Rest
+    is each event's own, so that a baseline which drifts from event to event does no harm. A change that
+    goes both ways (a tone; a patch that toggles from event to event) is judged by the envelope of the
+    distance from rest. The first onset within the search counts.
 
     Parameters
     ----------
@@ -150,9 +155,12 @@ def find_crossings(
     found = np.flatnonzero(np.isfinite(samples))
     if not found.size:
         return Crossings(samples, tuple(reasons), Polarity.NONE, swing)
+    # A level that never changes is told from rest by that of the events around it, unless rest itself drifts
+    # so much from event to event that they cannot tell.
+    strayed = np.abs(np.diff(rests[found], 2)) / 2.0
+    least = swing / 2.0 + (3.0 * float(np.median(strayed)) if strayed.size else 0.0)
     for i, reason in enumerate(reasons):
-        # A level that never changes is told from rest by the rest of the events around it.
-        if reason is NotFound.NO_CHANGE and rests[i] - np.interp(i, found, rests[found]) > swing / 2.0:
+        if reason is NotFound.NO_CHANGE and rests[i] - np.interp(i, found, rests[found]) > least:
             reasons[i] = NotFound.ALREADY_ACTIVE
     return Crossings(samples, tuple(reasons), polarity, swing)
 
@@ -232,7 +240,8 @@ def _swing(events: list[_Event], polarity: Polarity, rate_hz: float, rules: Cros
             above = y[event.first :] - np.median(y[event.rest(rate_hz, rules)])
             active.append(np.median(above[above > half]))
     swing = float(np.median(active))
-    return swing if swing > rules.least_ratio * float(np.median(usual_range)) else 0.0
+    ratio = rules.least_ratio_either if polarity is Polarity.EITHER else rules.least_ratio
+    return swing if swing > ratio * float(np.median(usual_range)) else 0.0
 
 
 def _locate(
@@ -248,8 +257,9 @@ def _locate(
     for below, above in _rises(y, rest + rules.low * swing, rest + rules.high * swing):
         if above - below > max(1.0, rules.most_rise_s * rate_hz):
             continue
+        # A mean may pass a threshold before the edge by as much as it takes in, if flicker helps.
         first = max(0, below - reach)
-        at = first + _half_way(course[first : above + reach + 1], level)
+        at = first + _crossed(course[first : above + reach + 1], level)
         if event.search[0] <= at <= event.search[1]:
             return at, rest, None
         is_outside = True
@@ -276,15 +286,10 @@ def _rises(y: NDArray[np.float64], low: float, high: float) -> list[tuple[int, i
     return list(zip(decided[rise].tolist(), decided[rise + 1].tolist(), strict=True))
 
 
-def _half_way(x: NDArray[np.float64], level: float) -> float:
-    """Where a rise crosses a level, in samples of `x`.
+def _crossed(x: NDArray[np.float64], level: float) -> int:
+    """First sample of a rise at or above a level.
 
-    One crossing is interpolated. Where noise crosses more than once, the step that agrees with most of
-    the samples begins after as many samples as are below the level.
+    Where noise crosses more than once, the split that leaves most below the level before it and most
+    above it after: the likeliest place of a step in white noise, and no single sample decides.
     """
-    is_above = x >= level
-    (crossed,) = np.nonzero(~is_above[:-1] & is_above[1:])
-    if crossed.size == 1 and not is_above[0] and is_above[-1]:
-        k = int(crossed[0])
-        return k + float((level - x[k]) / (x[k + 1] - x[k]))
-    return float(np.count_nonzero(~is_above)) - 0.5
+    return int(np.argmin(np.concatenate([[0.0], np.cumsum(x - level)])))
