@@ -13,6 +13,7 @@ from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import basis_of, fit
 from pulsemend.engine.setup import Setup
 from pulsemend.mending.prepare import Decision, bind_checked, decide
+from pulsemend.mending.study_log import read_study_log
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import Plan
 from pulsemend.model.recording import Recording
@@ -75,7 +76,7 @@ def learn(recording: Recording, plan: Plan, marks: Marks, earlier: Learned | Non
         estimates = earlier.estimates
     else:
         estimates = yield from fit(recording, setup)
-    decision = decide(setup, estimates, plan, marks)
+    decision = decide(setup, estimates, plan, marks, read_study_log(recording, plan, marks))
     return Learned(plan, marks, setup, estimates, decision, (*warnings, *decision.warnings))
 
 

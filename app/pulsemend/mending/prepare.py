@@ -9,8 +9,10 @@ from pathlib import Path
 from pulsemend.engine.chain import Chain
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import fit
+from pulsemend.engine.onsets import shifted
 from pulsemend.engine.setup import Setup, bind
-from pulsemend.errors import InputError, NoEpochs
+from pulsemend.errors import InputError, LogError, NoEpochs
+from pulsemend.mending.study_log import NO_LOG, StudyLog, read_study_log
 from pulsemend.model.epochs import Candidate, Trials, nearest_sample
 from pulsemend.model.marks import NO_MARKS, Marks
 from pulsemend.model.marks_file import (
@@ -24,14 +26,18 @@ from pulsemend.model.marks_file import (
 from pulsemend.model.plan import Plan
 from pulsemend.model.plan_checks import check_against_rate, check_channels, check_decided
 from pulsemend.model.plan_file import PlanFile, read_plan
-from pulsemend.model.recording import Channel, Fingerprint, Recording, RecordingFacts
+from pulsemend.model.recording import Channel, Fingerprint, Marker, Recording, RecordingFacts
 from pulsemend.model.vocabulary import PulseState, Role
 from pulsemend.progress import Work
 from pulsemend.readers.fingerprint import fingerprint
 from pulsemend.readers.names import standard_positions
 from pulsemend.readers.opening import open_recording
 from pulsemend.signal.gaps import window_to_samples
+from pulsemend.trials.balance import balanced
+from pulsemend.trials.blocks import with_blocks
 from pulsemend.trials.candidates import GapSpan, Geometry, candidates, set_order, stale_decisions
+from pulsemend.trials.effective import effective_markers
+from pulsemend.trials.logged import Logged, needs_log, with_log
 from pulsemend.trials.matching import match_trials
 
 
@@ -52,6 +58,37 @@ class Request:
 
 
 @dataclass(frozen=True)
+class Decision:
+    """What becomes of every trial and epoch.
+
+    Parameters
+    ----------
+    trials : Trials
+    markers : tuple of Marker
+        That count, moved to measured onsets.
+    logged : Logged or None
+        How the behavioural log was joined; None without a log.
+    log_problem : str
+        Why the log was not joined; empty if it was, or if there is none.
+    geometry : Geometry
+    ledger : tuple of Candidate
+        All candidates, in order of trial, rule and piece.
+    kept : tuple of Candidate
+        In the order of the set.
+    warnings : tuple of str
+    """
+
+    trials: Trials
+    markers: tuple[Marker, ...]
+    logged: Logged | None
+    log_problem: str
+    geometry: Geometry
+    ledger: tuple[Candidate, ...]
+    kept: tuple[Candidate, ...]
+    warnings: tuple[str, ...]
+
+
+@dataclass(frozen=True)
 class Prepared:
     """A recording, opened, learned and cut on paper: what `mend` writes and `--dry-run` shows.
 
@@ -66,12 +103,7 @@ class Prepared:
     fingerprint : Fingerprint
     estimates : Estimates
     chain : Chain
-    trials : Trials
-    geometry : Geometry
-    ledger : tuple of Candidate
-        All candidates, in order of trial, rule and piece.
-    kept : tuple of Candidate
-        In the order of the set.
+    decision : Decision
     warnings : tuple of str
         One sentence each.
     """
@@ -83,11 +115,23 @@ class Prepared:
     fingerprint: Fingerprint
     estimates: Estimates
     chain: Chain
-    trials: Trials
-    geometry: Geometry
-    ledger: tuple[Candidate, ...]
-    kept: tuple[Candidate, ...]
+    decision: Decision
     warnings: tuple[str, ...]
+
+    @property
+    def trials(self) -> Trials:
+        """The recording's trials."""
+        return self.decision.trials
+
+    @property
+    def ledger(self) -> tuple[Candidate, ...]:
+        """All candidates, in order of trial, rule and piece."""
+        return self.decision.ledger
+
+    @property
+    def kept(self) -> tuple[Candidate, ...]:
+        """Kept candidates, in the order of the set."""
+        return self.decision.kept
 
     @property
     def plan(self) -> Plan:
@@ -153,7 +197,8 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
     identified = replace(marks, fingerprint=identity)
     estimates = yield from fit(recording, setup)
     need_known_pulses(estimates, facts)
-    decision = decide(setup, estimates, plan, marks)
+    decision = decide(setup, estimates, plan, marks, read_study_log(recording, plan, marks))
+    need_log(decision, plan)
     return Prepared(
         recording=recording,
         plan_file=plan_file,
@@ -162,10 +207,7 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
         fingerprint=identity,
         estimates=estimates,
         chain=Chain(recording, setup, estimates),
-        trials=decision.trials,
-        geometry=decision.geometry,
-        ledger=decision.ledger,
-        kept=decision.kept,
+        decision=decision,
         warnings=(*plan_file.warnings, *warnings, *decision.warnings),
     )
 
@@ -186,44 +228,76 @@ def bind_checked(facts: RecordingFacts, plan: Plan, marks: Marks) -> tuple[Setup
     check_decided(plan)
     check_against_rate(plan, facts.rate_hz)
     warnings = check_channels(plan, marks, [channel.name for channel in facts.channels])
-    return bind(with_positions(facts), plan, marks), warnings
+    counting = effective_markers(facts.markers, marks, facts.rate_hz)
+    setup = bind(replace(with_positions(facts), markers=counting.markers), plan, marks)
+    return setup, (*warnings, *counting.notes)
 
 
-@dataclass(frozen=True)
-class Decision:
-    """What becomes of every trial and epoch.
+def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: StudyLog = NO_LOG) -> Decision:
+    """Match the trials, join the log and decide every candidate's fate; touches no sample.
 
-    Parameters
-    ----------
-    trials : Trials
-    geometry : Geometry
-    ledger : tuple of Candidate
-        All candidates, in order of trial, rule and piece.
-    kept : tuple of Candidate
-        In the order of the set.
-    warnings : tuple of str
+    Raises
+    ------
+    PlanError
+        The limits of the slots contradict each other.
     """
-
-    trials: Trials
-    geometry: Geometry
-    ledger: tuple[Candidate, ...]
-    kept: tuple[Candidate, ...]
-    warnings: tuple[str, ...]
-
-
-def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks) -> Decision:
-    """Match the trials and decide every candidate's fate; touches no sample."""
     facts = setup.facts
-    trials = match_trials(facts.markers, plan, facts.rate_hz, marks)
+    markers = facts.markers
+    for rule in plan.onset:
+        own = [shift for shift in estimates.stimulus_onsets if shift.code in rule.codes]
+        markers = shifted(markers, own, rule.use, facts.rate_hz)
+    found = [pulse.sample for pulse in estimates.pulses if pulse.state is PulseState.FOUND]
+    trials = match_trials(markers, plan, facts.rate_hz, marks, found)
+    logged = None
+    if log.table is not None:
+        logged = with_log(trials.trials, log.table, plan, marks, facts.rate_hz)
+        trials = replace(trials, trials=logged.trials)
+    in_blocks = with_blocks(trials.trials, markers, plan, facts.rate_hz)
+    trials = replace(trials, trials=in_blocks, run=marks.run or run_of(facts.stem))
     geometry = lay_geometry(setup, estimates, marks)
-    ledger = candidates(trials, plan, geometry)
+    matched = balanced(
+        candidates(trials, plan, geometry), plan.balance.by, plan.balance.choose, plan.balance.seed
+    )
+    ledger = matched.candidates
+    problem = log.problem or (logged.problem if logged else "")
     warnings = [
         *_trial_warnings(trials, facts),
+        *([f"the log was not joined: {problem}"] if problem else []),
+        *_log_notes(logged, log),
         *stale_decisions(trials, plan, geometry),
         *_stale_pulses(facts, plan, marks),
+        *matched.warnings,
         *estimates.notes,
     ]
-    return Decision(trials, geometry, ledger, set_order(ledger, geometry), tuple(warnings))
+    return Decision(
+        trials=trials,
+        markers=markers,
+        logged=logged,
+        log_problem=problem,
+        geometry=geometry,
+        ledger=ledger,
+        kept=set_order(ledger, geometry),
+        warnings=tuple(warnings),
+    )
+
+
+def run_of(stem: str) -> str:
+    """Give the label of a run that a file's name carries (``run-02``), or nothing."""
+    return next((part.removeprefix("run-") for part in stem.split("_") if part.startswith("run-")), "")
+
+
+def need_log(decision: Decision, plan: Plan) -> None:
+    """Refuse a recording whose log is needed for labels, balance or practice, and was not joined.
+
+    Raises
+    ------
+    LogError
+    """
+    if decision.log_problem and needs_log(plan):
+        raise LogError(
+            f"{decision.log_problem.rstrip('.')}. The plan takes labels from the log: nothing was joined",
+            todo="Name the right log in the marks (log.file), or take its columns out of the plan",
+        )
 
 
 def need_known_pulses(estimates: Estimates, facts: RecordingFacts) -> None:
@@ -317,6 +391,16 @@ def _trial_warnings(trials: Trials, facts: RecordingFacts) -> list[str]:
             f"{first.sample / facts.rate_hz:.3f} s"
         )
     return lines
+
+
+def _log_notes(logged: Logged | None, log: StudyLog) -> list[str]:
+    """Say what of a log was joined and what was not."""
+    if logged is None or logged.join is None or logged.problem or log.table is None:
+        return []
+    return [
+        *(f"{log.table.name}: {note}" for note in log.table.notes),
+        f"{log.table.name}: {logged.join.words}",
+    ]
 
 
 def _stale_pulses(facts: RecordingFacts, plan: Plan, marks: Marks) -> list[str]:

@@ -113,13 +113,15 @@ class Trials:
     """All trials of a recording, and what is left over.
 
     ``extra`` holds markers with a trial role that belong to no trial, ``unnamed`` counts codes the plan does
-    not name, ``absent`` lists codes the plan names and the recording lacks.
+    not name, ``absent`` lists codes the plan names and the recording lacks. ``run`` is the label of this run
+    where several files belong together, or empty.
     """
 
     trials: tuple[Trial, ...]
     extra: tuple[Marker, ...] = ()
     unnamed: Mapping[str, int] = field(default_factory=dict)
     absent: tuple[str, ...] = ()
+    run: str = ""
 
 
 @dataclass(frozen=True)

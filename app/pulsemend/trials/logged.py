@@ -1,0 +1,175 @@
+"""The behavioural log of one recording, joined with its trials as the plan says."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
+
+from pulsemend.errors import LogError
+from pulsemend.model.epochs import Trial
+from pulsemend.model.label_columns import LOG, Meaning, source_of
+from pulsemend.model.log import LogJoin, LogTable, LogTimes, TrialTime
+from pulsemend.model.marks import Marks
+from pulsemend.model.plan import Plan
+from pulsemend.model.trial_kinds import variants
+from pulsemend.trials.log_columns import column_counts, column_times_s
+from pulsemend.trials.log_join import join_log
+
+
+@dataclass(frozen=True)
+class Logged:
+    """Trials with their rows of the log.
+
+    Parameters
+    ----------
+    trials : tuple of Trial
+    join : LogJoin or None
+        None where the log could not be used at all.
+    rows : tuple of int
+        The log's rows, from 1, that the join's places stand for: rows excluded by hand are not among them.
+    units : tuple of TrialTime
+        What rows could belong to; the join's other places.
+    problem : str
+        Why nothing was joined; empty if rows were.
+    """
+
+    trials: tuple[Trial, ...]
+    join: LogJoin | None
+    rows: tuple[int, ...]
+    units: tuple[TrialTime, ...]
+    problem: str = ""
+
+
+def needs_log(plan: Plan) -> bool:
+    """Tell whether anything of the set rests on the log: a label, the balance, or what counts as practice."""
+    return bool(plan.log.file) and bool(_columns_used(plan) or plan.blocks.practice_column)
+
+
+def with_log(trials: Sequence[Trial], table: LogTable, plan: Plan, marks: Marks, rate_hz: float) -> Logged:
+    """Join a log.
+
+    Parameters
+    ----------
+    trials : sequence of Trial
+        In order of time.
+    table : LogTable
+        The log.
+    plan : Plan
+        Its ``[log]``.
+    marks : Marks
+        Rows excluded by hand.
+    rate_hz : float
+        Recorded rate.
+
+    Returns
+    -------
+    Logged
+        Also where nothing could be joined, with the reason.
+    """
+    pairs = list(_units(trials, plan, rate_hz))
+    units = tuple(unit for _, _, unit in pairs)
+    rows = tuple(row for row in range(1, len(table.rows) + 1) if row not in marks.log_rows_excluded)
+    try:
+        _check_columns(table, plan)
+        log = _log_times(table, plan, rows)
+    except LogError as error:
+        return Logged(tuple(trials), None, rows, units, str(error))
+    join = join_log(log, units, per_trial=max(1, len(plan.log.slots)))
+    if not join.pairs:
+        return Logged(tuple(trials), join, rows, units, f"{table.name}: {join.words}")
+    values: dict[int, dict[str, str]] = {}
+    columns = _kept_columns(table, plan)
+    for row, unit in join.pairs:
+        place, slot, _ = pairs[unit]
+        before = f"{slot}." if len(plan.log.slots) > 1 else ""
+        cells = dict(zip(table.columns, table.rows[rows[row] - 1], strict=True))
+        values.setdefault(place, {}).update(
+            {f"{before}{column}": _plain(cells[column], column, table) for column in columns}
+        )
+    joined = tuple(replace(trial, log=values.get(place, {})) for place, trial in enumerate(trials))
+    return Logged(joined, join, rows, units)
+
+
+def _units(trials: Sequence[Trial], plan: Plan, rate_hz: float) -> Iterator[tuple[int, str, TrialTime]]:
+    """Everything a row can belong to, with the place of its trial and its slot."""
+    slots_of: dict[str, set[str]] = {}
+    for way in variants(plan):
+        slots_of.setdefault(way.kind, set()).update(slot.slot for slot in way.slots)
+    several = len(plan.log.slots) > 1
+    for place, trial in enumerate(trials):
+        for slot in plan.log.slots:
+            if slot not in slots_of.get(trial.kind, ()):
+                continue
+            marker = trial.markers.get(slot)
+            name = f"trial {trial.number} {slot}" if several else f"trial {trial.number}"
+            time_s = None if marker is None else marker.sample / rate_hz
+            yield place, slot, TrialTime(name, time_s, _recorded_number(trial, plan))
+
+
+def _recorded_number(trial: Trial, plan: Plan) -> int | None:
+    slot, _, label = plan.log.recorded_trial.partition(".")
+    marker = trial.markers.get(slot)
+    text = "" if marker is None else plan.labels_of(marker.code).get(label, "")
+    return int(text) if text.isdecimal() else None
+
+
+def _log_times(table: LogTable, plan: Plan, rows: Sequence[int]) -> LogTimes:
+    times = column_times_s(table, plan.log.time, plan.log.unit.value) if plan.log.time else ()
+    numbers = column_counts(table, plan.log.trial) if plan.log.trial else ()
+    return LogTimes(
+        name=table.name,
+        times_s=tuple(times[row - 1] if times else None for row in rows),
+        numbers=tuple(numbers[row - 1] for row in rows) if numbers and plan.log.recorded_trial else (),
+    )
+
+
+def _kept_columns(table: LogTable, plan: Plan) -> tuple[str, ...]:
+    if plan.log.columns:
+        needed = dict.fromkeys([*plan.log.columns, *plan.stimulation.columns.values()])
+        if plan.blocks.practice_column:
+            needed[plan.blocks.practice_column] = None
+        return tuple(needed)
+    return tuple(column for column in table.columns if column not in (plan.log.time, plan.log.trial))
+
+
+def _plain(text: str, column: str, table: LogTable) -> str:
+    """Make a cell a label: numbers with a decimal point, as everything else in a set has them."""
+    return text.replace(",", ".") if column in table.decimal_comma else text
+
+
+def _columns_used(plan: Plan) -> dict[str, None]:
+    """Columns of the log that labels, balance and facts are made from, without what stands before them."""
+    sources = [source for label in plan.labels for source in label.sources]
+    sources += [
+        source_of(plan, text).what
+        for rule in plan.epochs.rule
+        for text in rule.labels.values()
+        if source_of(plan, text).meaning is not Meaning.TEXT
+    ]
+    sources += plan.balance.by
+    used = [source.removeprefix(LOG) for source in sources if source.startswith(LOG)]
+    if len(plan.log.slots) > 1:
+        # Rows belong to slots, and the slot's name stands before the column's.
+        used = [name.partition(".")[2] if name.partition(".")[0] in plan.log.slots else name for name in used]
+    return dict.fromkeys([*used, *plan.stimulation.columns.values()])
+
+
+def _check_columns(table: LogTable, plan: Plan) -> None:
+    needed = dict.fromkeys([*plan.log.columns, *_columns_used(plan)])
+    if plan.blocks.practice_column:
+        needed[plan.blocks.practice_column] = None
+    missing = [column for column in needed if column not in table.columns]
+    if missing:
+        raise LogError(
+            f"it has no column {', '.join(missing)}, which the plan names",
+            where=table.name,
+            todo=f"Its columns are: {', '.join(table.columns)}",
+        )
+    kept = _kept_columns(table, plan)
+    unusable = [column for column in _columns_used(plan) if column not in kept]
+    if unusable:
+        raise LogError(
+            f"column {', '.join(unusable)} is used as a label, but log.columns leaves it out",
+            where=table.name,
+            todo="Name it under log.columns",
+        )
