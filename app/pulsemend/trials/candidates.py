@@ -9,12 +9,12 @@ from bisect import bisect_left, bisect_right
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
-from pulsemend.model.epochs import NOT_AVAILABLE, Candidate, Trial, Trials, nearest_sample
-from pulsemend.model.label_columns import rule_columns, slot_columns
+from pulsemend.model.epochs import Candidate, Trial, Trials, nearest_sample
 from pulsemend.model.marks import BadStretch, EpochKey
 from pulsemend.model.plan import EpochRule, Plan
 from pulsemend.model.trial_kinds import expanded_slots, variants
 from pulsemend.model.vocabulary import Fate, PulseRule, Role
+from pulsemend.trials.labels import TrialLabels
 from pulsemend.units import ms_to_s
 
 # Sums of seconds times rates are whole only within rounding; a guard must then say "touches".
@@ -98,7 +98,7 @@ class Geometry:
         return anchor + round(start_s * self.output_hz) * self.step
 
 
-def candidates(trials: Trials, plan: Plan, geometry: Geometry) -> tuple[Candidate, ...]:
+def candidates(trials: Trials, plan: Plan, geometry: Geometry, run: str = "") -> tuple[Candidate, ...]:
     """All epochs that a plan asks for, kept or left out.
 
     Parameters
@@ -109,6 +109,8 @@ def candidates(trials: Trials, plan: Plan, geometry: Geometry) -> tuple[Candidat
         Its rules; starts and length are whole numbers of output samples (`check_against_rate`).
     geometry : Geometry
         Gaps, breaks and decisions by hand.
+    run : str
+        Label of the run; empty: none.
 
     Returns
     -------
@@ -118,7 +120,7 @@ def candidates(trials: Trials, plan: Plan, geometry: Geometry) -> tuple[Candidat
         incomplete, trial doubtful, no anchor, outside the recording, across a break, not before its stop,
         touches a gap, touches a bad stretch, left out by hand.
     """
-    cutter = _Cutter(plan, geometry)
+    cutter = _Cutter(plan, geometry, TrialLabels(plan, trials.trials, run))
     return tuple(
         cutter.candidate(trial, index, piece)
         for trial in trials.trials
@@ -197,9 +199,10 @@ class _Span:
 
 
 class _Cutter:
-    def __init__(self, plan: Plan, geometry: Geometry) -> None:
+    def __init__(self, plan: Plan, geometry: Geometry, labels: TrialLabels) -> None:
         self.plan = plan
         self.geometry = geometry
+        self.labels = labels
         self.length = round(plan.epochs.length_s * geometry.output_hz)
         self.gaps = sorted(geometry.gaps)
         self.gap_starts = [gap.start for gap in self.gaps]
@@ -211,8 +214,6 @@ class _Cutter:
         self.slots_of: dict[str, set[str]] = {}  # by kind, of all numbers of repeats
         for way in variants(plan):
             self.slots_of.setdefault(way.kind, set()).update(slot.slot for slot in way.slots)
-        self.slot_columns = slot_columns(plan)
-        self.rule_columns = rule_columns(plan)
         self.excluded = set(geometry.trials_excluded)
         self.left_out = set(geometry.epochs_left_out)
 
@@ -235,7 +236,7 @@ class _Cutter:
             start_s=start_s,
             fate=fate,
             detail=detail,
-            labels=self.labels(trial, rule),
+            labels=self.labels.of(trial, rule),
         )
 
     def instant(self, trial: Trial, slot: str) -> float | None:
@@ -319,17 +320,6 @@ class _Cutter:
                     f"{kind}{self.seconds(stretch.start)} to {self.seconds(stretch.stop)}",
                 )
         return None
-
-    def labels(self, trial: Trial, rule: EpochRule) -> dict[str, str]:
-        """Label columns: of every slot's marker, then of the rules; the same for every candidate."""
-        found = dict.fromkeys(self.slot_columns, NOT_AVAILABLE)
-        for slot, marker in trial.markers.items():
-            for label, value in self.plan.labels_of(marker.code).items():
-                found[f"{slot}.{label}"] = value
-        for column in self.rule_columns:
-            source = rule.labels.get(column, "")
-            found[column] = found.get(source, NOT_AVAILABLE)
-        return found
 
     def samples(self, milliseconds: float) -> float:
         return ms_to_s(milliseconds) * self.geometry.recorded_hz
