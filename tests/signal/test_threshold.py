@@ -88,7 +88,7 @@ DIODES = {
 }
 
 
-@pytest.mark.parametrize("rate_hz", RATES)
+@pytest.mark.parametrize("rate_hz", [500.0, 1000.0, 25_000.0])
 @pytest.mark.parametrize("sign", [1, -1])
 @pytest.mark.parametrize("rise_s", [0.0, 0.002, 0.008])
 @pytest.mark.parametrize("kind", DIODES)
@@ -102,8 +102,7 @@ def test_diode_is_found_within_half_its_rise(kind: str, rise_s: float, sign: int
     assert {reason for reason in crossings.reasons if reason} == {NotFound.NO_CHANGE}
     error = (crossings.samples - truth)[np.isfinite(truth)]
     bound = rise_s * rate_hz / 2.0 + 1.0
-    assert abs(np.median(error)) <= bound
-    assert np.mean(np.abs(error) <= bound) >= 0.95  # noise of its own may move the others
+    assert np.abs(error).max() <= bound
     # Rounding up to a sample, and what moves the crossing of a slow rise to and fro: flicker and noise by
     # their share of the rise, drift by what it makes of 50 ms between rest and onset. Sampling error of an
     # sd of 57: 10 %.
@@ -218,7 +217,7 @@ def test_windows_that_the_recording_cuts_short() -> None:
     found = find_crossings(windows, searched, rate_hz)
     expected = int(np.argmax(t >= 0.032))
     assert found.samples[:4].tolist() == [expected, expected - 100, expected - 130, expected]
-    assert found.reasons[4:] == (NotFound.NO_CHANGE, NotFound.NOT_RECORDED, NotFound.NOT_RECORDED)
+    assert found.reasons[4:] == (NotFound.NOT_RECORDED,) * 3
     assert find_crossings([], [], rate_hz).polarity is Polarity.NONE
     with pytest.raises(ValueError, match="1 windows, but 0 searches"):
         find_crossings([x], [], rate_hz)
@@ -283,7 +282,7 @@ def alpha(rng: np.random.Generator, t: Floats) -> Floats:
     return np.sin(2 * np.pi * 10 * t + rng.uniform(0, 6.3)) + 0.1 * noise(rng, t)
 
 
-@pytest.mark.parametrize("rate_hz", RATES)
+@pytest.mark.parametrize("rate_hz", [500.0, 1000.0, 25_000.0])
 @pytest.mark.parametrize("n_events", [1, 4, 60])
 @pytest.mark.parametrize("course", [noise, flicker_alone, drift_alone, alpha])
 def test_nothing_is_found_where_nothing_happens(

@@ -30,8 +30,9 @@ LEAST_SHARE_FOUND = 0.5
 """A code of which fewer markers show an onset is left where it is: that many are not missing by accident."""
 
 MOST_SPREAD_S = 0.010
-"""A code whose onsets spread more is left where it is. A marker that ignores a screen's refresh of 60 Hz
-spreads by 4.8 ms; onsets found by chance in 100 ms of search spread by 29 ms."""
+MOST_SPREAD_SHARE = 0.2
+"""A code whose onsets spread more is left where it is; the share is that of the search. A marker that ignores
+a screen's refresh of 60 Hz spreads by 4.8 ms; onsets found by chance spread by 0.29 of the search."""
 
 
 @dataclass(frozen=True)
@@ -56,8 +57,8 @@ class OnsetShift:
     shifts_s : tuple of float or None
         One per marker of the code, in the order given; None where no onset was found.
     is_used : bool
-        Whether markers move by it: an onset at half of the markers at least, and no larger spread than
-        `MOST_SPREAD_S`.
+        Whether markers move by it: an onset at half of the markers at least, and a spread of at most
+        `MOST_SPREAD_S` and `MOST_SPREAD_SHARE` of the search.
     notes : tuple of str
         What was found missing and what follows, one sentence each.
     """
@@ -145,7 +146,8 @@ def measure_onsets(
             expected.append(at)
         crossings = find_crossings(windows, searched, facts.rate_hz, rules)
         shifts_s = (crossings.samples - np.array(expected)) / facts.rate_hz
-        shifts.append(_summary(channel, code, shifts_s, crossings))
+        shift = _summary(channel, code, shifts_s, crossings)
+        shifts.append(_judged(shift, crossings, search_s))
     return tuple(shifts)
 
 
@@ -194,7 +196,8 @@ def shifted(
         if marker.code in own:
             by_s = own[marker.code][met[marker.code]]
             met[marker.code] += 1
-            moved.append(replace(marker, sample=marker.sample + by_s * rate_hz))
+            # To a millionth of a sample: seconds times rate would leave whole samples almost whole.
+            moved.append(replace(marker, sample=round(marker.sample + by_s * rate_hz, 6)))
         else:
             moved.append(marker)
     return tuple(sorted(moved, key=lambda marker: marker.sample))
@@ -223,7 +226,6 @@ def _summary(channel: str, code: str, shifts_s: NDArray[np.float64], crossings: 
     n_found, n_markers = len(found_s), len(shifts_s)
     shift_s = statistics.median(found_s) if found_s else None
     spread_s = statistics.stdev(found_s) if n_found > 1 else None
-    notes, is_used = _judged(channel, code, crossings, shift_s, spread_s)
     return OnsetShift(
         channel=channel,
         code=code,
@@ -237,39 +239,38 @@ def _summary(channel: str, code: str, shifts_s: NDArray[np.float64], crossings: 
         shifts_s=tuple(
             one if found else None for one, found in zip(shifts_s.tolist(), is_found.tolist(), strict=True)
         ),
-        is_used=is_used,
-        notes=notes,
+        is_used=False,
     )
 
 
-def _judged(
-    channel: str, code: str, crossings: Crossings, shift_s: float | None, spread_s: float | None
-) -> tuple[tuple[str, ...], bool]:
-    """Say in words what is missing, and whether the code's markers move."""
+def _judged(shift: OnsetShift, crossings: Crossings, search_s: tuple[float, float]) -> OnsetShift:
+    """Say in words what is missing, and decide whether the code's markers move."""
     missing = Counter(reason for reason in crossings.reasons if reason is not None)
-    n_markers = len(crossings.reasons)
-    n_found = n_markers - missing.total()
+    whose = f'the {shift.n_markers} markers "{shift.code}"'
     stays = "these markers stay where they are"
-    if shift_s is None:
-        none = f'{channel} shows no onset at any of the {n_markers} markers "{code}"'
-        return (f"{none} ({_listed(missing)}): {stays}",), False
-    notes = []
+    if not shift.n_found:
+        note = f"{shift.channel} shows no onset at any of {whose} ({_listed(missing)}): {stays}"
+        return replace(shift, notes=(note,))
+    notes: list[str] = []
     if missing:
         notes.append(
-            f'{channel} shows an onset at {n_found} of the {n_markers} markers "{code}" '
-            f"(the others: {_listed(missing)})"
+            f"{shift.channel} shows an onset at {shift.n_found} of {whose} (the others: {_listed(missing)})"
         )
-    if n_found < LEAST_SHARE_FOUND * n_markers:
-        return (*notes, f'onsets were found at fewer than half of the markers "{code}": {stays}'), False
-    if spread_s is not None and spread_s > MOST_SPREAD_S:
-        wide = (
-            f'the onsets of "{code}" spread by {s_to_ms(spread_s):.1f} ms, '
-            f"more than {s_to_ms(MOST_SPREAD_S):.0f} ms: {stays}"
+    if shift.n_found < LEAST_SHARE_FOUND * shift.n_markers:
+        note = f'onsets were found at fewer than half of the markers "{shift.code}": {stays}'
+        return replace(shift, notes=(*notes, note))
+    most_s = min(MOST_SPREAD_S, MOST_SPREAD_SHARE * (search_s[1] - search_s[0]))
+    if shift.spread_s is not None and shift.spread_s > most_s:
+        note = (
+            f'the onsets of "{shift.code}" spread by {s_to_ms(shift.spread_s):.1f} ms, '
+            f"more than {s_to_ms(most_s):g} ms: {stays}"
         )
-        return (*notes, wide), False
+        return replace(shift, notes=(*notes, note))
     if crossings.polarity is Polarity.EITHER:
-        notes.append(f'{channel} changes either way at "{code}": a sound, or a patch that toggles')
-    return tuple(notes), True
+        notes.append(
+            f'{shift.channel} changes either way at "{shift.code}": a sound, or a patch that toggles'
+        )
+    return replace(shift, is_used=True, notes=tuple(notes))
 
 
 def _listed(missing: Counter[NotFound]) -> str:

@@ -23,7 +23,7 @@ class Polarity(StrEnum):
 
 
 class NotFound(StrEnum):
-    """Why an event shows no onset."""
+    """Why an event shows no onset; not recorded: no change in what there is of the search."""
 
     NO_CHANGE = "no change"
     ALREADY_ACTIVE = "already active"
@@ -176,7 +176,13 @@ class _Event:
         return max(0, math.ceil(self.search[0]))
 
     @property
+    def is_cut(self) -> bool:
+        """Whether part of the search is not in the window."""
+        return math.ceil(self.search[0]) < 0 or math.floor(self.search[1]) >= len(self.x)
+
+    @property
     def is_recorded(self) -> bool:
+        """Whether anything of the search is in the window."""
         return min(len(self.x) - 1, math.floor(self.search[1])) > self.first
 
     def rest(self, rate_hz: float, rules: CrossingRules) -> slice:
@@ -241,7 +247,7 @@ def _swing(events: list[_Event], polarity: Polarity, rate_hz: float, rules: Cros
             active.append(np.median(above[above > half]))
     swing = float(np.median(active))
     ratio = rules.least_ratio_either if polarity is Polarity.EITHER else rules.least_ratio
-    return swing if swing > ratio * float(np.median(usual_range)) else 0.0
+    return swing if swing > ratio * float(np.quantile(usual_range, 0.75)) else 0.0
 
 
 def _locate(
@@ -265,8 +271,9 @@ def _locate(
         is_outside = True
     if is_outside:
         return math.nan, rest, NotFound.OUTSIDE_SEARCH
-    was_active = y[event.first] > level
-    return math.nan, rest, NotFound.ALREADY_ACTIVE if was_active else NotFound.NO_CHANGE
+    if y[event.first] > level:
+        return math.nan, rest, NotFound.ALREADY_ACTIVE
+    return math.nan, rest, NotFound.NOT_RECORDED if event.is_cut else NotFound.NO_CHANGE
 
 
 def _own_rest(y: NDArray[np.float64], swing: float) -> float:
