@@ -1,4 +1,4 @@
-"""The only place where volts meet microvolts and seconds meet milliseconds."""
+"""The only place where volts meet microvolts, seconds milliseconds and ohms kiloohms."""
 
 from __future__ import annotations
 
@@ -11,6 +11,7 @@ Number = TypeVar("Number", float, NDArray[np.float32], NDArray[np.float64])
 
 UV_PER_V = 1e6
 MS_PER_S = 1e3
+_OHM_PER_KOHM = 1e3
 
 
 def v_to_uv(volts: Number) -> Number:
@@ -31,3 +32,8 @@ def s_to_ms(seconds: Number) -> Number:
 def ms_to_s(milliseconds: Number) -> Number:
     """Milliseconds to seconds."""
     return milliseconds / MS_PER_S
+
+
+def ohm_to_kohm(ohms: Number) -> Number:
+    """Ohms to kiloohms."""
+    return ohms / _OHM_PER_KOHM

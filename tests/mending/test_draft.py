@@ -11,7 +11,8 @@ import numpy as np
 import pytest
 
 from pulsemend.errors import PlanError, UsageError
-from pulsemend.mending.draft import NO_EVIDENCE, draft_plan, pulse_evidence, write_draft
+from pulsemend.mending.draft import draft_plan, write_draft
+from pulsemend.mending.pulse_evidence import NO_EVIDENCE, pulse_evidence
 from pulsemend.model.plan import Plan
 from pulsemend.model.plan_checks import check_against_rate, check_decided
 from pulsemend.model.plan_file import parse_plan, update_text

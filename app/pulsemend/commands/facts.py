@@ -1,34 +1,56 @@
-"""`pulsemend facts RECORDING [--json]`: what is in a recording."""
+"""`pulsemend facts RECORDING [--plan PLAN] [--events TABLE] [--json]`: what is in a recording."""
 
 from __future__ import annotations
 
 import argparse
+from collections.abc import Sequence
 from dataclasses import asdict
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from pulsemend.commands import output
+from pulsemend.errors import UsageError
+from pulsemend.units import ohm_to_kohm
 
 if TYPE_CHECKING:
     from pulsemend.mending.facts import RecordingSummary
+    from pulsemend.model.epochs import Trial
+
+_MOST_LISTED = 20
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's arguments."""
     parser.add_argument("recording", type=Path, metavar="RECORDING", help="recording to look at")
+    parser.add_argument(
+        "--plan", type=Path, metavar="PLAN", help="judge markers and trials by this plan, too"
+    )
+    parser.add_argument(
+        "--marks",
+        type=Path,
+        metavar="MARKS",
+        help="marks of this recording (default: marks/STEM.marks.toml beside the plan, if there)",
+    )
+    parser.add_argument("--events", type=Path, metavar="TABLE", help="write all markers as a table (TSV)")
     parser.add_argument("--json", action="store_true", help="one JSON object on standard output")
 
 
 def run(args: argparse.Namespace) -> int:
-    """Print the facts."""
-    from pulsemend.mending.facts import summarise
+    """Print the facts, and write the table of events if one is wanted."""
+    from pulsemend.mending.facts import summarise, write_events
 
-    summary = output.show(summarise(args.recording), json_mode=args.json)
+    if args.marks is not None and args.plan is None:
+        raise UsageError("--marks needs --plan", todo="Name the plan that these marks belong to")
+    summary = output.show(summarise(args.recording, args.plan, args.marks), json_mode=args.json)
+    if args.events is not None:
+        write_events(summary, args.events)
     if args.json:
         output.say_json(_as_json(summary))
     else:
-        for line in _lines(summary):
+        for line in [*_lines(summary), *_fault_lines(summary), *_role_lines(summary), *_trial_lines(summary)]:
             output.say(line)
+        if args.events is not None:
+            output.say(f"\nwritten: {args.events}")
     return 0
 
 
@@ -45,7 +67,10 @@ def _lines(summary: RecordingSummary) -> list[str]:
         lines.append(f"  breaks: {at}")
     found = len(summary.pulses_found)
     lines.append(f"  pulse-like events in the signal: {found or 'none'}")
-    lines += [f"  note: {note}" for note in facts.notes]
+    if facts.reference:
+        lines.append(f"  reference: {facts.reference}")
+    lines += _channel_lines(summary)
+    lines += [f"  note: {note}" for note in (*facts.notes, *summary.notes)]
     if not summary.codes:
         return [*lines, "  no markers"]
     width = max(4, *(len(code.code) for code in summary.codes))
@@ -55,6 +80,102 @@ def _lines(summary: RecordingSummary) -> list[str]:
         times = f"{code.first_s:10.3f}  {code.last_s:10.3f}  {interval:>18}"
         lines.append(f"  {code.code:{width}}  {code.count:5}  {times}")
     return lines
+
+
+def _channel_lines(summary: RecordingSummary) -> list[str]:
+    """Say what is known of the channels' hardware, as ranges."""
+    channels = summary.facts.channels
+    lines = []
+    known = [one.impedance_ohm for one in channels if one.impedance_ohm is not None]
+    if known:
+        kohms = [ohm_to_kohm(one) for one in known]
+        lines.append(f"  impedance: {_range(kohms, 'kOhm')}, known of {len(known)} channels")
+    for name, values in (
+        ("hardware high-pass", [one.highpass_hz for one in channels if one.highpass_hz is not None]),
+        ("hardware low-pass", [one.lowpass_hz for one in channels if one.lowpass_hz is not None]),
+    ):
+        if values:
+            lines.append(f"  {name}: {_range(values, 'Hz')}")
+    bad = [one.name for one in channels if one.status == "bad"]
+    if bad:
+        lines.append(f"  bad by the channel table: {', '.join(bad)}")
+    return lines
+
+
+def _range(values: Sequence[float], unit: str) -> str:
+    low, high = min(values), max(values)
+    return f"{low:g} {unit}" if low == high else f"{low:g} to {high:g} {unit}"
+
+
+def _fault_lines(summary: RecordingSummary) -> list[str]:
+    if not summary.faults:
+        return ["", "  no faults were found in the markers"] if summary.codes else []
+    lines = ["", "  faults of markers:"]
+    for fault in summary.faults:
+        lines.append(f"  - {fault.key}: {fault.words}")
+        if fault.cure:
+            lines.append(f"    cure: {fault.cure}")
+    if any(fault.cure for fault in summary.faults):
+        lines.append("  a cure is applied only where the marks name its fault under [cures] accepted = [...]")
+    return lines
+
+
+def _role_lines(summary: RecordingSummary) -> list[str]:
+    """Proposed roles; with a plan its own roles stand instead."""
+    codes = summary.proposal.codes
+    if not codes:
+        return []
+    width = max(4, *(len(one.code) for one in codes))
+    if summary.planned is not None:
+        plan = summary.planned.plan
+        named = [
+            (one.code, str(plan.role_of(one.code)), "" if plan.names(one.code) else "not in the plan")
+            for one in codes
+        ]
+        title = "roles by the plan:"
+    else:
+        named = [(one.code, str(one.role), one.reason) for one in codes]
+        title = "proposed roles:"
+    return ["", f"  {title}", *(f"  {code:{width}}  {role:10}  {why}".rstrip() for code, role, why in named)]
+
+
+def _trial_lines(summary: RecordingSummary) -> list[str]:
+    if summary.planned is None:
+        slots = ", ".join(
+            one.slot.slot + (" (optional)" if one.slot.optional else "") for one in summary.proposal.slots
+        )
+        return ["", f"  proposed trial, seen {summary.proposal.n_trials} times: {slots}"] if slots else []
+    trials = summary.planned.trials
+    found = trials.trials
+    rate_hz = summary.facts.rate_hz
+    incomplete = sum(bool(one.missing) for one in found)
+    doubtful = sum(bool(one.doubts) for one in found)
+    aside = sum(bool(one.set_aside) for one in found)
+    lines = [
+        "",
+        f"  trials: {len(found)}, {incomplete} incomplete, {doubtful} doubtful, {aside} set aside; "
+        f"markers in no trial: {len(trials.extra)}",
+    ]
+    lines += [
+        f"  - trial {one.number} at {one.first_sample / rate_hz:.3f} s: {_troubles(one)}"
+        for one in found
+        if _troubles(one)
+    ]
+    lines += [
+        f"  - in no trial: {one.code} at {one.sample / rate_hz:.3f} s" for one in trials.extra[:_MOST_LISTED]
+    ]
+    if len(trials.extra) > _MOST_LISTED:
+        lines.append(f"  - and {len(trials.extra) - _MOST_LISTED} more; --events writes all")
+    return lines
+
+
+def _troubles(trial: Trial) -> str:
+    parts = [trial.set_aside] if trial.set_aside else []
+    if trial.missing:
+        parts.append(f"no {', '.join(trial.missing)}")
+    if trial.doubts:
+        parts.append(f"doubtful ({'; '.join(trial.doubts)})")
+    return ", ".join(parts)
 
 
 def _as_json(summary: RecordingSummary) -> dict[str, object]:
@@ -67,9 +188,45 @@ def _as_json(summary: RecordingSummary) -> dict[str, object]:
         "duration_s": facts.duration_s,
         "files": {part.name: part.size for part in facts.parts},
         "channels": {channel.name: channel.type.value for channel in facts.channels},
+        "channel_facts": {
+            channel.name: {
+                "impedance_ohm": channel.impedance_ohm,
+                "highpass_hz": channel.highpass_hz,
+                "lowpass_hz": channel.lowpass_hz,
+                "reference": channel.reference or None,
+                "status": channel.status or None,
+            }
+            for channel in facts.channels
+        },
         "segments": [list(segment) for segment in facts.segments],
         "codes": [asdict(code) for code in summary.codes],
         "markers": [{"sample": marker.sample, "code": marker.code} for marker in facts.markers],
         "pulse_like_samples": list(summary.pulses_found),
-        "notes": list(facts.notes),
+        "faults": [
+            {
+                "key": fault.key,
+                "kind": fault.kind,
+                "words": fault.words,
+                "cure": fault.cure or None,
+                "count": fault.count,
+                "samples": list(fault.at),
+            }
+            for fault in summary.faults
+        ],
+        "proposed_roles": {one.code: one.role for one in summary.proposal.codes},
+        "trials": None
+        if summary.planned is None
+        else [
+            {
+                "trial": one.number,
+                "kind": one.kind or None,
+                "block": one.block or None,
+                "markers": {slot: marker.sample for slot, marker in one.markers.items()},
+                "missing": list(one.missing),
+                "doubts": list(one.doubts),
+                "set_aside": one.set_aside or None,
+            }
+            for one in summary.planned.trials.trials
+        ],
+        "notes": [*facts.notes, *summary.notes],
     }

@@ -4,17 +4,30 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from statistics import median
 
 import numpy as np
 
 from pulsemend.engine.scan import find_pulse_like
+from pulsemend.errors import UsageError
+from pulsemend.mending.event_table import PlannedEvents, event_table
+from pulsemend.mending.pulse_evidence import pulse_evidence
+from pulsemend.model.faults import MarkerFault
+from pulsemend.model.marks import NO_MARKS, Marks
+from pulsemend.model.marks_file import check_files, check_samples, read_marks
+from pulsemend.model.plan_file import read_plan
 from pulsemend.model.recording import RecordingFacts
+from pulsemend.model.toml_tables import write_text
 from pulsemend.model.vocabulary import ChannelType
 from pulsemend.progress import Work
 from pulsemend.readers.opening import open_recording
+from pulsemend.trials.blocks import with_blocks
+from pulsemend.trials.effective import effective_markers
+from pulsemend.trials.faults import find_faults
+from pulsemend.trials.matching import match_trials
+from pulsemend.trials.proposal import Guess, guess
 
 
 @dataclass(frozen=True)
@@ -49,11 +62,23 @@ class RecordingSummary:
         In order of first occurrence.
     pulses_found : tuple of int
         Recorded samples of pulse-like events in the EEG channels.
+    faults : tuple of MarkerFault
+        What is wrong with the markers.
+    proposal : Guess
+        Roles and slots that names, intervals and pulses suggest.
+    planned : PlannedEvents or None
+        Trials by a plan, if one was given.
+    notes : tuple of str
+        What was done to the markers, one sentence each.
     """
 
     facts: RecordingFacts
     codes: tuple[CodeFacts, ...]
     pulses_found: tuple[int, ...]
+    faults: tuple[MarkerFault, ...]
+    proposal: Guess
+    planned: PlannedEvents | None = None
+    notes: tuple[str, ...] = ()
 
     @property
     def channel_types(self) -> Mapping[str, int]:
@@ -61,13 +86,17 @@ class RecordingSummary:
         return Counter(channel.type.value for channel in self.facts.channels)
 
 
-def summarise(path: Path) -> Work[RecordingSummary]:
-    """Read a recording's facts and look through its signal for pulses.
+def summarise(
+    path: Path, plan_path: Path | None = None, marks_path: Path | None = None
+) -> Work[RecordingSummary]:
+    """Read a recording's facts and look through its signal for pulses and its markers for faults.
 
     Parameters
     ----------
     path : Path
         The recording.
+    plan_path, marks_path : Path or None
+        With a plan, faults and trials are judged by it, and the marks beside it count.
 
     Yields
     ------
@@ -79,19 +108,77 @@ def summarise(path: Path) -> Work[RecordingSummary]:
 
     Raises
     ------
-    RecordingError
-        The file cannot be used.
+    RecordingError, PlanError, MarksError
+        A file cannot be used.
     """
+    plan_file = None if plan_path is None else read_plan(plan_path)
     recording = open_recording(path)
     try:
         facts = recording.facts
+        marks = NO_MARKS
+        if plan_path is not None:
+            marks = marks_of(plan_path, facts, marks_path)
         eeg = np.flatnonzero([channel.type is ChannelType.EEG for channel in facts.channels])
         found: tuple[int, ...] = ()
         if eeg.size:
             found = yield from find_pulse_like(recording, eeg)
     finally:
         recording.close()
-    return RecordingSummary(facts, code_facts(facts), found)
+    plan = None if plan_file is None else plan_file.plan
+    counting = effective_markers(facts.markers, marks, facts.rate_hz)
+    planned = None
+    if plan is not None and plan.trial:
+        trials = match_trials(counting.markers, plan, facts.rate_hz, marks)
+        in_blocks = with_blocks(trials.trials, counting.markers, plan, facts.rate_hz)
+        planned = PlannedEvents(plan, replace(trials, trials=in_blocks))
+    facts = replace(facts, markers=counting.markers)
+    return RecordingSummary(
+        facts=facts,
+        codes=code_facts(facts),
+        pulses_found=found,
+        faults=find_faults(recording.facts.markers, facts.rate_hz, plan, marks.cures_accepted),
+        proposal=guess(facts.markers, facts.rate_hz, pulse_evidence(facts, found).pulse_codes),
+        planned=planned,
+        notes=counting.notes,
+    )
+
+
+def write_events(summary: RecordingSummary, out: Path) -> None:
+    """Write all markers as a table, whole or not at all.
+
+    Parameters
+    ----------
+    summary : RecordingSummary
+        With a plan, its roles, trials and labels are in the table.
+    out : Path
+        The table; one that is there is replaced.
+
+    Raises
+    ------
+    UsageError
+        There is no folder for it.
+    """
+    if not out.parent.is_dir():
+        raise UsageError("is no folder", where=str(out.parent), todo="Make it first")
+    write_text(out, event_table(summary.facts.markers, summary.facts.rate_hz, summary.planned))
+
+
+def marks_of(plan_path: Path, facts: RecordingFacts, path: Path | None = None) -> Marks:
+    """Read the marks that belong to a recording: those named, else those beside the plan, else none.
+
+    Raises
+    ------
+    MarksError
+        They cannot be used, or are those of another recording.
+    """
+    place = path or plan_path.parent / "marks" / f"{facts.stem}.marks.toml"
+    if path is None and not place.exists():
+        return NO_MARKS
+    marks_file = read_marks(place)
+    with marks_file.source.located():
+        check_files(marks_file.marks, facts.parts)
+        check_samples(marks_file.marks, facts.n_samples)
+    return marks_file.marks
 
 
 def code_facts(facts: RecordingFacts) -> tuple[CodeFacts, ...]:

@@ -8,7 +8,8 @@ from pathlib import Path
 from PySide6.QtCore import QObject, QTimer, Signal
 
 from pulsemend.errors import ChangedOnDisk, PulsemendError
-from pulsemend.mending.draft import draft_plan, pulse_evidence
+from pulsemend.mending.draft import draft_plan
+from pulsemend.mending.pulse_evidence import pulse_evidence
 from pulsemend.mending.facts import summarise
 from pulsemend.mending.prepare import marks_path
 from pulsemend.model.marks import NO_MARKS

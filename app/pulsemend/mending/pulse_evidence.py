@@ -1,0 +1,82 @@
+"""What the signal shows at the markers of every code: where pulses are."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass
+from statistics import median
+
+from pulsemend.model.plan import Pulses
+from pulsemend.model.recording import RecordingFacts
+from pulsemend.units import ms_to_s, s_to_ms
+
+_ALWAYS = 0.8
+
+
+@dataclass(frozen=True)
+class CodeEvidence:
+    """What the signal shows at the markers of one code.
+
+    Parameters
+    ----------
+    code : str
+    n_markers : int
+    n_in_signal : int
+        Markers with a pulse-like event near them.
+    latency_ms : float
+        Median of event minus marker.
+    least_ms, most_ms : float
+        Its range.
+    """
+
+    code: str
+    n_markers: int
+    n_in_signal: int
+    latency_ms: float
+    least_ms: float
+    most_ms: float
+
+
+@dataclass(frozen=True)
+class PulseEvidence:
+    """Pulse-like events in the signal, by the codes they belong to; `unmarked` belong to none."""
+
+    codes: tuple[CodeEvidence, ...] = ()
+    n_events: int = 0
+    unmarked: int = 0
+
+    @property
+    def pulse_codes(self) -> tuple[str, ...]:
+        """Codes at whose markers there nearly always is a pulse."""
+        return tuple(one.code for one in self.codes if one.n_in_signal >= _ALWAYS * one.n_markers)
+
+
+NO_EVIDENCE = PulseEvidence()
+
+
+def pulse_evidence(facts: RecordingFacts, pulses_found: Sequence[int]) -> PulseEvidence:
+    """Assign pulse-like events to the nearest marker within the usual search range.
+
+    Parameters
+    ----------
+    facts : RecordingFacts
+        Markers and rate.
+    pulses_found : sequence of int
+        Recorded samples of pulse-like events.
+    """
+    low, high = (ms_to_s(edge) * facts.rate_hz for edge in Pulses().search_ms)
+    seen: dict[str, list[float]] = {}
+    unmarked = 0
+    for event in pulses_found:
+        near = [marker for marker in facts.markers if low <= event - marker.sample <= high]
+        if near:
+            marker = min(near, key=lambda one: abs(event - one.sample))
+            seen.setdefault(marker.code, []).append(s_to_ms((event - marker.sample) / facts.rate_hz))
+        else:
+            unmarked += 1
+    counts = Counter(marker.code for marker in facts.markers)
+    codes = tuple(
+        CodeEvidence(code, counts[code], len(ms), median(ms), min(ms), max(ms)) for code, ms in seen.items()
+    )
+    return PulseEvidence(codes, len(pulses_found), unmarked)
