@@ -2,12 +2,18 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 
 from pulsemend.model.recording import Marker
 
+Found = tuple[float, str, str]
+"""Sample, type, text."""
 
-def coded(found: Iterable[tuple[float, str, str]]) -> tuple[Marker, ...]:
+_SEGMENT, _SYNC, _SYNC_TEXT = "new segment", "syncstatus", "sync on"
+
+
+def coded(found: Iterable[Found]) -> tuple[Marker, ...]:
     """Give every marker of one recording its code and put them in order of time.
 
     The code is the text alone, runs of blanks made one and ends trimmed; the type where there is no text.
@@ -33,6 +39,43 @@ def coded(found: Iterable[tuple[float, str, str]]) -> tuple[Marker, ...]:
         if text
     ]
     return tuple(sorted(markers, key=lambda marker: marker.sample))
+
+
+def set_aside(found: Iterable[Found]) -> tuple[list[Found], set[int], int]:
+    """Part the markers from what only the recorder wrote for itself.
+
+    Returns
+    -------
+    rest : list of (sample, type, text)
+        The markers.
+    joints : set of int
+        Samples at which recording was started again.
+    n_sync : int
+        How many marks of the amplifier's clock there were.
+    """
+    rest: list[Found] = []
+    joints: set[int] = set()
+    n_sync = 0
+    for sample, kind, text in found:
+        words = _tidy(kind).lower(), _tidy(text).lower()
+        if (words[0] or words[1]) == _SEGMENT:
+            joints.add(math.ceil(sample))
+        elif words[0] == _SYNC or (not words[0] and words[1] in (_SYNC, _SYNC_TEXT)):
+            n_sync += 1
+        else:
+            rest.append((sample, kind, text))
+    return rest, joints, n_sync
+
+
+def sync_notes(n_sync: int) -> list[str]:
+    """One note on the marks of the amplifier's clock, or none."""
+    return [f"Markers of the amplifier's clock (SyncStatus), left out: {n_sync}."] if n_sync else []
+
+
+def whole_if_close(sample: float, within: float) -> float:
+    """Take a sample that misses a whole number by no more than its rounding as that number."""
+    whole = math.floor(sample + 0.5)
+    return float(whole) if abs(sample - whole) <= within else sample
 
 
 def split_at_slash(description: str) -> tuple[str, str]:

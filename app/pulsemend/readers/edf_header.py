@@ -107,6 +107,11 @@ class EdfHeader:
         return tuple(signal for signal in self._sampled() if signal.per_record != self.per_record)
 
     @property
+    def left_out_names(self) -> tuple[str, ...]:
+        """Names that the left out signals would have as channels."""
+        return tuple(map(_name, self.left_out))
+
+    @property
     def rate_hz(self) -> float:
         """Sampling rate of the used signals."""
         return self.per_record / self.record_s

@@ -6,7 +6,6 @@ import gzip
 import math
 import zlib
 from collections.abc import Iterable
-from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, Any, cast
 
@@ -16,12 +15,11 @@ from pulsemend.errors import DamagedRecording, UnknownFormat
 from pulsemend.model.recording import Channel
 from pulsemend.model.vocabulary import ChannelType
 from pulsemend.readers.channel_types import LIBRARY_TYPES, type_by_name
-from pulsemend.readers.codes import split_at_slash
+from pulsemend.readers.codes import Found, set_aside, split_at_slash, sync_notes, whole_if_close
 from pulsemend.readers.common import check_names, missing
 from pulsemend.readers.edf_header import EdfHeader
+from pulsemend.readers.source import Source
 from pulsemend.readers.tal import Timeline, read_timeline
-
-Found = tuple[float, str, str]
 
 _FIF_CHANNEL, _FIF_LAST = 203, -1  # kind of a channel's entry; link of the last entry of a file
 _FIF_ROLE, _FIF_FOLLOWS = 115, bytes((0, 0, 0, 1))  # kind and content of the entry that names an earlier part
@@ -29,33 +27,6 @@ _PACKED_CHUNK = 1 << 20
 _JOINS = ("bad boundary", "edge boundary", "boundary")
 _SKIP = "bad_acq_skip"
 _WHOLE_WITHIN = 1e-6  # samples; what a product of seconds and rate may miss a whole number by
-
-
-@dataclass(frozen=True)
-class Source:
-    """Facts of one file, still without the events of its trigger channels.
-
-    Parameters
-    ----------
-    format : str
-    rate_hz : float
-    n_samples : int
-    channels : tuple of Channel
-    found : tuple of (sample, type, text)
-        Annotations that lie inside the recording.
-    boundaries : tuple of int
-    paths : tuple of Path
-    notes : tuple of str
-    """
-
-    format: str
-    rate_hz: float
-    n_samples: int
-    channels: tuple[Channel, ...]
-    found: tuple[Found, ...]
-    boundaries: tuple[int, ...]
-    paths: tuple[Path, ...]
-    notes: tuple[str, ...]
 
 
 def edf_source(header: EdfHeader) -> Source:
@@ -69,9 +40,10 @@ def edf_source(header: EdfHeader) -> Source:
     timeline = read_timeline(header)
     n_samples = header.n_records * header.per_record
     marks = [(_sample_at(mark.onset_s, header, timeline), mark.text) for mark in timeline.annotations]
-    found, outside = _inside(marks, n_samples)
+    found, joints, outside = _inside(marks, n_samples)
     jumps = np.abs(np.diff(timeline.record_onsets_s) - header.record_s) * header.rate_hz > 0.5
-    boundaries = (np.flatnonzero(jumps) + 1) * header.per_record
+    paused = {int(record + 1) * header.per_record for record in np.flatnonzero(jumps)}
+    boundaries = sorted(joint for joint in paused | joints if 0 < joint < n_samples)
     pauses = [f"Pauses in the recording: {len(boundaries)}; nothing is joined across a pause."]
     kind = "EDF" if header.sample_bytes == 2 else "BDF"
     return Source(
@@ -80,9 +52,10 @@ def edf_source(header: EdfHeader) -> Source:
         n_samples=n_samples,
         channels=header.channels(),
         found=found,
-        boundaries=tuple(map(int, boundaries)),
+        boundaries=tuple(boundaries),
         paths=(header.path,),
-        notes=(*header.notes, *(pauses if len(boundaries) else ()), *outside),
+        notes=(*header.notes, *(pauses if boundaries else ()), *outside),
+        left_out=header.left_out_names,
     )
 
 
@@ -118,7 +91,7 @@ def raw_source(
         text, onset_s = str(entry["description"]), float(entry["onset"])
         # Onsets are kept in 32 bits: a whole sample within their rounding is that sample.
         rounding = float(np.spacing(np.float32(onset_s))) * rate_hz / 2
-        sample = _whole_if_close(onset_s * rate_hz - raw.first_samp, max(rounding, _WHOLE_WITHIN))
+        sample = whole_if_close(onset_s * rate_hz - raw.first_samp, max(rounding, _WHOLE_WITHIN))
         if text.lower() in _JOINS:
             # Some write the joint between two samples: the later one starts the next segment.
             boundaries.add(math.ceil(sample))
@@ -128,7 +101,7 @@ def raw_source(
             continue
         coarsest = max(coarsest, rounding)
         marks.append((sample, text))
-    found, notes = _inside(marks, n_samples)
+    found, joints, notes = _inside(marks, n_samples)
     if coarsest > 0.25:
         notes.append(f"Annotation times are rounded in the file, by up to {coarsest:.1f} samples.")
     others = [channel.name for channel in channels if channel.type is ChannelType.MISC]
@@ -140,7 +113,7 @@ def raw_source(
         n_samples=n_samples,
         channels=channels,
         found=found,
-        boundaries=tuple(sorted(sample for sample in boundaries if 0 < sample < n_samples)),
+        boundaries=tuple(sorted(sample for sample in boundaries | joints if 0 < sample < n_samples)),
         paths=paths,
         notes=(*warned, *notes),
     )
@@ -236,15 +209,17 @@ def _sample_at(onset_s: float, header: EdfHeader, timeline: Timeline) -> float |
     record = max(
         int(np.searchsorted(onsets_s, onset_s + _WHOLE_WITHIN / header.rate_hz, side="right")) - 1, 0
     )
-    inside = _whole_if_close((onset_s - float(onsets_s[record])) * header.rate_hz, _WHOLE_WITHIN)
+    inside = whole_if_close((onset_s - float(onsets_s[record])) * header.rate_hz, _WHOLE_WITHIN)
     last = record == header.n_records - 1
     if inside >= header.per_record and header.interrupted and not last:
         return None
     return record * header.per_record + inside
 
 
-def _inside(marks: Iterable[tuple[float | None, str]], n_samples: int) -> tuple[tuple[Found, ...], list[str]]:
-    """Split annotations into those on a recorded sample and a note about the others."""
+def _inside(
+    marks: Iterable[tuple[float | None, str]], n_samples: int
+) -> tuple[tuple[Found, ...], set[int], list[str]]:
+    """Split annotations into markers on a recorded sample, joints of segments, and notes about the others."""
     found: list[Found] = []
     outside: list[str] = []
     for sample, text in marks:
@@ -252,10 +227,8 @@ def _inside(marks: Iterable[tuple[float | None, str]], n_samples: int) -> tuple[
             outside.append(" ".join(text.split()))
         else:
             found.append((sample, *split_at_slash(text)))
-    note = f"Left out, because they lie outside the recorded samples: {', '.join(outside)}."
-    return tuple(found), [note] if outside else []
-
-
-def _whole_if_close(sample: float, within: float) -> float:
-    whole = math.floor(sample + 0.5)
-    return float(whole) if abs(sample - whole) <= within else sample
+    kept, joints, n_sync = set_aside(found)
+    notes = sync_notes(n_sync)
+    if outside:
+        notes.append(f"Left out, because they lie outside the recorded samples: {', '.join(outside)}.")
+    return tuple(kept), joints, notes

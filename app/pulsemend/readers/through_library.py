@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -12,12 +13,13 @@ from numpy.typing import NDArray
 
 from pulsemend.model.recording import FloatArray, RecordingFacts
 from pulsemend.model.vocabulary import ChannelType
-from pulsemend.readers.codes import coded
-from pulsemend.readers.common import check_finite, check_request, file_part, stem_of
+from pulsemend.readers.codes import Found
+from pulsemend.readers.common import check_finite, check_request
 from pulsemend.readers.edf_header import EdfHeader, read_edf_header
 from pulsemend.readers.library_errors import own_errors
 from pulsemend.readers.library_formats import files_of, library_extension, open_by_extension
-from pulsemend.readers.library_source import Found, Source, check_fif, edf_source, raw_source
+from pulsemend.readers.library_source import check_fif, edf_source, raw_source
+from pulsemend.readers.source import Source, facts_of, with_tables
 from pulsemend.readers.triggers import LOW_16_BITS, trigger_events
 
 _TRIGGER_BLOCK = 1 << 16  # samples per piece when a trigger channel is searched
@@ -55,20 +57,11 @@ class LibraryRecording:
             with own_errors(path):
                 kind = f"{library_extension(path)} {'folder' if path.is_dir() else 'file'}"
                 source = raw_source(path, self._raw, kind, files_of(path, self._raw), warned)
+        source = with_tables(path, source)
         self._n_samples = source.n_samples
-        self._paths = source.paths
         events, trigger_notes = self._trigger_markers(source)
-        self._facts = RecordingFacts(
-            stem=stem_of(path),
-            format=source.format,
-            rate_hz=source.rate_hz,
-            n_samples=source.n_samples,
-            channels=source.channels,
-            markers=coded([*source.found, *events]),
-            boundaries=source.boundaries,
-            parts=tuple(file_part(part, path if path.is_dir() else None) for part in source.paths),
-            notes=(*source.notes, *trigger_notes),
-        )
+        noted = replace(source, notes=(*source.notes, *trigger_notes))
+        self._facts, self._paths = facts_of(path, noted, events)
 
     @property
     def facts(self) -> RecordingFacts:

@@ -15,9 +15,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend.errors import DamagedRecording
-from pulsemend.model.recording import FloatArray, Marker, RecordingFacts
-from pulsemend.readers.codes import coded
-from pulsemend.readers.common import check_finite, check_request, file_part, missing, stem_of
+from pulsemend.model.recording import FloatArray, RecordingFacts
+from pulsemend.readers.codes import Found, set_aside, sync_notes
+from pulsemend.readers.common import check_finite, check_request, file_part, missing
+from pulsemend.readers.source import Source, facts_of, with_tables
 from pulsemend.readers.triplet_header import (
     SampleType,
     TripletHeader,
@@ -26,7 +27,6 @@ from pulsemend.readers.triplet_header import (
     read_markers,
 )
 
-_SEGMENT, _SYNC = "new segment", "syncstatus"
 _CHUNK_BYTES = 1 << 19  # stays in the processor's cache between reading and converting
 
 
@@ -50,27 +50,26 @@ class TripletRecording:
         self._data, data_note = find_part(path, self._header.data_name, ".eeg")
         paths, notes = [path, self._data], [*self._header.notes, data_note]
         n_samples = _count_samples(self._header, self._data)
-        markers: tuple[Marker, ...] = ()
+        found: list[Found] = []
         boundaries: tuple[int, ...] = ()
         if self._header.marker_name:
             marker_path, marker_note = find_part(path, self._header.marker_name, ".vmrk")
-            markers, boundaries, marker_notes = _read_events(marker_path, n_samples)
+            found, boundaries, marker_notes = _read_events(marker_path, n_samples)
             paths.append(marker_path)
             notes += [marker_note, *marker_notes]
         else:
             notes.append("The header names no marker file.")
-        self._paths = tuple(paths)
-        self._facts = RecordingFacts(
-            stem=stem_of(path),
+        source = Source(
             format="header, data and marker file",
             rate_hz=self._header.rate_hz,
             n_samples=n_samples,
             channels=self._header.channels,
-            markers=markers,
+            found=tuple(found),
             boundaries=boundaries,
-            parts=tuple(map(file_part, paths)),
+            paths=tuple(paths),
             notes=tuple(filter(None, notes)),
         )
+        self._facts, self._paths = facts_of(path, with_tables(path, source))
 
     @property
     def facts(self) -> RecordingFacts:
@@ -212,7 +211,7 @@ def _count_samples(header: TripletHeader, data: Path) -> int:
     return n_samples
 
 
-def _read_events(path: Path, n_samples: int) -> tuple[tuple[Marker, ...], tuple[int, ...], list[str]]:
+def _read_events(path: Path, n_samples: int) -> tuple[list[Found], tuple[int, ...], list[str]]:
     """Markers, boundaries and notes from a marker file.
 
     Raises
@@ -229,18 +228,12 @@ def _read_events(path: Path, n_samples: int) -> tuple[tuple[Marker, ...], tuple[
             where=path.name,
             todo="Copy the data file again; if the recording was broken off, delete those entries",
         )
-    kinds = [line.type.strip().lower() for line in lines]
-    rest = [line for line, kind in zip(lines, kinds, strict=True) if kind not in (_SEGMENT, _SYNC)]
-    boundaries = sorted(
-        {line.position - 1 for line, kind in zip(lines, kinds, strict=True) if kind == _SEGMENT} - {0, -1}
-    )
-    notes = []
-    if _SYNC in kinds:
-        notes.append(f"Markers of the amplifier's clock (SyncStatus), left out: {kinds.count(_SYNC)}.")
+    found, joints, n_sync = set_aside((line.position - 1, line.type, line.text) for line in lines)
+    boundaries = tuple(sorted(joint for joint in joints if joint > 0))
+    notes = sync_notes(n_sync)
     if boundaries:
         notes.append(f"Pauses in the recording: {len(boundaries)}; nothing is joined across a pause.")
-    early = sum(line.position < 1 for line in rest)
+    early = sum(sample < 0 for sample, _, _ in found)
     if early:
         notes.append(f"Markers before the first sample, moved onto it: {early}.")
-    markers = coded((max(line.position - 1, 0), line.type, line.text) for line in rest)
-    return markers, tuple(boundaries), notes
+    return [(max(sample, 0), kind, text) for sample, kind, text in found], boundaries, notes
