@@ -235,6 +235,15 @@ def test_pairs_of_anything_else_are_doubled() -> None:
     plan = plan_of({"cue": "cue", "probe": "probe", "T": "response"})
     fault = only(find_faults(PAIRS, RATE_HZ, plan))
     assert (fault.key, fault.count) == ("doubled marker T", 20)
+    assert "pairs of pulses" not in fault.words
+    few = only(find_faults(PAIRS[:7], RATE_HZ))
+    assert (few.key, "if these are pairs of pulses" in few.words) == ("doubled marker T", True)
+
+
+def test_an_accepted_cure_stays_listed_when_a_code_becomes_a_pulse() -> None:
+    """So that it can be taken back."""
+    plan = plan_of({"cue": "cue", "probe": "probe", "T": "pulse"})
+    assert keys_of(find_faults(PAIRS, RATE_HZ, plan, ["doubled marker T"])) == ["doubled marker T"]
 
 
 def test_pulses_closer_than_pairs_can_be_are_doubled() -> None:
@@ -258,6 +267,15 @@ def test_a_recording_doubled_throughout_has_no_pairs() -> None:
     faults = find_faults(merged(once, again), RATE_HZ)
     assert keys_of(faults) == ["doubled marker cue", "doubled marker T", "doubled marker probe"]
     assert [fault.count for fault in faults] == [20, 20, 20]
+    plan = plan_of({"cue": "cue", "probe": "probe", "T": "pulse"})
+    assert keys_of(find_faults(merged(once, again), RATE_HZ, plan)) == keys_of(faults)
+
+
+def test_some_doubled_cues_make_no_doubled_pulses() -> None:
+    again = [Marker(marker.sample + 4, "cue") for marker in PAIRS[:30] if marker.code == "cue"]
+    for roles in ({"cue": "cue", "probe": "probe", "T": "pulse"}, {"cue": "cue"}):
+        fault = only(find_faults(merged(PAIRS, again), RATE_HZ, plan_of(roles)))
+        assert (fault.key, fault.count) == ("doubled marker cue", len(again))
 
 
 def test_ignored_codes_may_be_doubled() -> None:
@@ -407,6 +425,100 @@ def test_every_fault_with_a_cure_can_be_accepted_and_taken_back(
     accepted = data.draw(st.sets(st.sampled_from(keys_of(curable))) if curable else st.just(set[str]()))
     shown = keys_of(find_faults(markers, RATE_HZ, accepted=accepted))
     assert set(cured(markers, RATE_HZ, accepted).counts) <= set(shown)
+
+
+# Faults put into a healthy stream, and cured again
+
+Injection = Callable[[list[Marker], random.Random], list[Marker]]
+
+
+def held(markers: list[Marker], random_state: random.Random) -> list[Marker]:
+    """Read every sample of levels that last 3 to 12 samples."""
+    return [
+        Marker(marker.sample + step, marker.code)
+        for marker in markers
+        for step in range(random_state.randint(3, 12))
+    ]
+
+
+def returning_to_zero(markers: list[Marker], random_state: random.Random) -> list[Marker]:
+    """Add a zero some samples after each."""
+    zeros = [Marker(marker.sample + random_state.randint(3, 20), "0") for marker in markers]
+    return list(merged(markers, zeros))
+
+
+def stuck_line(markers: list[Marker], random_state: random.Random) -> list[Marker]:
+    """Set bit 7."""
+    return [Marker(marker.sample, str(int(marker.code) | 128)) for marker in markers]
+
+
+def floating_lines(markers: list[Marker], random_state: random.Random) -> list[Marker]:
+    """Put any high byte before each code."""
+    return [
+        Marker(marker.sample, str(int(marker.code) | random_state.randint(0, 255) << 8)) for marker in markers
+    ]
+
+
+def late_bits(markers: list[Marker], random_state: random.Random) -> list[Marker]:
+    """Let the lowest bit arrive a sample before the others, in half of the codes that have more."""
+    found = []
+    for marker in markers:
+        lowest = int(marker.code) & -int(marker.code)
+        found.append(marker)
+        if lowest != int(marker.code) and random_state.random() < 0.5:
+            found[-1:] = [Marker(marker.sample, str(lowest)), Marker(marker.sample + 1, marker.code)]
+    return found
+
+
+def sent_twice(markers: list[Marker], random_state: random.Random) -> list[Marker]:
+    """Send a tenth of the markers twice."""
+    again = [
+        Marker(marker.sample + random_state.randint(2, 18), marker.code)
+        for marker in markers
+        if random_state.random() < 0.1
+    ]
+    return list(merged(markers, again))
+
+
+# In the order in which they arise: the task sends, the port adds.
+INJECTIONS: tuple[tuple[FaultKind, Injection], ...] = (
+    (FaultKind.DOUBLED_MARKER, sent_twice),
+    (FaultKind.TWO_BITS_APART, late_bits),
+    (FaultKind.HELD_LEVEL, held),
+    (FaultKind.ZERO_CODES, returning_to_zero),
+    (FaultKind.STUCK_BIT, stuck_line),
+    (FaultKind.FLOATING_HIGH_BYTE, floating_lines),
+)
+
+
+@pytest.mark.parametrize("seed", range(40))
+def test_faults_put_in_are_found_and_cured(seed: int) -> None:
+    """One kind alone, then some at once: accepting cures from the top gives the healthy stream back."""
+    random_state = random.Random(seed)
+    codes = range(1, random_state.randint(4, 60))
+    healthy_ones, sample = [], 100
+    for _ in range(300):
+        healthy_ones.append(Marker(float(sample), str(random_state.choice(codes))))
+        sample += random_state.randint(60, 1500)
+    alone = INJECTIONS[seed % len(INJECTIONS)]
+    # A floating byte or a late bit during a held level are other faults than these.
+    others = [one for one in INJECTIONS if one[0] is not FaultKind.HELD_LEVEL]
+    drawn = [one for one in others if random_state.random() < 0.5]
+    for chosen in ([alone], drawn):
+        markers = healthy_ones
+        for _, put_in in chosen:
+            markers = put_in(markers, random_state)
+        accepted: set[str] = set()
+        while True:
+            faults = find_faults(markers, RATE_HZ, accepted=accepted)
+            offered = [fault for fault in faults if fault.cure and fault.key not in accepted]
+            if not offered:
+                break
+            accepted.update(fault.key for fault in offered if fault.kind is offered[0].kind)
+        assert {fault.kind for fault in faults} == {kind for kind, _ in chosen}
+        result = cured(markers, RATE_HZ, accepted)
+        assert result.markers == tuple(healthy_ones)
+        assert result.unknown == ()
 
 
 # Healthy streams

@@ -6,12 +6,12 @@ from collections.abc import Collection, Mapping
 
 from pulsemend.model.faults import FaultKind
 from pulsemend.model.numbers import number_of
-from pulsemend.trials.cures import DOUBLED_S, LOW_BYTE, Change, Stream
+from pulsemend.trials.cures import LOW_BYTE, Change, Stream
 from pulsemend.trials.plan_faults import at_seconds
 from pulsemend.units import s_to_ms
 
 
-def words_of(stream: Stream, change: Change) -> str:
+def words_of(stream: Stream, change: Change, may_be_pulse: bool = False) -> str:
     """Say what was seen, how often, and where first: one sentence.
 
     Parameters
@@ -20,6 +20,8 @@ def words_of(stream: Stream, change: Change) -> str:
         What the change was found in.
     change : Change
         What the cure would do.
+    may_be_pulse : bool
+        Whether doubled markers may be pairs of pulses.
     """
     marker = stream.markers[change.at[0]]
     first = f"first at {at_seconds(marker.sample, stream.rate_hz)}"
@@ -55,9 +57,10 @@ def words_of(stream: Stream, change: Change) -> str:
                 f"after the other: {_times(change.count)}, {first} ({marker.code}, then {into})."
             )
         case _:
+            pairs = "; if these are pairs of pulses, give it the role pulse" if may_be_pulse else ""
             return (
                 f"Code {_as_recorded(stream, change)} comes again in less than "
-                f"{s_to_ms(change.within_s):g} ms: {_times(change.count)}, {first}{_pairs(change)}."
+                f"{s_to_ms(change.within_s):g} ms: {_times(change.count)}, {first}{pairs}."
             )
 
 
@@ -122,7 +125,3 @@ def _arrows(codes: Mapping[str, str]) -> str:
 def _as_recorded(stream: Stream, change: Change) -> str:
     recorded = stream.recorded[stream.places[change.scope][0]]
     return change.scope if recorded == change.scope else f"{change.scope} (recorded as {recorded})"
-
-
-def _pairs(change: Change) -> str:
-    return "; if these are pairs of pulses, give it the role pulse" if change.within_s == DOUBLED_S else ""

@@ -107,11 +107,11 @@ def find_faults(
     return tuple(faults)
 
 
-def _fault(stream: Stream, change: Change, keys: Collection[str]) -> MarkerFault:
+def _fault(stream: Stream, change: Change, keys: Collection[str], may_be_pulse: bool = False) -> MarkerFault:
     key = next((key for key in change.keys if key in keys), change.keys[0])
     at = tuple(nearest_sample(stream.markers[index].sample) for index in change.at)
     return MarkerFault(
-        change.kind, key, words_of(stream, change), cure_words(stream, change), at, change.count
+        change.kind, key, words_of(stream, change, may_be_pulse), cure_words(stream, change), at, change.count
     )
 
 
@@ -168,33 +168,45 @@ def _line_faults(
 
 def _doubled(stream: Stream, clean: Stream, plan: Plan | None, keys: Collection[str]) -> list[MarkerFault]:
     """Doubled markers; those of pulses only where no pair of pulses can be so close."""
-    changes = doubled(DOUBLED_S, clean)
-    common = [change for change in changes if change.count >= LEAST_PAIRS]
-    frequent = [code for code, places in clean.places.items() if len(places) >= 2 * LEAST_PAIRS]
-    is_everywhere = 2 * len(common) > len(frequent)
-    paired: set[str] = set()
-    for change in changes:
-        is_pulse = _is_pulse(change.scope, plan)
-        if is_pulse is None:
-            is_pulse = not is_everywhere and _comes_in_pairs(clean, change.scope)
-        if is_pulse or _is_ignored(change.scope, plan):
-            paired.add(change.scope)
-    close = [
-        change
-        for change in doubled(DOUBLED_PULSE_S, clean)
-        if PAIR_S * clean.rate_hz >= 1 and change.scope in paired and not _is_ignored(change.scope, plan)
-    ]
+    changes = [change for change in doubled(DOUBLED_S, clean) if not _is_ignored(change.scope, plan)]
+    paired = _paired_codes(clean, changes, plan)
+    can_tell = PAIR_S * clean.rate_hz >= 1
+    close = [change for change in doubled(DOUBLED_PULSE_S, clean) if can_tell and change.scope in paired]
     offered = [change for change in changes if change.scope not in paired] + close
     faults = {}
     for change in offered:
-        fault = _fault(clean, change, keys)
+        may_be_pulse = change.within_s == DOUBLED_S and _is_pulse(change.scope, plan) is not False
+        fault = _fault(clean, change, keys, may_be_pulse)
         faults[fault.key] = fault
+    # Accepted, though not offered any more, e.g. since the code got the role of pulses.
     for within_s in (DOUBLED_S, DOUBLED_PULSE_S):
         for change in doubled(within_s, stream):
             if is_accepted(change, keys):
                 fault = _fault(stream, change, keys)
                 faults.setdefault(fault.key, fault)
     return list(faults.values())
+
+
+def _paired_codes(stream: Stream, changes: Sequence[Change], plan: Plan | None) -> set[str]:
+    """Doubled codes that are pairs of pulses: by their role, or because most of them come in company.
+
+    Where that holds for more than half of all frequent codes that are no pulses by their role, the recording
+    is doubled throughout, and none is a pair.
+    """
+    frequent = {
+        code
+        for code, places in stream.places.items()
+        if len(places) >= 2 * LEAST_PAIRS and not _is_pulse(code, plan)
+    }
+    in_company = {change.scope for change in changes if _comes_in_pairs(stream, change.scope)}
+    if 2 * len(in_company & frequent) > len(frequent):
+        return set()
+    return {
+        change.scope
+        for change in changes
+        if _is_pulse(change.scope, plan)
+        or (_is_pulse(change.scope, plan) is None and change.scope in in_company)
+    }
 
 
 def _is_pulse(code: str, plan: Plan | None) -> bool | None:
