@@ -111,7 +111,7 @@ def guess(markers: Sequence[Marker], rate_hz: float, pulse_codes: Iterable[str] 
 
 
 def _codes(markers: Sequence[Marker], rate_hz: float, pulse_codes: frozenset[str]) -> tuple[CodeGuess, ...]:
-    before, after = _neighbours(markers, rate_hz)
+    before, after = neighbours(markers, rate_hz)
     guesses = []
     for code, count in Counter(marker.code for marker in markers).items():
         role, reason = Role.UNDECIDED, ""
@@ -138,10 +138,23 @@ def _role_of_name(code: str) -> tuple[Role, str]:
     return role, f'its name says "{word}"'
 
 
-def _neighbours(
+def neighbours(
     markers: Sequence[Marker], rate_hz: float
 ) -> tuple[dict[str, tuple[str, float]], dict[str, tuple[str, float]]]:
-    """Usual neighbour before and after every code, with the median time in seconds."""
+    """Find the usual neighbour of every code, and the usual time to it.
+
+    Parameters
+    ----------
+    markers : sequence of Marker
+        In order of time.
+    rate_hz : float
+        Recorded rate.
+
+    Returns
+    -------
+    before, after : dict of str to (str, float)
+        By code: the code that stands before it, or after it, most often, and the median time in seconds.
+    """
     before: dict[str, dict[str, list[float]]] = {}
     after: dict[str, dict[str, list[float]]] = {}
     for first, second in itertools.pairwise(markers):
