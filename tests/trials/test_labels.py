@@ -12,12 +12,12 @@ from hypothesis import strategies as st
 
 from pulsemend.model.epochs import Trial, Trials
 from pulsemend.model.label_columns import known_columns, rule_columns, slot_columns
-from pulsemend.model.plan import DerivedLabel, EpochRule, Plan, StimulationFacts
+from pulsemend.model.plan import DerivedLabel, EpochRule, Epochs, Plan, StimulationFacts
 from pulsemend.model.plan_file import parse_plan
 from pulsemend.model.recording import Marker
 from pulsemend.trials.candidates import GapSpan, Geometry, candidates
 from pulsemend.trials.labels import TrialLabels
-from pulsemend.trials.later import later_by_rule, later_columns
+from pulsemend.trials.later import last_sample, later_by_rule, later_columns
 from pulsemend.trials.matching import ADDED, FOUND_IN_SIGNAL, match_trials
 
 PLAN = parse_plan(
@@ -369,7 +369,7 @@ def test_stimulation_facts_from_plan_and_log() -> None:
         intensity=65.0,
         unit="% of output",
         recharge_delay_ms=250.5,
-        columns={"condition": "cond", "coil": "c"},
+        columns={"condition": "log.cond", "coil": "c"},
     )
     trials = [a_trial(1, log={"cond": "sham", "c": ""}), a_trial(2)]
     labels = TrialLabels(replace(PLAN, stimulation=replace(facts, coil="round")), trials)
@@ -681,6 +681,13 @@ def test_rows_of_slots_are_known_before_the_next_such_slot() -> None:
     assert later(DELAY1, 5000, trial, plan) == set()
 
 
+def test_a_log_column_named_like_a_slot_is_of_the_whole_trial_unless_rows_belong_to_slots() -> None:
+    plan = replace(LATER_PLAN, log=replace(PLAN.log, slots=("cue2",)), stimulation=StimulationFacts())
+    trial = a_trial(log={"cue1.x": "1"})
+    assert "log.cue1.x" in later(DELAY1, 4999, trial, plan)
+    assert "log.cue1.x" not in later(DELAY1, 5000, trial, plan)
+
+
 def test_later_columns_of_a_set_by_rule() -> None:
     trials = Trials((a_trial(1, log={"x": "1"}), a_trial(2)))
     geometry = Geometry(1000.0, 500.0, ((0, 20000),))
@@ -720,3 +727,14 @@ def test_the_last_output_sample_decides() -> None:
         found = candidates(Trials((trial,)), PLAN, geometry)
         named = later_by_rule(found, (trial,), PLAN, geometry)["answer1.said"]
         assert ("delay1" in named) is is_later
+
+
+def test_a_marker_at_the_last_sample_is_not_later_through_rounding() -> None:
+    # 900 of 5000 Hz: the last of 4 samples is 99 steps of 50 / 9 samples after cue1, 2549.9999999999995.
+    geometry = Geometry(5000.0, 900.0, ((0, 20000),))
+    plan = replace(PLAN, epochs=Epochs(4 / 900, (replace(DELAY1, start_s=96 / 900),)))
+    trial = replace(a_trial(), markers={**a_trial().markers, "answer1": Marker(2550, "yes")})
+    found = candidates(Trials((trial,)), plan, geometry)
+    assert found[0].kept
+    assert last_sample(found[0], plan, geometry) < 2550
+    assert "answer1.said" not in later_by_rule(found, (trial,), plan, geometry)

@@ -140,11 +140,10 @@ def _known_from(plan: Plan, trial: Trial, origin: str) -> float | None:
     if origin.removeprefix(LOG) not in trial.log:
         return None
     samples = [marker.sample for marker in trial.markers.values()]
-    slots = plan.log.slots if len(plan.log.slots) > 1 else ()
     slot = origin.removeprefix(LOG).partition(".")[0]
-    own = trial.markers.get(slot) if slot in slots else None
+    own = trial.markers.get(slot) if slot in plan.log.slots else None
     if own is not None:
-        following = [trial.markers[slot].sample for slot in slots if slot in trial.markers]
+        following = [trial.markers[other].sample for other in plan.log.slots if other in trial.markers]
         next_row = min((sample for sample in following if sample > own.sample), default=None)
         samples = [sample for sample in samples if next_row is None or sample < next_row]
     return max(samples, default=None)
