@@ -81,7 +81,20 @@ def test_help_lists_the_commands(capsys: pytest.CaptureFixture[str]) -> None:
         (["demo"], {"folder": Path("pulsemend-demo"), "no_window": False}),
         (["demo", "d", "--no-window"], {"folder": Path("d"), "no_window": True}),
         (["sample", "d", "--recordings", "3"], {"folder": Path("d"), "recordings": 3}),
-        (["facts", "r.vhdr", "--json"], {"recording": Path("r.vhdr"), "json": True}),
+        (
+            ["facts", "r.vhdr", "--json"],
+            {"recording": Path("r.vhdr"), "json": True, "plan": None, "marks": None, "events": None},
+        ),
+        (
+            ["facts", "r.vhdr", "--plan", "p.toml", "--marks", "m.toml", "--events", "e.tsv"],
+            {
+                "recording": Path("r.vhdr"),
+                "json": False,
+                "plan": Path("p.toml"),
+                "marks": Path("m.toml"),
+                "events": Path("e.tsv"),
+            },
+        ),
         (["draft", "r.vhdr", "--out", "p.toml"], {"recording": Path("r.vhdr"), "out": Path("p.toml")}),
         (
             [

@@ -50,7 +50,9 @@ def copied(study: Study, folder: Path, stem: str = "sub-lt01_task-lantern") -> P
 def test_mend_prints_what_was_kept_and_where_it_is(study: Study, tmp_path: Path) -> None:
     ended = pulsemend("mend", study.recording, "--plan", study.plan, "--out", "sets", cwd=tmp_path)
     assert ended.code == 0
-    assert ended.out.startswith("sub-lt01_task-lantern: 3 trials, 0 incomplete; 5 pulses, 1 of them marked")
+    assert ended.out.startswith(
+        "sub-lt01_task-lantern: 3 trials, 0 incomplete, 0 doubtful; 5 pulses, 1 of them marked"
+    )
     assert "delay1: 3 kept" in ended.out
     assert "left out, no anchor in this trial: 1" in ended.out
     assert ended.out.rstrip().endswith(SET)

@@ -31,6 +31,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> int:
     """Write the set, or show what it would hold."""
+    from pulsemend.commands.paper import (
+        count_lines,
+        difference_lines,
+        paper_json,
+        trial_lines,
+    )
     from pulsemend.mending.mend import dry_run, mend
     from pulsemend.mending.prepare import Request
 
@@ -38,9 +44,15 @@ def run(args: argparse.Namespace) -> int:
     if args.dry_run:
         prepared = output.show(dry_run(request), json_mode=args.json)
         if args.json:
-            output.say_json(_as_json(prepared))
+            output.say_json({**_as_json(prepared), **paper_json(prepared)})
         else:
-            for line in [*_lines(prepared), "", *_ledger_lines(prepared)]:
+            for line in [
+                *_lines(prepared),
+                *trial_lines(prepared),
+                *count_lines(prepared),
+                *_ledger_lines(prepared),
+                *difference_lines(prepared),
+            ]:
                 output.say(line)
         return 0
     result = output.show(mend(request, args.out, overwrite=args.overwrite), json_mode=args.json)
@@ -64,9 +76,11 @@ def _lines(prepared: Prepared) -> list[str]:
     from pulsemend.mending.prepare import marked_only
 
     facts, estimates = prepared.setup.facts, prepared.estimates
-    incomplete = sum(bool(trial.missing) for trial in prepared.trials.trials)
+    trials = prepared.trials.trials
+    incomplete = sum(bool(trial.missing) for trial in trials)
+    doubtful = sum(bool(trial.doubts) for trial in trials)
     lines = [
-        f"{facts.stem}: {len(prepared.trials.trials)} trials, {incomplete} incomplete; "
+        f"{facts.stem}: {len(trials)} trials, {incomplete} incomplete, {doubtful} doubtful; "
         f"{len(estimates.pulses)} pulses, {marked_only(estimates)} of them marked, not in the signal"
     ]
     lines += [f"  {rule}: {count} kept" for rule, count in kept_per_rule(prepared).items()]
@@ -77,6 +91,8 @@ def _lines(prepared: Prepared) -> list[str]:
 
 
 def _ledger_lines(prepared: Prepared) -> list[str]:
+    from pulsemend.commands.paper import table_lines
+
     rate_hz = prepared.setup.facts.rate_hz
     rows = [("trial", "rule", "piece", "anchor [s]", "fate", "")]
     for candidate in prepared.ledger:
@@ -91,10 +107,7 @@ def _ledger_lines(prepared: Prepared) -> list[str]:
                 candidate.detail,
             )
         )
-    widths = [max(len(row[i]) for row in rows) for i in range(6)]
-    return [
-        "  ".join(text.ljust(width) for text, width in zip(row, widths, strict=True)).rstrip() for row in rows
-    ]
+    return ["", "candidate epochs", *table_lines(rows)]
 
 
 def _as_json(prepared: Prepared) -> dict[str, object]:
@@ -106,6 +119,8 @@ def _as_json(prepared: Prepared) -> dict[str, object]:
         "recording": prepared.setup.facts.stem,
         "trials": len(prepared.trials.trials),
         "trials_incomplete": sum(bool(trial.missing) for trial in prepared.trials.trials),
+        "trials_doubtful": sum(bool(trial.doubts) for trial in prepared.trials.trials),
+        "trials_set_aside": sum(bool(trial.set_aside) for trial in prepared.trials.trials),
         "pulses": len(prepared.estimates.pulses),
         "pulses_marked_not_in_signal": marked_only(prepared.estimates),
         "candidates": len(prepared.ledger),

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Literal
 
@@ -135,6 +135,8 @@ class SetContents:
         JSON-able; the writer adds the facts of the files and the safety notice.
     pulse_columns : mapping of str to tuple of str
         Further columns of the table of pulses, one text per pulse.
+    later : mapping of str to sequence of str
+        Label columns taken from later in the trial than an epoch, with the rules of these epochs.
     """
 
     stem: str
@@ -158,6 +160,7 @@ class SetContents:
     replaced_reach_s: float = 0.0
     provenance: Mapping[str, object] = field(default_factory=dict)
     pulse_columns: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
+    later: Mapping[str, Sequence[str]] = field(default_factory=dict)
 
     @property
     def length(self) -> int:

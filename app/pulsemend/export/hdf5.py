@@ -13,7 +13,7 @@ so that epochs are written in place without the library in between.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -81,7 +81,7 @@ def create_hdf5(path: Path, contents: SetContents) -> tuple[Region, Region]:
         file["times"].attrs["units"] = "s"
         file["times"].attrs["zero"] = contents.zero
         _write_channels(file.create_group("channels"), contents)
-        _write_labels(file.create_group("labels"), labels_of(contents))
+        _write_labels(file.create_group("labels"), labels_of(contents), contents.later)
         file.attrs["schema"] = SCHEMA
         file.attrs["rate_hz"] = float(contents.rate_hz)
         # A text of variable length lives in the file's heap: attributes themselves end at 64 KiB.
@@ -196,7 +196,7 @@ def _read_channels(group: Any) -> tuple[SetChannel, ...]:
     )
 
 
-def _write_labels(group: Any, labels: Labels) -> None:
+def _write_labels(group: Any, labels: Labels, later: Mapping[str, Sequence[str]]) -> None:
     group.create_dataset("name", data=labels.name, dtype=_TEXT)
     group["trial"] = np.array(labels.trial, np.int64)
     group["piece"] = np.array(labels.piece, np.int64)
@@ -207,6 +207,9 @@ def _write_labels(group: Any, labels: Labels) -> None:
         # A slash in a name would make a group of it; the true name is kept beside the column.
         dataset = group.create_dataset(column.replace("/", "\u2215"), data=texts, dtype=_TEXT)
         dataset.attrs["column"] = column
+        if column in later:
+            # Rules whose epochs end before what this label tells of has happened.
+            dataset.attrs["later"] = ", ".join(later[column])
 
 
 def _read_labels(group: Any) -> Labels:

@@ -16,12 +16,14 @@ from numpy.typing import NDArray
 
 from pulsemend import DATA_VERSION, __version__
 from pulsemend.engine.chain import Cut
+from pulsemend.engine.onsets import OnsetShift
 from pulsemend.engine.steps import steps
 from pulsemend.export.contents import SetChannel, SetContents, SetEpoch, Zero
 from pulsemend.export.set_writer import SetWriter, check_place
 from pulsemend.mending.prepare import Prepared, Request, marked_only, need_epochs, prepare, set_channels
 from pulsemend.progress import Progress, Work
 from pulsemend.readers.opening import open_recording
+from pulsemend.trials.later import later_by_rule
 
 RANK_TOLERANCE = 1e-5
 """Directions of the set in which the amplitude is below this share of the strongest direction's do not count:
@@ -180,6 +182,7 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut]) -> SetContents:
         lowpass_hz=plan.filter.lowpass_hz or reduced_lowpass_hz,
         replaced_reach_s=setup.replaced_reach_s,
         provenance=provenance(prepared),
+        later=later_labels(prepared),
     )
 
 
@@ -209,13 +212,51 @@ def provenance(prepared: Prepared) -> dict[str, Any]:
         "trials": {
             "found": len(prepared.trials.trials),
             "incomplete": sum(bool(trial.missing) for trial in prepared.trials.trials),
+            "doubtful": sum(bool(trial.doubts) for trial in prepared.trials.trials),
+            "set_aside": sum(bool(trial.set_aside) for trial in prepared.trials.trials),
             "markers_in_no_trial": len(prepared.trials.extra),
         },
+        "cures": list(prepared.marks.cures_accepted),
+        "log": _log_provenance(prepared),
+        "stimulus_onsets": [_onset_provenance(shift) for shift in prepared.estimates.stimulus_onsets],
+        "balance": asdict(prepared.plan.balance) if prepared.plan.balance.by else None,
+        "stimulation": {
+            name: value
+            for name, value in vars(prepared.plan.stimulation).items()
+            if value not in (None, "") and (name != "columns" or value)
+        },
+        "later_labels": later_labels(prepared),
         "pulses_marked_not_in_signal": marked_only(prepared.estimates),
         "kept_per_rule": kept_per_rule(prepared),
         "rank_tolerance": RANK_TOLERANCE,
         "warnings": list(prepared.warnings),
     }
+
+
+def later_labels(prepared: Prepared) -> dict[str, list[str]]:
+    """Name label columns taken from later in the trial than an epoch, with the rules of these epochs."""
+    found = later_by_rule(prepared.kept, prepared.trials.trials, prepared.plan, prepared.decision.geometry)
+    return {column: list(rules) for column, rules in found.items()}
+
+
+def _log_provenance(prepared: Prepared) -> dict[str, Any] | None:
+    logged, table = prepared.decision.logged, prepared.log.table
+    if logged is None or table is None:
+        return None
+    clock = None if logged.join is None else logged.join.clock
+    return {
+        "file": table.name,
+        "sha256": table.sha256,
+        "joined": 0 if logged.join is None else len(logged.join.pairs),
+        "words": logged.problem or (logged.join.words if logged.join else ""),
+        "clock": None if clock is None else asdict(clock),
+        "rows_excluded": list(prepared.marks.log_rows_excluded),
+    }
+
+
+def _onset_provenance(shift: OnsetShift) -> dict[str, Any]:
+    """Everything about a measured onset but its single shifts: those are in the estimates."""
+    return {name: value for name, value in asdict(shift).items() if name != "shifts_s"}
 
 
 def kept_per_rule(prepared: Prepared) -> dict[str, int]:

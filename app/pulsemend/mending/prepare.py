@@ -104,6 +104,7 @@ class Prepared:
     estimates : Estimates
     chain : Chain
     decision : Decision
+    log : StudyLog
     warnings : tuple of str
         One sentence each.
     """
@@ -116,6 +117,7 @@ class Prepared:
     estimates: Estimates
     chain: Chain
     decision: Decision
+    log: StudyLog
     warnings: tuple[str, ...]
 
     @property
@@ -197,7 +199,8 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
     identified = replace(marks, fingerprint=identity)
     estimates = yield from fit(recording, setup)
     need_known_pulses(estimates, facts)
-    decision = decide(setup, estimates, plan, marks, read_study_log(recording, plan, marks))
+    log = read_study_log(recording, plan, marks)
+    decision = decide(setup, estimates, plan, marks, log)
     need_log(decision, plan)
     return Prepared(
         recording=recording,
@@ -208,6 +211,7 @@ def _prepare(request: Request, plan_file: PlanFile, recording: Recording) -> Wor
         estimates=estimates,
         chain=Chain(recording, setup, estimates),
         decision=decision,
+        log=log,
         warnings=(*plan_file.warnings, *warnings, *decision.warnings),
     )
 
