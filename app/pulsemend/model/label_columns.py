@@ -15,6 +15,7 @@ STIMULATION = "stimulation."
 SOURCE = "source"
 """Label of a slot that may be filled by something else than its marker: what filled it."""
 
+_NUMBER = re.compile(r"[+-]?\d*\.?\d*")
 _OTHER = re.compile(r"other\(\s*([^()]*?)\s*\)")
 
 
@@ -41,23 +42,21 @@ class LabelSource:
     what: str
 
 
-def source_of(plan: Plan, text: str) -> LabelSource:
+def source_of(text: str) -> LabelSource:
     """Understand a rule label's source: ``other(column)``, a column, else plain text.
 
-    A column holds a point (``cue1.item``, ``log.answer``), or is a derived label or a column of the trial.
+    A column holds a point (``cue1.item``, ``log.answer``); numbers do, too, and stay texts. Derived labels
+    are columns of every rule anyway, so their names are plain texts here.
 
     Parameters
     ----------
-    plan : Plan
-        Whose derived labels count.
     text : str
         As written.
     """
     other = _OTHER.fullmatch(text.strip())
     if other:
         return LabelSource(Meaning.OTHER, other[1])
-    bare = {label.name for label in plan.labels} | set(trial_columns(plan)) | {"run"}
-    if "." in text or text in bare:
+    if "." in text and not _NUMBER.fullmatch(text.strip()):
         return LabelSource(Meaning.COLUMN, text)
     return LabelSource(Meaning.TEXT, text)
 

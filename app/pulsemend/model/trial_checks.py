@@ -11,6 +11,7 @@ from pulsemend.model.epochs import FIXED_COLUMNS
 from pulsemend.model.keys import show
 from pulsemend.model.label_columns import (
     LOG,
+    SOURCE,
     STIMULATION,
     Meaning,
     known_columns,
@@ -94,6 +95,7 @@ def _check_slots(plan: Plan) -> None:
                 received=show(slot.role),
             )
         _check_stand_in(slot, path)
+        _check_source_label(slot, plan)
         earlier.append(slot.slot)
 
 
@@ -155,6 +157,19 @@ def _check_stand_in(slot: Slot, path: KeyPath) -> None:
             allowed=f"role = {show(Role.PULSE)}",
             received=show(slot.role),
         )
+
+
+def _check_source_label(slot: Slot, plan: Plan) -> None:
+    """Refuse codes that carry the label which says what filled their slot."""
+    if slot.stand_in is StandIn.NONE and not slot.from_signal:
+        return
+    for marker in plan.markers:
+        if marker.role is slot.role and SOURCE in marker.labels:
+            raise PlanError(
+                key_text(("markers", marker.code, "labels", SOURCE)),
+                f"is kept for what filled slot {show(slot.slot)}; choose another name",
+                received=show(marker.labels[SOURCE]),
+            )
 
 
 def _check_groups(plan: Plan) -> None:
@@ -388,7 +403,7 @@ def _check_rule_labels(plan: Plan) -> None:
                 )
             if "." in column or not column:
                 raise PlanError(key, "a rule's column has no point in its name", received=show(column))
-            source = source_of(plan, text)
+            source = source_of(text)
             if source.meaning is not Meaning.TEXT:
                 _check_column(plan, source.what, key)
             if source.meaning is Meaning.OTHER and not source.what.startswith(LOG):

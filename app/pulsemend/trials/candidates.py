@@ -98,7 +98,7 @@ class Geometry:
         return anchor + round(start_s * self.output_hz) * self.step
 
 
-def candidates(trials: Trials, plan: Plan, geometry: Geometry, run: str = "") -> tuple[Candidate, ...]:
+def candidates(trials: Trials, plan: Plan, geometry: Geometry) -> tuple[Candidate, ...]:
     """All epochs that a plan asks for, kept or left out.
 
     Parameters
@@ -109,8 +109,6 @@ def candidates(trials: Trials, plan: Plan, geometry: Geometry, run: str = "") ->
         Its rules; starts and length are whole numbers of output samples (`check_against_rate`).
     geometry : Geometry
         Gaps, breaks and decisions by hand.
-    run : str
-        Label of the run; empty: none.
 
     Returns
     -------
@@ -120,7 +118,7 @@ def candidates(trials: Trials, plan: Plan, geometry: Geometry, run: str = "") ->
         incomplete, trial doubtful, no anchor, outside the recording, across a break, not before its stop,
         touches a gap, touches a bad stretch, left out by hand.
     """
-    cutter = _Cutter(plan, geometry, TrialLabels(plan, trials.trials, run))
+    cutter = _Cutter(plan, geometry, TrialLabels(plan, trials.trials, trials.run))
     return tuple(
         cutter.candidate(trial, index, piece)
         for trial in trials.trials

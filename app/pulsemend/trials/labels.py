@@ -120,7 +120,7 @@ class TrialLabels:
         if text is None:
             return NOT_AVAILABLE
         if text not in self._sources:
-            self._sources[text] = source_of(self._plan, text)
+            self._sources[text] = source_of(text)
         source = self._sources[text]
         if source.meaning is Meaning.TEXT:
             return source.what

@@ -119,7 +119,7 @@ def _origins(plan: Plan, rule: EpochRule, columns: Iterable[str]) -> Origins:
 
     def of(column: str) -> frozenset[str]:
         if column in rule.labels:
-            source = source_of(plan, rule.labels[column])
+            source = source_of(rule.labels[column])
             return frozenset() if source.meaning is Meaning.TEXT else of(source.what)
         if column in derived:
             label = derived[column]

@@ -141,10 +141,10 @@ def _columns_used(plan: Plan) -> dict[str, None]:
     """Columns of the log that labels, balance and facts are made from, without what stands before them."""
     sources = [source for label in plan.labels for source in label.sources]
     sources += [
-        source_of(plan, text).what
+        source_of(text).what
         for rule in plan.epochs.rule
         for text in rule.labels.values()
-        if source_of(plan, text).meaning is not Meaning.TEXT
+        if source_of(text).meaning is not Meaning.TEXT
     ]
     sources += plan.balance.by
     used = [source.removeprefix(LOG) for source in sources if source.startswith(LOG)]
