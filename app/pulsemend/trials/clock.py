@@ -9,8 +9,8 @@ from pulsemend.model.log import ClockFit
 
 LEAST_TOLERANCE_S = 0.002
 """No pair this near to the line is an outlier: clocks are written with about this much rounding."""
-TOLERANCE_SPREADS = 6.0
-"""Normal errors stay within so many spreads but for two in a thousand million."""
+TOLERANCE_SPREADS = 5.0
+"""Normal errors stay within so many spreads but for one in two million."""
 
 _SPREAD_OF_NORMAL = 1.4826  # standard deviation over median absolute deviation
 _MOST_ROUNDS = 20
@@ -21,7 +21,7 @@ FloatArray = NDArray[np.float64]
 def fit_clock(log_s: FloatArray, recorded_s: FloatArray) -> ClockFit:
     """Fit the recording's clock to the log's.
 
-    A line through medians (slopes between pairs half the list apart) comes first; pairs beyond six robust
+    A line through medians (slopes between pairs half the list apart) comes first; pairs beyond five robust
     spreads of the line, and beyond 2 ms, are set aside, and least squares fit the rest until nothing changes.
 
     Parameters

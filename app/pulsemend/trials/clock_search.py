@@ -23,11 +23,17 @@ from pulsemend.trials.clock import FloatArray, fit_clock, spread_s, tolerance_s
 
 MOST_DRIFT = 1000e-6
 """Two clocks differ by less than this; crystals of computers and amplifiers by a tenth of it."""
-WIDEST_S = (0.03, 0.15, 0.6)
+WIDEST_S = (0.03, 0.15, 1.0)
 """Tolerances tried one after the other: exact clocks, clocks bound to frames, times in whole seconds."""
 CHANCE = 1e-6
 """How probable a joining by chance may be."""
+CHANCE_COMPLETE = 1e-3
+"""The same where all rows and all trials are joined, so that no offset was chosen."""
 
+MOST_SPREAD = 0.35
+"""Of the widest tolerance; what chance pairs spreads over all of it, which makes 0.58."""
+
+_LEAST_SHARE = dict(zip(WIDEST_S, (0.5, 0.5, 0.75), strict=True))  # of the events that both share
 _STRETCH = 100  # rows that vote together
 _STRETCHES = 5
 _PEAKS = 4  # offsets grown per stretch
@@ -68,7 +74,7 @@ class Explanation:
     @property
     def worth(self) -> float:
         """Number of pairs, each counting more the nearer they are to the clock."""
-        return self.rows.size * float(np.log(2.0 * self.widest_s / max(self.tolerance_s / 6.0, 1e-5)))
+        return self.rows.size * float(np.log(2.0 * self.widest_s / max(self.clock.residual_sd_s, 1e-5)))
 
 
 @dataclass(frozen=True)
@@ -90,25 +96,39 @@ class Found:
 def find_clock(log_s: FloatArray, recorded_s: FloatArray) -> Found:
     """Find the clock under which a log and a recording hold the same events.
 
-    A clock is accepted if it pairs at least half of the events in the stretch that both share, if its number
-    of pairs would come about by chance less than once in a million searches (binomial, over all offsets and
-    drifts tried; the chance that one row meets a trial is measured at other offsets, so that regular
-    intervals count as what they are), and if no other clock explains about as much.
+    A clock is accepted if all of these hold.
+
+    - It pairs at least half of the events in the stretch that log and recording share (three quarters with
+      the widest tolerance), and drifts by no more than 1000 ppm.
+    - The residuals keep to its middle: their spread is at most 0.35 of the widest distance allowed.
+    - So many pairs would come about by chance less than once in a million searches: binomial, over all
+      offsets and drifts tried. How often a row meets a trial by chance is measured at other offsets, so
+      that regular intervals count as what they are.
+    - No other clock explains about as much.
 
     Parameters
     ----------
     log_s, recorded_s : array, shape (n_rows,), (n_trials,)
         Times in ascending order.
     """
+    doubtful = Found(None)
     for widest_s in WIDEST_S:
         for stretch in _stretches(log_s.size):
             peaks = _vote(log_s[stretch], recorded_s, widest_s)
             grown = [_grow(log_s, recorded_s, widest_s, stretch, *peak) for peak in peaks]
             able = sorted((one for one in grown if one is not None), key=lambda one: -one.worth)
-            if not able or not _beyond_chance(able[0], log_s, recorded_s):
+            if not able or not _fits(able[0]):
                 continue
-            return Found(able[0], _rival(able, log_s, recorded_s))
-    return Found(None)
+            regular, irregular = _chances(able[0], log_s, recorded_s)
+            if irregular > CHANCE:
+                continue
+            found = Found(able[0], _rival(able, log_s, recorded_s))
+            if regular <= CHANCE:
+                return found
+            # Equal intervals: the clock is no better than others, which a rival shows best.
+            if found.rival is not None and doubtful.rival is None:
+                doubtful = found
+    return doubtful
 
 
 def near_pairs(
@@ -224,23 +244,35 @@ def _fitted(log_s: FloatArray, recorded_s: FloatArray) -> ClockFit | None:
     return clock if abs(clock.drift) <= MOST_DRIFT + 3.0 * clock.drift_se else None
 
 
-def _beyond_chance(one: Explanation, log_s: FloatArray, recorded_s: FloatArray) -> bool:
-    """Tell whether so many pairs are more than chance and more than half of what both share."""
-    n_pairs = one.rows.size
-    if 2 * n_pairs < one.shared or abs(one.clock.drift) > MOST_DRIFT:
-        return False
+def _fits(one: Explanation) -> bool:
+    """Tell whether enough of what both share is paired, and near to the clock."""
+    return (
+        one.rows.size >= _LEAST_SHARE[one.widest_s] * one.shared
+        and one.clock.residual_sd_s <= MOST_SPREAD * one.widest_s
+        and abs(one.clock.drift) <= MOST_DRIFT
+    )
+
+
+def _chances(one: Explanation, log_s: FloatArray, recorded_s: FloatArray) -> tuple[float, float]:
+    """How probable so many pairs are by chance: with intervals as regular as these, and with irregular ones."""
     span_log_s, span_recorded_s = float(np.ptp(log_s)), float(np.ptp(recorded_s))
-    per_row = 2.0 * one.tolerance_s * recorded_s.size / max(span_recorded_s, one.tolerance_s)
-    complete = n_pairs == log_s.size == recorded_s.size
-    if not complete:
-        per_row = max(per_row, _met_elsewhere(one, log_s, recorded_s))
-    if per_row >= 1.0:
-        return False
-    shared_s = min(span_log_s, span_recorded_s)
     offsets = 1.0 + (span_log_s + span_recorded_s) / (2.0 * one.tolerance_s)
-    drifts = 1.0 + MOST_DRIFT * shared_s / one.tolerance_s
+    drifts = 1.0 + MOST_DRIFT * min(span_log_s, span_recorded_s) / one.tolerance_s
     tried = offsets * drifts * len(WIDEST_S)
-    return bool(tried * bdtrc(n_pairs - 1, max(one.shared, n_pairs), per_row) <= CHANCE)
+    anywhere = 2.0 * one.tolerance_s * recorded_s.size / max(span_recorded_s, one.tolerance_s)
+    elsewhere = max(anywhere, _met_elsewhere(one, log_s, recorded_s))
+    if one.rows.size == log_s.size == recorded_s.size:
+        # All rows and all trials are joined in order, so no offset was chosen.
+        regular = _chance(one, elsewhere, 1.0) * CHANCE / CHANCE_COMPLETE
+    else:
+        regular = _chance(one, elsewhere, tried)
+    return regular, _chance(one, anywhere, tried)
+
+
+def _chance(one: Explanation, per_row: float, tried: float) -> float:
+    """How probable so many pairs are, if a row meets a trial by chance so often, in so many attempts."""
+    n_rows = max(one.shared, one.rows.size)
+    return float(tried * bdtrc(one.rows.size - 1, n_rows, per_row)) if per_row < 1.0 else 1.0
 
 
 def _met_elsewhere(one: Explanation, log_s: FloatArray, recorded_s: FloatArray) -> float:

@@ -11,10 +11,19 @@ from dataclasses import dataclass, field
 from itertools import pairwise
 
 import numpy as np
+from numpy.typing import NDArray
 
 from pulsemend.model.log import ClockFit, Doubt, LogJoin, LogTimes, TrialTime
 from pulsemend.trials.clock import FloatArray, fit_clock
-from pulsemend.trials.clock_search import MOST_DRIFT, WIDEST_S, Explanation, IntArray, find_clock, settled
+from pulsemend.trials.clock_search import (
+    MOST_DRIFT,
+    MOST_SPREAD,
+    WIDEST_S,
+    Explanation,
+    IntArray,
+    find_clock,
+    settled,
+)
 from pulsemend.trials.log_checks import LEAST_TIMED, numbers_twice, unusable
 from pulsemend.trials.log_words import contradiction, distance, joined_words, not_found, rival_words
 
@@ -121,8 +130,11 @@ class _Draft:
             self.by = "number"
             self.pairs = same
             return ""
-        one = self.checked(timed)
-        if one is None:
+        log_s, recorded_s = np.array(timed).T
+        found = find_clock(self.log_s, self.recorded_s)
+        one = found.best if found.rival is None else None
+        one = one or self.numbers_clock(log_s, recorded_s)
+        if one is None or 2 * _agreeing(one.clock, log_s, recorded_s, one.tolerance_s).sum() < len(timed):
             return contradiction(len(timed), MOST_DRIFT)
         self.by = "number and time"
         self.take(one, same)
@@ -171,16 +183,15 @@ class _Draft:
             for row, trial in zip(rows[number], trials[number], strict=True)
         }
 
-    def checked(self, timed: list[tuple[float, float]]) -> Explanation | None:
+    def numbers_clock(self, log_s: FloatArray, recorded_s: FloatArray) -> Explanation | None:
         """Fit the clock to rows and trials with the same number; None if less than half of them agree."""
-        log_s, recorded_s = np.array(timed).T
         clock = fit_clock(log_s, recorded_s)
-        if abs(clock.drift) > MOST_DRIFT + 3.0 * clock.drift_se:
-            return None
         for widest_s in WIDEST_S:
-            agree = np.abs(recorded_s - clock.recorded_s(log_s)) <= widest_s
-            if 2 * agree.sum() >= len(timed) and np.unique(log_s[agree]).size >= LEAST_TIMED:
-                return settled(clock, self.log_s, self.recorded_s, widest_s)
+            agree = _agreeing(clock, log_s, recorded_s, widest_s)
+            if 2 * agree.sum() >= log_s.size and np.unique(log_s[agree]).size >= LEAST_TIMED:
+                one = settled(clock, self.log_s, self.recorded_s, widest_s)
+                near = one is not None and one.clock.residual_sd_s <= MOST_SPREAD * widest_s
+                return one if near else None
         return None
 
     def take(self, one: Explanation, same: dict[int, int]) -> None:
@@ -201,12 +212,12 @@ class _Draft:
         for row, trial in same.items():
             self.take_same(row, trial)
         # What is too far apart to be joined and too near to be strangers.
-        rows, trials = self.left()
-        near = _heaps(one.clock, self.log_s[rows], self.recorded_s[trials], one.widest_s)
-        for near_rows, near_trials in near:
+        free_rows, free_trials = self.left()
+        near = _heaps(one.clock, self.log_s[free_rows], self.recorded_s[free_trials], one.widest_s)
+        for rows, trials in near:
             self.doubt(
-                [self.timed_rows[rows[at]] for at in near_rows],
-                [self.timed_trials[trials[at]] for at in near_trials],
+                [self.timed_rows[free_rows[at]] for at in rows],
+                [self.timed_trials[free_trials[at]] for at in trials],
                 f"near each other, but beyond the tolerance of {distance(one.tolerance_s)}",
             )
 
@@ -215,6 +226,9 @@ class _Draft:
         alike = {row: same[row] for row in rows if same.get(row) in trials}
         if alike:
             self.pairs.update(alike)
+            rows = [row for row in rows if row not in alike]
+            trials = [trial for trial in trials if trial not in alike.values()]
+        if not rows or not trials:
             return
         numbers = [self.log.number(row) for row in rows] + [self.trials[at].number for at in trials]
         elsewhere = same.keys() & set(rows) or set(same.values()) & set(trials)
@@ -285,6 +299,12 @@ class _Draft:
             words="",
         )
         return joined_words(join, self.log, self.trials)
+
+
+def _agreeing(
+    clock: ClockFit, log_s: FloatArray, recorded_s: FloatArray, within_s: float
+) -> NDArray[np.bool_]:
+    return np.asarray(np.abs(recorded_s - clock.recorded_s(log_s)) <= within_s)
 
 
 def _sorted(times_s: Sequence[float | None]) -> tuple[list[int], FloatArray]:

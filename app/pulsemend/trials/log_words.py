@@ -58,17 +58,17 @@ def _clock_words(clock: ClockFit) -> str:
 def not_found(n_rows: int, n_trials: int) -> str:
     """Say that no clock fits."""
     return (
-        f"The intervals between its {n_rows} rows with a time and those between {n_trials} trials do not fit each "
-        "other under any clock by more than chance. Is it the log of this recording, and is this the column "
-        "with the times of these markers?"
+        f"The intervals between its {n_rows} rows with a time and those between {n_trials} trials do not fit "
+        "each other under any clock by more than chance. Is it the log of this recording, and is this the "
+        "column with the times of these markers?"
     )
 
 
 def contradiction(n_same: int, most_drift: float) -> str:
     """Say that trial numbers and times cannot both be right."""
     return (
-        f"Trial numbers and times contradict each other: {n_same} rows have the number of a trial, and no clock "
-        f"within {most_drift:.1%} brings half of them together. "
+        f"Trial numbers and times contradict each other: {n_same} rows have the number of a trial, and no "
+        f"clock within {most_drift:.1%} brings half of them together. "
         "Correct the numbers, or leave them out of the plan to join by time alone."
     )
 
