@@ -85,7 +85,9 @@ def _events(session: Session, learned: Learned | None) -> Events:
     rate_hz = opened.facts.rate_hz
     rows: list[tuple[float, Role, str, int]] = []
     pulses_known = learned is not None and bool(learned.estimates.pulses)
-    for place, marker in enumerate(opened.facts.markers):
+    # Cures, decisions by hand and measured onsets count as soon as they are worked out.
+    markers = opened.facts.markers if learned is None else learned.decision.markers
+    for place, marker in enumerate(markers):
         role = Role.OTHER if plan is None else plan.role_of(marker.code)
         if role is Role.IGNORE or (role is Role.PULSE and pulses_known):
             continue
