@@ -8,10 +8,12 @@ good. Where that number is above one, nothing is guessed: the trials concerned a
 
 from __future__ import annotations
 
-from bisect import bisect_left, bisect_right
-from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
-from functools import lru_cache
+from bisect import bisect_left
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from functools import cached_property, lru_cache
+from itertools import accumulate
+from math import inf
 
 from pulsemend.model.trial_kinds import Variant
 from pulsemend.model.vocabulary import Role
@@ -26,10 +28,11 @@ LEFT_OVER = 11
 UNUSED = 3
 """Cost of a pulse found in the signal that takes no slot: it need not belong to a trial."""
 
-_SUM_ROUNDING_S = 1e-12
-
 _FOREIGN = 2
-"""Most foreign markers between two of a trial, in slots of a trial: beyond, they are not one trial."""
+"""Most foreign markers between two of a trial, in slots of the longest trial: beyond, they are not one."""
+
+_SUM_ROUNDING_S = 1e-12
+_FAR = 1 << 60
 
 
 @dataclass(frozen=True)
@@ -60,17 +63,18 @@ class Placed:
         Place of the marker of every slot that was found.
     missing : tuple of str
         Required slots that were not.
-    others : mapping of str to tuple of (int or None)
-        Slots that equally good explanations fill otherwise: with which markers, None for with none.
+    others : mapping of str to tuple of int
+        Slots that equally good explanations fill with other markers between the neighbouring trials.
     other_kinds : tuple of str
-        Kinds of trial that are as good.
+        Kinds of trial that equally good explanations see between the neighbouring trials.
     is_doubtful : bool
+        Not every explanation that is as good has this trial as it is.
     """
 
     kind: str
     places: Mapping[str, int]
     missing: tuple[str, ...] = ()
-    others: Mapping[str, tuple[int | None, ...]] = field(default_factory=dict)
+    others: Mapping[str, tuple[int, ...]] = field(default_factory=dict)
     other_kinds: tuple[str, ...] = ()
     is_doubtful: bool = False
 
@@ -103,7 +107,7 @@ def _aligned(events: tuple[Event, ...], variants: tuple[Variant, ...]) -> tuple[
     # Most edits of a plan change neither markers nor slots.
     if not events:
         return ()
-    return _Aligner(events, tuple(_Way.of(variant) for variant in variants)).trials()
+    return _Aligner(events, tuple(_way(variant) for variant in variants)).trials()
 
 
 class _Way:
@@ -117,40 +121,44 @@ class _Way:
         self.takes_found = tuple(slot.from_signal for slot in slots)
         self.bounds: Bounds = pair_bounds(slots)
         self.size = len(slots)
-        required = [0 if slot.optional else 1 for slot in slots]
-        self.is_required = tuple(map(bool, required))
-        # Cost of missing slots before and after each place.
-        self.before = tuple(MISSING * sum(required[:place]) for place in range(self.size + 1))
-        self.after = tuple(MISSING * sum(required[place + 1 :]) for place in range(self.size))
+        self.is_required = tuple(not slot.optional for slot in slots)
+        costs = [MISSING * required for required in self.is_required]
+        # Cost of missing slots before and behind each place.
+        self.before = tuple(sum(costs[:place]) for place in range(self.size + 1))
+        self.after = tuple(sum(costs[place + 1 :]) for place in range(self.size))
         places = {name: place for place, name in enumerate(self.names)}
         # An optional slot that another counts from must be there for the other.
         self.needs = tuple(
             places[slot.after] if slot.after and slots[places[slot.after]].optional else None
             for slot in slots
         )
-        self._open: dict[tuple[int, ...], tuple[int, ...]] = {}
+        self.starts = tuple(self.state((place,)) for place in range(self.size) if self.may_start(place))
+        self._states: dict[tuple[int, ...], _State] = {one.filled: one for one in self.starts}
 
-    @staticmethod
-    @lru_cache(maxsize=200)
-    def of(variant: Variant) -> _Way:
-        return _Way(variant)
+    def may_start(self, place: int) -> bool:
+        """Tell whether a trial may be seen from this slot on: one lacking more than it has is never best."""
+        return self.needs[place] is None and self.before[place] <= LEFT_OVER * (self.size - place)
 
-    def still_open(self, filled: tuple[int, ...]) -> tuple[int, ...]:
-        """Tell which filled slots still bound a later one beyond what the other filled ones do."""
-        known = self._open.get(filled)
-        if known is None:
-            known = tuple(place for place in filled if self._matters(place, filled))
-            self._open[filled] = known
-        return known
+    def state(self, filled: tuple[int, ...]) -> _State:
+        """Make the state of a trial with these slots filled, of which only those that still matter count."""
+        return _State(self, filled)
 
-    def _matters(self, place: int, filled: tuple[int, ...]) -> bool:
+    def known_state(self, filled: tuple[int, ...]) -> _State:
+        """Look up the state of these slots: there is one, since nodes are told apart by it."""
+        found = self._states.get(filled)
+        if found is None:
+            found = self._states[filled] = self.state(filled)
+        return found
+
+    def matters(self, place: int, filled: tuple[int, ...]) -> bool:
+        """Tell whether a filled slot still bounds a later one beyond what the other filled ones do."""
         bounds, last = self.bounds, filled[-1]
         if place == last:
             return True
+        between = [other for other in filled if other > place]
         for later in range(last + 1, self.size):
             if self.needs[later] == place:
                 return True
-            between = [other for other in filled if other > place]
             for a, b in ((place, later), (later, place)):
                 within = bounds[a][b] + _SUM_ROUNDING_S
                 if not any(bounds[a][other] + bounds[other][b] <= within for other in between):
@@ -158,29 +166,88 @@ class _Way:
         return False
 
 
-_Key = tuple[int, int, tuple[tuple[int, int], ...]]  # way, slot, what still bounds: (slot, event)
+@lru_cache(maxsize=200)
+def _way(variant: Variant) -> _Way:
+    return _Way(variant)
 
 
-@dataclass(slots=True)
+@dataclass(frozen=True)
+class _Step:
+    """From a state to one of a later slot.
+
+    ``limits`` holds for every filled slot the least and the most time to the later one; ``kept`` the places,
+    among the filled slots and the new one, of those that still matter then.
+    """
+
+    slot: int
+    skipped: int
+    takes_found: bool
+    limits: tuple[tuple[float, float], ...]
+    kept: tuple[int, ...]
+    state: _State
+
+
+class _State:
+    """Which slots of a trial under way are filled, as far as it matters for the rest; the last one is."""
+
+    def __init__(self, way: _Way, filled: tuple[int, ...]) -> None:
+        self.way = way
+        self.filled = filled
+        self.slot = filled[-1]
+        self.after = way.after[self.slot]
+        self.before = way.before[self.slot]
+        # What another explanation of the same markers costs at most beyond that of all before: all left over,
+        # or a trial from this slot on, which can do the same unless a later slot needs one filled before.
+        self.at_most = LEFT_OVER * (way.size - self.slot)
+        if way.needs[self.slot] is None and not any(place in way.needs for place in filled[:-1]):
+            self.at_most = min(self.at_most, self.before)
+
+    @cached_property
+    def steps(self) -> tuple[tuple[Role, _Step], ...]:
+        """All ways on."""
+        return tuple(
+            (self.way.roles[later], self._step(later))
+            for later in range(self.slot + 1, self.way.size)
+            if self.way.needs[later] is None or self.way.needs[later] in self.filled
+        )
+
+    def _step(self, later: int) -> _Step:
+        way = self.way
+        filled = (*self.filled, later)
+        kept = tuple(place for place, slot in enumerate(filled) if way.matters(slot, filled))
+        return _Step(
+            later,
+            way.before[later] - way.before[self.slot + 1],
+            way.takes_found[later],
+            tuple((-way.bounds[later][at], way.bounds[at][later]) for at in self.filled),
+            kept,
+            way.known_state(tuple(filled[place] for place in kept)),
+        )
+
+
+_Key = tuple[_State, tuple[int, ...]]  # with the events of its filled slots
+
+
 class _Node:
     """A trial under way, its last filled slot filled by one event; or the boundary before an event."""
 
-    cost: int
-    ways: int = 0
-    before: list[_Node] = field(default_factory=list)
-    key: _Key | None = None
-    event: int = 0
-    through: int = 0  # optimal paths from here to the end
+    __slots__ = ("before", "cost", "event", "events", "state", "through", "ways")
+
+    def __init__(self, event: int, state: _State | None = None, events: tuple[int, ...] = ()) -> None:
+        self.event = event
+        self.state = state
+        self.events = events
+        self.cost = _FAR
+        self.ways = 0  # explanations of least cost up to here
+        self.before: list[_Node] = []
+        self.through = 0  # explanations of least cost from here to the end, on the best ones
 
     def offer(self, cost: int, origin: _Node) -> None:
         if cost < self.cost:
-            self.cost, self.ways, self.before = cost, 0, []
-        if cost == self.cost:
+            self.cost, self.ways, self.before = cost, origin.ways, [origin]
+        elif cost == self.cost:
             self.ways += origin.ways
             self.before.append(origin)
-
-
-_FAR = 1 << 60
 
 
 class _Aligner:
@@ -188,18 +255,26 @@ class _Aligner:
         self.events = events
         self.ways = ways
         self.times = [event.time_s for event in events]
-        self.of_role: dict[Role, list[int]] = {}
+        self.of_role: dict[Role, tuple[list[float], list[int]]] = {role: ([], []) for role in Role}
         for place, event in enumerate(events):
-            self.of_role.setdefault(event.role, []).append(place)
-        self.times_of_role = {
-            role: [self.times[place] for place in places] for role, places in self.of_role.items()
-        }
-        self.left_over = [UNUSED if event.is_found else LEFT_OVER for event in events]
-        self.cost_before = [0]
-        for cost in self.left_over:
-            self.cost_before.append(self.cost_before[-1] + cost)
+            times, places = self.of_role[event.role]
+            times.append(event.time_s)
+            places.append(place)
+        self.is_found = [event.is_found for event in events]
+        self.left_over = [UNUSED if found else LEFT_OVER for found in self.is_found]
+        self.cost_before = list(accumulate(self.left_over, initial=0))
         self.foreign = _FOREIGN * max(way.size for way in ways)
-        self.closed = [_Node(_FAR, event=place) for place in range(len(events) + 1)]
+        starts = [state for way in ways for state in way.starts]
+        self.starts = {
+            (role, found): [
+                state
+                for state in starts
+                if state.way.roles[state.slot] is role and (state.way.takes_found[state.slot] or not found)
+            ]
+            for role in self.of_role
+            for found in (False, True)
+        }
+        self.closed = [_Node(place) for place in range(len(events) + 1)]
         self.open: list[dict[_Key, _Node]] = [{} for _ in events]
 
     def trials(self) -> tuple[Placed, ...]:
@@ -207,69 +282,53 @@ class _Aligner:
         for place in range(len(self.events)):
             self.advance(place)
         self.count_through()
-        return tuple(self.placed(path, region) for path, region in self.best())
+        return self.placed(self.best())
 
     def advance(self, place: int) -> None:
         """Take in one event: left over, first of a trial, or next of a trial under way."""
         here, following = self.closed[place], self.closed[place + 1]
         following.offer(here.cost + self.left_over[place], here)
         nodes = self.open[place]
-        for number, way in enumerate(self.ways):
-            for slot in range(way.size):
-                if way.needs[slot] is not None or not self.may_fill(way, slot, place):
-                    continue
-                start = here.cost + way.before[slot]
-                # Another start of the same slot can do all that a trial under way with more faults can.
-                for key in [key for key in nodes if key[0] == number and key[1] == slot]:
-                    if nodes[key].cost > start:
-                        del nodes[key]
-                # A trial lacking more than it can have is never better than none.
-                if way.before[slot] <= LEFT_OVER * (way.size - slot):
-                    key = (number, slot, ((slot, place),))
-                    nodes.setdefault(key, _Node(_FAR, key=key, event=place)).offer(start, here)
-        for node in list(nodes.values()):
-            self.go_on(node, following)
+        for state in self.starts[self.events[place].role, self.is_found[place]]:
+            key: _Key = (state, (place,))
+            node = nodes.get(key)
+            if node is None:
+                node = nodes[key] = _Node(place, state, (place,))
+            node.offer(here.cost + state.before, here)
+        for key, node in list(nodes.items()):
+            if node.cost > here.cost + key[0].at_most:
+                del nodes[key]
+            else:
+                following.offer(node.cost + key[0].after, node)
+                self.go_on(node, key[0])
 
-    def go_on(self, node: _Node, following: _Node) -> None:
-        """End the trial here, or fill one of its later slots."""
-        if node.key is None:
-            return
-        number, slot, bounding = node.key
-        way = self.ways[number]
-        following.offer(node.cost + way.after[slot], node)
-        known = [(at, self.times[event]) for at, event in bounding]
-        filled = tuple(at for at, _ in bounding)
-        for later in range(slot + 1, way.size):
-            if way.needs[later] is not None and way.needs[later] not in filled:
-                continue
-            least = max(time - way.bounds[later][at] for at, time in known)
-            most = min(time + way.bounds[at][later] for at, time in known)
-            skipped = way.before[later] - way.before[slot + 1]
-            for event in self.between(way.roles[later], least, most, node.event):
-                if self.events[event].is_found and not way.takes_found[later]:
+    def go_on(self, node: _Node, state: _State) -> None:
+        """Fill each of the trial's later slots."""
+        last = node.event + 1 + self.foreign
+        cost_here = node.cost - self.cost_before[node.event + 1]
+        known = [self.times[event] for event in node.events]
+        for role, step in state.steps:
+            times, places = self.of_role[role]
+            least, most = -inf, inf
+            for time, (soonest, latest) in zip(known, step.limits, strict=True):
+                least, most = max(least, time + soonest), min(most, time + latest)
+            for at in range(bisect_left(times, least), len(times)):
+                event = places[at]
+                if times[at] > most or event > last:
+                    break
+                if event <= node.event or (self.is_found[event] and not step.takes_found):
                     continue
-                cost = node.cost + skipped + self.cost_before[event] - self.cost_before[node.event + 1]
-                kept = set(way.still_open((*filled, later)))
-                still = tuple(pair for pair in (*bounding, (later, event)) if pair[0] in kept)
-                key = (number, later, still)
+                both = (*node.events, event)
+                events = tuple([both[place] for place in step.kept])
                 nodes = self.open[event]
-                nodes.setdefault(key, _Node(_FAR, key=key, event=event)).offer(cost, node)
-
-    def between(self, role: Role, least: float, most: float, after: int) -> Iterable[int]:
-        """Events of a role within times, behind an event and not too many events away."""
-        places = self.of_role.get(role, [])
-        times = self.times_of_role.get(role, [])
-        low = max(bisect_left(times, least), bisect_right(places, after))
-        high = bisect_right(times, most)
-        last = after + 1 + self.foreign
-        return (place for place in places[low:high] if place <= last)
-
-    def may_fill(self, way: _Way, slot: int, place: int) -> bool:
-        event = self.events[place]
-        return way.roles[slot] is event.role and (way.takes_found[slot] or not event.is_found)
+                key = (step.state, events)
+                following = nodes.get(key)
+                if following is None:
+                    following = nodes[key] = _Node(event, step.state, events)
+                following.offer(cost_here + step.skipped + self.cost_before[event], node)
 
     def count_through(self) -> None:
-        """Count for every node on a best path the best paths from it to the end."""
+        """Count for every node on a best explanation the best ones from it to the end."""
         self.closed[-1].through = 1
         for place in range(len(self.events), -1, -1):
             for node in [self.closed[place], *(self.open[place - 1].values() if place else ())]:
@@ -278,59 +337,61 @@ class _Aligner:
                     for origin in node.before:
                         origin.through += node.through
 
-    def best(self) -> list[tuple[list[_Node], tuple[int, int]]]:
-        """Trials of one best path, each with the region between certain boundaries that it lies in."""
-        paths: list[list[_Node]] = []
-        node, current = self.closed[-1], []
-        cuts = [self.closed[-1].event]
-        total = self.closed[-1].ways
+    def best(self) -> list[list[_Node]]:
+        """Trials of one best explanation."""
+        found: list[list[_Node]] = []
+        current: list[_Node] = []
+        node = self.closed[-1]
         while node.before:
-            origin = node.before[0]
-            if origin.key is not None:
-                current.append(origin)
+            node = node.before[0]
+            if node.state is not None:
+                current.append(node)
             elif current:
-                paths.append(current[::-1])
+                found.append(current[::-1])
                 current = []
-            if origin.key is None and origin.ways * origin.through == total:
-                cuts.append(origin.event)
-            node = origin
-        if current:
-            paths.append(current[::-1])
-        cuts.reverse()
-        found = []
-        for path in reversed(paths):
-            first, last = path[0].event, path[-1].event
-            low = cuts[bisect_right(cuts, first) - 1]
-            high = cuts[bisect_left(cuts, last + 1)]
-            found.append((path, (low, high)))
-        return found
+        return found[::-1]
 
-    def placed(self, path: Sequence[_Node], region: tuple[int, int]) -> Placed:
-        """Describe a trial, with what equally good explanations say of its slots."""
-        keys = [(node.key, node.event) for node in path if node.key is not None]
-        way = self.ways[keys[0][0][0]]
-        places = {way.names[key[1]]: event for key, event in keys}
-        missing = tuple(
-            name
-            for name, is_required in zip(way.names, way.is_required, strict=True)
-            if is_required and name not in places
-        )
-        low, high = region
-        if self.closed[high].ways == self.closed[low].ways:
-            return Placed(way.kind, places, missing)
-        kinds: dict[str, None] = {}
-        options: dict[str, dict[int, None]] = {}
-        for event in range(low, high):
-            for node in self.open[event].values():
-                if node.through and node.key is not None:
-                    other = self.ways[node.key[0]]
-                    kinds[other.kind] = None
-                    options.setdefault(other.names[node.key[1]], {})[event] = None
-        others: dict[str, tuple[int | None, ...]] = {}
-        for name, events in options.items():
-            found = tuple(event for event in events if event != places.get(name))
-            if found:
-                others[name] = found
+    def placed(self, trials: Sequence[Sequence[_Node]]) -> tuple[Placed, ...]:
+        """Describe trials, with what equally good explanations say of the markers of each."""
+        lasts = [-1, *(trial[-1].event for trial in trials)]
+        firsts = [*(trial[0].event for trial in trials), len(self.events)]
+        found = []
+        for number, trial in enumerate(trials):
+            whole = self.whole(trial)
+            if self.is_certain(trial):
+                found.append(whole)
+            else:
+                found.append(self.doubtful(whole, range(lasts[number] + 1, firsts[number + 1])))
+        return tuple(found)
+
+    def whole(self, trial: Sequence[_Node]) -> Placed:
+        """Describe a trial by itself."""
+        states = [(node.state, node.event) for node in trial if node.state is not None]
+        way = states[0][0].way
+        places = {way.names[state.slot]: event for state, event in states}
+        named = zip(way.names, way.is_required, strict=True)
         return Placed(
-            way.kind, places, missing, others, tuple(kind for kind in kinds if kind != way.kind), True
+            way.kind, places, tuple(name for name, required in named if required and name not in places)
+        )
+
+    def is_certain(self, trial: Sequence[_Node]) -> bool:
+        """Tell whether all best explanations have this trial as it is."""
+        start, end = self.closed[trial[0].event], self.closed[trial[-1].event + 1]
+        return start.ways * end.through == self.closed[-1].ways
+
+    def doubtful(self, whole: Placed, span: range) -> Placed:
+        """Say what equally good explanations make of the markers between a trial's neighbours."""
+        kinds: dict[str, None] = {}
+        others: dict[str, list[int]] = {}
+        for event in span:
+            for state in dict.fromkeys(key[0] for key, node in self.open[event].items() if node.through):
+                name = state.way.names[state.slot]
+                kinds[state.way.kind] = None
+                if event != whole.places.get(name) and event not in others.get(name, ()):
+                    others.setdefault(name, []).append(event)
+        return replace(
+            whole,
+            others={name: tuple(events) for name, events in others.items()},
+            other_kinds=tuple(kind for kind in kinds if kind != whole.kind),
+            is_doubtful=True,
         )

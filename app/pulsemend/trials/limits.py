@@ -44,18 +44,39 @@ def pair_bounds(slots: Sequence[Slot]) -> Bounds:
     DOI 10.1016/0004-3702(91)90006-6
     """
     direct = _direct(slots)
-    required = np.array([not slot.optional for slot in slots])
-    bounds = direct.copy()
-    for via in np.flatnonzero(required):
-        np.minimum(bounds, bounds[:, [via]] + bounds[[via], :], out=bounds)
+    required = [place for place, slot in enumerate(slots) if not slot.optional]
+    bounds = _tightened(direct, required)
     for place, slot in enumerate(slots):
-        if required[place] and bounds[place, place] < -_ROUNDING_S:
+        present = _needed([place, *required], slots)
+        # Slots that a required one counts from are as good as required here.
+        whole = bounds if present == set(required) else _tightened(direct, sorted(present))
+        if whole.diagonal()[sorted(present)].min() < -_ROUNDING_S * len(slots):
             raise PlanError(
                 "trial",
                 f"no times can meet the limits of slot {show(slot.slot)} and those of the others together",
                 received=show(list(slot.after_s or ())),
             )
     return tuple(tuple(map(float, row)) for row in bounds)
+
+
+def _tightened(direct: NDArray[np.float64], via: Sequence[int]) -> NDArray[np.float64]:
+    """Shortest paths through some slots only (Floyd and Warshall)."""
+    bounds = direct.copy()
+    for place in via:
+        np.minimum(bounds, bounds[:, [place]] + bounds[[place], :], out=bounds)
+    return bounds
+
+
+def _needed(places: Sequence[int], slots: Sequence[Slot]) -> set[int]:
+    """Places of slots with all that they count from."""
+    names = {slot.slot: place for place, slot in enumerate(slots)}
+    found: set[int] = set()
+    for place in places:
+        at: int | None = place
+        while at is not None and at not in found:
+            found.add(at)
+            at = names.get(slots[at].after)
+    return found
 
 
 def _direct(slots: Sequence[Slot]) -> NDArray[np.float64]:
