@@ -10,6 +10,7 @@ import mne
 import mne_bids  # type: ignore[import-untyped]
 import numpy as np
 import pytest
+import spharapy.datasets
 
 from pulsemend.errors import DamagedRecording
 from pulsemend.model.recording import Channel, RecordingFacts
@@ -326,3 +327,18 @@ def test_every_format_is_described(tmp_path: Path) -> None:
         )
         assert channel(written.path, "Fz").status == "bad"
         assert channel(written.path, "C4").type.value == "emg"
+
+
+def test_measured_positions_of_256_electrodes(tmp_path: Path) -> None:
+    """Open data: names and positions, in millimetres, of a real cap, inside spharapy."""
+    data = Path(spharapy.datasets.__file__).parent / "data"
+    names = (data / "eeg_256_channels_label.csv").read_text("utf-8").split()
+    places = np.loadtxt(data / "eeg_256_channels_vert.csv", delimiter=",")
+    path = triplet_by_hand(tmp_path, np.resize(counts(), (256, 100)), "INT_16", names=names, events=())
+    lines = [f"{name} {x} {y} {z}" for name, (x, y, z) in zip(names, places, strict=True)]
+    write(tmp_path, "lt01_electrodes.tsv", "name x y z", lines)
+    coordsystem(tmp_path, "mm")
+    facts = facts_of(path)
+    np.testing.assert_allclose(
+        np.array([one.position_m for one in facts.channels]), places / 1000, rtol=1e-12
+    )

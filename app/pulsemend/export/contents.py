@@ -60,6 +60,10 @@ class SetChannel:
         Why, in words; empty for good channels.
     position_m : tuple of 3 float or None
         On the head, in metres (x right, y front, z up).
+    impedance_ohm, hardware_highpass_hz, hardware_lowpass_hz : float or None
+        What the recording says of the electrode and of the filters before the samples were stored.
+    recorded_reference : str
+        The electrode it was recorded against; empty where the recording does not say.
     """
 
     name: str
@@ -67,6 +71,10 @@ class SetChannel:
     status: ChannelStatus = "good"
     status_note: str = ""
     position_m: tuple[float, float, float] | None = None
+    impedance_ohm: float | None = None
+    hardware_highpass_hz: float | None = None
+    hardware_lowpass_hz: float | None = None
+    recorded_reference: str = ""
 
 
 @dataclass(frozen=True)

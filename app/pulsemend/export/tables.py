@@ -133,7 +133,7 @@ def pulses_text(contents: SetContents) -> str:
 
 
 def channels_text(contents: SetContents) -> str:
-    """`channels.tsv`: name, type, units, status, position."""
+    """`channels.tsv`: name, type, units, status, position, and what the recorder did before us."""
     rows = [
         (
             channel.name,
@@ -142,8 +142,13 @@ def channels_text(contents: SetContents) -> str:
             channel.status,
             channel.status_note,
             *(channel.position_m or (None, None, None)),
+            channel.impedance_ohm,
+            channel.hardware_highpass_hz,
+            channel.hardware_lowpass_hz,
+            channel.recorded_reference,
         )
         for channel in contents.channels
     ]
     columns = ("name", "type", "units", "status", "status_description", "x_m", "y_m", "z_m")
-    return table_text(columns, rows)
+    recorder = ("impedance_ohm", "hardware_highpass_hz", "hardware_lowpass_hz", "recorded_reference")
+    return table_text((*columns, *recorder), rows)

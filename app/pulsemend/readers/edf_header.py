@@ -14,6 +14,7 @@ Electroencephalogr Clin Neurophysiol 82:391-393. DOI 10.1016/0013-4694(92)90009-
 from __future__ import annotations
 
 import math
+import re
 from collections import Counter
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -29,16 +30,26 @@ _TRIGGER_LABELS = ("status", "trigger", "trig", "stim", "sti 014")
 _FIXED_WIDTHS = (8, 80, 80, 8, 8, 8, 44, 8, 8, 4)
 _SIGNAL_WIDTHS = (16, 80, 8, 8, 8, 8, 8, 80, 8, 32)
 _VOLT_EXPONENTS = {"V": 0, "mV": -3, "uV": -6, "\u00b5V": -6, "\u03bcV": -6, "\x83\xcaV": -6, "nV": -9}
+_HIGHPASS, _LOWPASS = (
+    re.compile(rf"\b{kind}\s*:?\s*(?P<value>DC|\d*[.,]?\d+)\s*(?P<prefix>[mk]?)(?:Hz|\b)", re.IGNORECASE)
+    for kind in ("HP", "LP")
+)
 _CONVERTED = ("mV", "uV", "\u00b5V", "\u03bcV", "\x83\xcaV")  # units that the reader library turns into volts
 _COPY_AGAIN = "Copy the file again, or export it again"
 
 
 @dataclass(frozen=True)
 class Signal:
-    """One signal of a file as its header describes it."""
+    """One signal of a file as its header describes it.
+
+    ``library_label`` and ``library_unit`` are what the reader library makes of the same bytes.
+    """
 
     label: str
     unit: str
+    library_label: str
+    library_unit: str
+    prefilter: str
     physical: tuple[float, float]
     digital: tuple[int, int]
     per_record: int
@@ -194,10 +205,13 @@ def _signals(path: Path, text: bytes, n_signals: int) -> tuple[Signal, ...]:
 
 
 def _signal(path: Path, fields: tuple[bytes, ...]) -> Signal:
-    label = fields[0].strip().decode("latin-1")
+    label = _text(fields[0])
     signal = Signal(
         label=label,
-        unit=fields[2].decode("latin-1").strip(),
+        unit=_text(fields[2]),
+        library_label=fields[0].strip().decode("latin-1"),
+        library_unit=fields[2].strip().decode("latin-1"),
+        prefilter=_text(fields[7]),
         physical=(
             _decimal(path, f"physical minimum of {label}", fields[3]),
             _decimal(path, f"physical maximum of {label}", fields[4]),
@@ -224,8 +238,43 @@ def _channel(signal: Signal) -> Channel:
     kind = type_of(name, in_volts=unit in _VOLT_EXPONENTS)
     if unit not in _VOLT_EXPONENTS:
         return Channel(name, kind, unit=unit or "no unit")
-    scale_v = 1.0 if unit in _CONVERTED else power_of_ten(_VOLT_EXPONENTS[unit])
-    return Channel(name, kind, scale_v=scale_v, unit=unit)
+    scale_v = 1.0 if signal.library_unit in _CONVERTED else power_of_ten(_VOLT_EXPONENTS[unit])
+    highpass_hz, lowpass_hz = (_cutoff(pattern, signal.prefilter) for pattern in (_HIGHPASS, _LOWPASS))
+    return Channel(
+        name,
+        kind,
+        scale_v=scale_v,
+        unit=unit,
+        highpass_hz=highpass_hz,
+        lowpass_hz=lowpass_hz,
+        coupling="DC" if highpass_hz == 0 else "",
+        reference=_reference(signal.label),
+    )
+
+
+def _cutoff(pattern: re.Pattern[str], prefilter: str) -> float | None:
+    """Corner frequency from a text like ``HP:0.1Hz LP:75Hz N:50Hz``; 0 for DC."""
+    found = pattern.search(prefilter)
+    if not found:
+        return None
+    if found["value"].upper() == "DC":
+        return 0.0
+    exponent = {"m": -3, "k": 3}.get(found["prefix"].lower(), 0)
+    return float(found["value"].replace(",", ".")) * power_of_ten(exponent)
+
+
+def _reference(label: str) -> str:
+    """Second electrode of a label like ``EEG Fpz-Cz``, the standard's own way to name it."""
+    first, dash, second = label.removeprefix("EEG ").partition("-")
+    return second.strip() if dash and first and label.startswith("EEG ") else ""
+
+
+def _text(field: bytes) -> str:
+    """Text that should be ASCII: other alphabets come as UTF-8 or Latin-1."""
+    try:
+        return field.strip(b" \0").decode("utf-8")
+    except UnicodeDecodeError:
+        return field.strip(b" \0").decode("latin-1")
 
 
 def _name(signal: Signal) -> str:

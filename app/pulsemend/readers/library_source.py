@@ -6,6 +6,7 @@ import gzip
 import math
 import zlib
 from collections.abc import Iterable
+from dataclasses import replace
 from pathlib import Path
 from typing import IO, Any, cast
 
@@ -83,7 +84,7 @@ def raw_source(
     """
     rate_hz, n_samples = float(raw.info["sfreq"]), int(raw.n_times)
     check_names(raw.ch_names, path.name)
-    channels = tuple(map(_library_channel, raw.info["chs"], raw.get_channel_types()))
+    channels = _with_info(map(_library_channel, raw.info["chs"], raw.get_channel_types()), raw.info)
     marks: list[tuple[float | None, str]] = []
     boundaries: set[int] = set()
     coarsest = 0.0
@@ -107,6 +108,11 @@ def raw_source(
     others = [channel.name for channel in channels if channel.type is ChannelType.MISC]
     if others:
         notes.append(f"Taken as misc: {', '.join(others)}.")
+    if raw.info["bads"]:
+        notes.append(
+            "Bad according to the file, which alone leaves nothing out (name them in the plan or the marks): "
+            f"{', '.join(raw.info['bads'])}."
+        )
     return Source(
         format=kind,
         rate_hz=rate_hz,
@@ -193,13 +199,30 @@ def _library_channel(described: Any, kind: str) -> Channel:
     known = bool(np.isfinite(place).all() and place.any())
     name = str(described["ch_name"])
     kind_here = LIBRARY_TYPES.get(kind, ChannelType.MISC)
+    unit = "no unit" if kind_here in (ChannelType.TRIGGER, ChannelType.MISC) else "V"
     if kind_here is ChannelType.EEG:  # what the library says where a file says nothing
         kind_here = type_by_name(name)
     return Channel(
         name=name,
         type=kind_here,
         position_m=(float(place[0]), float(place[1]), float(place[2])) if known else None,
-        unit="no unit" if kind_here in (ChannelType.TRIGGER, ChannelType.MISC) else "V",
+        unit=unit,
+    )
+
+
+def _with_info(channels: Iterable[Channel], info: Any) -> tuple[Channel, ...]:
+    """Add filters and status; the library writes 0 and half the rate where a file names no filter."""
+    highpass_hz, lowpass_hz, bad = float(info["highpass"]), float(info["lowpass"]), set(info["bads"])
+    return tuple(
+        channel
+        if channel.type is ChannelType.TRIGGER
+        else replace(
+            channel,
+            highpass_hz=highpass_hz if highpass_hz > 0 else None,
+            lowpass_hz=lowpass_hz if lowpass_hz < info["sfreq"] / 2 else None,
+            status="bad" if channel.name in bad else "",
+        )
+        for channel in channels
     )
 
 

@@ -118,10 +118,10 @@ def _contents(path: Path) -> str | None:
         raise missing(path, error) from error
     if not head:
         raise DamagedRecording("the file is empty", where=path.name, todo="Copy the file again")
-    first_line = head.splitlines()[0].lower()
-    if b"data exchange header file" in first_line:
+    first_line = head.splitlines()[0].lower().replace(b"exchange ", b"")
+    if b"data header file" in first_line:
         return _HEADER
-    if b"data exchange marker file" in first_line:
+    if b"data marker file" in first_line:
         return _MARKERS
     if head.startswith(b"\xffBIOSEMI"):
         return _BDF

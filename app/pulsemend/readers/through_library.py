@@ -136,8 +136,8 @@ def _open(path: Path, header: EdfHeader | None) -> Any:
     read = mne.io.read_raw_edf if header.sample_bytes == 2 else mne.io.read_raw_bdf
     return read(
         path,
-        stim_channel=[signal.label for signal in header.used if signal.is_trigger] or None,
-        exclude=[signal.label for signal in header.left_out],
+        stim_channel=[signal.library_label for signal in header.used if signal.is_trigger] or None,
+        exclude=[signal.library_label for signal in header.left_out],
         # Annotations are read here by other means; in this code page none can fail.
         encoding="latin1",
         preload=False,

@@ -54,7 +54,7 @@ class TripletRecording:
         boundaries: tuple[int, ...] = ()
         if self._header.marker_name:
             marker_path, marker_note = find_part(path, self._header.marker_name, ".vmrk")
-            found, boundaries, marker_notes = _read_events(marker_path, n_samples)
+            found, boundaries, marker_notes = _read_events(marker_path, n_samples, self._header.codepage)
             paths.append(marker_path)
             notes += [marker_note, *marker_notes]
         else:
@@ -68,6 +68,7 @@ class TripletRecording:
             boundaries=boundaries,
             paths=tuple(paths),
             notes=tuple(filter(None, notes)),
+            reference=self._header.reference,
         )
         self._facts, self._paths = facts_of(path, with_tables(path, source))
 
@@ -211,7 +212,7 @@ def _count_samples(header: TripletHeader, data: Path) -> int:
     return n_samples
 
 
-def _read_events(path: Path, n_samples: int) -> tuple[list[Found], tuple[int, ...], list[str]]:
+def _read_events(path: Path, n_samples: int, codepage: str) -> tuple[list[Found], tuple[int, ...], list[str]]:
     """Markers, boundaries and notes from a marker file.
 
     Raises
@@ -219,7 +220,7 @@ def _read_events(path: Path, n_samples: int) -> tuple[list[Found], tuple[int, ..
     DamagedRecording
         A marker lies behind the last sample: the data file is cut short.
     """
-    lines = list(read_markers(path))
+    lines = list(read_markers(path, codepage))
     behind = [line.position for line in lines if line.position > n_samples]
     if behind:
         raise DamagedRecording(

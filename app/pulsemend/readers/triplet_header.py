@@ -7,6 +7,7 @@ values that are written as a backslash and a one.
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path, PureWindowsPath
@@ -17,6 +18,7 @@ from pulsemend.errors import DamagedRecording, MissingPart, UnknownFormat
 from pulsemend.model.recording import Channel
 from pulsemend.readers.channel_types import misc_notes, type_of
 from pulsemend.readers.common import check_names, missing, power_of_ten
+from pulsemend.readers.recorder_comment import read_comment, with_comment
 
 SampleType = np.dtype[np.int16] | np.dtype[np.int32] | np.dtype[np.float32]
 
@@ -29,6 +31,18 @@ _HEAD_RADIUS_M = 0.095  # for directions without a distance; only the direction 
 _EXPORT_AGAIN = "Export the recording again as binary, in the time domain"
 
 Sections = dict[str, dict[str, str]]
+_ENOUGH_DECIMALS = 3
+_CODEPAGE = re.compile(rb"^\s*codepage\s*=\s*([\w-]+)", re.IGNORECASE | re.MULTILINE)
+_ONE_BYTE = re.compile(r"(windows-|cp|iso-?8859-|koi8-)\w+")
+
+
+@dataclass(frozen=True)
+class _Content:
+    """A file in parts: sections of entries, the lines of its comment, and how it is written."""
+
+    sections: Sections
+    comment: tuple[str, ...]
+    codepage: str
 
 
 @dataclass(frozen=True)
@@ -48,6 +62,10 @@ class TripletHeader:
     data_name, marker_name : str
         File names as written, without folder; ``marker_name`` empty if there is none.
     notes : tuple of str
+    reference : str
+        Name of the reference of all channels, if the header gives one.
+    codepage : str
+        How its text is written, in Python's words; empty for UTF-8.
     """
 
     rate_hz: float
@@ -58,6 +76,8 @@ class TripletHeader:
     data_name: str
     marker_name: str
     notes: tuple[str, ...]
+    reference: str = ""
+    codepage: str = ""
 
 
 @dataclass(frozen=True)
@@ -76,7 +96,8 @@ def read_header(path: Path) -> TripletHeader:
     ------
     MissingPart, UnknownFormat, DamagedRecording, UnusableChannels
     """
-    entries = _Entries(path, _sections(path, "Header File"))
+    content = _content(path, "Header File")
+    entries = _Entries(path, content.sections)
     if entries.word("Common Infos", "DataFormat", "BINARY") != "BINARY":
         raise UnknownFormat("its samples are written as text", where=path.name, todo=_EXPORT_AGAIN)
     if entries.word("Common Infos", "DataType", "TIMEDOMAIN") != "TIMEDOMAIN":
@@ -87,31 +108,59 @@ def read_header(path: Path) -> TripletHeader:
     interval_us = entries.number("Common Infos", "SamplingInterval")
     if not (math.isfinite(interval_us) and interval_us > 0):
         raise entries.damaged(f"SamplingInterval is {interval_us}")
+    rate_hz, rate_notes = _rate(entries.text("Common Infos", "SamplingInterval"), interval_us)
     data_points = entries.text("Common Infos", "DataPoints", "")
     data_name = entries.text("Common Infos", "DataFile", "")
     if not data_name:
         raise entries.damaged("it names no DataFile")
     channels, notes = _channels(entries)
+    comment = read_comment(content.comment)
     return TripletHeader(
-        rate_hz=power_of_ten(6) / interval_us,
-        channels=channels,
+        rate_hz=rate_hz,
+        channels=with_comment(channels, comment),
         sample_type=_sample_type(entries),
         by_channel=orientation == "VECTORIZED",
         n_samples=entries.whole("Common Infos", "DataPoints") if data_points else None,
         data_name=_file_name(data_name, path),
         marker_name=_file_name(entries.text("Common Infos", "MarkerFile", ""), path),
-        notes=notes,
+        notes=(*notes, *rate_notes),
+        reference=comment.reference,
+        codepage=content.codepage,
     )
 
 
-def read_markers(path: Path) -> Iterator[MarkerLine]:
+def _rate(written: str, interval_us: float) -> tuple[float, list[str]]:
+    """Turn an interval into a rate; one that is a whole rate's, to its last digit, stands for that rate."""
+    rate_hz = power_of_ten(6) / interval_us
+    whole = math.floor(rate_hz + 0.5)
+    decimals = len(written.partition(".")[2])
+    if (
+        whole == rate_hz
+        or whole == 0
+        or decimals < _ENOUGH_DECIMALS
+        or not written.replace(".", "").isdecimal()
+    ):
+        return rate_hz, []
+    if f"{power_of_ten(6) / whole:.{decimals}f}" != written:
+        return rate_hz, []
+    return float(whole), [f"The sampling interval, {written} microseconds, stands for {whole} Hz."]
+
+
+def read_markers(path: Path, codepage: str = "") -> Iterator[MarkerLine]:
     """Read the entries of a marker file in file order.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    codepage : str
+        That of the header, for a marker file that names none.
 
     Raises
     ------
     MissingPart, UnknownFormat, DamagedRecording
     """
-    for key, value in _sections(path, "Marker File").get("marker infos", {}).items():
+    for key, value in _content(path, "Marker File", codepage).sections.get("marker infos", {}).items():
         fields = [field.replace("\\1", ",") for field in value.split(",")]
         if not key.startswith("mk"):
             continue
@@ -161,19 +210,15 @@ def _is_whole(text: str) -> bool:
     return text.strip().removeprefix("-").isdecimal()
 
 
-def _sections(path: Path, kind: str) -> Sections:
-    """Split a file into sections of entries, names and keys in lower case."""
+def _content(path: Path, kind: str, codepage: str = "") -> _Content:
+    """Split a file into sections of entries, names and keys in lower case, and the comment behind them."""
     try:
-        content = path.read_bytes()
+        written = path.read_bytes()
     except OSError as error:
         raise missing(path, error) from error
-    try:
-        text = content.decode("utf-8-sig")
-    except UnicodeDecodeError:
-        # Every byte is a letter in Latin-1; files that do not name their code page are written in it.
-        text = content.decode("latin-1")
+    text, codepage = _decoded(written, codepage)
     lines = text.splitlines()
-    if not lines or f"data exchange {kind}".lower() not in lines[0].lower():
+    if not lines or f"data {kind}".lower() not in lines[0].lower().replace("exchange ", ""):
         raise UnknownFormat(
             f"the first line does not say that this is a {kind.lower()} of a triplet",
             where=path.name,
@@ -181,17 +226,32 @@ def _sections(path: Path, kind: str) -> Sections:
         )
     sections: Sections = {}
     entries: dict[str, str] = {}
-    for line in map(str.strip, lines[1:]):
+    for number, line in enumerate(map(str.strip, lines[1:]), start=2):
         if line.lower() == "[comment]":
-            break
+            return _Content(sections, tuple(lines[number:]), codepage)
         if line.startswith("[") and line.endswith("]"):
             entries = sections.setdefault(line[1:-1].strip().lower(), {})
         elif line and not line.startswith(";"):
             key, _, value = line.partition("=")
             entries[key.strip().lower()] = value.strip()
-    else:
-        _check_last_line(path, text, lines[-1])
-    return sections
+    _check_last_line(path, text, lines[-1])
+    return _Content(sections, (), codepage)
+
+
+def _decoded(written: bytes, codepage: str) -> tuple[str, str]:
+    """Text and the code page it took: UTF-8 if it can be that, else the one stated, else Latin-1."""
+    try:
+        return written.decode("utf-8-sig"), ""
+    except UnicodeDecodeError:
+        stated = _CODEPAGE.search(written)
+        name = stated.group(1).decode("latin-1").lower() if stated else codepage
+        name = f"cp{name}" if name.isdecimal() else name
+    try:
+        if _ONE_BYTE.fullmatch(name):
+            return written.decode(name), name
+    except (LookupError, UnicodeDecodeError):
+        pass  # a name or a byte that the code page does not know: every byte is a letter in Latin-1
+    return written.decode("latin-1"), "latin-1"
 
 
 def _check_last_line(path: Path, text: str, last: str) -> None:
@@ -239,7 +299,9 @@ def _channel(entries: _Entries, number: int) -> Channel:
     fields = entries.text("Channel Infos", f"Ch{number}").split(",")
     if len(fields) < 3:
         raise entries.damaged(f"channel {number} is described by fewer than three fields")
-    name, _, resolution, unit = (field.replace("\\1", ",").strip() for field in (*fields, *[""] * 4)[:4])
+    name, reference, resolution, unit = (
+        field.replace("\\1", ",").strip() for field in (*fields, *[""] * 4)[:4]
+    )
     if not name:
         raise entries.damaged(f"channel {number} has no name")
     unit = unit or "uV"
@@ -255,6 +317,7 @@ def _channel(entries: _Entries, number: int) -> Channel:
         scale_v=per_step * _VOLTS.get(unit, 1.0),
         position_m=_position(entries, number),
         unit=unit,
+        reference=reference,
     )
 
 
