@@ -224,6 +224,15 @@ def test_the_recordings_ends_and_breaks(tmp_path: Path) -> None:
     assert "(the others: not recorded at 4)" in shift.notes[0]
 
 
+def test_both_ends_of_the_search_count(tmp_path: Path) -> None:
+    # Also where seconds times rate, in floating point, is a hair less than a whole sample.
+    markers = [Marker(3000.0 * i, "cue") for i in range(1, 5)]
+    recording = recorded(flashes(18_000, [3030, 6100, 9030, 12_101], lit=600), tmp_path, 3000.0)
+    (shift,) = finish(measure_onsets(recording, "Photo", markers, (0.01, 0.1 / 3.0 - 1e-12)))
+    assert [None if s is None else round(3000 * s) for s in shift.shifts_s] == [30, 100, 30, None]
+    assert "changes only outside the search at 1" in shift.notes[0]
+
+
 def test_markers_between_samples(tmp_path: Path) -> None:
     markers = [Marker(1000.0 * i + 0.4, "cue") for i in range(1, 6)]
     photo = flashes(7000, [1000 * i + 30 for i in range(1, 6)])

@@ -53,7 +53,8 @@ class CrossingRules:
     least_ratio_either : float
         The same where the change goes either way: the envelope that is judged there is steadier at rest.
     rest_s : float
-        Rest is judged in two stretches of this length before the search.
+        The range at rest is that of the quieter of two stretches of this length before the search; what the
+        search sets out from, the median over half a stretch.
     after_s : float
         Wanted after the search, to tell a late onset from none.
     """
@@ -187,7 +188,7 @@ class _Event:
 
     def rest(self, rate_hz: float, rules: CrossingRules) -> slice:
         """Choose the samples just before the search; at the recording's start the first one must do."""
-        return slice(max(0, self.first - _count(rules.rest_s, rate_hz)), max(1, self.first))
+        return slice(max(0, self.first - _count(rules.rest_s / 2.0, rate_hz)), max(1, self.first))
 
 
 def _count(length_s: float, rate_hz: float) -> int:
@@ -227,14 +228,12 @@ def _swing(events: list[_Event], polarity: Polarity, rate_hz: float, rules: Cros
     farthest, usual_range = np.empty(len(events)), np.empty(len(events))
     for i, event in enumerate(events):
         y = _shown(event, polarity, rate_hz, rules)
-        rest = event.rest(rate_hz, rules)
-        earlier = y[max(0, rest.start - _count(rules.rest_s, rate_hz)) : rest.start]
         # The quieter of two stretches: the end of something earlier must not count as noise.
-        ranges = [
-            float(np.ptp(part)) for part in (y[rest], earlier) if 2 * len(part) > rest.stop - rest.start
-        ]
-        usual_range[i] = min(ranges)
-        farthest[i] = (y[event.first :] - np.median(y[rest])).max()
+        length = min(_count(rules.rest_s, rate_hz), max(1, event.first))
+        stretches = y[max(0, event.first - 2 * length) : max(1, event.first)]
+        later, earlier = stretches[-length:], stretches[:-length]
+        usual_range[i] = min(np.ptp(part) for part in (later, earlier) if 2 * len(part) > length)
+        farthest[i] = (y[event.first :] - np.median(y[event.rest(rate_hz, rules)])).max()
     # Up to three quarters of the events may lack the change; single artifacts do not count.
     half = float(np.quantile(farthest, 0.75)) / 2.0
     if half <= 0.0:
