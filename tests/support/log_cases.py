@@ -16,10 +16,10 @@ FloatArray = NDArray[np.float64]
 class Case:
     """One recording and its log.
 
-    `pairs` are the rows and trials of the same event, copies left out. `clear` are those of them that no other
-    event comes near, and `twins` what could be taken for a pair although it is none: an event that fell, by
-    chance, where a lost one had been. Both are decided by comparing every row with every trial on the true
-    clock, with the true jitter.
+    `pairs` are the rows and trials of the same event, copies left out. `clear` are those of them that no
+    other event comes near, and `twins` what could be taken for a pair although it is none: an event that
+    fell, by chance, where a lost one had been. Both are decided by comparing every row with every trial on
+    the true clock, with the true jitter.
     """
 
     log: LogTimes

@@ -9,7 +9,7 @@ from scipy import stats
 from pulsemend.trials.clock import fit_clock
 
 
-def test_fifty_ppm_are_recovered_within_five():
+def test_fifty_ppm_are_recovered_within_five() -> None:
     """facts T-6.9: a drift line of 50 ppm, here over 100 trials in 10 minutes with 0.5 ms of jitter."""
     rng = np.random.default_rng(69)
     recorded_s = np.sort(rng.uniform(0.0, 600.0, 100))
@@ -20,7 +20,7 @@ def test_fifty_ppm_are_recovered_within_five():
 
 
 @pytest.mark.parametrize("n", [12, 100])
-def test_standard_errors_are_honest(n: int):
+def test_standard_errors_are_honest(n: int) -> None:
     """300 draws: errors over standard errors are Student's t with n - 2 degrees of freedom."""
     drift_t, offset_t = [], []
     for seed in range(300):
@@ -40,7 +40,7 @@ def test_standard_errors_are_honest(n: int):
         assert stats.kstest(found, "t", args=(n - 2,)).pvalue > 0.001
 
 
-def test_the_fit_equals_ordinary_regression_where_nothing_is_an_outlier():
+def test_the_fit_equals_ordinary_regression_where_nothing_is_an_outlier() -> None:
     rng = np.random.default_rng(1)
     log_s = np.cumsum(rng.uniform(4.0, 6.0, 40))
     recorded_s = 3.0 + log_s * 1.0001 + rng.normal(0.0, 0.001, 40)
@@ -53,7 +53,7 @@ def test_the_fit_equals_ordinary_regression_where_nothing_is_an_outlier():
     assert clock.offset_se_s == pytest.approx(outside.intercept_stderr, rel=1e-6)
 
 
-def test_outliers_do_not_move_the_line():
+def test_outliers_do_not_move_the_line() -> None:
     rng = np.random.default_rng(2)
     log_s = np.cumsum(rng.uniform(4.0, 6.0, 60))
     recorded_s = log_s + rng.normal(0.0, 0.001, 60)
@@ -64,7 +64,7 @@ def test_outliers_do_not_move_the_line():
     assert clock.residual_sd_s == pytest.approx(0.001, rel=0.35)
 
 
-def test_large_clock_readings_lose_no_digits():
+def test_large_clock_readings_lose_no_digits() -> None:
     """Seconds since 1970 and an exact line: a float holds them to 0.2 microseconds."""
     recorded_s = np.arange(0.0, 500.0, 5.0)
     clock = fit_clock(1.7e9 + recorded_s / (1.0 + 20e-6), recorded_s)
@@ -74,6 +74,6 @@ def test_large_clock_readings_lose_no_digits():
     assert there_s == pytest.approx(100.0, abs=1e-6)
 
 
-def test_a_clock_needs_three_different_times():
+def test_a_clock_needs_three_different_times() -> None:
     with pytest.raises(ValueError, match="three pairs"):
         fit_clock(np.array([1.0, 1.0, 2.0]), np.array([0.0, 0.0, 1.0]))

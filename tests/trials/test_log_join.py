@@ -37,7 +37,7 @@ def irregular(n: int, seed: int = 0) -> list[float]:
 
 
 def nothing_joined(join: LogJoin, n_rows: int, n_trials: int) -> str:
-    assert join.pairs == join.doubtful == join.by_order == ()
+    assert not (join.pairs or join.doubtful or join.by_order)
     assert join.rows_alone == tuple(range(n_rows))
     assert join.trials_alone == tuple(range(n_trials))
     assert join.clock is None
@@ -56,7 +56,7 @@ def each_place_once(join: LogJoin, n_rows: int, n_trials: int) -> None:
     assert sorted(trials) == list(range(n_trials))
 
 
-def test_hundred_rows_with_three_lost_and_two_extra_trials():
+def test_hundred_rows_with_three_lost_and_two_extra_trials() -> None:
     """facts T-6.8: 97 matched, 5 listed, none guessed."""
     rng = np.random.default_rng(68)
     true_s = np.array(irregular(100, 68))
@@ -82,9 +82,9 @@ def test_hundred_rows_with_three_lost_and_two_extra_trials():
 
 @pytest.mark.parametrize(
     "n_cases",
-    [100, pytest.param(500, marks=pytest.mark.slow)],
+    [60, pytest.param(500, marks=pytest.mark.slow)],
 )
-def test_random_recordings_have_no_wrong_pair(n_cases: int):
+def test_random_recordings_have_no_wrong_pair(n_cases: int) -> None:
     """Recall at least 0.98 of the pairs that no other event comes near; no pair of strangers.
 
     A spurious event that chance put where a lost one had been cannot be told from it (`twins`): it is counted
@@ -127,7 +127,7 @@ INTERVALS: dict[str, Callable[[np.random.Generator, int], FloatArray]] = {
         *[pytest.param(name, 200, 200, marks=pytest.mark.slow) for name in INTERVALS],
     ],
 )
-def test_logs_of_other_recordings_are_never_joined(intervals: str, n_pairs: int, most: int):
+def test_logs_of_other_recordings_are_never_joined(intervals: str, n_pairs: int, most: int) -> None:
     """Two sessions of the same experiment, from 4 rows up, every second time with equal counts."""
     for seed in range(n_pairs):
         rng = np.random.default_rng([11, seed])
@@ -139,7 +139,7 @@ def test_logs_of_other_recordings_are_never_joined(intervals: str, n_pairs: int,
         nothing_joined(join, n_rows, n_trials)
 
 
-def test_equal_intervals_are_not_guessed():
+def test_equal_intervals_are_not_guessed() -> None:
     log_s = [100.0 + 5.0 * row for row in range(60)]
     recorded_s = [3.0 + 5.0 * place for place in range(59)]
     words = nothing_joined(join_log(log_of(log_s), trials_at(recorded_s)), 60, 59)
@@ -152,14 +152,14 @@ def test_equal_intervals_are_not_guessed():
     assert join.by == "number and time"
 
 
-def test_equal_intervals_with_losses_are_not_guessed():
+def test_equal_intervals_with_losses_are_not_guessed() -> None:
     for seed in range(20):
         rng = np.random.default_rng(seed)
         case = draw(rng, Spec(n=60, lost=0.08, interval_s=(5.0, 5.0)))
         assert join_log(case.log, case.trials).pairs == ()
 
 
-def test_pauses_between_blocks_of_equal_intervals_decide():
+def test_pauses_between_blocks_of_equal_intervals_decide() -> None:
     steps = np.full(120, 4.0)
     steps[::12] += np.random.default_rng(3).uniform(10.0, 40.0, 10)
     true_s = np.cumsum(steps)
@@ -167,7 +167,7 @@ def test_pauses_between_blocks_of_equal_intervals_decide():
     assert join.pairs == tuple((place, place) for place in range(120))
 
 
-def test_a_log_of_a_part_of_the_recording():
+def test_a_log_of_a_part_of_the_recording() -> None:
     true_s = irregular(150)
     join = join_log(log_of([t - 7.0 for t in true_s[90:]]), trials_at(true_s))
     assert join.pairs == tuple((row, 90 + row) for row in range(60))
@@ -175,7 +175,7 @@ def test_a_log_of_a_part_of_the_recording():
     assert join.pairs == tuple((100 + place, place) for place in range(50))
 
 
-def test_a_long_log_with_much_drift():
+def test_a_long_log_with_much_drift() -> None:
     rng = np.random.default_rng(5)
     case = draw(rng, Spec(n=700, drift=-900e-6, lost=0.05, spurious=0.05, jitter_s=0.002))
     join = join_log(case.log, case.trials)
@@ -183,7 +183,16 @@ def test_a_long_log_with_much_drift():
     assert set(join.pairs) <= case.pairs | case.twins
 
 
-def test_copies_beyond_the_tolerance_are_told_from_the_first():
+def test_times_in_whole_seconds() -> None:
+    rng = np.random.default_rng(9)
+    true_s = np.cumsum(rng.uniform(6.0, 9.0, 120))
+    join = join_log(log_of(np.floor(true_s + 50585.3).tolist()), trials_at(true_s[20:].tolist()))
+    assert join.pairs == tuple((20 + place, place) for place in range(100))
+    assert join.clock is not None
+    assert join.clock.residual_sd_s == pytest.approx(1 / np.sqrt(12), rel=0.15)  # rounding, evenly spread
+
+
+def test_copies_beyond_the_tolerance_are_told_from_the_first() -> None:
     true_s = irregular(40)
     times_s: list[float | None] = [*true_s[:20], true_s[19] + 0.05, *true_s[20:]]
     join = join_log(log_of(true_s), trials_at(times_s))
@@ -196,7 +205,7 @@ def test_copies_beyond_the_tolerance_are_told_from_the_first():
     assert "row 20, trial 20, trial 21: too near to each other" in join.words
 
 
-def test_a_row_somewhat_off_is_doubtful():
+def test_a_row_somewhat_off_is_doubtful() -> None:
     true_s = irregular(40)
     log_s = [t + 0.017 * (row == 12) for row, t in enumerate(true_s)]
     join = join_log(log_of(log_s), trials_at(true_s))
@@ -205,7 +214,7 @@ def test_a_row_somewhat_off_is_doubtful():
     assert "beyond the tolerance of 2 ms" in join.words
 
 
-def test_rows_written_in_another_order_are_joined_by_time():
+def test_rows_written_in_another_order_are_joined_by_time() -> None:
     true_s = irregular(40)
     log_s = [*true_s[:10], true_s[11], true_s[10], *true_s[12:]]
     words = nothing_joined(join_log(log_of(log_s), trials_at(true_s)), 40, 40)
@@ -218,7 +227,7 @@ def test_rows_written_in_another_order_are_joined_by_time():
     assert (40, 39) in join.pairs
 
 
-def test_rows_and_trials_without_a_time_are_joined_between_their_neighbours():
+def test_rows_and_trials_without_a_time_are_joined_between_their_neighbours() -> None:
     true_s: list[float | None] = list(irregular(40))
     log_s = [None if row == 7 else t for row, t in enumerate(true_s)]
     recorded_s = [None if place in {20, 30, 31} else t for place, t in enumerate(true_s)]
@@ -229,7 +238,7 @@ def test_rows_and_trials_without_a_time_are_joined_between_their_neighbours():
     assert "for want of a time: row 8 with trial 8, row 21 with trial 21." in join.words
 
 
-def test_numbers_alone():
+def test_numbers_alone() -> None:
     log = log_of([None] * 4, [1, 2, 4, 5])
     join = join_log(log, trials_at([None] * 4, [2, 3, 4, 5]))
     assert join.by == "number"
@@ -238,7 +247,7 @@ def test_numbers_alone():
     assert join.trials_alone == (1,)
 
 
-def test_two_rows_per_trial_share_a_number():
+def test_two_rows_per_trial_share_a_number() -> None:
     log = log_of([None] * 5, [1, 1, 2, 2, 3])
     join = join_log(log, trials_at([None] * 6, [1, 1, 2, 2, 3, 3]), per_trial=2)
     assert join.pairs == ((0, 0), (1, 1), (2, 2), (3, 3))
@@ -246,7 +255,7 @@ def test_two_rows_per_trial_share_a_number():
     assert join.trials_alone == (4, 5)
 
 
-def test_times_contradict_some_numbers():
+def test_times_contradict_some_numbers() -> None:
     true_s = irregular(40)
     numbers = list(range(1, 41))
     wrong = [*numbers[:10], 12, 11, *numbers[12:]]
@@ -257,7 +266,7 @@ def test_times_contradict_some_numbers():
     assert "different trial numbers" in join.words
 
 
-def test_times_contradict_most_numbers():
+def test_times_contradict_most_numbers() -> None:
     """Numbers that count from 0 on one side, also where intervals are equal but for some milliseconds."""
     nearly_equal = np.cumsum(np.random.default_rng(4).normal(5.0, 0.05, 40)).tolist()
     for true_s in (irregular(40), nearly_equal):
@@ -265,7 +274,7 @@ def test_times_contradict_most_numbers():
         assert "contradict" in nothing_joined(join, 40, 40)
 
 
-def test_numbers_that_occur_twice():
+def test_numbers_that_occur_twice() -> None:
     true_s = irregular(6)
     log = log_of(true_s, [1, 2, 3, 3, 5, 6])
     words = nothing_joined(join_log(log, trials_at(true_s, range(1, 7))), 6, 6)
@@ -274,7 +283,7 @@ def test_numbers_that_occur_twice():
     assert "The recording has trial number 5 more than once: trial 5, trial 6" in words
 
 
-def test_without_times_equal_counts_join_in_order():
+def test_without_times_equal_counts_join_in_order() -> None:
     join = join_log(log_of([None] * 3), trials_at([1.0, 2.0, 3.0]))
     assert join.by == "order"
     assert join.pairs == join.by_order == ((0, 0), (1, 1), (2, 2))
@@ -285,13 +294,13 @@ def test_without_times_equal_counts_join_in_order():
 @pytest.mark.parametrize(
     ("factor", "advice"), [(1000.0, 'unit = "ms"'), (0.001, 'unit = "s"'), (1e6, "another unit")]
 )
-def test_times_in_another_unit(factor: float, advice: str):
+def test_times_in_another_unit(factor: float, advice: str) -> None:
     true_s = irregular(40)
     words = nothing_joined(join_log(log_of([factor * t for t in true_s]), trials_at(true_s)), 40, 40)
     assert advice in words
 
 
-def test_nothing_to_join():
+def test_nothing_to_join() -> None:
     assert "no rows" in nothing_joined(join_log(log_of([]), trials_at([1.0])), 0, 1)
     assert "no trials" in nothing_joined(join_log(log_of([1.0]), []), 1, 0)
     words = nothing_joined(join_log(log_of([7.0] * 20), trials_at(irregular(20))), 20, 20)
@@ -299,7 +308,7 @@ def test_nothing_to_join():
     nothing_joined(join_log(log_of([1.0, 2.0]), trials_at([1.0, 2.0])), 2, 2)
 
 
-def test_a_clock_that_was_set_during_the_session():
+def test_a_clock_that_was_set_during_the_session() -> None:
     true_s = irregular(40)
     log_s = [t if row < 20 else t - 90.0 for row, t in enumerate(true_s)]
     words = nothing_joined(join_log(log_of(log_s), trials_at(true_s)), 40, 40)
@@ -307,7 +316,7 @@ def test_a_clock_that_was_set_during_the_session():
     assert "row 21" in words
 
 
-def test_the_sample_log():
+def test_the_sample_log() -> None:
     """Two rows per trial; clock zero and drift of `simulate.truth`; the marker file rounds to samples."""
     folder = Path(str(sample_folder()))
     table = read_log(folder / "sub-lt01_task-lantern_log.tsv")

@@ -254,7 +254,7 @@ def _fits(one: Explanation) -> bool:
 
 
 def _chances(one: Explanation, log_s: FloatArray, recorded_s: FloatArray) -> tuple[float, float]:
-    """How probable so many pairs are by chance: with intervals as regular as these, and with irregular ones."""
+    """How probable so many pairs are by chance, with intervals as regular as these, and with irregular."""
     span_log_s, span_recorded_s = float(np.ptp(log_s)), float(np.ptp(recorded_s))
     offsets = 1.0 + (span_log_s + span_recorded_s) / (2.0 * one.tolerance_s)
     drifts = 1.0 + MOST_DRIFT * min(span_log_s, span_recorded_s) / one.tolerance_s
