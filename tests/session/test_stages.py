@@ -32,7 +32,7 @@ def test_every_stage_has_a_state_in_the_order_of_the_rail() -> None:
     assert all(one.words.endswith(".") and one.label == "untouched" for one in states)
 
 
-@pytest.mark.parametrize("stage", [Stage.MARKERS, Stage.REVIEW, Stage.ROSTER])
+@pytest.mark.parametrize("stage", [Stage.REVIEW, Stage.ROSTER])
 def test_stages_of_later_versions_say_what_will_be_there(desk: Desk, stage: Stage) -> None:
     for session in (Session(), with_plan(desk, PLAN)):
         words = state_of(session, stage).words

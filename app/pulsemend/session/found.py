@@ -59,6 +59,25 @@ class WrittenSet:
 
 
 @dataclass(frozen=True)
+class FoundMarkers:
+    """What was found out about the markers.
+
+    Parameters
+    ----------
+    curable : tuple of str
+        Keys of faults that have a cure, decided about or not.
+    n_doubtful : int
+        Trials with more than one explanation.
+    log_problem : str
+        Why the log was not joined; empty if it was, or if there is none.
+    """
+
+    curable: tuple[str, ...] = ()
+    n_doubtful: int = 0
+    log_problem: str = ""
+
+
+@dataclass(frozen=True)
 class Found:
     """What jobs found out about the recording under the plan and the marks.
 
@@ -74,6 +93,7 @@ class Found:
         Pulses among them that have a marker, but no artifact.
     written : WrittenSet or None
         The set written last.
+    markers : FoundMarkers
     """
 
     problems: tuple[str, ...] = ()
@@ -81,6 +101,7 @@ class Found:
     n_pulses: int | None = None
     n_not_in_signal: int = 0
     written: WrittenSet | None = None
+    markers: FoundMarkers = FoundMarkers()
 
 
 NOTHING_FOUND = Found()

@@ -11,10 +11,6 @@ from pulsemend.session.found import Stage
 from pulsemend.session.session import Session
 
 NOT_YET: Mapping[Stage, str] = {
-    Stage.MARKERS: (
-        "Here codes will get their roles and labels on a timeline of all codes, and a log will be joined to "
-        "the recording. Until then roles and labels are written in the plan."
-    ),
     Stage.REVIEW: (
         "Here every epoch will be a bead with its fate, to be compared before and after, and kept or left "
         "out by hand. Until then the ledger of a written set names the fate of each."
@@ -103,7 +99,7 @@ def _has_open_ends(session: Session) -> bool:
 
 
 def markers_state(session: Session) -> StageState:
-    """Needs attention for every code without a role, for codes the recording lacks, and without any slot.
+    """Needs attention for every open end: roles, absent codes, slots, cures, doubtful trials, the log.
 
     Parameters
     ----------
@@ -124,13 +120,22 @@ def markers_state(session: Session) -> StageState:
     ]
     if not plan.trial:
         problems.append("The plan has no slot yet: its file has to name the markers of a trial.")
+    found, marks = session.found.markers, session.marks
+    decided = {*marks.cures_accepted, *marks.cures_refused}
+    problems += [f"A cure is open: {key}." for key in found.curable if key not in decided]
+    count = len(problems) + found.n_doubtful
+    if found.n_doubtful:
+        problems.append(f"{found.n_doubtful} trials have more than one explanation.")
+    if found.log_problem:
+        problems.append("The log was not joined.")
+        count += 1
     if problems:
-        return _attention(Stage.MARKERS, problems)
-    others = sorted(recorded - {marker.code for marker in plan.markers})
+        return StageState(Stage.MARKERS, State.ATTENTION, " ".join(problems), count)
+    others = sorted(code for code in recorded if not plan.names(code))
     words = f"All {len(plan.markers)} codes of the plan have a role."
     if others:
         words += f" Not in the plan, and so of role other: {', '.join(others)}."
-    return StageState(Stage.MARKERS, State.DONE, f"{words} {NOT_YET[Stage.MARKERS]}")
+    return StageState(Stage.MARKERS, State.DONE, words)
 
 
 def pulses_state(session: Session) -> StageState:

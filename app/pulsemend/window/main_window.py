@@ -43,12 +43,14 @@ from pulsemend.window.drops import Drops
 from pulsemend.window.handlers import Handlers
 from pulsemend.window.header import Header
 from pulsemend.window.mark_acts import MarkActs
+from pulsemend.window.marker_watch import MarkerWatch
 from pulsemend.window.opening import Opener
 from pulsemend.window.rail import Rail
 from pulsemend.window.ribbon import Ribbon
 from pulsemend.window.stages.epochs import EpochsStage
 from pulsemend.window.stages.export import ExportStage
 from pulsemend.window.stages.later import LaterStage
+from pulsemend.window.stages.markers import MarkersStage
 from pulsemend.window.stages.pulses import PulsesStage
 from pulsemend.window.stages.recording import RecordingStage
 from pulsemend.window.start_page import StartPage
@@ -97,6 +99,7 @@ class MainWindow(QMainWindow):
         self.bench = Workbench(session, settings, self)
         self.children_ = Children(self)
         self.mark_acts = MarkActs(self.bench)
+        self.marker_watch = MarkerWatch(self.bench, self)
         self.opener = Opener(self.bench, folders.state, self)
         self.link = TracesLink(self.bench, folders.cache, self)
         self.traces: TracesWidget | None = None
@@ -147,7 +150,7 @@ class MainWindow(QMainWindow):
     def _factories(self) -> dict[Stage, Factory]:
         return {
             Stage.RECORDING: lambda: RecordingStage(self.bench),
-            Stage.MARKERS: lambda: LaterStage(self.bench, Stage.MARKERS),
+            Stage.MARKERS: lambda: MarkersStage(self.bench, self.marker_watch),
             Stage.PULSES: lambda: PulsesStage(self.bench),
             Stage.EPOCHS: lambda: EpochsStage(self.bench),
             Stage.REVIEW: lambda: LaterStage(self.bench, Stage.REVIEW),
@@ -163,6 +166,7 @@ class MainWindow(QMainWindow):
             session.subscribe(Changed.MARKS, self._show_marks_and_plan),
             session.subscribe(Changed.STAGE, self._show_stage),
             session.subscribe(Changed.HISTORY, self._show_title),
+            self.marker_watch.close,
         ]
         self.rail.chosen.connect(session.open_stage)
         self.bench.learned_changed.connect(self.link.show_learned)
