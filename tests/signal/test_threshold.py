@@ -194,10 +194,11 @@ def test_every_reason_is_told_from_the_others() -> None:
         (np.clip((t + 0.02) / 0.12, 0, 1), NotFound.NO_CHANGE),  # a drift: no screen is so slow
         ((t >= 0.115).astype(float), NotFound.OUTSIDE_SEARCH),
         ((t >= -0.050).astype(float), NotFound.OUTSIDE_SEARCH),
+        (np.where((t > 0.030) & (t < 0.050), 0.4, t >= -0.050), NotFound.OUTSIDE_SEARCH),  # the end of a dip
     ]
     windows, reasons = [], []
     for i in range(8):
-        for x, reason in (*cases, *[(on, None)] * 5):
+        for x, reason in (*cases, *[(on, None)] * 8):
             windows.append(x + 0.05 * rng.standard_normal(t.size) + 0.1 * i)
             reasons.append(reason)
     for sign, polarity in ((1.0, Polarity.UP), (-1.0, Polarity.DOWN)):
