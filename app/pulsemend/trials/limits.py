@@ -44,19 +44,32 @@ def pair_bounds(slots: Sequence[Slot]) -> Bounds:
     DOI 10.1016/0004-3702(91)90006-6
     """
     direct = _direct(slots)
+    if not _can_be_met(direct, range(len(slots))):
+        _refuse_contradiction(direct, slots)
     required = [place for place, slot in enumerate(slots) if not slot.optional]
-    bounds = _tightened(direct, required)
-    for place, slot in enumerate(slots):
-        present = _needed([place, *required], slots)
-        # Slots that a required one counts from are as good as required here.
-        whole = bounds if present == set(required) else _tightened(direct, sorted(present))
-        if whole.diagonal()[sorted(present)].min() < -_ROUNDING_S * len(slots):
-            raise PlanError(
-                "trial",
-                f"no times can meet the limits of slot {show(slot.slot)} and those of the others together",
-                received=show(list(slot.after_s or ())),
-            )
-    return tuple(tuple(map(float, row)) for row in bounds)
+    return tuple(tuple(map(float, row)) for row in _tightened(direct, required))
+
+
+def _refuse_contradiction(direct: NDArray[np.float64], slots: Sequence[Slot]) -> None:
+    """Refuse slots that no trial can have; optional ones that merely cannot stand together are no fault."""
+    required = [place for place, slot in enumerate(slots) if not slot.optional]
+    for behind in (False, True):
+        for place, slot in enumerate(slots):
+            others = [other for other in required if behind or other < place]
+            if not _can_be_met(direct, sorted(_needed([place, *others], slots))):
+                raise PlanError(
+                    "trial",
+                    f"no times can meet the limits of slot {show(slot.slot)} and those of the slots "
+                    f"{'around' if behind else 'before'} it together",
+                    received=show(list(slot.after_s or ())),
+                )
+
+
+def _can_be_met(direct: NDArray[np.float64], present: Sequence[int]) -> bool:
+    """Tell whether there are times for all these slots: no circle of limits is negative."""
+    own = direct[np.ix_(present, present)]
+    # Every limit is wider by a rounding error, so a true contradiction exceeds their sum.
+    return bool(_tightened(own, range(len(present))).diagonal().min() >= -_ROUNDING_S)
 
 
 def _tightened(direct: NDArray[np.float64], via: Sequence[int]) -> NDArray[np.float64]:

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import zlib
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from pulsemend.model.epochs import Trial, Trials, nearest_sample
 from pulsemend.model.marks import NO_MARKS, Marks
@@ -34,8 +36,8 @@ def match_trials(
 
     All markers are explained together: as slots of trials within their time limits, with the fewest lost and
     left-over markers. A lost marker costs its own trial, not those that follow. Where another explanation is
-    as good, the trials concerned say so. Left-over markers that begin a trial and go on are an incomplete
-    trial, too.
+    as good, the trials concerned say so. Two or more markers left over outside all trials that begin one and
+    follow each other are a trial that was broken off.
 
     Parameters
     ----------
@@ -65,10 +67,10 @@ def match_trials(
     known = [one for one in _known(markers, plan, marks, found) if one.role in roles]
     events = [Event(one.marker.sample / rate_hz, one.role, one.is_found) for one in known]
     placed = align(events, ways)
-    trials = [_trial(one, known, rate_hz) for one in placed]
-    taken = {place for one in placed for place in one.places.values()}
-    begun, taken = _begun(known, taken, ways, rate_hz)
-    trials = sorted([*trials, *begun], key=lambda trial: trial.first_sample)
+    begun = _begun(known, placed, ways, rate_hz)
+    taken = {place for one in (*placed, *begun) for place in one.places.values()}
+    trials = [_trial(one, known, rate_hz) for one in (*placed, *begun)]
+    trials.sort(key=lambda trial: trial.first_sample)
     numbered = [replace(trial, number=number, place=number) for number, trial in enumerate(trials, start=1)]
     counts = Counter(marker.code for marker in markers)
     return Trials(
@@ -122,56 +124,52 @@ def _doubts(placed: Placed, known: Sequence[_Known], rate_hz: float) -> tuple[st
     phrases = [f"a trial of kind {kind} as well" for kind in placed.other_kinds]
     for name, places in placed.others.items():
         own = placed.places.get(name)
-        others = " or ".join(at(place) for place in places if place is not None)
-        phrases.append(
-            f"{name} at {at(own)} or {others}" if own is not None else f"{name} perhaps at {others}"
-        )
-    return tuple(phrases) or ("its markers may belong to a neighbouring trial",)
+        others = " or ".join(map(at, places))
+        phrases.append(f"{name} perhaps at {others}" if own is None else f"{name} at {at(own)} or {others}")
+    return tuple(phrases) or ("its markers may belong to a neighbouring trial, or to none",)
 
 
 def _begun(
-    known: Sequence[_Known], taken: set[int], ways: Sequence[Variant], rate_hz: float
-) -> tuple[list[Trial], set[int]]:
-    """Find trials that began and were broken off, among markers that no trial took."""
-    taken = set(taken)
-    found: list[Trial] = []
-    for start, one in enumerate(known):
-        if start in taken or one.is_found:
+    known: Sequence[_Known], placed: Sequence[Placed], ways: Sequence[Variant], rate_hz: float
+) -> list[Placed]:
+    """Find trials that began and were broken off, among markers outside all others."""
+    spans = [(min(one.places.values()), max(one.places.values()) + 1) for one in placed]
+    free = [not one.is_found for one in known]
+    for first, end in spans:
+        free[first:end] = [False] * (end - first)
+    found: list[Placed] = []
+    for start in range(len(known)):
+        runs = [(way, _run(known, free, way, start, rate_hz)) for way in ways] if free[start] else []
+        most = max((len(places) for _, places in runs), default=0)
+        if most < 2:
             continue
-        for way in ways:
-            places = _run(known, taken, way, start, rate_hz) if way.slots[0].role is one.role else {}
-            if len(places) < 2:
-                continue
-            taken |= set(places.values())
-            names = {slot.slot for slot in way.slots if not slot.optional} - set(places)
-            found.append(
-                Trial(
-                    number=0,
-                    markers={name: known[place].marker for name, place in places.items()},
-                    missing=tuple(slot.slot for slot in way.slots if slot.slot in names),
-                    kind=way.kind,
-                )
-            )
-            break
-    return found, taken
+        longest = [(way, places) for way, places in runs if len(places) == most]
+        way, places = longest[0]
+        for place in places.values():
+            free[place] = False
+        missing = tuple(slot.slot for slot in way.slots if not slot.optional and slot.slot not in places)
+        kinds = dict.fromkeys(other.kind for other, _ in longest if other.kind != way.kind)
+        found.append(Placed(way.kind, places, missing, {}, tuple(kinds), bool(kinds)))
+    return found
 
 
 def _run(
-    known: Sequence[_Known], taken: set[int], way: Variant, start: int, rate_hz: float
+    known: Sequence[_Known], free: Sequence[bool], way: Variant, start: int, rate_hz: float
 ) -> dict[str, int]:
-    """Slots filled one after the other by markers that follow each other and are free."""
+    """Slots filled from the first on by free markers that follow each other."""
+    if way.slots[0].role is not known[start].role:
+        return {}
     places = {way.slots[0].slot: start}
     at = start + 1
     for slot in way.slots[1:]:
-        if at >= len(known) or at in taken:
+        if at >= len(known) or not free[at]:
             break
         reference = places.get(slot.after)
-        if known[at].role is not slot.role or reference is None or slot.after_s is None:
-            if slot.optional:
-                continue
-            break
-        after_s = (known[at].marker.sample - known[reference].marker.sample) / rate_hz
-        if slot.after_s[0] - _ROUNDING_S <= after_s <= slot.after_s[1] + _ROUNDING_S:
+        fits = False
+        if known[at].role is slot.role and reference is not None and slot.after_s is not None:
+            after_s = (known[at].marker.sample - known[reference].marker.sample) / rate_hz
+            fits = slot.after_s[0] - _ROUNDING_S <= after_s <= slot.after_s[1] + _ROUNDING_S
+        if fits:
             places[slot.slot] = at
             at += 1
         elif not slot.optional:
@@ -191,22 +189,26 @@ def _with_stand_ins(trials: Sequence[Trial], plan: Plan, rate_hz: float) -> list
     ]
 
 
-def _latencies(name: str, trials: Sequence[Trial], references: Mapping[tuple[str, str], str]) -> list[float]:
-    """Collect samples from its reference to a slot, in all certain trials that have it."""
-    return [
-        trial.markers[name].sample - trial.markers[reference].sample
+def _latencies(
+    name: str, trials: Sequence[Trial], references: Mapping[tuple[str, str], str]
+) -> dict[int, float]:
+    """Collect samples from its reference to a slot, by the reference's, of all certain trials with both."""
+    return {
+        nearest_sample(trial.markers[reference].sample): (
+            trial.markers[name].sample - trial.markers[reference].sample
+        )
         for trial in trials
         if not trial.doubts
         and name in trial.markers
         and (reference := references.get((trial.kind, name), "")) in trial.markers
-    ]
+    }
 
 
 def _stand_ins(
     trial: Trial,
     slots: Mapping[str, Slot],
     references: Mapping[tuple[str, str], str],
-    latencies: Mapping[str, Sequence[float]],
+    latencies: Mapping[str, Mapping[int, float]],
     rate_hz: float,
 ) -> dict[str, float]:
     found = {}
@@ -217,11 +219,30 @@ def _stand_ins(
         if slot.stand_in is StandIn.FIXED and slot.stand_in_s is not None:
             found[name] = reference.sample + slot.stand_in_s * rate_hz
         elif latencies[name]:
-            # Drawn by the trial's own instant: what happens to other trials changes nothing here.
-            rng = np.random.default_rng([slot.stand_in_seed, nearest_sample(reference.sample), _number(name)])
-            found[name] = reference.sample + sorted(latencies[name])[int(rng.integers(len(latencies[name])))]
+            found[name] = reference.sample + _drawn(latencies[name], slot, nearest_sample(reference.sample))
     return found
 
 
-def _number(name: str) -> int:
-    return int.from_bytes(name.encode()[:8], "big")
+def _drawn(latencies: Mapping[int, float], slot: Slot, own: int) -> float:
+    """Draw a latency by what the seed says of this trial and every other one: the smallest number wins.
+
+    So a trial that is gained or lost changes no draw but those it wins or has won.
+    """
+    key = np.array([slot.stand_in_seed << 32 | zlib.crc32(slot.slot.encode())], dtype=np.uint64)
+    numbers = np.array(list(latencies), dtype=np.uint64)
+    numbers = _mixed(numbers + _mixed(np.array([own], dtype=np.uint64) + _mixed(key)))
+    return list(latencies.values())[int(np.argmin(numbers))]
+
+
+def _mixed(numbers: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """Scatter numbers over all 64 bits.
+
+    References
+    ----------
+    Steele GL, Lea D, Flood CH (2014) Fast splittable pseudorandom number generators. ACM SIGPLAN Not
+    49(10):453-472. DOI 10.1145/2714064.2660195
+    """
+    numbers = numbers + np.uint64(0x9E3779B97F4A7C15)
+    numbers = (numbers ^ (numbers >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+    numbers = (numbers ^ (numbers >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+    return numbers ^ (numbers >> np.uint64(31))
