@@ -314,6 +314,8 @@ class Pulses:
     side: Side = Side.BOTH
     flank_ms: float | None = None
     decay: Decay = Decay.NONE
+    decay_ms: float = 80.0
+    decay_least_uv: float = 20.0
     also: tuple[OtherGap, ...] = ()
     channels: Mapping[str, Window] = field(default_factory=dict)
 

@@ -235,6 +235,24 @@ PLAN_KEYS: tuple[Key, ...] = (
         now=(Decay.NONE,),
     ),
     Key(
+        "pulses.decay_ms",
+        Kind.NUMBER,
+        "length of the stretch that the decay is fitted to, from the gap's end",
+        default=80.0,
+        unit="ms",
+        low=1.0,
+        high=2000.0,
+    ),
+    Key(
+        "pulses.decay_least_uv",
+        Kind.NUMBER,
+        "channels whose median decay at the gap's end is smaller are left alone",
+        default=20.0,
+        unit="uV",
+        low=0.0,
+        high=100000.0,
+    ),
+    Key(
         "pulses.also[].window_ms",
         Kind.WINDOW,
         "a further gap at a fixed latency from every pulse, e.g. the stimulator's recharge",
@@ -441,5 +459,5 @@ PLAN_KEYS: tuple[Key, ...] = (
     ),
 )
 
-LATER_PLAN_KEYS = frozenset({"pulses.decay_ms", "pulses.decay_least_uv"})
+LATER_PLAN_KEYS: frozenset[str] = frozenset()
 """Keys that a later version has: refused as "not in this version" instead of as unknown."""
