@@ -22,10 +22,16 @@ class PlannedEvents:
     ----------
     plan : Plan
     trials : Trials
+    markers : tuple of Marker
+        Those that count, moved to measured onsets.
+    notes : tuple of str
+        What was taken into account besides markers, one sentence each: log, onsets.
     """
 
     plan: Plan
     trials: Trials
+    markers: tuple[Marker, ...] = ()
+    notes: tuple[str, ...] = ()
 
 
 def event_table(markers: Sequence[Marker], rate_hz: float, planned: PlannedEvents | None = None) -> str:

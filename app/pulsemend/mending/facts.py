@@ -3,22 +3,26 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from statistics import median
 
 import numpy as np
 
+from pulsemend.engine.fit import fit
 from pulsemend.engine.scan import find_pulse_like
-from pulsemend.errors import UsageError
+from pulsemend.errors import InputError, UsageError
 from pulsemend.mending.event_table import PlannedEvents, event_table
+from pulsemend.mending.prepare import bind_checked, decide
 from pulsemend.mending.pulse_evidence import pulse_evidence
+from pulsemend.mending.study_log import read_study_log
 from pulsemend.model.faults import MarkerFault
 from pulsemend.model.marks import NO_MARKS, Marks
 from pulsemend.model.marks_file import check_files, check_samples, read_marks
+from pulsemend.model.plan import Plan
 from pulsemend.model.plan_file import read_plan
-from pulsemend.model.recording import RecordingFacts
+from pulsemend.model.recording import Marker, Recording, RecordingFacts
 from pulsemend.model.toml_tables import write_text
 from pulsemend.model.vocabulary import ChannelType
 from pulsemend.progress import Work
@@ -112,6 +116,7 @@ def summarise(
         A file cannot be used.
     """
     plan_file = None if plan_path is None else read_plan(plan_path)
+    plan = None if plan_file is None else plan_file.plan
     recording = open_recording(path)
     try:
         facts = recording.facts
@@ -122,25 +127,40 @@ def summarise(
         found: tuple[int, ...] = ()
         if eeg.size:
             found = yield from find_pulse_like(recording, eeg)
+        counting = effective_markers(facts.markers, marks, facts.rate_hz)
+        planned = None
+        if plan is not None and plan.trial:
+            planned = yield from _planned(recording, counting.markers, plan, marks)
     finally:
         recording.close()
-    plan = None if plan_file is None else plan_file.plan
-    counting = effective_markers(facts.markers, marks, facts.rate_hz)
-    planned = None
-    if plan is not None and plan.trial:
-        trials = match_trials(counting.markers, plan, facts.rate_hz, marks)
-        in_blocks = with_blocks(trials.trials, counting.markers, plan, facts.rate_hz)
-        planned = PlannedEvents(plan, replace(trials, trials=in_blocks))
+    faults = find_faults(facts.markers, facts.rate_hz, plan, marks.cures_accepted)
     facts = replace(facts, markers=counting.markers)
     return RecordingSummary(
         facts=facts,
         codes=code_facts(facts),
         pulses_found=found,
-        faults=find_faults(recording.facts.markers, facts.rate_hz, plan, marks.cures_accepted),
+        faults=faults,
         proposal=guess(facts.markers, facts.rate_hz, pulse_evidence(facts, found).pulse_codes),
         planned=planned,
-        notes=counting.notes,
+        notes=(*counting.notes, *(planned.notes if planned else ())),
     )
+
+
+def _planned(
+    recording: Recording, markers: Sequence[Marker], plan: Plan, marks: Marks
+) -> Work[PlannedEvents]:
+    """Find the trials as `mend` would; by markers alone where a plan is not yet complete enough for that."""
+    facts = recording.facts
+    try:
+        setup, _ = bind_checked(facts, plan, marks)
+        estimates = yield from fit(recording, setup)
+        decision = decide(setup, estimates, plan, marks, read_study_log(recording, plan, marks))
+    except InputError as error:
+        trials = match_trials(markers, plan, facts.rate_hz, marks)
+        in_blocks = with_blocks(trials.trials, markers, plan, facts.rate_hz)
+        note = f"trials are told by markers alone, without the log, because mend would refuse this: {error}"
+        return PlannedEvents(plan, replace(trials, trials=in_blocks), tuple(markers), (note,))
+    return PlannedEvents(plan, decision.trials, decision.markers, decision.notes)
 
 
 def write_events(summary: RecordingSummary, out: Path) -> None:
@@ -160,7 +180,8 @@ def write_events(summary: RecordingSummary, out: Path) -> None:
     """
     if not out.parent.is_dir():
         raise UsageError("is no folder", where=str(out.parent), todo="Make it first")
-    write_text(out, event_table(summary.facts.markers, summary.facts.rate_hz, summary.planned))
+    markers = summary.facts.markers if summary.planned is None else summary.planned.markers
+    write_text(out, event_table(markers, summary.facts.rate_hz, summary.planned))
 
 
 def marks_of(plan_path: Path, facts: RecordingFacts, path: Path | None = None) -> Marks:

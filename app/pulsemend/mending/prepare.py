@@ -9,7 +9,7 @@ from pathlib import Path
 from pulsemend.engine.chain import Chain
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import fit
-from pulsemend.engine.onsets import shifted
+from pulsemend.engine.onsets import OnsetShift, shifted
 from pulsemend.engine.setup import Setup, bind
 from pulsemend.errors import InputError, LogError, NoEpochs
 from pulsemend.mending.study_log import NO_LOG, StudyLog, read_study_log
@@ -39,6 +39,7 @@ from pulsemend.trials.candidates import GapSpan, Geometry, candidates, set_order
 from pulsemend.trials.effective import effective_markers
 from pulsemend.trials.logged import Logged, needs_log, with_log
 from pulsemend.trials.matching import match_trials
+from pulsemend.units import s_to_ms
 
 
 @dataclass(frozen=True)
@@ -75,7 +76,10 @@ class Decision:
         All candidates, in order of trial, rule and piece.
     kept : tuple of Candidate
         In the order of the set.
+    notes : tuple of str
+        What became of log and onsets, one sentence each.
     warnings : tuple of str
+        The notes among them.
     """
 
     trials: Trials
@@ -85,6 +89,7 @@ class Decision:
     geometry: Geometry
     ledger: tuple[Candidate, ...]
     kept: tuple[Candidate, ...]
+    notes: tuple[str, ...]
     warnings: tuple[str, ...]
 
 
@@ -264,14 +269,18 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
     )
     ledger = matched.candidates
     problem = log.problem or (logged.problem if logged else "")
-    warnings = [
-        *_trial_warnings(trials, facts),
+    notes = (
         *([f"the log was not joined: {problem}"] if problem else []),
         *_log_notes(logged, log),
+        *(_shift_note(shift) for shift in estimates.stimulus_onsets if shift.is_used),
+        *estimates.notes,
+    )
+    warnings = [
+        *_trial_warnings(trials, facts),
+        *notes,
         *stale_decisions(trials, plan, geometry),
         *_stale_pulses(facts, plan, marks),
         *matched.warnings,
-        *estimates.notes,
     ]
     return Decision(
         trials=trials,
@@ -281,6 +290,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         geometry=geometry,
         ledger=ledger,
         kept=set_order(ledger, geometry),
+        notes=notes,
         warnings=tuple(warnings),
     )
 
@@ -299,7 +309,7 @@ def need_log(decision: Decision, plan: Plan) -> None:
     """
     if decision.log_problem and needs_log(plan):
         raise LogError(
-            f"{decision.log_problem.rstrip('.')}. The plan takes labels from the log: nothing was joined",
+            f"{decision.log_problem.rstrip('.')}. The plan takes labels or facts from it",
             todo="Name the right log in the marks (log.file), or take its columns out of the plan",
         )
 
@@ -403,8 +413,18 @@ def _log_notes(logged: Logged | None, log: StudyLog) -> list[str]:
         return []
     return [
         *(f"{log.table.name}: {note}" for note in log.table.notes),
-        f"{log.table.name}: {logged.join.words}",
+        " ".join(line.strip() for line in logged.join.words.splitlines()),
     ]
+
+
+def _shift_note(shift: OnsetShift) -> str:
+    """Say by how much the markers of a code were moved."""
+    moved = 0.0 if shift.shift_s is None else s_to_ms(shift.shift_s)
+    spread = "" if shift.spread_s is None else f", spread {s_to_ms(shift.spread_s):.2f} ms"
+    return (
+        f'{shift.channel} shows the onset of "{shift.code}" {moved:+.1f} ms from its marker{spread}, '
+        f"at {shift.n_found} of {shift.n_markers}: markers are moved"
+    )
 
 
 def _stale_pulses(facts: RecordingFacts, plan: Plan, marks: Marks) -> list[str]:

@@ -75,8 +75,12 @@ def with_log(trials: Sequence[Trial], table: LogTable, plan: Plan, marks: Marks,
     except LogError as error:
         return Logged(tuple(trials), None, rows, units, str(error))
     join = join_log(log, units, per_trial=max(1, len(plan.log.slots)))
+    if len(rows) < len(table.rows):
+        excluded = ", ".join(str(row) for row in range(1, len(table.rows) + 1) if row not in rows)
+        words = f"{join.words}\nExcluded by hand, and not counted above: row {excluded} of the file."
+        join = replace(join, words=words)
     if not join.pairs:
-        return Logged(tuple(trials), join, rows, units, f"{table.name}: {join.words}")
+        return Logged(tuple(trials), join, rows, units, _one_line(join.words))
     values: dict[int, dict[str, str]] = {}
     columns = _kept_columns(table, plan)
     for row, unit in join.pairs:
@@ -88,6 +92,10 @@ def with_log(trials: Sequence[Trial], table: LogTable, plan: Plan, marks: Marks,
         )
     joined = tuple(replace(trial, log=values.get(place, {})) for place, trial in enumerate(trials))
     return Logged(joined, join, rows, units)
+
+
+def _one_line(words: str) -> str:
+    return " ".join(line.strip() for line in words.splitlines())
 
 
 def _units(trials: Sequence[Trial], plan: Plan, rate_hz: float) -> Iterator[tuple[int, str, TrialTime]]:
