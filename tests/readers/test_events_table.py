@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Sequence
 from contextlib import closing
 from pathlib import Path
 
+import numpy as np
 import pytest
 
-from pulsemend.errors import DamagedRecording
+from pulsemend.errors import DamagedRecording, RecordingError
 from pulsemend.model.recording import RecordingFacts
 from pulsemend.progress import finish
 from pulsemend.readers.fingerprint import fingerprint
@@ -230,3 +232,28 @@ def test_only_the_recordings_own_table_is_taken(tmp_path: Path) -> None:
     table(tmp_path, "onset duration value", [(0.2, 0, 1)]).rename(tmp_path / "lt02_events.tsv")
     assert markers(path) == []
     assert facts_of(path).n_samples == N_SAMPLES
+
+
+def test_broken_tables_are_refused_or_read(tmp_path: Path) -> None:
+    path = recording(tmp_path, MARKS)
+    texts = {
+        "lt01_events.tsv": "onset\tduration\ttrial_type\tsample\n0.2\t0\tcue\t100\n0.4\t0\tcue\t200\n",
+        "lt01_channels.tsv": "name\ttype\tlow_cutoff\nFz\tEEG\t0.1\nC3\tEEG\t0\nC4\tEEG\t1\nVEOG\tEOG\t1\n",
+        "lt01_electrodes.tsv": "name\tx\ty\tz\nFz\t0\t60\t70\nC3\t-60\t0\t70\nC4\t60\t0\t70\n",
+        "lt01_coordsystem.json": '{"EEGCoordinateUnits": "mm"}',
+    }
+    for name, text in texts.items():
+        (tmp_path / name).write_text(text, "utf-8")
+    assert facts_of(path).channels[1].position_m == (-0.06, 0.0, 0.07)
+    rng = np.random.default_rng(5)
+    for name, text in texts.items():
+        for _ in range(100):
+            broken = bytearray(
+                text.encode()[: len(text) if rng.random() < 0.5 else int(rng.integers(len(text)))]
+            )
+            for at in rng.integers(0, max(len(broken), 1), 2):
+                broken[at : at + 1] = bytes([rng.choice([9, 10, 0, 34, 48, 101, 45, 200])])
+            (tmp_path / name).write_bytes(broken)
+            with contextlib.suppress(RecordingError):
+                facts_of(path)
+        (tmp_path / name).write_text(text, "utf-8")

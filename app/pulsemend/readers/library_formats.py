@@ -27,7 +27,10 @@ _BESIDE = {
     ".rs3": (".dat", ".dap", ".cef", ".ceo"),
     ".hdr": (".wl1", ".wl2", ".evt", ".tri", ".inf", ".tpl", ".dat"),
 }
-_OPTIONS: dict[str, Any] = {"preload": False, "verbose": "warning"}
+# Events that a reader can give as annotations or as channels would else come as both.
+_OPTIONS: dict[str, Any] = {"preload": False, "verbose": "warning", "events_as_annotations": True}
+# The library takes this format's numbers for volts; a full scale of 32767 steps would be 2500 V.
+MICROVOLTS = (".nxe",)
 _NEEDS_MORE = "required positional argument"
 
 
@@ -85,7 +88,11 @@ def _opened(reader: Any, path: Path) -> tuple[Any, tuple[str, ...]]:
         except NotImplementedError:
             # Some readers only know how to read everything at once.
             raw = reader(path, **{**options, "preload": True})
-    said = dict.fromkeys(told(one.message) for one in caught if isinstance(one.message, Warning))
+    said = dict.fromkeys(
+        told(one.message)
+        for one in caught
+        if isinstance(one.message, Warning) and issubclass(one.category, RuntimeWarning)
+    )
     return raw, tuple(f"The reader library warns: {text}." for text in said)
 
 

@@ -17,7 +17,7 @@ from pulsemend.model.recording import Channel
 from pulsemend.model.vocabulary import ChannelType
 from pulsemend.readers.channel_types import LIBRARY_TYPES, type_by_name
 from pulsemend.readers.codes import Found, set_aside, split_at_slash, sync_notes, whole_if_close
-from pulsemend.readers.common import check_names, missing
+from pulsemend.readers.common import check_names, missing, power_of_ten
 from pulsemend.readers.edf_header import EdfHeader
 from pulsemend.readers.source import Source
 from pulsemend.readers.tal import Timeline, read_timeline
@@ -61,7 +61,7 @@ def edf_source(header: EdfHeader) -> Source:
 
 
 def raw_source(
-    path: Path, raw: Any, kind: str, paths: tuple[Path, ...], warned: tuple[str, ...] = ()
+    path: Path, raw: Any, kind: str, paths: tuple[Path, ...], warned: tuple[str, ...] = (), unit: str = "V"
 ) -> Source:
     """Describe a recording that the reader library has opened.
 
@@ -77,6 +77,8 @@ def raw_source(
         All files it consists of.
     warned : tuple of str
         Further notes.
+    unit : {"V", "uV"}
+        What the library's numbers of electrodes really are.
 
     Raises
     ------
@@ -85,6 +87,11 @@ def raw_source(
     rate_hz, n_samples = float(raw.info["sfreq"]), int(raw.n_times)
     check_names(raw.ch_names, path.name)
     channels = _with_info(map(_library_channel, raw.info["chs"], raw.get_channel_types()), raw.info)
+    if unit == "uV":
+        micro = power_of_ten(-6)
+        channels = tuple(
+            replace(one, scale_v=micro, unit=unit) if one.unit == "V" else one for one in channels
+        )
     marks: list[tuple[float | None, str]] = []
     boundaries: set[int] = set()
     coarsest = 0.0

@@ -17,11 +17,12 @@ from pulsemend.readers.codes import Found
 from pulsemend.readers.common import check_finite, check_request
 from pulsemend.readers.edf_header import EdfHeader, read_edf_header
 from pulsemend.readers.library_errors import own_errors
-from pulsemend.readers.library_formats import files_of, library_extension, open_by_extension
+from pulsemend.readers.library_formats import MICROVOLTS, files_of, library_extension, open_by_extension
 from pulsemend.readers.library_source import check_fif, edf_source, raw_source
 from pulsemend.readers.source import Source, facts_of, with_tables
 from pulsemend.readers.triggers import LOW_16_BITS, trigger_events
 
+_LOOKED_AT, _NO_EEG_V = 2000, 0.05  # samples at the start; even pulses and drifts spread by less
 _TRIGGER_BLOCK = 1 << 16  # samples per piece when a trigger channel is searched
 
 
@@ -42,26 +43,32 @@ class LibraryRecording:
         self._path = path
         self._raw: Any = None
         self._header: EdfHeader | None = None
+        source = self._source()
+        self._n_samples = source.n_samples
+        source = with_tables(path, source)
+        events, notes = self._trigger_markers(source)
+        if self._header is None and not _is_fif(path):
+            notes += self._doubtful_volts(source)
+        self._facts, self._paths = facts_of(path, replace(source, notes=(*source.notes, *notes)), events)
+
+    def _source(self) -> Source:
+        path = self._path
         if path.suffix.lower() in (".edf", ".bdf"):
             self._header = read_edf_header(path)
-            source = edf_source(self._header)
-        elif _is_fif(path):
+            return edf_source(self._header)
+        if _is_fif(path):
             check_fif(path)
             raw = self._library()
             for part in raw.filenames[1:]:
                 check_fif(Path(part), first=False)
             with own_errors(path):
-                source = raw_source(path, raw, "FIF", tuple(map(Path, raw.filenames)))
-        else:
-            self._raw, warned = open_by_extension(path)
-            with own_errors(path):
-                kind = f"{library_extension(path)} {'folder' if path.is_dir() else 'file'}"
-                source = raw_source(path, self._raw, kind, files_of(path, self._raw), warned)
-        source = with_tables(path, source)
-        self._n_samples = source.n_samples
-        events, trigger_notes = self._trigger_markers(source)
-        noted = replace(source, notes=(*source.notes, *trigger_notes))
-        self._facts, self._paths = facts_of(path, noted, events)
+                return raw_source(path, raw, "FIF", tuple(map(Path, raw.filenames)))
+        self._raw, warned = open_by_extension(path)
+        with own_errors(path):
+            extension = library_extension(path)
+            kind = f"{extension} {'folder' if path.is_dir() else 'file'}"
+            unit = "uV" if extension in MICROVOLTS else "V"
+            return raw_source(path, self._raw, kind, files_of(path, self._raw), warned, unit)
 
     @property
     def facts(self) -> RecordingFacts:
@@ -116,6 +123,21 @@ class LibraryRecording:
         if not rows:
             return events, []
         return events, [f"Markers from {names}: {len(events)}; from annotations: {len(source.found)}."]
+
+    def _doubtful_volts(self, source: Source) -> list[str]:
+        """Say so where a format that may lack units gives numbers that no electrode reaches."""
+        rows = [row for row, channel in enumerate(source.channels) if channel.type is ChannelType.EEG]
+        if not rows or not source.n_samples:
+            return []
+        block = self._volts(rows, 0, min(source.n_samples, _LOOKED_AT))
+        with np.errstate(all="ignore"):
+            scales_v = [source.channels[row].scale_v for row in rows]
+            spread_v = float(np.sort(np.std(block, axis=1) * scales_v)[len(rows) // 2])
+        if not spread_v > _NO_EEG_V:
+            return []
+        return [
+            f"The numbers of the EEG channels spread by {spread_v:.3g} V: perhaps the file's unit is not V."
+        ]
 
     def _levels(self, row: int, n_samples: int) -> Iterator[NDArray[np.int64]]:
         for start in range(0, n_samples, _TRIGGER_BLOCK):
