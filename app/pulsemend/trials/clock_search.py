@@ -34,6 +34,8 @@ MOST_SPREAD = 0.35
 """Of the widest tolerance; what chance pairs spreads over all of it, which makes 0.58."""
 
 _LEAST_SHARE = dict(zip(WIDEST_S, (0.5, 0.5, 0.75), strict=True))  # of the events that both share
+_LEAST_COARSE = 30  # pairs, with the widest tolerance
+_LEAST_ROUGHNESS = 1.4  # of 30 independent residuals 1 in 50 are less
 _STRETCH = 100  # rows that vote together
 _STRETCHES = 5
 _PEAKS = 4  # offsets grown per stretch
@@ -100,7 +102,8 @@ def find_clock(log_s: FloatArray, recorded_s: FloatArray) -> Found:
 
     - It pairs at least half of the events in the stretch that log and recording share (three quarters with
       the widest tolerance), and drifts by no more than 1000 ppm.
-    - The residuals keep to its middle: their spread is at most 0.35 of the widest distance allowed.
+    - The residuals keep to its middle: their spread is at most 0.35 of the widest distance allowed. With the
+      widest tolerance they are also independent of each other, and at least 30.
     - So many pairs would come about by chance less than once in a million searches: binomial, over all
       offsets and drifts tried. How often a row meets a trial by chance is measured at other offsets, so
       that regular intervals count as what they are.
@@ -117,7 +120,7 @@ def find_clock(log_s: FloatArray, recorded_s: FloatArray) -> Found:
             peaks = _vote(log_s[stretch], recorded_s, widest_s)
             grown = [_grow(log_s, recorded_s, widest_s, stretch, *peak) for peak in peaks]
             able = sorted((one for one in grown if one is not None), key=lambda one: -one.worth)
-            if not able or not _fits(able[0]):
+            if not able or not _fits(able[0], log_s, recorded_s):
                 continue
             regular, irregular = _chances(able[0], log_s, recorded_s)
             if irregular > CHANCE:
@@ -244,13 +247,31 @@ def _fitted(log_s: FloatArray, recorded_s: FloatArray) -> ClockFit | None:
     return clock if abs(clock.drift) <= MOST_DRIFT + 3.0 * clock.drift_se else None
 
 
-def _fits(one: Explanation) -> bool:
-    """Tell whether enough of what both share is paired, and near to the clock."""
+def _fits(one: Explanation, log_s: FloatArray, recorded_s: FloatArray) -> bool:
+    """Tell whether enough of what both share is paired, near to the clock, and not by wandering along it."""
+    if one.widest_s == WIDEST_S[-1] and (
+        one.rows.size < _LEAST_COARSE or _roughness(one, log_s, recorded_s) < _LEAST_ROUGHNESS
+    ):
+        return False
     return (
         one.rows.size >= _LEAST_SHARE[one.widest_s] * one.shared
         and one.clock.residual_sd_s <= MOST_SPREAD * one.widest_s
         and abs(one.clock.drift) <= MOST_DRIFT
     )
+
+
+def _roughness(one: Explanation, log_s: FloatArray, recorded_s: FloatArray) -> float:
+    """Mean squared step from residual to residual, over their variance.
+
+    2 where residuals are independent, as rounding to seconds makes them; far less where two series of nearly
+    equal intervals run beside each other for a while.
+
+    References
+    ----------
+    von Neumann (1941), Annals of Mathematical Statistics 12, 367-395, doi:10.1214/aoms/1177731677
+    """
+    residual_s = recorded_s[one.trials] - one.clock.recorded_s(log_s[one.rows])
+    return float(np.mean(np.diff(residual_s) ** 2)) / max(float(np.var(residual_s)), 1e-12)
 
 
 def _chances(one: Explanation, log_s: FloatArray, recorded_s: FloatArray) -> tuple[float, float]:
