@@ -94,6 +94,15 @@ def test_duplicates_of_the_files_markers_are_dropped_and_counted(tmp_path: Path)
     assert "does not list, kept: 1" in note
 
 
+def test_pauses_are_told(tmp_path: Path) -> None:
+    path = recording(tmp_path, [(700, "New Segment", "")])
+    table(tmp_path, "onset duration value", [(2.0, 0, 1)])
+    facts = facts_of(path)
+    assert facts.boundaries == (700,)
+    assert [marker.sample for marker in facts.markers] == [1000]
+    note_with(facts, "count recorded time only")
+
+
 def test_two_markers_side_by_side_are_two(tmp_path: Path) -> None:
     path = recording(tmp_path, [(100, "Stimulus", "1"), (101, "Stimulus", "3")])
     table(tmp_path, "onset duration value", [(0.2, 0, 1), (0.202, 0, 3)])

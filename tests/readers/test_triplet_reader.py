@@ -333,8 +333,14 @@ def test_marker_file_that_ends_inside_an_entry(header: Path, lost: int) -> None:
     assert len(facts_of(header).markers) == 4
 
 
-def test_plain_triplets_do_without_the_reader_library(header: Path) -> None:
+@pytest.mark.parametrize("tables", [False, True])
+def test_plain_triplets_do_without_the_reader_library(header: Path, tables: bool) -> None:
     """The window shows their first traces before that library is loaded (design, section 5)."""
+    if tables:
+        header.with_name("lt01_events.tsv").write_text("onset\tduration\tvalue\n0.1\t0\t1\n")
+        header.with_name("lt01_electrodes.tsv").write_text("name\tx\ty\tz\nFz\t0\t0\t1\n")
+        rows = "".join(f"{name}\tEEG\n" for name in NAMES)
+        header.with_name("lt01_channels.tsv").write_text(f"name\ttype\n{rows}")
     lines = (
         "import sys",
         "from pathlib import Path",

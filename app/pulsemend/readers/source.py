@@ -115,6 +115,11 @@ def facts_of(
     if source.events_table is not None:
         merged = merge_events(source.events_table, markers, source.rate_hz, source.n_samples)
         markers, notes = merged.markers, (*notes, *merged.notes)
+        if merged.used and source.boundaries:
+            notes = (
+                *notes,
+                f"Onsets in {source.events_table.name} count recorded time only, without its pauses.",
+            )
         boundaries |= set(merged.joints)
         paths = (*paths, source.events_table) if merged.used else paths
     facts = RecordingFacts(
