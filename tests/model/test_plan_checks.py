@@ -7,10 +7,10 @@ from dataclasses import replace
 import pytest
 
 from pulsemend.errors import MarksError, PlanError
+from pulsemend.model.label_columns import rule_columns, slot_columns
 from pulsemend.model.marks import NO_MARKS, Marks
 from pulsemend.model.marks_file import parse_marks
 from pulsemend.model.plan import Plan
-from pulsemend.model.label_columns import rule_columns, slot_columns
 from pulsemend.model.plan_checks import (
     check_against_rate,
     check_channels,

@@ -98,7 +98,7 @@ class Key:
         if self.low is not None and self.high is not None:
             each = " each" if self.kind in (Kind.PAIR, Kind.SPAN, Kind.WINDOW) else ""
             unit = f" {self.unit}" if self.unit else ""
-            text += f"{each} from {self.low:g} to {self.high:g}{unit}" + (", or 0" if self.zero else "")
+            text += f"{each} from {self.low:.12g} to {self.high:.12g}{unit}" + (", or 0" if self.zero else "")
         return text
 
 

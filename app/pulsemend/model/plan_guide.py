@@ -17,6 +17,18 @@ GUIDE = Path(__file__).resolve().parent.parent / "guide"
 PAGES: dict[str, tuple[Key, ...]] = {"plan.md": PLAN_KEYS, "marks.md": MARKS_KEYS}
 _BEGIN, _END = "<!-- keys: begin -->", "<!-- keys: end -->"
 _PLACE = re.compile(f"{_BEGIN}.*{_END}", re.DOTALL)
+_ANY_NAME = {
+    "markers": "CODE",
+    "bits": "FIELD",
+    "names": "VALUE",
+    "roles": "VALUE",
+    "values": "VALUE",
+    "columns": "FACT",
+    "channels": "CHANNEL",
+    "types": "CHANNEL",
+    "gaps_ms": "CHANNEL",
+}
+"""Words that stand for any name, by the table it stands in; everywhere else NAME."""
 _PLAIN = re.compile(r"([|*_<>\\])")
 
 
@@ -56,13 +68,26 @@ def key_tables(keys: Iterable[Key]) -> str:
 
 def _section(path: str) -> str:
     """Heading of the TOML table that a key stands in."""
-    table, _, _ = path.rpartition(".")
-    if table.endswith(".labels"):
-        table = table.removesuffix(".labels")
+    table = path.rpartition(".")[0]
+    if path.endswith(".*"):
+        # Labels, names and the like of one thing stand in its own table, as `labels.NAME`.
+        above = table.rpartition(".")[0]
+        table = above if above.endswith(("*", "[]")) else table
     if not table:
         return "At the top"
-    name = table.replace("[]", "").replace("*", "CODE")
+    name = _named(table).replace("[]", "")
     return f"[[{name}]]" if table.endswith("[]") else f"[{name}]"
+
+
+def _named(path: str) -> str:
+    """Write a path with a word that says what any name of it is."""
+    parts = path.split(".")
+    return ".".join(_any_name(parts[:depth]) if part == "*" else part for depth, part in enumerate(parts))
+
+
+def _any_name(above: Sequence[str]) -> str:
+    """Word for any name that may stand in a table."""
+    return _ANY_NAME.get(".".join(above)) or _ANY_NAME.get(above[-1], "NAME")
 
 
 def _table(heading: str, keys: Sequence[Key]) -> str:
@@ -75,11 +100,12 @@ def _table(heading: str, keys: Sequence[Key]) -> str:
 
 
 def _name(key: Key) -> str:
-    name = key.path.rpartition(".")[2]
-    if name == "*":
-        is_label = ".labels." in key.path
-        return "labels.NAME" if is_label else "CHANNEL"
-    return name
+    """Name of a key within its section."""
+    parts = key.path.split(".")
+    start = len(parts) - 1
+    if parts[-1] == "*" and len(parts) > 2 and parts[-3].endswith(("*", "[]")):
+        start -= 1
+    return _named(key.path).split(".", start)[-1] if start else key.path
 
 
 def _default(key: Key) -> str:
