@@ -109,7 +109,7 @@ def _in_trials(survey: Survey, slot: Slot) -> list[tuple[float, float]]:
     if plan is None:
         return []
     free = np.array([one.sample for one in survey.trials.extra if plan.role_of(one.code) is slot.role])
-    ends = [trial.first_sample for trial in trials[1:]] + [np.inf]
+    ends = [*(trial.first_sample for trial in trials[1:]), np.inf][: len(trials)]
     found = []
     for trial, end in zip(trials, ends, strict=True):
         reference, own = trial.markers.get(slot.after), trial.markers.get(slot.slot)

@@ -35,12 +35,14 @@ _WIDTHS = (
     "a code of usual length",
     "undecided",
     "12345",
-    "0:00:00.0",
-    "0:00:00.0",
-    "answer other + 1.5 s",
-    "answer other - 1.5 s",
-    "match = same, item = left",
+    "0:00:00",
+    "0:00:00",
+    "answer other, 1.5 s",
+    "answer other, 1.5 s",
+    "match = same",
 )
+_NUMBERS = (COUNT, FIRST, LAST)
+_ON_THE_RIGHT = int(Qt.AlignmentFlag.AlignRight | Qt.AlignmentFlag.AlignVCenter)
 _ICON_PX, _FINE = 14, 3
 _MOST_ROWS = 9
 
@@ -112,9 +114,17 @@ class CodeModel(RowsModel):
         """Give the shape of a role; numbers stand on the right."""
         if column == CODE and role == Qt.ItemDataRole.DecorationRole:
             return self._icons[self.rows[row].role]
-        if column == COUNT and role == Qt.ItemDataRole.TextAlignmentRole:
-            return int(Qt.AlignmentFlag.AlignRight | Qt.AlignmentFlag.AlignVCenter)
+        if column in _NUMBERS and role == Qt.ItemDataRole.TextAlignmentRole:
+            return _ON_THE_RIGHT
         return None
+
+    def headerData(
+        self, section: int, orientation: Qt.Orientation, role: int = Qt.ItemDataRole.DisplayRole
+    ) -> object:
+        """Give the title of a column, on the side of its numbers."""
+        if role == Qt.ItemDataRole.TextAlignmentRole and section in _NUMBERS:
+            return _ON_THE_RIGHT
+        return super().headerData(section, orientation, role)
 
 
 class CodeTable(RowsTable):

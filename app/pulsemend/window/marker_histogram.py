@@ -139,8 +139,13 @@ class Histogram(KeptPicture):
             painter.drawLine(QPointF(x, bottom), QPointF(x, bottom + 4))
             place = min(max(x - wide / 2, 2.0), self.width() - wide - 2)
             painter.drawText(QPointF(place, bottom + 4 + metrics.ascent()), text)
-        text = f"{most:.0f} in the highest bar"
-        painter.drawText(QPointF(_PAD, _TOP + metrics.ascent() + 1), text)
+        # One number is enough to read the others by.
+        highest = int(self._counts.argmax())
+        x = (self.x_of(float(self._edges[highest])) + self.x_of(float(self._edges[highest + 1]))) / 2
+        text = f"{most:.0f}"
+        painter.setPen(QColor(self.theme.text))
+        top = _TOP + metrics.ascent()
+        painter.drawText(QPointF(x - metrics.horizontalAdvance(text) / 2, top), text)
 
     def mouseReleaseEvent(self, event: QMouseEvent) -> None:
         """Tell which bar was clicked."""

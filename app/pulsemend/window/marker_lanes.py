@@ -7,7 +7,7 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
-from PySide6.QtCore import QPointF, QSize, Qt
+from PySide6.QtCore import QPointF, QRectF, QSize, Qt
 from PySide6.QtGui import QColor, QFontMetricsF, QImage, QPainter, QPaintEvent, QPen
 from PySide6.QtWidgets import QSizePolicy, QWidget
 
@@ -51,13 +51,15 @@ def marker_row(columns: Columns, width: int, height: int, role: Role, size: int)
         pixels[(height - size) // 2 : (height + size) // 2, inside] = 255
         return pixels
     stamp = _stamp(role, size)
-    high, wide = stamp.shape
-    top = (height - high) // 2
-    for at in range(wide):
-        place = columns + (at - wide // 2)
-        place = place[(place >= 0) & (place < width)]
-        lane = pixels[top : top + high]
-        lane[:, place] = np.maximum(lane[:, place], stamp[:, at : at + 1])
+    side = stamp.shape[0]
+    seen = columns[(columns > -side) & (columns < width + side)] + (side - side // 2)
+    # On its side, with room at the edges: a shape's columns are then whole pieces of memory.
+    lane = np.zeros((width + 3 * side, side), dtype=np.uint8)
+    for at in range(side):
+        place = seen + at
+        lane[place] = np.maximum(lane[place], stamp[:, at])
+    top = (height - side) // 2
+    pixels[max(0, top) : top + side] = lane[side : side + width].T[max(0, -top) :][:height]
     return pixels
 
 
@@ -91,6 +93,27 @@ def trial_row(starts: Columns, stops: Columns, width: int, height: int, state: T
     pixels[:, edges] = 255
     pixels[0, covered], pixels[-1, covered] = 255, 255
     return pixels
+
+
+def draw_shades(painter: QPainter, shades: Pixels, box: QRectF, colours: tuple[str, str]) -> None:
+    """Shade the whole height of a box in places.
+
+    Parameters
+    ----------
+    painter : QPainter
+        Where.
+    shades : uint8 array, shape (width,)
+        0 for none, 1 and 2 for the first and the second colour.
+    box : QRectF
+        As wide as all shades together.
+    colours : (str, str)
+        As ``#rrggbb``.
+    """
+    padded = np.zeros(-(-shades.size // 4) * 4, dtype=np.uint8)
+    padded[: shades.size] = shades
+    image = QImage(padded.data, shades.size, 1, padded.size, QImage.Format.Format_Indexed8)
+    image.setColorTable([0, *(QColor(colour).rgba() for colour in colours)])
+    painter.drawImage(box, image.convertToFormat(QImage.Format.Format_ARGB32_Premultiplied))
 
 
 def draw_pixels(
@@ -186,7 +209,6 @@ class StateLegend(QWidget):
         """Name these."""
         self._states = states
         self.setAccessibleName("Trials: " + ", ".join(states) if states else "No trials")
-        self.setVisible(bool(states))
         self.updateGeometry()
         self.update()
 

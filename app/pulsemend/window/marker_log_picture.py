@@ -68,6 +68,13 @@ class Residuals(KeptPicture):
             left + time_s / self._duration_s * (right - left), (top + bottom) / 2 - share * (bottom - top) / 2
         )
 
+    def _places(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Where all pairs are drawn."""
+        left, top, right, bottom = self._box()
+        x = left + self._view.time_s / self._duration_s * (right - left)
+        share = s_to_ms(self._view.residual_s) / self.most_ms
+        return x, (top + bottom) / 2 - share * (bottom - top) / 2
+
     def _box(self) -> tuple[float, float, float, float]:
         """Left, top, right and bottom of the points."""
         metrics = QFontMetricsF(self.font())
@@ -85,10 +92,11 @@ class Residuals(KeptPicture):
             painter.fillRect(QRectF(left, upper, right - left, lower - upper), QColor(self.theme.flank))
         self._paint_axes(painter)
         painter.setRenderHint(QPainter.RenderHint.Antialiasing)
+        xs, ys = self._places()
         # Pairs that rest on their place between neighbours alone are empty: their time says nothing.
         for hollow in (False, True):
             these = np.flatnonzero(view.by_order == hollow)
-            points = [self.place_of(*pair) for pair in self._pairs(these)]
+            points = [QPointF(x, y) for x, y in zip(xs[these].tolist(), ys[these].tolist(), strict=True)]
             colour = QColor(self.theme.accent)
             if hollow:
                 painter.setPen(QPen(colour, 1.2))
@@ -100,11 +108,6 @@ class Residuals(KeptPicture):
                 painter.drawPoints(QPolygonF(points))
         self._paint_alone(painter, view.rows_alone, top - 6, points_down=True)
         self._paint_alone(painter, view.trials_alone, bottom + _STRIP - 5, points_down=False)
-
-    def _pairs(self, these: NDArray[np.intp]) -> list[tuple[float, float]]:
-        return list(
-            zip(self._view.time_s[these].tolist(), self._view.residual_s[these].tolist(), strict=True)
-        )
 
     def _paint_alone(
         self, painter: QPainter, items: tuple[LogItem, ...], y: float, *, points_down: bool
@@ -156,10 +159,8 @@ class Residuals(KeptPicture):
         if top - 2 <= at.y() <= bottom + 2:
             if not view.time_s.size:
                 return None
-            apart = [
-                math.hypot(p.x() - at.x(), p.y() - at.y())
-                for p in (self.place_of(*pair) for pair in self._pairs(np.arange(view.time_s.size)))
-            ]
+            xs, ys = self._places()
+            apart = np.hypot(xs - at.x(), ys - at.y())
             place = int(np.argmin(apart))
             if apart[place] > _NEAR:
                 return None

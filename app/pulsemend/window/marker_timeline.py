@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from PySide6.QtCore import QEvent, QPointF, QRectF, QSize, Qt, Signal
+from PySide6.QtCore import QEvent, QLineF, QPointF, QRectF, QSize, Qt, Signal
 from PySide6.QtGui import (
     QColor,
     QFocusEvent,
@@ -26,7 +26,7 @@ from PySide6.QtGui import (
 from PySide6.QtWidgets import QAbstractScrollArea, QToolTip
 
 from pulsemend.mending.marker_view import CodeEvidence, CodeRow, Spans, TrialState
-from pulsemend.window.marker_lanes import draw_pixels, marker_row, state_colour, trial_row
+from pulsemend.window.marker_lanes import draw_pixels, draw_shades, marker_row, state_colour, trial_row
 from pulsemend.window.theme import Theme
 from pulsemend.window.traces.clock import clock, ticks
 from pulsemend.window.traces.keys import plain, wheel_move, wheel_zoom
@@ -85,8 +85,10 @@ class Timeline(QAbstractScrollArea):
         self._duration_s = 1.0
         self._start_s, self._width_s = 0.0, 1.0
         self._view_s = (0.0, 0.0)
+        self._longest = 0.0
         self._at_s: float | None = None
         self._ground = QImage()
+        self._names: QImage | None = None
         self._stale = True
         self._press: tuple[QPointF, float] | None = None
         self._dragged = False
@@ -108,8 +110,7 @@ class Timeline(QAbstractScrollArea):
         if duration_s != self._duration_s:
             self._duration_s = duration_s
             self.show_whole()
-        self._fit_bar()
-        self._refresh()
+        self._measure_names()
 
     def show_trials(self, spans: Spans | None, why: Sequence[str]) -> None:
         """Show trials; `why` says of each what is wrong with it."""
@@ -117,8 +118,7 @@ class Timeline(QAbstractScrollArea):
         kinds = () if spans is None else dict.fromkeys(spans.kinds)
         trials = [_Lane(f"trials: {kind}" if kind else "trials", None, np.zeros(0), kind) for kind in kinds]
         self._lanes = (*trials, *(lane for lane in self._lanes if lane.code is not None))
-        self._fit_bar()
-        self._refresh()
+        self._measure_names()
 
     def show_chosen(self, codes: Sequence[str]) -> None:
         """Make the rows of the chosen codes stand out."""
@@ -192,9 +192,14 @@ class Timeline(QAbstractScrollArea):
         return (row + 0.5) * self._row_height() - self.verticalScrollBar().value()
 
     def _names_width(self) -> float:
+        return float(round(min(self._longest + 2 * _SIDE, _NAMES * self.viewport().width())))
+
+    def _measure_names(self) -> None:
+        """Measure once what every place depends on."""
         metrics = QFontMetricsF(self.font())
-        longest = max((metrics.horizontalAdvance(lane.name) for lane in self._lanes), default=0.0)
-        return float(round(min(longest + 2 * _SIDE, _NAMES * self.viewport().width())))
+        self._longest = max((metrics.horizontalAdvance(lane.name) for lane in self._lanes), default=0.0)
+        self._fit_bar()
+        self._refresh()
 
     def _row_height(self) -> float:
         return float(max(_SHAPE + 6, round(QFontMetricsF(self.font()).height() + 4)))
@@ -220,9 +225,14 @@ class Timeline(QAbstractScrollArea):
     def _look_at(self, start_s: float, width_s: float) -> None:
         self._width_s = min(max(width_s, _LEAST_S), self._duration_s)
         self._start_s = min(max(start_s, 0.0), self._duration_s - self._width_s)
-        self._refresh()
+        self._move()
 
     def _refresh(self) -> None:
+        self._names = None
+        self._move()
+
+    def _move(self) -> None:
+        """Paint anew what moves with the time."""
         self._stale = True
         self.viewport().update()
 
@@ -237,7 +247,9 @@ class Timeline(QAbstractScrollArea):
 
     def paintEvent(self, _event: QPaintEvent) -> None:
         """Paint the codes from what was painted before, and the frame over them."""
-        if self._stale or self._ground.devicePixelRatio() != self.devicePixelRatioF():
+        if self._ground.devicePixelRatio() != self.devicePixelRatioF():
+            self._names, self._stale = None, True
+        if self._stale:
             self._ground = self._painted()
             self._stale = False
         left = self._names_width()
@@ -258,61 +270,79 @@ class Timeline(QAbstractScrollArea):
                 painter.setPen(QPen(accent, 2.0))
                 painter.drawRect(QRectF(self.viewport().rect()).adjusted(1, 1, -1, -1))
 
-    def _painted(self) -> QImage:
+    def _blank(self, width: float, height: float) -> QImage:
         ratio = self.devicePixelRatioF()
-        size = self.viewport().size()
         image = QImage(
-            max(1, round(size.width() * ratio)),
-            max(1, round(size.height() * ratio)),
-            QImage.Format.Format_RGB32,
+            max(1, round(width * ratio)), max(1, round(height * ratio)), QImage.Format.Format_RGB32
         )
         image.setDevicePixelRatio(ratio)
         image.fill(QColor(self._theme.panel))
+        return image
+
+    def _painted(self) -> QImage:
+        size = self.viewport().size()
+        bottom = size.height() - self._axis_height()
+        if self._names is None:
+            self._names = self._painted_names()
+        image = self._blank(size.width(), size.height())
         with QPainter(image) as painter:
             painter.setFont(self.font())
-            bottom = size.height() - self._axis_height()
             painter.setClipRect(QRectF(0, 0, size.width(), bottom))
             self._paint_rows(painter, bottom)
+            painter.drawImage(0, 0, self._names)
             painter.setClipping(False)
             self._paint_axis(painter, bottom)
         return image
 
-    def _paint_rows(self, painter: QPainter, bottom: float) -> None:
+    def _shown_lanes(self, bottom: float) -> list[tuple[float, _Lane]]:
+        """Give the rows in view with their tops."""
         height, scroll = self._row_height(), self.verticalScrollBar().value()
         first = int(scroll // height)
         last = min(len(self._lanes), int((scroll + bottom) // height) + 1)
-        shown = [(row * height - scroll, self._lanes[row]) for row in range(first, last)]
+        return [(row * height - scroll, self._lanes[row]) for row in range(first, last)]
+
+    def _paint_rows(self, painter: QPainter, bottom: float) -> None:
+        height, width, left = self._row_height(), self.viewport().width(), self._names_width()
+        shown = self._shown_lanes(bottom)
         for top, lane in shown:
-            if lane.code is not None and lane.code.code in self._chosen:
-                painter.fillRect(
-                    QRectF(0, top, self.viewport().width(), height), QColor(self._theme.accent_soft)
-                )
+            if self._is_chosen(lane):
+                painter.fillRect(QRectF(left, top, width - left, height), QColor(self._theme.accent_soft))
         self._paint_shades(painter, bottom)
-        line = QPen(QColor(self._theme.line), 1.0)
+        painter.setPen(QPen(QColor(self._theme.line), 1.0))
+        painter.drawLines([QLineF(left, top + height, width, top + height) for top, _ in shown])
         for top, lane in shown:
-            painter.setPen(line)
-            painter.drawLine(QPointF(0, top + height), QPointF(self.viewport().width(), top + height))
-            self._paint_name(painter, lane, top)
             if lane.code is None:
                 self._paint_trials(painter, lane, top)
             else:
                 self._paint_markers(painter, lane, top)
 
+    def _painted_names(self) -> QImage:
+        """Paint the names, which stay while the timeline moves."""
+        bottom, height = self.viewport().height() - self._axis_height(), self._row_height()
+        left = self._names_width()
+        image = self._blank(left, bottom)
+        with QPainter(image) as painter:
+            for top, lane in self._shown_lanes(bottom):
+                if self._is_chosen(lane):
+                    painter.fillRect(QRectF(0, top, left, height), QColor(self._theme.accent_soft))
+                painter.setPen(QPen(QColor(self._theme.line), 1.0))
+                painter.drawLine(QPointF(0, top + height), QPointF(left, top + height))
+                self._paint_name(painter, lane, top)
+        return image
+
+    def _is_chosen(self, lane: _Lane) -> bool:
+        return lane.code is not None and lane.code.code in self._chosen
+
     def _paint_name(self, painter: QPainter, lane: _Lane, top: float) -> None:
-        metrics, left = QFontMetricsF(painter.font()), self._names_width()
+        metrics, left = QFontMetricsF(self.font()), self._names_width()
         text = metrics.elidedText(lane.name, Qt.TextElideMode.ElideMiddle, left - 1.5 * _SIDE)
-        chosen = lane.code is not None and lane.code.code in self._chosen
-        quiet = lane.code is None or not lane.times_s.size
-        font = QFont(painter.font())
-        if chosen:
-            font.setUnderline(True)
-            painter.setFont(font)
-        painter.setPen(QColor(self._theme.quiet if quiet else self._theme.text))
-        painter.drawText(
-            QPointF(_SIDE, top + (self._row_height() + metrics.ascent() - metrics.descent()) / 2), text
-        )
-        font.setUnderline(False)
+        font = QFont(self.font())
+        font.setUnderline(self._is_chosen(lane))
         painter.setFont(font)
+        quiet = lane.code is None or not lane.times_s.size
+        painter.setPen(QColor(self._theme.quiet if quiet else self._theme.text))
+        middle = top + (self._row_height() + metrics.ascent() - metrics.descent()) / 2
+        painter.drawText(QPointF(_SIDE, middle), text)
 
     def _columns(self, times_s: NDArray[np.float64], ratio: float) -> NDArray[np.intp]:
         """Pixels of the screen, from the right edge of the names."""
@@ -344,19 +374,18 @@ class Timeline(QAbstractScrollArea):
     def _paint_shades(self, painter: QPainter, bottom: float) -> None:
         """Shade trials behind the rows, while there are few enough to tell apart."""
         low, high = self._visible_trials()
-        if self._spans is None or not 0 < high - low <= _MOST_SHADED:
+        spans = self._spans
+        if spans is None or not 0 < high - low <= _MOST_SHADED:
             return
-        left = self._names_width()
-        soft, attention = QColor(self._theme.field), QColor(self._theme.attention_soft)
-        painter.save()
-        painter.setClipRect(QRectF(left, 0, self.viewport().width() - left, bottom))
-        for place in range(low, high):
-            start = self.x_of(float(self._spans.start_s[place]))
-            box = QRectF(start, 0, max(1.0, self.x_of(float(self._spans.stop_s[place])) - start), bottom)
-            state = self._spans.states[place]
-            look = state in (TrialState.INCOMPLETE, TrialState.DOUBTFUL)
-            painter.fillRect(box, attention if look else soft)
-        painter.restore()
+        ratio, left = self.devicePixelRatioF(), self._names_width()
+        width = max(1, round((self.viewport().width() - left) * ratio))
+        shades = np.zeros(width, dtype=np.uint8)
+        starts = np.clip(self._columns(spans.start_s[low:high], ratio), 0, width - 1)
+        stops = np.clip(self._columns(spans.stop_s[low:high], ratio), 0, width - 1)
+        for start, stop, state in zip(starts.tolist(), stops.tolist(), spans.states[low:high], strict=True):
+            shades[start : stop + 1] = 2 if state in (TrialState.INCOMPLETE, TrialState.DOUBTFUL) else 1
+        box = QRectF(left, 0, width / ratio, bottom)
+        draw_shades(painter, shades, box, (self._theme.field, self._theme.attention_soft))
 
     def _paint_trials(self, painter: QPainter, lane: _Lane, top: float) -> None:
         low, high = self._visible_trials()
@@ -538,8 +567,7 @@ class Timeline(QAbstractScrollArea):
         """Follow the size of the text."""
         super().changeEvent(event)
         if event.type() in (QEvent.Type.FontChange, QEvent.Type.StyleChange):
-            self._fit_bar()
-            self._refresh()
+            self._measure_names()
 
     def focusInEvent(self, event: QFocusEvent) -> None:
         """Show the focus."""

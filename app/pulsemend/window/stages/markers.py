@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from PySide6.QtWidgets import QButtonGroup, QHBoxLayout, QPushButton, QStackedWidget, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QButtonGroup, QPushButton, QStackedWidget, QVBoxLayout, QWidget
 
 from pulsemend.mending.marker_log import NO_LOG_VIEW
 from pulsemend.mending.marker_view import TrialState, code_rows, trial_spans, trial_state
@@ -95,7 +95,7 @@ class MarkersStage(StagePage):
         column = QVBoxLayout(self.picture)
         column.setContentsMargins(10, 6, 10, 6)
         column.setSpacing(4)
-        column.addLayout(self._head())
+        column.addWidget(self._head())
         column.addWidget(self.pages, 1)
         self.codes.table.selectionModel().selectionChanged.connect(self._on_chosen)
         self.timeline.wanted.connect(self.hands.go_to)
@@ -103,13 +103,20 @@ class MarkersStage(StagePage):
         self.intervals.wanted.connect(self.hands.go_to)
         self.log_picture.residuals.wanted.connect(self.hands.go_to)
 
-    def _head(self) -> QHBoxLayout:
-        """Make the switch of the pictures, and the pictures themselves."""
+    def _head(self) -> QWidget:
+        """Make the switch of the pictures with the timeline's own buttons, and the pictures themselves."""
         self.pages = QStackedWidget()
         self.switch = QButtonGroup(self.picture)
-        head = QHBoxLayout()
+        timeline = self.timeline
+        self._tools = (
+            button("Less time", lambda: timeline.zoom(_ZOOM), tooltip="Ctrl and the wheel, or Ctrl+Up"),
+            button("More time", lambda: timeline.zoom(1 / _ZOOM), tooltip="Ctrl and the wheel, or Ctrl+Down"),
+            button("As the traces", timeline.show_as_traces, tooltip="Show what the traces show"),
+            button("Whole", timeline.show_whole, tooltip="Show the whole recording"),
+        )
+        buttons = []
         pictures: tuple[tuple[str, QWidget], ...] = (
-            ("Timeline", self._timeline_page()),
+            ("Timeline", self.timeline),
             ("Codes", self.table),
             ("Intervals", self.intervals),
             ("Log", self.log_picture),
@@ -120,32 +127,11 @@ class MarkersStage(StagePage):
             made.setCheckable(True)
             made.setAccessibleName(f"Picture: {name}")
             self.switch.addButton(made, place)
-            head.addWidget(made)
+            buttons.append(made)
         self.pages.addWidget(self.empty)
-        head.addStretch(1)
         self.switch.button(0).setChecked(True)
         self.switch.idToggled.connect(self._on_switched)
-        return head
-
-    def _timeline_page(self) -> QWidget:
-        page = QWidget()
-        column = QVBoxLayout(page)
-        column.setContentsMargins(0, 0, 0, 0)
-        column.setSpacing(4)
-        timeline = self.timeline
-        column.addWidget(
-            flow_row(
-                self.legend,
-                button("Less time", lambda: timeline.zoom(_ZOOM), tooltip="Ctrl and the wheel, or Ctrl+Up"),
-                button(
-                    "More time", lambda: timeline.zoom(1 / _ZOOM), tooltip="Ctrl and the wheel, or Ctrl+Down"
-                ),
-                button("As the traces", timeline.show_as_traces, tooltip="Show what the traces show"),
-                button("Whole", timeline.show_whole, tooltip="Show the whole recording"),
-            )
-        )
-        column.addWidget(timeline, 1)
-        return page
+        return flow_row(*buttons, *self._tools, self.legend)
 
     # What is shown
 
@@ -175,6 +161,9 @@ class MarkersStage(StagePage):
         elif survey is None:
             text = "The markers are being looked through."
         self.empty.text.setText(text)
+        for one in self._tools:
+            one.setVisible(not text and self.switch.checkedId() == 0)
+        self.legend.setVisible(not text and self.switch.checkedId() == 0)
         if text:
             self.pages.setCurrentWidget(self.empty)
         else:
@@ -230,6 +219,7 @@ class MarkersStage(StagePage):
         self.timeline.show_trials(spans if trials else None, why)
         states = {trial_state(trial) for trial in trials}
         self.legend.show_states(tuple(state for state in TrialState if state in states))
+        self._show_page()
         self.log_picture.show_log(log, survey.duration_s, NO_LOG if survey.plan is not None else _NO_PLAN)
 
     def _show_view(self) -> None:
