@@ -94,6 +94,15 @@ def test_duplicates_of_the_files_markers_are_dropped_and_counted(tmp_path: Path)
     assert "does not list, kept: 1" in note
 
 
+@pytest.mark.parametrize(
+    ("value", "code"), [("11", "11"), ("11.0", "11"), ("11.5", "11.5"), ("007", "007"), ("v1.0", "v1.0")]
+)
+def test_whole_values_are_whole(tmp_path: Path, value: str, code: str) -> None:
+    path = recording(tmp_path)
+    table(tmp_path, "onset duration value", [(0.2, 0, value), (0.4, 0, "n/a")])
+    assert markers(path) == [(100, code)]
+
+
 def test_pauses_are_told(tmp_path: Path) -> None:
     path = recording(tmp_path, [(700, "New Segment", "")])
     table(tmp_path, "onset duration value", [(2.0, 0, 1)])

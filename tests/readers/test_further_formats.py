@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import pickle
+import struct
 import sys
 from collections.abc import Callable
 from contextlib import closing
@@ -69,7 +70,7 @@ def states_and_samples(folder: Path) -> Path:
     return folder / "lt01.dat"
 
 
-def struct(folder: Path, *, apart: bool = True) -> Path:
+def matlab_struct(folder: Path, *, apart: bool = True) -> Path:
     """A struct of facts and events, its samples in a second file or inside."""
     samples = (counts() / 10).astype("<f4")
     if apart:
@@ -94,11 +95,31 @@ def struct(folder: Path, *, apart: bool = True) -> Path:
     return folder / "lt01.set"
 
 
+def binary_header_and_events(folder: Path) -> Path:
+    """A binary header, records of one second and a table of events behind them, counted from 1."""
+    n = len(NAMES)
+    fixed = struct.pack(
+        "<8s80s80s16sq24s20sqIII",
+        b"GDF 1.25", b"lt01 X", b"", b"2026010210000000", 256 * (n + 1), b"", b"", 3, 1, 1, n,
+    )  # fmt: skip
+    per_channel = [
+        b"".join(name.encode().ljust(16) for name in NAMES), bytes(80 * n), b"uV      " * n,
+        struct.pack(f"<{n}d{n}d", *[-3276.8] * n, *[3276.7] * n),
+        struct.pack(f"<{n}q{n}q", *[-32768] * n, *[32767] * n),
+        b" " * 80 * n, struct.pack(f"<{n}i{n}i", *[500] * n, *[3] * n), bytes(32 * n),
+    ]  # fmt: skip
+    records = counts().astype("<i2").reshape(n, 3, 500).transpose(1, 0, 2)
+    events = struct.pack("<B3BI2I2H", 1, 500 % 256, 500 // 256, 0, 2, 250, 1001, 769, 770)
+    (folder / "lt01.gdf").write_bytes(fixed + b"".join(per_channel) + records.tobytes() + events)
+    return folder / "lt01.gdf"
+
+
 WRITERS: dict[str, Callable[[Path], Path]] = {
     ".nxe": multiplexed_without_header,
     ".lay": header_and_data,
     ".dat": states_and_samples,
-    ".set": struct,
+    ".set": matlab_struct,
+    ".gdf": binary_header_and_events,
 }
 
 
@@ -175,7 +196,9 @@ def test_state_vector_gives_markers(tmp_path: Path) -> None:
         assert any("perhaps the file's unit is not V" in note for note in recording.facts.notes)
 
 
-@pytest.mark.parametrize("writer", [multiplexed_without_header, header_and_data, struct])
+@pytest.mark.parametrize(
+    "writer", [multiplexed_without_header, header_and_data, matlab_struct, binary_header_and_events]
+)
 def test_plausible_volts_are_not_doubted(writer: Callable[[Path], Path], tmp_path: Path) -> None:
     with closing(open_recording(writer(tmp_path))) as recording:
         assert not any("unit is not V" in note for note in recording.facts.notes)
@@ -183,13 +206,21 @@ def test_plausible_volts_are_not_doubted(writer: Callable[[Path], Path], tmp_pat
 
 @pytest.mark.parametrize("apart", [True, False])
 def test_struct_with_samples_inside_or_beside(tmp_path: Path, apart: bool) -> None:
-    with closing(open_recording(struct(tmp_path, apart=apart))) as recording:
+    with closing(open_recording(matlab_struct(tmp_path, apart=apart))) as recording:
         facts = recording.facts
         np.testing.assert_allclose(volts(recording), counts() * 1e-7, rtol=1e-6)
     assert [part.name for part in facts.parts] == ["lt01.set", "lt01.fdt"][: 1 + apart]
     assert [(m.sample, m.code) for m in facts.markers] == [(249, "S 1"), (750, "S 2")]
     assert facts.boundaries == (500,)
     assert [channel.name for channel in facts.channels] == list(NAMES)
+    assert [channel.type.value for channel in facts.channels] == ["eeg", "eeg", "eeg", "eog"]
+
+
+def test_a_table_of_events_behind_the_samples(tmp_path: Path) -> None:
+    with closing(open_recording(binary_header_and_events(tmp_path))) as recording:
+        facts = recording.facts
+        np.testing.assert_allclose(volts(recording), counts() * 1e-7, rtol=0, atol=1e-15)
+    assert [(m.sample, m.code) for m in facts.markers] == [(249, "769"), (1000, "770")]
     assert [channel.type.value for channel in facts.channels] == ["eeg", "eeg", "eeg", "eog"]
 
 

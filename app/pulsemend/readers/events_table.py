@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from bisect import bisect_left
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -13,6 +14,7 @@ from pulsemend.model.recording import Marker
 from pulsemend.readers.codes import Found, coded, set_aside, split_at_slash, whole_if_close
 from pulsemend.readers.tables_beside import Row, read_rows
 
+_WHOLE = re.compile(r"^(\d+)\.0*$")  # programs write 11 as 11.0 where another row of the column has no value
 _SAME_WITHIN = 1.0 + 1e-6  # samples between a marker of the file and its row
 _EXACT_WITHIN = 1e-6
 _TIGHT = 0.02  # samples; what an exact onset may miss
@@ -71,7 +73,7 @@ def merge_events(path: Path, of_file: tuple[Marker, ...], rate_hz: float, n_samp
     found: list[Found] = []
     nameless = outside = 0
     for row, sample in zip(rows, samples, strict=True):
-        text = row.text("trial_type") or row.text("value")
+        text = row.text("trial_type") or _WHOLE.sub(r"\1", row.text("value"))
         if not 0 <= sample <= n_samples - 1:
             outside += 1
         elif not text:
