@@ -8,8 +8,10 @@ cannot be met (Bellman and Ford).
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterator, Sequence
+from collections.abc import Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
+from math import inf
 
 from pulsemend.model.plan import Slot
 from pulsemend.model.trial_kinds import Variant
@@ -47,27 +49,50 @@ class Run:
         return self.places[-1][1]
 
 
-def can_be_met(slots: Sequence[Slot], times: dict[str, float]) -> bool:
+def can_be_met(slots: Sequence[Slot], times: Mapping[str, float]) -> bool:
     """Whether times exist for all required slots that meet all limits together with those of found slots."""
-    present = [slot for slot in slots if slot.slot in times or not slot.optional]
-    names = [slot.slot for slot in present]
+    limits = _limits(slots, times)
+    limits += [("", name, time_s) for name, time_s in times.items()]
+    limits += [(name, "", -time_s) for name, time_s in times.items()]
+    start = dict.fromkeys(["", *(slot.slot for slot in slots)], 0.0)
+    return _shortest(limits, start) is not None
+
+
+def _limits(slots: Sequence[Slot], found: Collection[str]) -> list[tuple[str, str, float]]:
+    """From a slot to another: that much later at most. Slots in order, each within its limits."""
+    names = [slot.slot for slot in slots if slot.slot in found or not slot.optional]
     limits = [(later, earlier, 0.0) for earlier, later in itertools.pairwise(names)]
-    for slot in present:
-        if slot.after_s is None or slot.after not in names:
-            continue
-        least_s, most_s = slot.after_s
-        limits += [(slot.after, slot.slot, most_s + TOLERANCE_S)]
-        limits += [(slot.slot, slot.after, -least_s + TOLERANCE_S)]
-    for name, time_s in times.items():
-        limits += [("", name, time_s), (name, "", -time_s)]
-    reached = dict.fromkeys(["", *names], 0.0)
+    for slot in slots:
+        if slot.after_s is not None and slot.after in names and slot.slot in names:
+            least_s, most_s = slot.after_s
+            limits += [(slot.after, slot.slot, most_s + TOLERANCE_S)]
+            limits += [(slot.slot, slot.after, -least_s + TOLERANCE_S)]
+    return limits
+
+
+def _shortest(limits: Sequence[tuple[str, str, float]], start: dict[str, float]) -> dict[str, float] | None:
+    """Shortest ways; None if there is a circle that gets shorter with every turn."""
+    reached = dict(start)
     for _ in range(len(reached) + 1):
-        before = dict(reached)
-        for start, end, most in limits:
-            reached[end] = min(reached[end], reached[start] + most)
-        if all(abs(reached[name] - before[name]) < TOLERANCE_S / 100 for name in reached):
-            return True
-    return False
+        is_changed = False
+        for origin, end, most in limits:
+            if reached[origin] + most < reached[end] - TOLERANCE_S / 100:
+                reached[end] = reached[origin] + most
+                is_changed = True
+        if not is_changed:
+            return reached
+    return None
+
+
+@lru_cache(maxsize=1000)
+def _longest_s(slots: tuple[Slot, ...], first: str, second: str) -> tuple[float, float]:
+    """Least and most time between two found slots: only to be quicker, all is asked again in the end."""
+    limits = _limits(slots, (first, second))
+    ways = []
+    for origin, end in ((second, first), (first, second)):
+        start = {slot.slot: inf for slot in slots} | {origin: 0.0}
+        ways.append((_shortest(limits, start) or start)[end])
+    return -ways[0] - TOLERANCE_S, ways[1] + TOLERANCE_S
 
 
 def runs(events: Sequence[Event], variants: Sequence[Variant]) -> list[Run]:
@@ -76,11 +101,7 @@ def runs(events: Sequence[Event], variants: Sequence[Variant]) -> list[Run]:
     found: dict[Run, None] = {}
     for variant in variants:
         for places in _assignments(events, variant, (), 0, foreign):
-            names = dict(places)
-            missing = tuple(s.slot for s in variant.slots if not s.optional and s.slot not in names)
-            saved = sum(left_over(events[place]) for place in names.values())
-            if MISSING * len(missing) > saved:
-                continue
+            missing = tuple(s.slot for s in variant.slots if not s.optional and s.slot not in dict(places))
             if can_be_met(variant.slots, {name: events[place].time_s for name, place in places}):
                 found[Run(variant.kind, places, missing)] = None
     return list(found)
@@ -89,15 +110,19 @@ def runs(events: Sequence[Event], variants: Sequence[Variant]) -> list[Run]:
 def _assignments(
     events: Sequence[Event], variant: Variant, so_far: tuple[tuple[str, int], ...], slot: int, foreign: int
 ) -> Iterator[tuple[tuple[str, int], ...]]:
-    if slot == len(variant.slots):
+    slots = variant.slots
+    names = dict(so_far)
+    lacking = sum(not one.optional and one.slot not in names for one in slots[:slot])
+    saved = sum(left_over(events[place]) for place in names.values())
+    if MISSING * lacking > saved + LEFT_OVER * (len(slots) - slot):
+        return
+    if slot == len(slots):
         if so_far:
             yield so_far
         return
     yield from _assignments(events, variant, so_far, slot + 1, foreign)
-    one = variant.slots[slot]
-    names = dict(so_far)
-    optional = {other.slot for other in variant.slots if other.optional}
-    if slot and one.after in optional and one.after not in names:
+    one = slots[slot]
+    if slot and one.after not in names and any(other.slot == one.after and other.optional for other in slots):
         return
     last = so_far[-1][1] if so_far else None
     first, end = (0, len(events)) if last is None else (last + 1, min(len(events), last + foreign + 2))
@@ -105,12 +130,12 @@ def _assignments(
         event = events[place]
         if event.role is not one.role or (event.is_found and not one.from_signal):
             continue
-        if one.after_s is not None and one.after in names:
-            # Only to be quicker: a limit that two found slots break needs no look at the others.
-            after_s = event.time_s - events[names[one.after]].time_s
-            if not one.after_s[0] - TOLERANCE_S <= after_s <= one.after_s[1] + TOLERANCE_S:
-                continue
-        yield from _assignments(events, variant, (*so_far, (one.slot, place)), slot + 1, foreign)
+        if all(
+            least_s <= event.time_s - events[other].time_s <= most_s
+            for name, other in so_far
+            for least_s, most_s in [_longest_s(slots, name, one.slot)]
+        ):
+            yield from _assignments(events, variant, (*so_far, (one.slot, place)), slot + 1, foreign)
 
 
 def left_over(event: Event) -> int:
