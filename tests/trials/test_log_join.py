@@ -335,6 +335,7 @@ def test_the_sample_log() -> None:
     log = LogTimes(table.name, times_s, numbers)
     join = join_log(log, [replace(trial, number=None) for trial in trials])
     assert join.by == "time"
+    assert "prove little" in join.words
     assert join_log(log, trials, per_trial=2).by == "number and time"
     assert join.pairs == join_log(log, trials, per_trial=2).pairs == tuple((n, n) for n in range(len(trials)))
     assert join.clock is not None

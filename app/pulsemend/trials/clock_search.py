@@ -176,7 +176,9 @@ def _vote(log_s: FloatArray, recorded_s: FloatArray, bin_s: float) -> list[tuple
         place = (recorded_s[None, :] - ((1.0 + drift) * x + lowest)[:, None]) / bin_s
         counts = np.bincount(place.astype(np.int64).ravel())
         counts = counts + np.append(counts[1:], 0)  # two bins, so that no edge divides a heap
-        most = np.argpartition(counts, -min(2 * _PEAKS, counts.size))[-2 * _PEAKS :]
+        high = np.flatnonzero(2 * counts >= counts.max())  # lower ones are no rivals either
+        # Of equal heaps, as equal intervals make them, those that join most: in the middle.
+        most = high[np.lexsort((np.abs(high - high.mean()), -counts[high]))[: 2 * _PEAKS]]
         votes += [
             (int(counts[at]), lowest + (at + 1) * bin_s - middle_s, float(drift)) for at in most.tolist()
         ]

@@ -120,12 +120,7 @@ class _Draft:
         same = self.same_number(per_trial)
         if not same:
             return "No trial number of the log can be found in the recording."
-        timed = [
-            (time_s, instant_s)
-            for row, trial in same.items()
-            if (time_s := self.log.times_s[row]) is not None
-            and (instant_s := self.trials[trial].time_s) is not None
-        ]
+        timed = self.with_times(same)
         if len({time_s for time_s, _ in timed}) < LEAST_TIMED:
             self.by = "number"
             self.pairs = same
@@ -165,6 +160,15 @@ class _Draft:
             (self.timed_rows[row], self.timed_trials[trial])
             for row, trial in zip(one.rows, one.trials, strict=True)
         )
+
+    def with_times(self, pairs: dict[int, int]) -> list[tuple[float, float]]:
+        """Collect the times on both clocks of pairs that have both."""
+        return [
+            (time_s, instant_s)
+            for row, trial in pairs.items()
+            if (time_s := self.log.times_s[row]) is not None
+            and (instant_s := self.trials[trial].time_s) is not None
+        ]
 
     def same_number(self, per_trial: int) -> dict[int, int]:
         """Rows and trials with the same number, one by one where several share it and none is missing."""
@@ -220,6 +224,14 @@ class _Draft:
                 [self.timed_trials[free_trials[at]] for at in trials],
                 f"near each other, but beyond the tolerance of {distance(one.tolerance_s)}",
             )
+        self.clock = self.refitted() or one.clock
+
+    def refitted(self) -> ClockFit | None:
+        """Fit the clock to what was joined alone; None if that is too little."""
+        both = self.with_times(self.pairs)
+        if len({time_s for time_s, _ in both}) < LEAST_TIMED:
+            return None
+        return fit_clock(*np.array(both).T)
 
     def take_heap(self, rows: list[int], trials: list[int], same: dict[int, int]) -> None:
         """Join the one row and the one trial that lie together, or list them."""

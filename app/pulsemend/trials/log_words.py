@@ -9,6 +9,7 @@ from pulsemend.model.log import ClockFit, LogJoin, LogTimes, TrialTime
 from pulsemend.units import s_to_ms
 
 _MOST_NAMED = 20
+_FEW = 8  # intervals of two lengths agree by chance so far
 
 
 def row_name(row: int) -> str:
@@ -30,6 +31,8 @@ def joined_words(join: LogJoin, log: LogTimes, trials: Sequence[TrialTime]) -> L
     ]
     if join.clock is not None:
         lines.append(_clock_words(join.clock))
+    if join.by == "time" and len(join.pairs) < _FEW:
+        lines.append("So few events prove little: compare some rows with their trials.")
     if join.by_order and join.by != "order":
         names = [f"{row_name(row)} with {trials[trial].name}" for row, trial in join.by_order]
         lines.append(f"By their place between two neighbours, for want of a time: {_listed(names)}.")
