@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, replace
 from functools import cache
@@ -10,13 +11,15 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsemend.mending.facts import RecordingSummary, summarise
 from pulsemend.mending.mend import dry_run
 from pulsemend.mending.prepare import Prepared
 from pulsemend.model.recording import Marker
+from pulsemend.model.vocabulary import Fate
 from pulsemend.progress import finish
 from pulsemend.simulate.lantern import RESOLUTION_UV, LanternSpec
 from pulsemend.simulate.memory import Rehearsal, rehearse
-from pulsemend.simulate.schedule import Fault, FaultKind, Question
+from pulsemend.simulate.schedule import Fault, FaultKind, Moment, Question
 from pulsemend.simulate.truth import log_text
 from pulsemend.simulate.write_triplet import TripletFormat, TripletPaths, TripletWriter
 from support.small_lantern import make_request
@@ -186,3 +189,43 @@ def without(markers: Sequence[Marker], *samples: float) -> tuple[Marker, ...]:
 def recoded(markers: Sequence[Marker], numbers: dict[str, int]) -> tuple[Marker, ...]:
     """Give markers numbers for codes; what has none is left out."""
     return tuple(replace(one, code=str(numbers[one.code])) for one in markers if one.code in numbers)
+
+
+def moment(trial: int, slot: str, *faults: Fault) -> Moment:
+    moments = made(*faults).lantern.schedule.moments
+    return next(one for one in moments if (one.trial, one.slot) == (trial, slot))
+
+
+def sample_of(trial: int, slot: str) -> int:
+    marked = moment(trial, slot).marked
+    assert marked is not None
+    return marked
+
+
+def adds_up(prepared: Prepared) -> None:
+    """Facts, T-6.10: kept and left out are all candidates, and each has one reason."""
+    fates = Counter(one.fate for one in prepared.ledger)
+    assert fates[Fate.KEPT] == len(prepared.kept)
+    assert sum(fates.values()) == len(prepared.ledger)
+    assert len({(one.trial, one.rule, one.piece) for one in prepared.ledger}) == len(prepared.ledger)
+
+
+def facts_of(recording: Path, plan: str, folder: Path, marks: str | None = None) -> RecordingSummary:
+    request = make_request(recording, plan, folder, marks)
+    return finish(summarise(recording, request.plan, request.marks))
+
+
+SHIFT_S = 0.032
+VISUAL = ("lanterns up", "arrow left", "arrow right")
+ONSET = '[[onset]]\nchannel = "Photo"\ncodes = ["lanterns up", "arrow left", "arrow right"]\n[pulses]'
+
+
+def photodiode() -> Extra:
+    """Bright for 150 ms from 32 ms after every marker of the screen, with noise."""
+    rng = np.random.default_rng(4)
+    stored = 200.0 + rng.normal(0.0, 5.0, made().recording.facts.n_samples)
+    for one in markers_of():
+        if one.code in VISUAL:
+            start = int(one.sample) + round(SHIFT_S * RATE_HZ)
+            stored[start : start + round(0.15 * RATE_HZ)] += 4000.0
+    return Extra("Photo", stored.astype(np.int16))

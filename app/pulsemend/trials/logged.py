@@ -133,7 +133,7 @@ def _log_times(table: LogTable, plan: Plan, rows: Sequence[int]) -> LogTimes:
 
 def _kept_columns(table: LogTable, plan: Plan) -> tuple[str, ...]:
     if plan.log.columns:
-        needed = dict.fromkeys([*plan.log.columns, *plan.stimulation.columns.values()])
+        needed = dict.fromkeys([*plan.log.columns, *_facts_columns(plan)])
         if plan.blocks.practice_column:
             needed[plan.blocks.practice_column] = None
         return tuple(needed)
@@ -155,11 +155,19 @@ def _columns_used(plan: Plan) -> dict[str, None]:
         if source_of(text).meaning is not Meaning.TEXT
     ]
     sources += plan.balance.by
-    used = [source.removeprefix(LOG) for source in sources if source.startswith(LOG)]
-    if len(plan.log.slots) > 1:
-        # Rows belong to slots, and the slot's name stands before the column's.
-        used = [name.partition(".")[2] if name.partition(".")[0] in plan.log.slots else name for name in used]
-    return dict.fromkeys([*used, *plan.stimulation.columns.values()])
+    used = [_column(source, plan) for source in sources if source.startswith(LOG)]
+    return dict.fromkeys([*used, *_facts_columns(plan)])
+
+
+def _facts_columns(plan: Plan) -> list[str]:
+    return [_column(name, plan) for name in plan.stimulation.columns.values()]
+
+
+def _column(source: str, plan: Plan) -> str:
+    """Name the column of the file: where rows belong to several slots, a slot's name stands before it."""
+    name = source.removeprefix(LOG)
+    slot, _, column = name.partition(".")
+    return column if column and len(plan.log.slots) > 1 and slot in plan.log.slots else name
 
 
 def _check_columns(table: LogTable, plan: Plan) -> None:
@@ -173,6 +181,15 @@ def _check_columns(table: LogTable, plan: Plan) -> None:
             where=table.name,
             todo=f"Its columns are: {', '.join(table.columns)}",
         )
+    if len(plan.log.slots) > 1:
+        for fact, name in plan.stimulation.columns.items():
+            if _column(name, plan) == name.removeprefix(LOG):
+                example = f"{plan.log.slots[0]}.{name.removeprefix(LOG)}"
+                raise LogError(
+                    f"stimulation.columns.{fact} names column {name}, but a trial has several rows",
+                    where=table.name,
+                    todo=f"Say which row it is, for example {example}",
+                )
     kept = _kept_columns(table, plan)
     unusable = [column for column in _columns_used(plan) if column not in kept]
     if unusable:
