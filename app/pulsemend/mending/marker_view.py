@@ -131,7 +131,7 @@ class Survey:
     evidence : tuple of CodeEvidence
         Of the markers that count, in order of first appearance.
     notes : tuple of str
-        What was done to the recording's markers.
+        What was done to the recording's markers besides cures.
     faults : tuple of MarkerFault
     trials : Trials
         Empty without a plan.
@@ -220,7 +220,8 @@ def survey(
         raw=facts.markers,
         markers=markers,
         evidence=evidence,
-        notes=counting.notes,
+        # Which cures are applied stands with the faults.
+        notes=tuple(note for note in counting.notes if not note.startswith("cure of ")),
         faults=faults,
         trials=trials,
         problem=problem,

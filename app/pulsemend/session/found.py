@@ -64,6 +64,8 @@ class FoundMarkers:
 
     Parameters
     ----------
+    codes : frozenset of str or None
+        Codes of the markers that count; None until they were looked through.
     curable : tuple of str
         Keys of faults that have a cure, decided about or not.
     n_doubtful : int
@@ -72,6 +74,7 @@ class FoundMarkers:
         Why the log was not joined; empty if it was, or if there is none.
     """
 
+    codes: frozenset[str] | None = None
     curable: tuple[str, ...] = ()
     n_doubtful: int = 0
     log_problem: str = ""

@@ -109,7 +109,10 @@ def markers_state(session: Session) -> StageState:
     plan = session.plan
     if plan is None or session.recording is None:
         return _waiting(session, Stage.MARKERS)
-    recorded = {marker.code for marker in session.recording.facts.markers}
+    found, marks = session.found.markers, session.marks
+    recorded = found.codes
+    if recorded is None:
+        recorded = frozenset(marker.code for marker in session.recording.facts.markers)
     problems = [
         f"Code {marker.code!r} has no role yet." for marker in plan.markers if marker.role is Role.UNDECIDED
     ]
@@ -120,7 +123,6 @@ def markers_state(session: Session) -> StageState:
     ]
     if not plan.trial:
         problems.append("The plan has no slot yet: its file has to name the markers of a trial.")
-    found, marks = session.found.markers, session.marks
     decided = {*marks.cures_accepted, *marks.cures_refused}
     problems += [f"A cure is open: {key}." for key in found.curable if key not in decided]
     count = len(problems) + found.n_doubtful

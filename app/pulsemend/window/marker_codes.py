@@ -17,7 +17,7 @@ from pulsemend.mending.marker_edits import (
     with_role,
     without_codes,
 )
-from pulsemend.mending.marker_view import ABSENT, CodeRow
+from pulsemend.mending.marker_view import ABSENT, UNPLANNED, CodeRow
 from pulsemend.model.plan import Plan
 from pulsemend.model.vocabulary import Role
 from pulsemend.window.elided import ElidedLabel
@@ -45,6 +45,7 @@ _NUMBERS = (COUNT, FIRST, LAST)
 _ON_THE_RIGHT = int(Qt.AlignmentFlag.AlignRight | Qt.AlignmentFlag.AlignVCenter)
 _ICON_PX, _FINE = 14, 3
 _MOST_ROWS = 9
+_LABELS_PX = 190
 
 
 def role_icon(role: Role, theme: Theme) -> QIcon:
@@ -179,6 +180,7 @@ class CodesCard(Card):
         self.labels = QLineEdit()
         self.labels.setAccessibleName("Labels of the chosen code")
         self.labels.setPlaceholderText("item = left, match = same")
+        self.labels.setMinimumWidth(_LABELS_PX)
         self.labels_field = Field("labels", self.labels)
         self.add(self.labels_field)
         self.evidence = self.add_note()
@@ -200,8 +202,11 @@ class CodesCard(Card):
     def show_codes(self, rows: Sequence[CodeRow], plan: Plan | None, advice: str) -> None:
         """Show the codes under a plan; what is chosen stays chosen."""
         chosen = self._chosen
-        self.advice.setText(advice)
-        self.advice.setVisible(bool(advice))
+        counts = ((ABSENT, "of the plan not in this recording"), (UNPLANNED, "not in the plan: other"))
+        found = [(sum(row.note == note for row in rows), text) for note, text in counts]
+        open_ends = [f"{_codes(count)} {text}." for count, text in found if count]
+        self.advice.setText("\n".join(filter(None, (advice, *open_ends))))
+        self.advice.setVisible(bool(self.advice.text()))
         self.model.show_rows(rows)
         if self.chosen != chosen:
             self.choose(chosen)
@@ -292,6 +297,10 @@ class CodesCard(Card):
                 f"{name}: out of the plan", lambda plan: without_codes(plan, codes), "markers"
             )
         )
+
+
+def _codes(count: int) -> str:
+    return "1 code" if count == 1 else f"{count} codes"
 
 
 def _is_named(plan: Plan, code: str) -> bool:

@@ -68,6 +68,7 @@ class FaultsCard(Card):
         self.none = self.add_note("No fault was found.")
         self.model = FaultModel()
         self.table = RowsTable("Faults of the markers", self.model, ("accepted", ""))
+        self.table.setTextElideMode(Qt.TextElideMode.ElideMiddle)
         self.add(self.table)
         self.what = words("", "")
         self.cure = words("", "quiet")
@@ -185,10 +186,10 @@ class FaultsCard(Card):
         fault = self.current
         if fault is None:
             return
-        verb = {Verdict.ACCEPTED: "accept", Verdict.REFUSED: "refuse", Verdict.OPEN: "decide anew about"}
+        verb = {Verdict.ACCEPTED: "Accept", Verdict.REFUSED: "Refuse", Verdict.OPEN: "Decide anew about"}
         marks = self._hands.bench.session.marks
         self._hands.change_marks(
-            f"{verb[verdict]} the cure of {fault.key}".capitalize(), with_verdict(marks, fault.key, verdict)
+            f"{verb[verdict]} the cure of {fault.key}", with_verdict(marks, fault.key, verdict)
         )
         if not self.accept.isEnabled() and not self.back.isEnabled():
             self.table.setFocus(Qt.FocusReason.OtherFocusReason)

@@ -19,6 +19,9 @@ from pulsemend.window.traces.shapes import role_path
 Pixels = NDArray[np.uint8]
 Columns = NDArray[np.intp]
 
+_EDGED = 5
+"""Trials at least so many pixels wide have edges."""
+
 _CLOSE = 0.6
 """Shapes whose neighbours are nearer than this share of their width, in the middle, become ticks."""
 
@@ -86,12 +89,17 @@ def trial_row(starts: Columns, stops: Columns, width: int, height: int, state: T
     first, last = np.clip(starts[here], 0, width - 1), np.clip(stops[here], 0, width - 1)
     np.add.at(depth, first, 1)
     np.add.at(depth, last + 1, -1)
-    edges[first], edges[last] = True, True
+    # Of narrow ones the pattern alone says more than their edges.
+    wide = last - first >= _EDGED
+    edges[first[wide]], edges[last[wide]] = True, True
     covered = np.cumsum(depth[:-1]) > 0
     pattern = _pattern(state, width, height)
     pixels = np.where(covered[None, :], pattern, 0).astype(np.uint8)
     pixels[:, edges] = 255
-    pixels[0, covered], pixels[-1, covered] = 255, 255
+    if state is TrialState.SET_ASIDE:
+        pixels[0, covered], pixels[-1, covered] = 255, 255
+    else:
+        pixels[[0, -1]] = np.maximum(pixels[[0, -1]], np.where(covered, 160, 0).astype(np.uint8))
     return pixels
 
 

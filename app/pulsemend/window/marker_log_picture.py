@@ -245,8 +245,8 @@ class LogPicture(QWidget):
         if has_clock and view.join is not None:
             self.said.setText(
                 f"How much later than the fitted clock says, {view.time_s.size} pairs; band: one standard "
-                f"deviation; triangles: {len(view.rows_alone)} rows without a trial (above), "
-                f"{len(view.trials_alone)} trials without a row (below)."
+                f"deviation; triangles: rows without a trial ({len(view.rows_alone)}, above) and trials "
+                f"without a row ({len(view.trials_alone)}, below)."
             )
             self.residuals.setAccessibleDescription(view.join.words)
             self.residuals.show_log(view, duration_s)

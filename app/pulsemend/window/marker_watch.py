@@ -97,6 +97,7 @@ class MarkerWatch(QObject):
         session = self._bench.session
         curable = tuple(dict.fromkeys(fault.key for fault in found.faults if fault.cure))
         doubtful = sum(trial_state(trial) is TrialState.DOUBTFUL for trial in found.trials.trials)
-        markers = FoundMarkers(curable, doubtful, found.log.problem)
+        codes = frozenset(one.code for one in found.evidence)
+        markers = FoundMarkers(codes, curable, doubtful, found.log.problem)
         session.set_found(replace(session.found, markers=markers))
         self.changed.emit()

@@ -196,7 +196,9 @@ class MarkersStage(StagePage):
         session, survey = self.bench.session, self._watch.survey
         self._show_plan()
         self.trials.note.setText("")
-        waiting = _NO_RECORDING if session.recording is None else _NO_PLAN if session.plan is None else ""
+        for card in (self.faults, self.trials, self.log):
+            card.setVisible(session.recording is not None)
+        waiting = "" if session.plan is not None else "The plan\u2019s slots will say what a trial is."
         self.trials.show_survey(survey, waiting)
         log = NO_LOG_VIEW if survey is None else survey.log
         plan = session.plan if survey is None else survey.plan
