@@ -349,3 +349,15 @@ def test_plain_triplets_do_without_the_reader_library(header: Path, tables: bool
         "sys.exit('mne' in sys.modules)",
     )
     subprocess.run([sys.executable, "-c", "\n".join(lines)], check=True)
+
+
+def test_a_triplet_under_its_other_names(header: Path) -> None:
+    text = header.read_text("utf-8").replace("lt01.vmrk", "lt01.amrk")
+    anonymised = header.with_suffix(".ahdr")
+    anonymised.write_text(text.replace("Data Exchange Header", "Data Header"), "utf-8")
+    header.with_suffix(".vmrk").rename(header.with_suffix(".amrk"))
+    before = stored(anonymised)
+    header.unlink()
+    for suffix in (".ahdr", ".amrk", ".eeg"):
+        np.testing.assert_array_equal(stored(header.with_suffix(suffix)), before)
+    assert [part.name for part in facts_of(anonymised).parts] == ["lt01.ahdr", "lt01.eeg", "lt01.amrk"]

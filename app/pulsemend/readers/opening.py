@@ -18,13 +18,12 @@ _BY_EXTENSION = {
     ".vhdr": _HEADER,
     ".eeg": _DATA,
     ".vmrk": _MARKERS,
-    ".ahdr": _HEADER,
-    ".amrk": _MARKERS,
     ".edf": _EDF,
     ".bdf": _BDF,
     ".fif": _FIF,
     ".fif.gz": _FIF,
 }
+_ANONYMISED = {".ahdr": _HEADER, ".amrk": _MARKERS}  # the same text files under other names
 _USUAL_EXTENSION = {_HEADER: ".vhdr", _MARKERS: ".vmrk", _EDF: ".edf", _BDF: ".bdf", _FIF: ".fif"}
 _FIF_FIRST_TAG = bytes((0, 0, 0, 100, 0, 0, 0, 31))  # kind "file id", type "id structure", big-endian
 _EEG_WITHOUT_HEADER = b"EEG-"  # what else ends in .eeg starts with the name of its recorder
@@ -56,7 +55,7 @@ def open_recording(path: Path) -> Recording:
     if path.is_dir():
         return _folder(path)
     extension = _extension(path)
-    expected = _BY_EXTENSION.get(extension)
+    expected = (_BY_EXTENSION | _ANONYMISED).get(extension)
     found = _contents(path)
     if expected == _DATA:
         header = _header_beside(path, found)
@@ -143,7 +142,7 @@ def _header_beside(path: Path, found: str | None) -> Path | None:
         return None
     header = path.with_suffix(".vhdr")
     if found in (_EDF, _BDF, _FIF, _HEADER):
-        raise _wrong_kind(path, _extension(path), _BY_EXTENSION[_extension(path)], found)
+        raise _wrong_kind(path, _extension(path), (_BY_EXTENSION | _ANONYMISED)[_extension(path)], found)
     raise MissingPart(
         f"its header {header.name} is not there",
         where=path.name,
