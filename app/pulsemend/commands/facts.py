@@ -17,6 +17,8 @@ if TYPE_CHECKING:
     from pulsemend.model.epochs import Trial
 
 _MOST_LISTED = 20
+_MOST_CODES = 60
+"""Longer lists are cut for reading; ``--json`` has all."""
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -63,7 +65,7 @@ def _lines(summary: RecordingSummary) -> list[str]:
         f"  files: {', '.join(part.name for part in facts.parts)}",
     ]
     if facts.boundaries:
-        at = ", ".join(f"{sample / facts.rate_hz:.3f} s" for sample in facts.boundaries)
+        at = _listed([f"{sample / facts.rate_hz:.3f} s" for sample in facts.boundaries])
         lines.append(f"  breaks: {at}")
     found = len(summary.pulses_found)
     lines.append(f"  pulse-like events in the signal: {found or 'none'}")
@@ -75,11 +77,24 @@ def _lines(summary: RecordingSummary) -> list[str]:
         return [*lines, "  no markers"]
     width = max(4, *(len(code.code) for code in summary.codes))
     lines += ["", f"  {'code':{width}}  count   first [s]    last [s]  usual interval [s]"]
-    for code in summary.codes:
+    often = sorted(summary.codes, key=lambda code: -code.count)[:_MOST_CODES]
+    for code in (code for code in summary.codes if code in often):
         interval = "-" if code.usual_interval_s is None else f"{code.usual_interval_s:.3f}"
         times = f"{code.first_s:10.3f}  {code.last_s:10.3f}  {interval:>18}"
         lines.append(f"  {code.code:{width}}  {code.count:5}  {times}")
-    return lines
+    return [*lines, *_more(summary.codes, _MOST_CODES)]
+
+
+def _listed(texts: Sequence[str]) -> str:
+    """List in one line, cut."""
+    more = len(texts) - _MOST_LISTED
+    return ", ".join(texts) if more <= 0 else f"{', '.join(texts[:_MOST_LISTED])} and {more} more"
+
+
+def _more(everything: Sequence[object], most: int = _MOST_LISTED) -> list[str]:
+    """Say how much of a list of lines was cut."""
+    more = len(everything) - most
+    return [f"  - and {more} more; --json has all"] if more > 0 else []
 
 
 def _channel_lines(summary: RecordingSummary) -> list[str]:
@@ -98,7 +113,7 @@ def _channel_lines(summary: RecordingSummary) -> list[str]:
             lines.append(f"  {name}: {_range(values, 'Hz')}")
     bad = [one.name for one in channels if one.status == "bad"]
     if bad:
-        lines.append(f"  bad by the channel table: {', '.join(bad)}")
+        lines.append(f"  bad by the channel table: {_listed(bad)}")
     return lines
 
 
@@ -111,10 +126,11 @@ def _fault_lines(summary: RecordingSummary) -> list[str]:
     if not summary.faults:
         return ["", "  no faults were found in the markers"] if summary.codes else []
     lines = ["", "  faults of markers:"]
-    for fault in summary.faults:
+    for fault in summary.faults[:_MOST_LISTED]:
         lines.append(f"  - {fault.key}: {fault.words}")
         if fault.cure:
             lines.append(f"    cure: {fault.cure}")
+    lines += _more(summary.faults)
     if any(fault.cure for fault in summary.faults):
         lines.append("  a cure is applied only where the marks name its fault under [cures] accepted = [...]")
     return lines
@@ -130,13 +146,14 @@ def _role_lines(summary: RecordingSummary) -> list[str]:
         plan = summary.planned.plan
         named = [
             (one.code, str(plan.role_of(one.code)), "" if plan.names(one.code) else "not in the plan")
-            for one in codes
+            for one in sorted(codes, key=lambda one: not plan.names(one.code))
         ]
         title = "roles by the plan:"
     else:
         named = [(one.code, str(one.role), one.reason) for one in codes]
         title = "proposed roles:"
-    return ["", f"  {title}", *(f"  {code:{width}}  {role:10}  {why}".rstrip() for code, role, why in named)]
+    shown = [f"  {code:{width}}  {role:10}  {why}".rstrip() for code, role, why in named[:_MOST_CODES]]
+    return ["", f"  {title}", *shown, *_more(named, _MOST_CODES)]
 
 
 def _trial_lines(summary: RecordingSummary) -> list[str]:
@@ -156,17 +173,16 @@ def _trial_lines(summary: RecordingSummary) -> list[str]:
         f"  trials: {len(found)}, {incomplete} incomplete, {doubtful} doubtful, {aside} set aside; "
         f"markers in no trial: {len(trials.extra)}",
     ]
+    troubled = [one for one in found if _troubles(one)]
     lines += [
         f"  - trial {one.number} at {one.first_sample / rate_hz:.3f} s: {_troubles(one)}"
-        for one in found
-        if _troubles(one)
+        for one in troubled[:_MOST_LISTED]
     ]
+    lines += _more(troubled)
     lines += [
         f"  - in no trial: {one.code} at {one.sample / rate_hz:.3f} s" for one in trials.extra[:_MOST_LISTED]
     ]
-    if len(trials.extra) > _MOST_LISTED:
-        lines.append(f"  - and {len(trials.extra) - _MOST_LISTED} more; --events writes all")
-    return lines
+    return [*lines, *_more(trials.extra)]
 
 
 def _troubles(trial: Trial) -> str:
@@ -228,5 +244,8 @@ def _as_json(summary: RecordingSummary) -> dict[str, object]:
             }
             for one in summary.planned.trials.trials
         ],
+        "markers_in_no_trial": None
+        if summary.planned is None
+        else [{"sample": one.sample, "code": one.code} for one in summary.planned.trials.extra],
         "notes": [*facts.notes, *summary.notes],
     }

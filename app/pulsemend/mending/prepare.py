@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from contextlib import nullcontext
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -40,6 +41,8 @@ from pulsemend.trials.effective import effective_markers
 from pulsemend.trials.logged import Logged, needs_log, with_log
 from pulsemend.trials.matching import match_trials
 from pulsemend.units import s_to_ms
+
+_MOST_LISTED = 30
 
 
 @dataclass(frozen=True)
@@ -394,10 +397,10 @@ def need_epochs(prepared: Prepared) -> None:
 def _trial_warnings(trials: Trials, facts: RecordingFacts) -> list[str]:
     lines = []
     if trials.unnamed:
-        listed = ", ".join(f"{code} ({count})" for code, count in trials.unnamed.items())
+        listed = _listed([f"{code} ({count})" for code, count in trials.unnamed.items()])
         lines.append(f"codes that the plan does not name count as other: {listed}")
     if trials.absent:
-        lines.append(f"codes that the plan names but the recording lacks: {', '.join(trials.absent)}")
+        lines.append(f"codes that the plan names but the recording lacks: {_listed(trials.absent)}")
     if trials.extra:
         first = trials.extra[0]
         lines.append(
@@ -405,6 +408,11 @@ def _trial_warnings(trials: Trials, facts: RecordingFacts) -> list[str]:
             f"{first.sample / facts.rate_hz:.3f} s"
         )
     return lines
+
+
+def _listed(texts: Sequence[str]) -> str:
+    more = len(texts) - _MOST_LISTED
+    return ", ".join(texts) if more <= 0 else f"{', '.join(texts[:_MOST_LISTED])} and {more} more"
 
 
 def _log_notes(logged: Logged | None, log: StudyLog) -> list[str]:
