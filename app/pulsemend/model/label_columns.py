@@ -142,4 +142,6 @@ def values_of(plan: Plan, column: str) -> tuple[str, ...]:
     for bits in plan.bits:
         if bits.name == label:
             values.update(bits.names.values())
+            if bits.at[0] == bits.at[1]:
+                values.update(bits.names.get(value, value) for value in "01")
     return tuple(sorted(values))

@@ -11,7 +11,7 @@ from pulsemend.model.keys import show
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import Plan
 from pulsemend.model.toml_lines import key_text
-from pulsemend.model.trial_checks import check_trials
+from pulsemend.model.trial_checks import check_trials, used_roles
 from pulsemend.model.trial_kinds import slot_names
 from pulsemend.model.vocabulary import Fill, Format, PulseTimes, Role
 
@@ -306,7 +306,7 @@ def _check_whole(key: str, seconds: float, rate_hz: float, least: float = -math.
 
 def _warnings(plan: Plan) -> tuple[str, ...]:
     found: list[str] = []
-    window_ms, roles = plan.pulses.window_ms, {marker.role for marker in plan.markers}
+    window_ms, roles = plan.pulses.window_ms, used_roles(plan)
     has_pulses = plan.pulses.times is not PulseTimes.NONE
     if has_pulses and window_ms is not None and not window_ms[0] <= 0.0 <= window_ms[1]:
         found.append("pulses.window_ms does not contain the onset of the pulse (0 ms): the spike stays")

@@ -192,8 +192,12 @@ def write_plan(path: Path, plan: Plan, text: str = "") -> str:
 
 
 def _meaning(plan: Plan) -> Plan:
-    """Give the plan with its codes in a fixed order: theirs says nothing."""
-    return replace(plan, markers=tuple(sorted(plan.markers, key=lambda marker: marker.code)))
+    """Give the plan with its codes and groups in a fixed order: theirs says nothing."""
+    return replace(
+        plan,
+        markers=tuple(sorted(plan.markers, key=lambda marker: marker.code)),
+        groups=tuple(sorted(plan.groups, key=lambda group: group.name)),
+    )
 
 
 def _means(text: str, plan: Plan) -> bool:
@@ -283,5 +287,7 @@ def _wholes(pair: tuple[float, float], *path: str) -> tuple[int, int]:
     """Give two whole numbers, where TOML may write decimals too."""
     low, high = (round(number) for number in pair)
     if (low, high) != pair:
-        raise PlanError(key_text(path), "must be two whole numbers", received=show(pair))
+        raise PlanError(
+            key_text(path), "must be two whole numbers", allowed="[least, most]", received=show(pair)
+        )
     return low, high

@@ -48,7 +48,13 @@ PLAN_KEYS: tuple[Key, ...] = (
         high=31,
     ),
     Key("bits.*.names.*", Kind.TEXT, "label of one value of the field", filled=True),
-    Key("bits.*.roles.*", Kind.WORD, "role of codes with this value, unless named themselves", words=Role),
+    Key(
+        "bits.*.roles.*",
+        Kind.WORD,
+        "role of codes with this value, unless named themselves",
+        words=Role,
+        never=(Role.UNDECIDED,),
+    ),
     Key("trial[].slot", Kind.NAME, "name of one expected marker of a trial"),
     Key(
         "trial[].role",
