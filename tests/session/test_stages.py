@@ -8,7 +8,7 @@ import pytest
 
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan_file import parse_plan
-from pulsemend.session.found import Found, Stage, WrittenSet
+from pulsemend.session.found import Found, FoundMarkers, Stage, WrittenSet
 from pulsemend.session.session import Session
 from pulsemend.session.stages import NOT_YET, StageState, State, stage_states
 from support.session_desk import FACTS, PLAN, Desk
@@ -60,6 +60,28 @@ def test_markers_without_role_or_recorded_code_need_attention(desk: Desk) -> Non
     assert (
         state.words == "Code 'tick2' has no role yet. Code 'tick2' is in the plan, but not in the recording."
     )
+
+
+def test_cures_doubtful_trials_and_the_log_need_attention(desk: Desk) -> None:
+    session = with_plan(desk, PLAN)
+    found = FoundMarkers(curable=("burst", "zero codes"), n_doubtful=3, log_problem="log.tsv: no times")
+    session.set_found(Found(markers=found))
+    state = state_of(session, Stage.MARKERS)
+    assert state.count == 6
+    assert state.words == (
+        "A cure is open: burst. A cure is open: zero codes. 3 trials have more than one explanation. "
+        "The log was not joined."
+    )
+    session.edit_marks("decided", Marks(cures_accepted=("burst",), cures_refused=("zero codes",)))
+    assert state_of(session, Stage.MARKERS).count == 4
+
+
+def test_codes_that_a_cure_brings_are_there(desk: Desk) -> None:
+    text = PLAN.replace("[markers.lamp]", '[markers.lamp2]\nrole = "sample"\n[markers.lamp]')
+    session = with_plan(desk, text)
+    assert "'lamp2' is in the plan, but not" in state_of(session, Stage.MARKERS).words
+    session.set_found(Found(markers=FoundMarkers(codes=frozenset({"lamp", "lamp2", "tick"}))))
+    assert state_of(session, Stage.MARKERS).state is State.DONE
 
 
 def test_codes_that_the_plan_does_not_name_are_told(desk: Desk) -> None:

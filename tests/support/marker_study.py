@@ -13,8 +13,8 @@ from pulsemend.model.marks_file import read_marks
 from pulsemend.model.plan_file import read_plan
 from pulsemend.model.recording import Marker
 from pulsemend.readers.opening import open_recording
+from pulsemend.session.session import Session
 from pulsemend.simulate.write_triplet import TripletFormat, TripletPaths, TripletWriter
-from pulsemend.window.workbench import Workbench
 
 RATE_HZ = 250.0
 N_TRIALS = 12
@@ -81,7 +81,7 @@ class MarkerStudy:
     plan: Path
     cues_s: tuple[float, ...]
 
-    def open(self, bench: Workbench, folder: Path, *, with_plan: bool = True) -> None:
+    def open(self, session: Session, folder: Path, *, with_plan: bool = True) -> None:
         """Open the recording, with a copy of its plan that may be written to."""
         plan = folder / "plan.toml"
         shutil.copy(self.plan, plan)
@@ -90,15 +90,15 @@ class MarkerStudy:
         recording.close()
         at = marks_path(plan, facts.stem)
         marks = read_marks(at) if at.exists() else None
-        bench.session.open_recording(self.recording, facts, marks, at)
+        session.open_recording(self.recording, facts, marks, at)
         if with_plan:
-            bench.session.open_plan(read_plan(plan), plan)
+            session.open_plan(read_plan(plan), plan)
 
 
 def starts_s() -> list[float]:
     """Instants of the trials: irregular, as an experimenter's pauses are."""
     rng = np.random.default_rng(4)
-    return (2.0 + np.cumsum(rng.uniform(4.5, 7.5, N_TRIALS)) - 4.5).tolist()
+    return [float(at_s) for at_s in np.cumsum(rng.uniform(4.5, 7.5, N_TRIALS)) - 2.5]
 
 
 def markers() -> tuple[list[Marker], tuple[float, ...]]:

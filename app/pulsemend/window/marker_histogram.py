@@ -177,6 +177,7 @@ class IntervalsPicture(QWidget):
         self._survey: Survey | None = None
         self._intervals = NO_INTERVALS
         self._gone: tuple[float, float] | None = None
+        self._is_chosen = False
         self.what = _combo("Interval of")
         self.first = _combo("From code")
         self.second = _combo("To the next")
@@ -210,10 +211,9 @@ class IntervalsPicture(QWidget):
         """Show the intervals of another survey; what is chosen stays chosen."""
         self._survey = survey
         slots = limited_slots(None if survey is None else survey.plan)
-        _fill(
-            self.what,
-            [(f"{slot.slot} after {slot.after}", slot.slot) for slot in slots] + [(_CODES, "")],
-        )
+        _fill(self.what, [(f"{slot.slot} after {slot.after}", slot.slot) for slot in slots] + [(_CODES, "")])
+        if not self._is_chosen:
+            self.what.setCurrentIndex(0)
         codes = [] if survey is None else [one.code for one in survey.evidence]
         _fill(self.first, [(code, code) for code in codes])
         was_empty = self.second.count() == 0
@@ -224,6 +224,7 @@ class IntervalsPicture(QWidget):
 
     def choose_codes(self, first: str, second: str) -> None:
         """Show the intervals between two codes."""
+        self._is_chosen = True
         self.what.setCurrentIndex(self.what.findData(""))
         self.first.setCurrentIndex(self.first.findData(first))
         self.second.setCurrentIndex(self.second.findData(second))
@@ -235,6 +236,7 @@ class IntervalsPicture(QWidget):
 
     def _on_chosen(self) -> None:
         self._gone = None
+        self._is_chosen = True
         self._show()
 
     def _show(self) -> None:
