@@ -7,8 +7,12 @@ from collections.abc import Collection, Mapping
 from dataclasses import replace
 
 from pulsemend.errors import PlanError
-from pulsemend.model.plan import EpochRule, Plan
+from pulsemend.model.plan import Balance, EpochRule, Plan
 from pulsemend.model.plan_checks import check_against_rate, need_rules, need_slots
+from pulsemend.model.trial_kinds import slot_names
+
+_PARTS = re.compile(r'(?:"[^"]*"|[^,;\n"]|")+')
+"""Labels, parted by commas, semicolons or lines outside quotes."""
 
 
 def with_length(plan: Plan, length_s: float) -> Plan:
@@ -22,6 +26,19 @@ def with_length(plan: Plan, length_s: float) -> Plan:
         Seconds.
     """
     return replace(plan, epochs=replace(plan.epochs, length_s=length_s))
+
+
+def with_balance(plan: Plan, balance: Balance) -> Plan:
+    """Give the plan another balance.
+
+    Parameters
+    ----------
+    plan : Plan
+        The plan before.
+    balance : Balance
+        The new one.
+    """
+    return replace(plan, balance=balance)
 
 
 def with_rule(plan: Plan, place: int, rule: EpochRule) -> Plan:
@@ -58,7 +75,7 @@ def with_new_rule(plan: Plan, place: int) -> Plan:
     """
     need_slots(plan)
     taken = [rule.name for rule in plan.epochs.rule]
-    return _with_inserted(plan, place, EpochRule(free_name("epoch", taken), plan.trial[0].slot, 0.0))
+    return _with_inserted(plan, place, EpochRule(free_name("epoch", taken), slot_names(plan)[0], 0.0))
 
 
 def with_copy(plan: Plan, place: int) -> Plan:
@@ -131,14 +148,14 @@ def free_name(stem: str, taken: Collection[str]) -> str:
 
 
 def labels_text(labels: Mapping[str, str]) -> str:
-    """Write labels for a person: ``cued = cue1.item, side = cue2.item``.
+    """Write labels for a person: ``cued = cue1.item, side = other(cue1.item), order = "first, or so"``.
 
     Parameters
     ----------
     labels : mapping of str to str
         Source by column.
     """
-    return ", ".join(f"{column} = {source}" for column, source in labels.items())
+    return ", ".join(f"{column} = {_quoted(source)}" for column, source in labels.items())
 
 
 def labels_from_text(text: str) -> dict[str, str]:
@@ -147,7 +164,7 @@ def labels_from_text(text: str) -> dict[str, str]:
     Parameters
     ----------
     text : str
-        See `labels_text`.
+        See `labels_text`; a source in double quotes may hold what parts labels otherwise.
 
     Returns
     -------
@@ -160,21 +177,27 @@ def labels_from_text(text: str) -> dict[str, str]:
         A part is no pair, or a column stands there twice.
     """
     labels: dict[str, str] = {}
-    for part in re.split(r"[,;\n]", text):
+    for part in _PARTS.findall(text):
         if not part.strip():
             continue
         column, sign, source = (piece.strip() for piece in part.partition("="))
-        if not (column and sign and source):
+        if len(source) > 1 and source[0] == source[-1] == '"':
+            source = source[1:-1]
+        if not (column and sign and source) or '"' in column + source:
             raise PlanError(
                 "labels",
                 "each label needs a column and where it comes from",
-                allowed="column = slot.label, parted by commas",
+                allowed="column = slot.label, other(slot.label), log.column, or a word; parted by commas",
                 received=part.strip(),
             )
         if column in labels:
             raise PlanError("labels", "names a column twice", received=column)
         labels[column] = source
     return labels
+
+
+def _quoted(source: str) -> str:
+    return f'"{source}"' if re.search(r"[,;\n]", source) or source != source.strip() else source
 
 
 def check_epochs(plan: Plan, recorded_rate_hz: float) -> None:

@@ -128,9 +128,12 @@ class EpochTable(QWidget):
         Go to this EpochRow.
     marks_wanted : Signal(str, object)
         Change the marks: what is done, and the new Marks.
+    current_changed : Signal(object)
+        The EpochKey of the row that has become the current one.
     """
 
     wanted = Signal(object)
+    current_changed = Signal(object)
     marks_wanted = Signal(str, object)
 
     def __init__(self, theme: Theme, parent: QWidget | None = None) -> None:
@@ -178,6 +181,18 @@ class EpochTable(QWidget):
         self._marks = marks
         self._tell()
 
+    def show_key(self, key: EpochKey) -> None:
+        """Make an epoch the current and only selected one, without telling anybody; unless it is filtered."""
+        selection = self.table.selectionModel()
+        for row, one in enumerate(self.model.shown):
+            if (one.trial, one.rule, one.piece) == (key.trial, key.rule, key.piece):
+                index = self.model.index(row, 0)
+                flags = QItemSelectionModel.SelectionFlag
+                with QSignalBlocker(self):
+                    selection.setCurrentIndex(index, flags.ClearAndSelect | flags.Rows)
+                self.table.scrollTo(index)
+                return
+
     def show_only(self, fate: Fate | None) -> None:
         """Show one fate only; None for all."""
         self.fates.setCurrentIndex(max(0, self.fates.findData(fate)))
@@ -215,7 +230,13 @@ class EpochTable(QWidget):
         )
         self.table.horizontalHeader().sortIndicatorChanged.connect(self._show_order)
         self.table.selectionModel().selectionChanged.connect(self._tell)
+        self.table.selectionModel().currentRowChanged.connect(self._tell_current)
         self.table.opened.connect(lambda row: self.wanted.emit(self.model.shown[row]))
+
+    def _tell_current(self) -> None:
+        index = self.table.currentIndex()
+        if index.isValid():
+            self.current_changed.emit(self.model.shown[index.row()].key)
 
     def _show_order(self, column: int) -> None:
         with QSignalBlocker(self.orders):

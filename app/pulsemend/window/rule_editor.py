@@ -12,13 +12,16 @@ from PySide6.QtWidgets import QLineEdit, QVBoxLayout, QWidget
 from pulsemend.errors import PlanError
 from pulsemend.mending.epoch_rows import RuleCount
 from pulsemend.mending.rule_edits import labels_from_text, labels_text
-from pulsemend.model.label_columns import slot_columns
+from pulsemend.model.label_columns import known_columns
 from pulsemend.model.plan import EpochRule, Plan
+from pulsemend.model.trial_kinds import expanded_slots
 from pulsemend.model.vocabulary import PulseRule
 from pulsemend.window.fields import Chooser, Field, PlainNumber, in_words
 from pulsemend.window.flow import flow_row
+from pulsemend.window.lane_style import rule_icon
 from pulsemend.window.parts import Card, Choices, button, words
 from pulsemend.window.tables import RowsModel, RowsTable
+from pulsemend.window.theme import Theme
 
 MOST_ROWS = 7
 _NOTHING = "nothing"
@@ -28,10 +31,17 @@ Edit = Callable[[str, str, EpochRule, str | None], str]
 
 
 class RulesModel(RowsModel):
-    """Rules with where they start and how many epochs they keep."""
+    """Rules with where they start and how many epochs they keep.
 
-    def __init__(self) -> None:
+    Parameters
+    ----------
+    theme : Theme
+        Colours of their looks in the lanes.
+    """
+
+    def __init__(self, theme: Theme) -> None:
         super().__init__(("rule", "starts", "kept"))
+        self._theme = theme
         self._rules: tuple[EpochRule, ...] = ()
         self._counts: dict[str, RuleCount] = {}
 
@@ -41,6 +51,12 @@ class RulesModel(RowsModel):
         self._rules = tuple(rules)
         self._counts = {one.rule: one for one in counts}
         self.endResetModel()
+
+    def set_theme(self, theme: Theme) -> None:
+        """Draw the looks in other colours."""
+        self._theme = theme
+        if self._rules:
+            self.dataChanged.emit(self.index(0, 0), self.index(len(self._rules) - 1, 0))
 
     def n_rows(self) -> int:
         """Count the rules."""
@@ -58,7 +74,9 @@ class RulesModel(RowsModel):
         return "not yet" if count is None else f"{count.kept} of {count.total}"
 
     def more(self, row: int, column: int, role: int) -> object:
-        """Write the names of rules heavier."""
+        """Write the names of rules heavier, with their look in the lanes beside them."""
+        if column == 0 and role == Qt.ItemDataRole.DecorationRole:
+            return rule_icon(row, self._theme)
         if column == 0 and role == Qt.ItemDataRole.FontRole:
             font = QFont()
             font.setWeight(QFont.Weight.DemiBold)
@@ -68,6 +86,11 @@ class RulesModel(RowsModel):
 
 class RuleList(Card):
     """The rules in their order.
+
+    Parameters
+    ----------
+    theme : Theme
+        Colours of their looks in the lanes.
 
     Attributes
     ----------
@@ -85,9 +108,9 @@ class RuleList(Card):
     remove_wanted = Signal()
     move_wanted = Signal(int)
 
-    def __init__(self) -> None:
+    def __init__(self, theme: Theme) -> None:
         super().__init__("Rules")
-        self.model = RulesModel()
+        self.model = RulesModel(theme)
         self.table = RowsTable("Epoch rules", self.model, ())
         # A long name gives way; numbers do not.
         header = self.table.horizontalHeader()
@@ -145,6 +168,13 @@ class RuleList(Card):
         self._fit()
         self._tell()
 
+    def choose(self, place: int) -> None:
+        """Choose another rule, and tell so."""
+        flags = QItemSelectionModel.SelectionFlag
+        self.table.selectionModel().setCurrentIndex(
+            self.model.index(place, 0), flags.ClearAndSelect | flags.Rows
+        )
+
     def refuse(self, text: str) -> None:
         """Say why adding, copying, removing or moving was not done."""
         self.refusal.setText(text)
@@ -184,6 +214,7 @@ class RuleEditor(Card):
         self._edit = edit
         self._rule: EpochRule | None = None
         self._place = 0
+        self._log_columns: tuple[str, ...] = ()
         self.name = QLineEdit()
         self.name.setAccessibleName("Name of the rule")
         self.anchor = Chooser("Anchor of the rule")
@@ -230,7 +261,7 @@ class RuleEditor(Card):
         self._rule, self._place = rule, place
         slots = [
             (slot.slot, slot.slot if slot.slot == slot.role else f"{slot.slot} ({slot.role})")
-            for slot in plan.trial
+            for slot in expanded_slots(plan)
         ]
         self.title.setText(f"Rule {rule.name}" if len(rule.name) <= 24 else f"Rule {rule.name[:23]}\u2026")
         self.title.setToolTip(rule.name)
@@ -243,13 +274,13 @@ class RuleEditor(Card):
         self.after.show_value(rule.clear_ms[1])
         self.stop.show_choice([("", _NOTHING), *slots], rule.stop_before)
         self._show_text(self.labels, labels_text(rule.labels))
-        columns = slot_columns(plan)
-        offered = (
-            f"Labels to choose from: {', '.join(columns)}" if columns else "No code of a slot has labels."
-        )
-        self.known_labels.setText(offered)
+        self.known_labels.setText(_offered(plan, self._log_columns))
         for field in self.fields.values():
             field.refuse("")
+
+    def show_log_columns(self, columns: Sequence[str]) -> None:
+        """Offer the columns of the log, which only the log knows, as labels from now on."""
+        self._log_columns = tuple(columns)
 
     def show_kept(self, kept: Mapping[PulseRule, int] | None) -> None:
         """Show how many epochs each choice about gaps keeps; None while that is not known."""
@@ -324,6 +355,15 @@ class RuleEditor(Card):
             field.setText(text)
             field.setToolTip(text)
             field.setCursorPosition(0)
+
+
+def _offered(plan: Plan, log_columns: Sequence[str]) -> str:
+    """Say what a label may be made from."""
+    columns = [*known_columns(plan), *log_columns]
+    if not columns:
+        return "No code of a slot has labels; a plain word labels all epochs of the rule."
+    listed = ", ".join(columns)
+    return f"From: {listed}. Or other(column) for the other of two values, or a plain word for all epochs."
 
 
 def _stacked(name: str, below: QWidget) -> Field:

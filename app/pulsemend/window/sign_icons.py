@@ -13,9 +13,22 @@ SIDE_PX = 14
 _FINE = 4
 """Screen pixels per unit that the shapes are drawn with: enough for every screen."""
 
+_FATE_SHAPES = {
+    Fate.BY_HAND: "square",
+    Fate.TRIAL_EXCLUDED: "square",
+    Fate.SET_ASIDE: "bar",
+    Fate.BALANCE: "bar",
+    Fate.TRIAL_DOUBTFUL: "triangle",
+}
+_ON_PURPOSE = ("square", "bar")
+"""Shapes of what somebody wanted, so that nothing has to be looked at."""
+
 
 def fate_icon(fate: Fate, theme: Theme) -> QIcon:
-    """Shape of a fate: a disc for kept, an empty square for what was decided by hand, else a cross.
+    """Shape of a fate.
+
+    A disc for kept, an empty square for what was decided by hand, a bar for what the plan sets aside or
+    leaves out for balance, a triangle for doubt, else a cross.
 
     Parameters
     ----------
@@ -26,8 +39,8 @@ def fate_icon(fate: Fate, theme: Theme) -> QIcon:
     """
     if fate is Fate.KEPT:
         return _icon("disc", theme.accent)
-    by_hand = fate in (Fate.BY_HAND, Fate.TRIAL_EXCLUDED)
-    return _icon("square" if by_hand else "cross", theme.quiet if by_hand else theme.attention)
+    shape = _FATE_SHAPES.get(fate, "cross")
+    return _icon(shape, theme.quiet if shape in _ON_PURPOSE else theme.attention)
 
 
 def verdict_icon(word: str, theme: Theme) -> QIcon:
@@ -61,6 +74,8 @@ def _icon(shape: str, colour: str) -> QIcon:
         painter.drawEllipse(QPointF(middle, middle), reach, reach)
     elif shape == "square":
         painter.drawRect(QRectF(middle - reach, middle - reach, 2 * reach, 2 * reach))
+    elif shape == "bar":
+        painter.fillRect(QRectF(middle - reach, middle - 1.2, 2 * reach, 2.4), QColor(colour))
     elif shape == "triangle":
         corners = [
             (middle, middle - reach),
