@@ -279,7 +279,17 @@ def _channels(prepared: Prepared) -> tuple[SetChannel, ...]:
             else "named bad in the marks"
         )
         channels.append(
-            SetChannel(channel.name, channel.type, "bad" if bad else "good", note, channel.position_m)
+            SetChannel(
+                channel.name,
+                channel.type,
+                "bad" if bad else "good",
+                note,
+                channel.position_m,
+                impedance_ohm=channel.impedance_ohm,
+                hardware_highpass_hz=channel.highpass_hz,
+                hardware_lowpass_hz=channel.lowpass_hz,
+                recorded_reference=channel.reference or setup.facts.reference,
+            )
         )
     return tuple(channels)
 
