@@ -26,6 +26,13 @@ def test_file_of_a_recording(tmp_path: Path, name: str) -> None:
     assert what_is([path]) == Dropped(recording=path)
 
 
+def test_one_file_of_a_rarer_format_is_left_to_the_readers(tmp_path: Path) -> None:
+    rare, other, table = made(tmp_path, "a.gdf", "b.gdf", "a_events.tsv")
+    assert what_is([rare]) == Dropped(recording=rare)
+    assert not what_is([rare, other]).is_something
+    assert not what_is([table]).is_something
+
+
 def test_triplet_counts_once_by_its_header(tmp_path: Path) -> None:
     data, header, markers = made(tmp_path, "a.eeg", "a.vhdr", "a.vmrk")
     assert what_is([data, header, markers]) == Dropped(recording=header)

@@ -10,6 +10,11 @@ from dataclasses import dataclass
 from pathlib import Path
 
 RECORDING_ENDINGS = (".vhdr", ".eeg", ".vmrk", ".edf", ".bdf", ".fif", ".fif.gz")
+"""Endings of the commonest recordings: those that are looked for in a folder."""
+
+NO_RECORDINGS = ("", ".csv", ".html", ".json", ".md", ".pdf", ".png", ".tsv", ".toml", ".txt", ".zip")
+"""Endings of files that are surely none."""
+
 PLAN_ENDING = ".toml"
 MARKS_ENDING = ".marks.toml"
 SET_ENDING = "_desc-mended"
@@ -59,6 +64,9 @@ def what_is(paths: Sequence[Path]) -> Dropped:
         return _folder(paths[0])
     recordings, plans = _sorted_out(paths)
     if not recordings and not plans:
+        if len(paths) == 1 and paths[0].suffix.lower() not in NO_RECORDINGS:
+            # The reader library knows many more formats; it judges.
+            return Dropped(recording=paths[0])
         known = ", ".join(RECORDING_ENDINGS)
         return Dropped(
             words=f"{paths[0].name} is no recording ({known}), no plan ({PLAN_ENDING}) and no folder."
