@@ -1,6 +1,6 @@
 """Second pass: the one chain from recorded samples to repaired epochs.
 
-    offset -> fill -> anti-alias + decimate -> drift, line and band filters -> reference -> cut
+    offset -> decay -> fill -> anti-alias + decimate -> drift, line and band filters -> reference -> cut
 
 Nothing is estimated here. Every step is a pure function of recorded samples, estimates and absolute sample
 number, computed on a fixed grid of blocks counted from the start of the recording, and pulled from the end:
@@ -24,6 +24,7 @@ import numpy as np
 import threadpoolctl
 from numpy.typing import NDArray
 
+from pulsemend.engine.decay_subtraction import DecaySubtraction
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.reading import read_stored
 from pulsemend.engine.setup import Setup
@@ -90,6 +91,11 @@ class Chain:
         self._setup = setup
         self._estimates = estimates
         self._repairs = _repairs(setup, estimates)
+        self._decays: list[DecaySubtraction] = []
+        if estimates.decay is not None:
+            self._decays = [
+                DecaySubtraction(setup, group, estimates.onsets, estimates.decay) for group in setup.groups
+            ]
         self._output_spans = [
             (_ceil(lo * setup.ratio), _floor((hi - 1) * setup.ratio) + 1) for lo, hi in setup.facts.segments
         ]
@@ -115,7 +121,7 @@ class Chain:
         return self._repairs[columns_of].gaps[segment]
 
     def repaired(self, start: int, stop: int) -> Samples:
-        """Read used channels at the recorded rate and fill their gaps.
+        """Read used channels at the recorded rate, subtract decays and then fill the gaps.
 
         Parameters
         ----------
@@ -131,11 +137,30 @@ class Chain:
         touched = [(repair, gap) for repair in self._repairs for gap in repair.touching(segment, start, stop)]
         first = min([start, *(gap.start - gap.left for _, gap in touched)])
         last = max([stop, *(gap.stop + gap.right for _, gap in touched)])
-        offset = self._estimates.offset if self._setup.removes_offset else None
-        x = read_stored(self._recording, self._setup, first, last, offset, self._setup.work)
+        x = self.before_fill(first, last)
         for repair, gap in touched:
             repair.fill(x, first, gap)
         return x[start - first : stop - first]
+
+    def before_fill(self, start: int, stop: int) -> Samples:
+        """Read used channels at the recorded rate and subtract decays, with the pulses still in them.
+
+        Parameters
+        ----------
+        start, stop : int
+            Recorded samples within one segment.
+
+        Returns
+        -------
+        array, shape (stop - start, n_used), C-contiguous
+            Stored units minus the channels' offsets.
+        """
+        offset = self._estimates.offset if self._setup.removes_offset else None
+        x = read_stored(self._recording, self._setup, start, stop, offset, self._setup.work)
+        segment = self._segment_at(start)
+        for decay in self._decays:
+            decay.subtract(x, start, segment)
+        return x
 
     def output_span(self, segment: int) -> tuple[int, int]:
         """Output samples [first, stop) whose instants lie within a segment."""
@@ -221,6 +246,24 @@ class Chain:
             marked[columns, start:stop] = True
         return marked
 
+    def decay_fitted(self, cut: Cut) -> NDArray[np.bool_] | None:
+        """Tell which samples of an epoch lie where the decay's fit would alter a response.
+
+        Returns
+        -------
+        bool array, shape (n_channels, n_times), or None
+            By the same rule as `replaced`; None where no decay is looked for.
+        """
+        if self._estimates.decay is None:
+            return None
+        marked = np.zeros((len(self._setup.names), cut.n_times), dtype=np.bool_)
+        lo, hi = self._recorded_reach(cut)
+        for decay in self._decays:
+            for column, a, b in decay.altered_runs(cut.segment, lo, hi):
+                start, stop = self._output_run(cut, a, b)
+                marked[column, start:stop] = True
+        return marked
+
     def replaced_share(self, cut: Cut) -> float:
         """Give the share of an epoch's samples, over all channels, that `replaced` marks."""
         # Runs of one group may share an output sample that two gaps touch.
@@ -234,16 +277,29 @@ class Chain:
 
     def _replaced_runs(self, cut: Cut) -> Iterator[tuple[NDArray[np.intp], int, int]]:
         """Places of channels, and the run [start, stop) of output samples that one gap touches in them."""
-        ratio = float(self._setup.ratio)
-        first = cut.first + cut.part
-        reach = 0.5 / ratio + 1e-6
-        lo, hi = first / ratio - reach, (first + cut.n_times - 1) / ratio + reach
+        lo, hi = self._recorded_reach(cut)
         for repair in self._repairs:
             for gap in repair.touching(cut.segment, lo, hi):
-                start = max(0, math.ceil((gap.start - reach) * ratio - first))
-                stop = min(cut.n_times, math.floor((gap.stop - 1 + reach) * ratio - first) + 1)
+                start, stop = self._output_run(cut, gap.start, gap.stop)
                 if stop > start:
                     yield repair.columns, start, stop
+
+    def _recorded_reach(self, cut: Cut) -> tuple[float, float]:
+        """First and last instant, in recorded samples, that lie within half an output period of an epoch."""
+        ratio = float(self._setup.ratio)
+        first = cut.first + cut.part
+        reach = _half_period(ratio)
+        return first / ratio - reach, (first + cut.n_times - 1) / ratio + reach
+
+    def _output_run(self, cut: Cut, start: int, stop: int) -> tuple[int, int]:
+        """Run of an epoch's samples within half an output period of recorded samples [start, stop)."""
+        ratio = float(self._setup.ratio)
+        first = cut.first + cut.part
+        reach = _half_period(ratio)
+        return (
+            max(0, math.ceil((start - reach) * ratio - first)),
+            max(0, min(cut.n_times, math.floor((stop - 1 + reach) * ratio - first) + 1)),
+        )
 
     def _segment_at(self, sample: int) -> int:
         segments = self._setup.facts.segments
@@ -448,6 +504,11 @@ def _runs(chosen: NDArray[np.bool_]) -> list[slice]:
     """List the runs of chosen places as slices, which change an array in place without a copy."""
     edges = np.flatnonzero(np.diff(np.concatenate([[False], chosen, [False]])))
     return [slice(int(a), int(b)) for a, b in zip(edges[::2], edges[1::2], strict=True)]
+
+
+def _half_period(ratio: float) -> float:
+    """Half an output period in recorded samples, a rounding's width more."""
+    return 0.5 / ratio + 1e-6
 
 
 def _ceil(x: Fraction) -> int:

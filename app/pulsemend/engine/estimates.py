@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend import DATA_VERSION
+from pulsemend.engine.decay import DecayEstimates
 from pulsemend.engine.onsets import OnsetShift
 from pulsemend.errors import SetError
 from pulsemend.model.epochs import Pulse
@@ -38,6 +39,8 @@ class Estimates:
         Recorded samples of pulse-like events, looked for only where no pulse is known.
     stimulus_onsets : tuple of OnsetShift
         Onsets of stimuli, measured in a sensor's channel, where the plan wants it.
+    decay : DecayEstimates or None
+        None where the plan wants none.
     notes : tuple of str
         What the fit had to decide, one sentence each.
     rests_on : mapping of str to str
@@ -50,6 +53,7 @@ class Estimates:
     autocovariance: NDArray[np.float64] | None = None
     unmarked: tuple[int, ...] = ()
     stimulus_onsets: tuple[OnsetShift, ...] = ()
+    decay: DecayEstimates | None = None
     notes: tuple[str, ...] = ()
     rests_on: dict[str, str] = field(default_factory=dict)
 
@@ -77,6 +81,8 @@ class Estimates:
             file.create_dataset("pulses/state", data=states, dtype=h5py.string_dtype(), shape=(len(states),))
             if self.autocovariance is not None:
                 file["autocovariance"] = self.autocovariance
+            if self.decay is not None:
+                self.decay.save(file.create_group("decay"))
 
     @classmethod
     def load(cls, path: Path) -> Estimates:
@@ -109,6 +115,7 @@ class Estimates:
                     autocovariance=file["autocovariance"][()] if "autocovariance" in file else None,
                     unmarked=tuple(int(n) for n in file["unmarked"][()]),
                     stimulus_onsets=_onset_shifts(str(file.attrs.get("stimulus_onsets", "[]"))),
+                    decay=DecayEstimates.load(file["decay"]) if "decay" in file else None,
                     notes=tuple(json.loads(file.attrs["notes"])),
                     rests_on=json.loads(file.attrs["rests_on"]),
                 )

@@ -9,6 +9,7 @@ from collections.abc import Iterator, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsemend.engine.decay import BackgroundSum, learn_decay
 from pulsemend.engine.estimates import Estimates, basis
 from pulsemend.engine.onsets import OnsetShift, measure_onsets
 from pulsemend.engine.reading import read_stored
@@ -17,7 +18,7 @@ from pulsemend.engine.setup import ExpectedPulse, Setup
 from pulsemend.errors import InputError
 from pulsemend.model.epochs import Pulse, nearest_sample
 from pulsemend.model.recording import Recording
-from pulsemend.model.vocabulary import Fill, PulseState
+from pulsemend.model.vocabulary import Decay, Fill, PulseState
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.autocovariance import AutocovarianceSum
 from pulsemend.signal.fills import lags_needed
@@ -76,13 +77,14 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
     windows = quiet_windows(setup, found)
     total = len(windows) + len(expected)
     sums = _autocovariance_sum(setup) if expected else None
+    background = BackgroundSum(setup) if expected and setup.decay is not Decay.NONE else None
     scale_v = setup.scale_v.astype(np.float32)
     short = max(2, round(STEEPNESS_S * setup.facts.rate_hz))
     means: list[NDArray[np.float64]] = []
     steep: list[NDArray[np.float64]] = []
     for done, (start, until) in enumerate(windows):
         yield Progress(_STAGE, done, total)
-        stop = until if sums is not None else min(until, start + short)
+        stop = until if sums is not None or background is not None else min(until, start + short)
         # Counting from a sample of its own, single precision is enough.
         origin = read_stored(recording, setup, start, start + 1)[0]
         x = read_stored(recording, setup, start, stop, origin, np.float32)
@@ -94,6 +96,8 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
             steep.append(x[:short, judged])
         if sums is not None:
             sums.add(x)
+        if background is not None:
+            background.add(x)
     usual = usual_steepness(steep) if steep else 0.0
     pulses = []
     for done, one in enumerate(expected):
@@ -109,13 +113,20 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
             todo='Choose a fill that does not need one, such as pulses.fill = "cubic"',
         )
     onsets, notes = yield from _measure_onsets(recording, setup)
+    pulses.sort(key=lambda pulse: pulse.sample)
+    decay = None
+    if background is not None:
+        decay = yield from learn_decay(
+            recording, setup, [pulse.sample for pulse in pulses], background.result()
+        )
     return Estimates(
         offset=_offset(setup, means),
-        pulses=tuple(sorted(pulses, key=lambda pulse: pulse.sample)),
+        pulses=tuple(pulses),
         usual_steepness=usual,
         autocovariance=None if sums is None else sums.result(),
         unmarked=unmarked,
         stimulus_onsets=onsets,
+        decay=decay,
         notes=notes,
         rests_on=basis_of(setup),
     )
@@ -134,6 +145,9 @@ def quiet_windows(setup: Setup, found: Sequence[int] = ()) -> list[tuple[int, in
     rate = setup.facts.rate_hz
     closed = [*setup.barriers]
     around_s = _around_pulse_s(setup)
+    if setup.decay is not Decay.NONE:
+        # Until the decay is over, at least as long as it is fitted.
+        around_s = around_s[0], around_s[1] - AFTER_PULSE_S + max(AFTER_PULSE_S, setup.decay_s)
     pulses = [*(nearest_sample(pulse.sample) for pulse in setup.pulses), *found]
     closed += [window_to_samples(sample, around_s, rate) for sample in pulses]
     length, least = round(WINDOW_S * rate), max(2, round(LEAST_WINDOW_S * rate))
@@ -252,12 +266,14 @@ def _align(
 def basis_of(setup: Setup) -> dict[str, str]:
     """Hash, for every estimate, the settings it rests on."""
     source = [setup.facts.parts, setup.facts.n_samples, setup.used, setup.barriers]
-    quiet = [*source, setup.pulses, setup.groups, setup.search_s, setup.seeks_pulses]
+    decay = [setup.decay, setup.decay_s] if setup.decay is not Decay.NONE else []
+    quiet = [*source, setup.pulses, setup.groups, setup.search_s, setup.seeks_pulses, *decay]
     return {
         "offset": basis(*quiet, setup.removes_offset, setup.fill),
         "pulses": basis(*quiet, setup.bad),
         "usual_steepness": basis(*quiet, setup.bad),
         "autocovariance": basis(*quiet, setup.flank, setup.fill),
+        "decay": basis(*quiet, setup.decay_least_v, setup.bad) if decay else basis("none"),
         "stimulus_onsets": basis(
             *source, setup.onset_rules, setup.facts.markers if setup.onset_rules else ()
         ),

@@ -17,12 +17,21 @@ from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import OnsetRule, Plan
 from pulsemend.model.recording import Channel, RecordingFacts
-from pulsemend.model.vocabulary import ChannelType, Fill, Precision, PulseState, PulseTimes, Role, Side
+from pulsemend.model.vocabulary import (
+    ChannelType,
+    Decay,
+    Fill,
+    Precision,
+    PulseState,
+    PulseTimes,
+    Role,
+    Side,
+)
 from pulsemend.signal import design
 from pulsemend.signal.apply_fir import rate_ratio
 from pulsemend.signal.fills import default_flank_s, flank_samples
 from pulsemend.signal.gaps import Gap, lay_gaps, window_to_samples
-from pulsemend.units import ms_to_s
+from pulsemend.units import ms_to_s, uv_to_v
 
 RECORDED_TYPES = (ChannelType.EEG, ChannelType.EOG, ChannelType.EMG, ChannelType.ECG)
 """Channel types that become part of a set. Trigger channels and other quantities do not."""
@@ -83,6 +92,10 @@ class Setup:
         Empty without pulses.
     fill, side, flank
         How gaps are filled; `flank` in recorded samples.
+    decay : Decay
+        What is fitted to the signal after gaps and subtracted there.
+    decay_s, decay_least_v : float
+        Length of the stretch it is fitted to; channels where it is smaller at the gap's end are left alone.
     search_s : (float, float)
         Where a pulse's artifact may be, from its marker.
     pulses : tuple of ExpectedPulse
@@ -121,6 +134,9 @@ class Setup:
     fill: Fill
     side: Side
     flank: int
+    decay: Decay
+    decay_s: float
+    decay_least_v: float
     search_s: tuple[float, float]
     pulses: tuple[ExpectedPulse, ...]
     pulses_known: bool
@@ -221,6 +237,9 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         fill=plan.pulses.fill,
         side=plan.pulses.side,
         flank=flank_samples(_flank_s(plan), facts.rate_hz),
+        decay=plan.pulses.decay if groups else Decay.NONE,
+        decay_s=ms_to_s(plan.pulses.decay_ms),
+        decay_least_v=uv_to_v(plan.pulses.decay_least_uv),
         search_s=(ms_to_s(plan.pulses.search_ms[0]), ms_to_s(plan.pulses.search_ms[1])),
         pulses=_expected_pulses(facts, plan, marks),
         pulses_known=plan.pulses.times is not PulseTimes.NONE,

@@ -1,0 +1,405 @@
+"""What is learned of the decay after each gap: its shape per channel, its size per pulse, its price."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pulsemend.engine.decay_spans import decay_spans
+from pulsemend.engine.reading import read_stored
+from pulsemend.engine.setup import GapGroup, Setup
+from pulsemend.model.recording import Recording
+from pulsemend.model.vocabulary import Decay
+from pulsemend.progress import Progress, Work
+from pulsemend.signal.absorption import LATENCIES_S, Absorption, absorption
+from pulsemend.signal.autocovariance import AutocovarianceSum
+from pulsemend.signal.decay import (
+    DecayShape,
+    amplitude_weights,
+    block_means,
+    covariance_of,
+    fit_shape,
+    settled_amplitudes,
+)
+from pulsemend.signal.gaps import window_to_samples
+
+MOST_PULSES = 300
+"""The median pulse is taken over so many, spread evenly over the recording."""
+
+SHORTEST_S = 0.005
+"""A stretch shorter than this before the next gap tells nothing of a decay."""
+
+TOLD_APART = 4.0
+"""The fall after the gap counts if it is so many times its own standard error over the pulses."""
+
+_FIT_HZ = 5000.0
+_MOST_POINTS = 1000
+_MOST_BLOCKS = 100
+_LEAST_BLOCKS = 8
+_SEED = 20
+_STAGE = "fitting the decay"
+_ARRAYS = ("columns", "values", "amplitudes", "spread", "share", "share_low", "share_high")
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class DecayEstimates:
+    """What was learned of the decays.
+
+    Parameters
+    ----------
+    kind : Decay
+    reasons : tuple of str
+        For every used channel why no decay was fitted in it; empty where one was.
+    columns : int array, shape (n_fitted,)
+        The fitted ones among the used channels.
+    values : array, shape (n_fitted, 4)
+        Of `DecayShape`, in volts and in seconds from the gap's end; NaN beyond those the kind has.
+    amplitudes : array, shape (n_fitted, n_pulses)
+        Relative to the median pulse.
+    spread : array, shape (n_fitted,)
+        Standard deviation of the true amplitudes; 0 where noise alone explains what was seen.
+    share, share_low, share_high : array, shape (n_fitted, n_latencies)
+        Of a test response that comes back, at `signal.absorption.LATENCIES_S`: median and interval.
+    n_pulses : int
+        Pulses that the shapes were fitted to, at most.
+    """
+
+    kind: Decay
+    reasons: tuple[str, ...]
+    columns: NDArray[np.intp]
+    values: Floats
+    amplitudes: Floats
+    spread: Floats
+    share: Floats
+    share_low: Floats
+    share_high: Floats
+    n_pulses: int
+
+    def save(self, group: Any) -> None:
+        """Write into a group of an HDF5 file."""
+        group.attrs["kind"] = self.kind.value
+        group.attrs["reasons"] = json.dumps(self.reasons)
+        group.attrs["n_pulses"] = self.n_pulses
+        group["latencies_s"] = np.array(LATENCIES_S)
+        for name in _ARRAYS:
+            group[name] = getattr(self, name)
+
+    @classmethod
+    def load(cls, group: Any) -> DecayEstimates:
+        """Read what `save` wrote.
+
+        Raises
+        ------
+        KeyError, ValueError
+            Something else wrote it.
+        """
+        arrays = {name: group[name][()] for name in _ARRAYS}
+        return cls(
+            kind=Decay(group.attrs["kind"]),
+            reasons=tuple(json.loads(group.attrs["reasons"])),
+            n_pulses=int(group.attrs["n_pulses"]),
+            **arrays,
+        )
+
+    def shape(self, place: int) -> DecayShape:
+        """Shape of a fitted channel's decay, volts, from the gap's end."""
+        values = self.values[place]
+        return DecayShape(self.kind.value, tuple(float(value) for value in values[np.isfinite(values)]))
+
+    def absorption(self, place: int) -> Absorption:
+        """How much of a response the fit in a fitted channel leaves."""
+        return Absorption(
+            np.array(LATENCIES_S), self.share[place], self.share_low[place], self.share_high[place]
+        )
+
+
+@dataclass(frozen=True)
+class DecayGrid:
+    """How the stretches after the gaps are made smaller before anything is fitted to them.
+
+    Parameters
+    ----------
+    point : int
+        Recorded samples per point of the shape's fit.
+    block : int
+        Points per block of the amplitudes' fit.
+    n_points : int
+        Points in the whole stretch.
+    """
+
+    point: int
+    block: int
+    n_points: int
+
+    @property
+    def block_samples(self) -> int:
+        """Recorded samples per block."""
+        return self.point * self.block
+
+    @property
+    def n_blocks(self) -> int:
+        """Blocks in the whole stretch."""
+        return self.n_points // self.block
+
+
+def decay_grid(setup: Setup) -> DecayGrid:
+    """Choose points of at most 0.2 ms, as long as these are not too many, and about a hundred blocks."""
+    n_samples = round(setup.decay_s * setup.facts.rate_hz)
+    point = max(1, int(setup.facts.rate_hz // _FIT_HZ), -(-n_samples // _MOST_POINTS))
+    n_points = max(1, n_samples // point)
+    return DecayGrid(point, -(-n_points // _MOST_BLOCKS), n_points)
+
+
+class BackgroundSum:
+    """Collects the autocovariance of the background, in blocks as long as those of the amplitudes' fit."""
+
+    def __init__(self, setup: Setup) -> None:
+        self._grid = decay_grid(setup)
+        self._sum = AutocovarianceSum(setup.used.size, max(2, self._grid.n_blocks))
+
+    def add(self, volts: NDArray[Any]) -> None:
+        """Take in one pulse-free window, shape (n_samples, n_used)."""
+        self._sum.add(block_means(volts, self._grid.block_samples))
+
+    def result(self) -> Floats | None:
+        """Autocovariance of blocks, shape (n_used, n_blocks); None where no window was long enough."""
+        return self._sum.result() if self._sum.n_samples else None
+
+
+def learn_decay(
+    recording: Recording,
+    setup: Setup,
+    onsets: Sequence[int],
+    background: Floats | None,
+    columns: NDArray[np.intp] | None = None,
+) -> Work[DecayEstimates]:
+    """Fit the decay of every channel: its shape from the median pulse, its amplitude per pulse.
+
+    Parameters
+    ----------
+    recording : Recording
+        The stretches after the gaps are read, pulse by pulse.
+    setup : Setup
+        Plan and marks, bound to it.
+    onsets : sequence of int
+        Of the pulses, in order of time.
+    background : array, shape (n_used, n_blocks), or None
+        From `BackgroundSum`; without it every pulse counts as large as the median pulse.
+    columns : array of int or None
+        Only these of the used channels, and no absorption: for a first picture.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    DecayEstimates
+    """
+    reasons = [""] * setup.used.size
+    found: dict[int, _Fitted] = {}
+    chosen = np.arange(setup.used.size) if columns is None else columns
+    n_pulses = 0
+    for group in setup.groups:
+        members = np.intersect1d(group.columns, chosen)
+        stretches = yield from _read_stretches(recording, setup, group, members, onsets)
+        n_pulses = max(n_pulses, stretches.n_pulses)
+        for place, column in enumerate(members.tolist()):
+            yield Progress(_STAGE, len(found) + sum(map(bool, reasons)), chosen.size)
+            own = None if background is None else background[column]
+            fitted = _fit_channel(setup, stretches, place, own, columns is None)
+            if isinstance(fitted, str):
+                reasons[column] = fitted
+            else:
+                found[column] = fitted
+    if columns is not None:
+        left = np.setdiff1d(np.arange(setup.used.size), columns)
+        reasons = ["not looked at yet" if i in left else reason for i, reason in enumerate(reasons)]
+    return _estimates(setup, reasons, found, len(onsets), n_pulses)
+
+
+@dataclass(frozen=True)
+class _Fitted:
+    shape: DecayShape
+    amplitudes: Floats
+    spread: float
+    absorbed: Absorption | None
+
+
+@dataclass(frozen=True)
+class _Stretches:
+    """The signal after the gaps, in volts minus a constant of each.
+
+    Parameters
+    ----------
+    grid : DecayGrid
+    since_pulse_s : float
+        Where the gap ends.
+    points : float32 array, shape (n_chosen, n_points, n_members)
+        Of the pulses that the median is taken over; as long as at least half of them reach.
+    blocks : float32 array, shape (n_spans, n_blocks, n_members)
+        Of all pulses; NaN from where the next gap begins.
+    pulses : tuple of int
+        Place of each row of `blocks` among the pulses.
+    times_s : array, shape (n_points,)
+        From the gap's end.
+    n_onsets : int
+        All pulses.
+    """
+
+    grid: DecayGrid
+    since_pulse_s: float
+    points: NDArray[np.float32]
+    blocks: NDArray[np.float32]
+    pulses: tuple[int, ...]
+    times_s: Floats
+    n_onsets: int
+
+    @property
+    def n_pulses(self) -> int:
+        """Pulses that the median is taken over."""
+        return len(self.points)
+
+
+def _read_stretches(
+    recording: Recording,
+    setup: Setup,
+    group: GapGroup,
+    members: NDArray[np.intp],
+    onsets: Sequence[int],
+) -> Work[_Stretches]:
+    grid = decay_grid(setup)
+    rate_hz = setup.facts.rate_hz
+    # Where a joined gap ends later than the pulse's own, the shape's beginning is not there to be seen.
+    spans = [
+        span
+        for segment in setup.facts.segments
+        for span in decay_spans(setup, group, onsets, segment)
+        if span.start == span.origin
+    ]
+    reach = np.array([min((s.clean_stop - s.origin) // grid.point, grid.n_points) for s in spans], np.intp)
+    n_points = int(np.sort(reach)[::-1][(len(reach) - 1) // 2]) if len(reach) else 0
+    far = np.flatnonzero(reach >= max(n_points, 1))
+    if far.size > MOST_PULSES:
+        far = far[np.linspace(0, far.size - 1, MOST_PULSES).round().astype(int)]
+    row_of = {int(span): row for row, span in enumerate(far)}
+    points = np.empty((far.size, n_points, members.size), np.float32)
+    blocks = np.full((len(spans), grid.n_blocks, members.size), np.nan, np.float32)
+    scale_v = setup.scale_v[members]
+    for place, span in enumerate(spans):
+        yield Progress("reading the decay", place, len(spans))
+        n = int(reach[place])
+        if n < grid.block:
+            continue
+        stop = span.origin + n * grid.point
+        # Counting from a sample of its own, single precision is enough.
+        origin = read_stored(recording, setup, span.origin, span.origin + 1)[0]
+        x = read_stored(recording, setup, span.origin, stop, origin, np.float32)[:, members]
+        volts = block_means((x * scale_v).astype(np.float32), grid.point)
+        coarse = block_means(volts, grid.block)
+        blocks[place, : len(coarse)] = coarse
+        if place in row_of:
+            points[row_of[place]] = volts[:n_points]
+    # Each point is the mean of its samples and stands in their middle.
+    times_s = np.asarray((np.arange(n_points) * grid.point + (grid.point - 1) / 2.0) / rate_hz)
+    since_s = window_to_samples(0, group.windows_s[0], rate_hz)[1] / rate_hz
+    pulses = tuple(span.pulse for span in spans)
+    return _Stretches(grid, since_s, points, blocks, pulses, times_s, len(onsets))
+
+
+def _fit_channel(
+    setup: Setup, stretches: _Stretches, place: int, background: Floats | None, with_absorption: bool
+) -> _Fitted | str:
+    """Fit one channel, or say why there is nothing to fit."""
+    times_s = stretches.times_s
+    if not stretches.n_pulses:
+        return "no pulse is followed by a clean stretch"
+    if len(times_s) < 2 or times_s[-1] < SHORTEST_S:
+        return "the next gap follows too soon in most pulses"
+    x = stretches.points[:, :, place].astype(np.float64)
+    x -= x.mean(axis=1, keepdims=True)
+    reason = _not_told_apart(x, times_s)
+    if reason:
+        return reason
+    median = np.median(x, axis=0)
+    fit = fit_shape(times_s, median, setup.decay.value)
+    if fit.shape is None:
+        return fit.reason
+    least_v = setup.decay_least_v
+    if abs(float(fit.shape.at(np.zeros(1))[0])) < least_v:
+        return "smaller than decay_least_uv at the gap's end"
+    amplitudes, spread = _amplitudes(stretches, place, fit.shape, background)
+    absorbed = None
+    if with_absorption:
+        absorbed = absorption(times_s, median, fit.shape, stretches.since_pulse_s, _SEED)
+    return _Fitted(fit.shape, amplitudes, spread, absorbed)
+
+
+def _not_told_apart(x: Floats, times_s: Floats) -> str:
+    """Whether the fall over the stretch is within what background leaves in the median over these pulses."""
+    early = times_s - times_s[0] < 0.001
+    falls = x[:, early].mean(axis=1) - x[:, -(len(times_s) // 4 + 1) :].mean(axis=1)
+    middle = float(np.median(falls))
+    if len(falls) < 3:
+        return ""
+    # Standard error of a median: 1.2533 times that of a mean; 1.4826 times the MAD is a standard deviation.
+    error = 1.2533 * 1.4826 * float(np.median(np.abs(falls - middle))) / np.sqrt(len(falls))
+    return "" if abs(middle) > TOLD_APART * error else "not told apart from the background"
+
+
+def _amplitudes(
+    stretches: _Stretches, place: int, shape: DecayShape, background: Floats | None
+) -> tuple[Floats, float]:
+    """Amplitude of every pulse, and their true spread."""
+    grid = stretches.grid
+    blocks = stretches.blocks[:, :, place].astype(np.float64)
+    of_all = np.ones(stretches.n_onsets)
+    if background is None:
+        return of_all, 0.0
+    samples = np.arange(grid.n_blocks * grid.block) * grid.point + (grid.point - 1) / 2.0
+    step_s = (stretches.times_s[1] - stretches.times_s[0]) / grid.point
+    means = block_means(shape.at(samples * step_s), grid.block)
+    lengths = np.isfinite(blocks).sum(axis=1)
+    amplitudes, variances = np.full((2, len(blocks)), np.nan)
+    for n in np.unique(lengths).tolist():
+        if n >= min(_LEAST_BLOCKS, grid.n_blocks):
+            rows = lengths == n
+            weights, variance = amplitude_weights(means[:n], covariance_of(background[:n]))
+            amplitudes[rows], variances[rows] = blocks[rows, :n] @ weights, variance
+    of_all[list(stretches.pulses)], spread = settled_amplitudes(amplitudes, variances)
+    return of_all, spread
+
+
+def _estimates(
+    setup: Setup, reasons: Sequence[str], found: dict[int, _Fitted], n_onsets: int, n_pulses: int
+) -> DecayEstimates:
+    columns = np.array(sorted(found), dtype=np.intp)
+    values = np.full((columns.size, 4), np.nan)
+    amplitudes = np.ones((columns.size, n_onsets))
+    shares = np.full((3, columns.size, len(LATENCIES_S)), np.nan)
+    for row, column in enumerate(columns.tolist()):
+        fitted = found[column]
+        values[row, : len(fitted.shape.values)] = fitted.shape.values
+        amplitudes[row] = fitted.amplitudes
+        if fitted.absorbed is not None:
+            shares[:, row] = fitted.absorbed.median, fitted.absorbed.low, fitted.absorbed.high
+    spread = np.array([found[column].spread for column in columns.tolist()], dtype=np.float64)
+    return DecayEstimates(
+        kind=setup.decay,
+        reasons=tuple(reasons),
+        columns=columns,
+        values=values,
+        amplitudes=amplitudes,
+        spread=spread,
+        share=shares[0],
+        share_low=shares[1],
+        share_high=shares[2],
+        n_pulses=n_pulses,
+    )
