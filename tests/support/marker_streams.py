@@ -192,9 +192,9 @@ def draw_stream(rng: random.Random, plan: Plan, n_trials: int, mix: Mix) -> Stre
     return Stream(plan, tuple(sorted([*sent, *extra], key=lambda m: m.sample)), tuple(trials), tuple(faults))
 
 
-def _draw_times(rng: random.Random, way: Variant, start_s: float) -> dict[str, float]:
+def _draw_times(rng: random.Random, way: Variant, start_s: float, tries: int = 10_000) -> dict[str, float]:
     """Draw times of a whole trial within all limits, to the millisecond."""
-    while True:
+    for _ in range(tries):
         times: dict[str, float] = {}
         for slot in way.slots:
             if slot.optional and rng.random() > OPTIONAL_SHARE:
@@ -209,6 +209,8 @@ def _draw_times(rng: random.Random, way: Variant, start_s: float) -> dict[str, f
         spaced = all(b - a >= 0.002 for a, b in itertools.pairwise(times.values()))
         if complete and spaced and can_be_met(way.slots, times):
             return times
+    message = "these limits are met too rarely by chance"
+    raise ValueError(message)
 
 
 def draw_plan(rng: random.Random) -> Plan:
@@ -246,7 +248,9 @@ def draw_plan(rng: random.Random) -> Plan:
             check_trials(plan)
             for way in variants(plan):
                 pair_bounds(way.slots)
-        except PlanError:
+                for _ in range(5):
+                    _draw_times(rng, way, 0.0, tries=200)
+        except (PlanError, ValueError):
             continue
         if all(sum(not slot.optional for slot in way.slots) >= 3 for way in variants(plan)):
             return plan

@@ -9,7 +9,7 @@ good. Where that number is above one, nothing is guessed: the trials concerned a
 from __future__ import annotations
 
 from bisect import bisect_left
-from collections.abc import Mapping, Sequence
+from collections.abc import Hashable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property, lru_cache
 from itertools import accumulate
@@ -107,7 +107,7 @@ def _aligned(events: tuple[Event, ...], variants: tuple[Variant, ...]) -> tuple[
     # Most edits of a plan change neither markers nor slots.
     if not events:
         return ()
-    return _Aligner(events, tuple(_way(variant) for variant in variants)).trials()
+    return _Aligner(events, _ways(variants)).trials()
 
 
 class _Way:
@@ -116,13 +116,14 @@ class _Way:
     def __init__(self, variant: Variant) -> None:
         slots = variant.slots
         self.kind = variant.kind
+        self.slots = slots
         self.names = tuple(slot.slot for slot in slots)
         self.roles = tuple(slot.role for slot in slots)
         self.takes_found = tuple(slot.from_signal for slot in slots)
         self.bounds: Bounds = pair_bounds(slots)
         self.size = len(slots)
-        self.is_required = tuple(not slot.optional for slot in slots)
-        costs = [MISSING * required for required in self.is_required]
+        self.required = tuple(slot.slot for slot in slots if not slot.optional)
+        costs = [0 if slot.optional else MISSING for slot in slots]
         # Cost of missing slots before and behind each place.
         self.before = tuple(sum(costs[:place]) for place in range(self.size + 1))
         self.after = tuple(sum(costs[place + 1 :]) for place in range(self.size))
@@ -132,23 +133,16 @@ class _Way:
             places[slot.after] if slot.after and slots[places[slot.after]].optional else None
             for slot in slots
         )
-        self.starts = tuple(self.state((place,)) for place in range(self.size) if self.may_start(place))
-        self._states: dict[tuple[int, ...], _State] = {one.filled: one for one in self.starts}
 
     def may_start(self, place: int) -> bool:
         """Tell whether a trial may be seen from this slot on: one lacking more than it has is never best."""
         return self.needs[place] is None and self.before[place] <= LEFT_OVER * (self.size - place)
 
-    def state(self, filled: tuple[int, ...]) -> _State:
-        """Make the state of a trial with these slots filled, of which only those that still matter count."""
-        return _State(self, filled)
-
-    def known_state(self, filled: tuple[int, ...]) -> _State:
-        """Look up the state of these slots: there is one, since nodes are told apart by it."""
-        found = self._states.get(filled)
-        if found is None:
-            found = self._states[filled] = self.state(filled)
-        return found
+    def beginning(self, place: int) -> Hashable:
+        """Everything about the slots up to a place that matters; ways that share it are told apart later."""
+        upto = range(place + 1)
+        bounds = tuple(round(self.bounds[a][b], 9) for a in upto for b in upto)
+        return self.kind, self.slots[: place + 1], bounds
 
     def matters(self, place: int, filled: tuple[int, ...]) -> bool:
         """Tell whether a filled slot still bounds a later one beyond what the other filled ones do."""
@@ -166,9 +160,40 @@ class _Way:
         return False
 
 
-@lru_cache(maxsize=200)
-def _way(variant: Variant) -> _Way:
-    return _Way(variant)
+class _Ways:
+    """All variants; those that begin alike, as with more or fewer repeats of a group, share their states."""
+
+    def __init__(self, variants: tuple[Variant, ...]) -> None:
+        ways = [_Way(variant) for variant in variants]
+        self.most_slots = max((way.size for way in ways), default=0)
+        self.sharing: dict[Hashable, list[_Way]] = {}
+        self.beginnings: dict[_Way, tuple[Hashable, ...]] = {}
+        numbers: dict[Hashable, int] = {}
+        for way in ways:
+            alike = [way.beginning(place) for place in range(way.size)]
+            self.beginnings[way] = tuple(numbers.setdefault(one, len(numbers)) for one in alike)
+            for number in self.beginnings[way]:
+                self.sharing.setdefault(number, []).append(way)
+        self._states: dict[tuple[Hashable, tuple[int, ...]], _State] = {}
+        starts = [
+            self.state(self.beginnings[way][place], (place,))
+            for way in ways
+            for place in range(way.size)
+            if way.may_start(place)
+        ]
+        self.starts = tuple(dict.fromkeys(starts))
+
+    def state(self, beginning: Hashable, filled: tuple[int, ...]) -> _State:
+        """Look up the state of these slots: there is one, since nodes are told apart by it."""
+        found = self._states.get((beginning, filled))
+        if found is None:
+            found = self._states[beginning, filled] = _State(self, self.sharing[beginning], filled)
+        return found
+
+
+@lru_cache(maxsize=4)
+def _ways(variants: tuple[Variant, ...]) -> _Ways:
+    return _Ways(variants)
 
 
 @dataclass(frozen=True)
@@ -179,7 +204,6 @@ class _Step:
     among the filled slots and the new one, of those that still matter then.
     """
 
-    slot: int
     skipped: int
     takes_found: bool
     limits: tuple[tuple[float, float], ...]
@@ -190,38 +214,49 @@ class _Step:
 class _State:
     """Which slots of a trial under way are filled, as far as it matters for the rest; the last one is."""
 
-    def __init__(self, way: _Way, filled: tuple[int, ...]) -> None:
-        self.way = way
+    def __init__(self, all_ways: _Ways, ways: Sequence[_Way], filled: tuple[int, ...]) -> None:
+        self.all_ways = all_ways
+        self.ways = ways
         self.filled = filled
         self.slot = filled[-1]
-        self.after = way.after[self.slot]
-        self.before = way.before[self.slot]
+        self.kind = ways[0].kind
+        self.name = ways[0].names[self.slot]
+        self.before = ways[0].before[self.slot]
+        self.after = min(way.after[self.slot] for way in ways)
+        # Ways that the trial may have run if it ends here.
+        self.ends = tuple({way.required: way for way in ways if way.after[self.slot] == self.after}.values())
         # What another explanation of the same markers costs at most beyond that of all before: all left over,
         # or a trial from this slot on, which can do the same unless a later slot needs one filled before.
-        self.at_most = LEFT_OVER * (way.size - self.slot)
-        if way.needs[self.slot] is None and not any(place in way.needs for place in filled[:-1]):
+        self.at_most = LEFT_OVER * (max(way.size for way in ways) - self.slot)
+        needed = {place for way in ways for place in way.needs}
+        if ways[0].needs[self.slot] is None and needed.isdisjoint(filled[:-1]):
             self.at_most = min(self.at_most, self.before)
 
     @cached_property
     def steps(self) -> tuple[tuple[Role, _Step], ...]:
         """All ways on."""
-        return tuple(
-            (self.way.roles[later], self._step(later))
-            for later in range(self.slot + 1, self.way.size)
-            if self.way.needs[later] is None or self.way.needs[later] in self.filled
-        )
+        found: dict[Hashable, tuple[Role, _Step]] = {}
+        for way in self.ways:
+            for later in range(self.slot + 1, way.size):
+                beginning = self.all_ways.beginnings[way][later]
+                if beginning not in found and way.needs[later] in (None, *self.filled):
+                    found[beginning] = way.roles[later], self._step(way, later, beginning)
+        return tuple(found.values())
 
-    def _step(self, later: int) -> _Step:
-        way = self.way
+    def _step(self, way: _Way, later: int, beginning: Hashable) -> _Step:
         filled = (*self.filled, later)
-        kept = tuple(place for place, slot in enumerate(filled) if way.matters(slot, filled))
+        sharing = self.all_ways.sharing[beginning]
+        kept = tuple(
+            place
+            for place, slot in enumerate(filled)
+            if any(other.matters(slot, filled) for other in sharing)
+        )
         return _Step(
-            later,
             way.before[later] - way.before[self.slot + 1],
             way.takes_found[later],
             tuple((-way.bounds[later][at], way.bounds[at][later]) for at in self.filled),
             kept,
-            way.known_state(tuple(filled[place] for place in kept)),
+            self.all_ways.state(beginning, tuple(filled[place] for place in kept)),
         )
 
 
@@ -251,9 +286,8 @@ class _Node:
 
 
 class _Aligner:
-    def __init__(self, events: Sequence[Event], ways: Sequence[_Way]) -> None:
+    def __init__(self, events: Sequence[Event], ways: _Ways) -> None:
         self.events = events
-        self.ways = ways
         self.times = [event.time_s for event in events]
         self.of_role: dict[Role, tuple[list[float], list[int]]] = {role: ([], []) for role in Role}
         for place, event in enumerate(events):
@@ -263,13 +297,13 @@ class _Aligner:
         self.is_found = [event.is_found for event in events]
         self.left_over = [UNUSED if found else LEFT_OVER for found in self.is_found]
         self.cost_before = list(accumulate(self.left_over, initial=0))
-        self.foreign = _FOREIGN * max(way.size for way in ways)
-        starts = [state for way in ways for state in way.starts]
+        self.foreign = _FOREIGN * ways.most_slots
         self.starts = {
             (role, found): [
                 state
-                for state in starts
-                if state.way.roles[state.slot] is role and (state.way.takes_found[state.slot] or not found)
+                for state in ways.starts
+                if state.ways[0].roles[state.slot] is role
+                and (state.ways[0].takes_found[state.slot] or not found)
             ]
             for role in self.of_role
             for found in (False, True)
@@ -299,7 +333,8 @@ class _Aligner:
             if node.cost > here.cost + key[0].at_most:
                 del nodes[key]
             else:
-                following.offer(node.cost + key[0].after, node)
+                for _ in key[0].ends:
+                    following.offer(node.cost + key[0].after, node)
                 self.go_on(node, key[0])
 
     def go_on(self, node: _Node, state: _State) -> None:
@@ -367,12 +402,9 @@ class _Aligner:
     def whole(self, trial: Sequence[_Node]) -> Placed:
         """Describe a trial by itself."""
         states = [(node.state, node.event) for node in trial if node.state is not None]
-        way = states[0][0].way
-        places = {way.names[state.slot]: event for state, event in states}
-        named = zip(way.names, way.is_required, strict=True)
-        return Placed(
-            way.kind, places, tuple(name for name, required in named if required and name not in places)
-        )
+        way = states[-1][0].ends[0]
+        places = {state.name: event for state, event in states}
+        return Placed(way.kind, places, tuple(name for name in way.required if name not in places))
 
     def is_certain(self, trial: Sequence[_Node]) -> bool:
         """Tell whether all best explanations have this trial as it is."""
@@ -385,8 +417,8 @@ class _Aligner:
         others: dict[str, list[int]] = {}
         for event in span:
             for state in dict.fromkeys(key[0] for key, node in self.open[event].items() if node.through):
-                name = state.way.names[state.slot]
-                kinds[state.way.kind] = None
+                name = state.name
+                kinds[state.kind] = None
                 if event != whole.places.get(name) and event not in others.get(name, ()):
                     others.setdefault(name, []).append(event)
         return replace(
