@@ -94,7 +94,7 @@ class SetEpoch:
     replaced_share : float
         Share of the epoch's samples, over all channels, that `/replaced` marks; 0 to 1.
     leak : str
-        What pulses still contribute; "n/a" until it is measured.
+        What pulses still contribute, in microvolts; "n/a" where no pulse is known.
     """
 
     candidate: Candidate

@@ -16,14 +16,18 @@ from numpy.typing import NDArray
 
 from pulsemend import DATA_VERSION, __version__
 from pulsemend.engine.chain import Cut
+from pulsemend.engine.leak import Leak, measure_leak
 from pulsemend.engine.onsets import OnsetShift
 from pulsemend.engine.steps import steps
 from pulsemend.export.contents import SetChannel, SetContents, SetEpoch, Zero
+from pulsemend.export.readiness import LEAK_LIMIT_UV
 from pulsemend.export.set_writer import SetWriter, check_place
 from pulsemend.mending.prepare import Prepared, Request, marked_only, need_epochs, prepare, set_channels
+from pulsemend.model.epochs import NOT_AVAILABLE
 from pulsemend.progress import Progress, Work
 from pulsemend.readers.opening import open_recording
 from pulsemend.trials.later import later_by_rule
+from pulsemend.units import v_to_uv
 
 RANK_TOLERANCE = 1e-5
 """Directions of the set in which the amplitude is below this share of the strongest direction's do not count:
@@ -87,7 +91,8 @@ def mend(request: Request, out: Path, *, overwrite: bool = False) -> Work[MendRe
     try:
         need_epochs(prepared)
         cuts = cut_all(prepared)
-        contents = set_contents(prepared, cuts)
+        leak = yield from measure_leak(prepared.chain, prepared.estimates, cuts)
+        contents = set_contents(prepared, cuts, leak)
         rank = _Rank(contents.shape)
         with SetWriter(contents, out, overwrite) as writer:
             for index, cut in enumerate(cuts):
@@ -135,7 +140,7 @@ def cut_all(prepared: Prepared) -> list[Cut]:
     ]
 
 
-def set_contents(prepared: Prepared, cuts: Sequence[Cut]) -> SetContents:
+def set_contents(prepared: Prepared, cuts: Sequence[Cut], leak: Leak) -> SetContents:
     """Describe the set before its first sample.
 
     Parameters
@@ -144,6 +149,8 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut]) -> SetContents:
         The recording, opened and decided.
     cuts : sequence of Cut
         One for each kept epoch.
+    leak : Leak
+        Of the same epochs.
     """
     plan, setup = prepared.plan, prepared.setup
     recorded_hz = setup.facts.rate_hz
@@ -154,8 +161,9 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut]) -> SetContents:
             start_s=candidate.start_s,
             shift_s=cut.shift_s or cut.remainder_s,
             replaced_share=prepared.chain.replaced_share(cut),
+            leak=_leak_text(leak, peak_v),
         )
-        for candidate, cut in zip(prepared.kept, cuts, strict=True)
+        for candidate, cut, peak_v in zip(prepared.kept, cuts, leak.peaks_v.tolist(), strict=True)
     )
     starts = {round(candidate.start_s * setup.rate_hz) for candidate in prepared.kept}
     zero: Zero = "anchor" if len(starts) == 1 else "epoch start"
@@ -181,7 +189,7 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut]) -> SetContents:
         highpass_hz=plan.filter.highpass_hz,
         lowpass_hz=plan.filter.lowpass_hz or reduced_lowpass_hz,
         replaced_reach_s=setup.replaced_reach_s,
-        provenance=provenance(prepared),
+        provenance={**provenance(prepared), "leak": _leak_provenance(leak)},
         later=later_labels(prepared),
     )
 
@@ -230,6 +238,23 @@ def provenance(prepared: Prepared) -> dict[str, Any]:
         "kept_per_rule": kept_per_rule(prepared),
         "rank_tolerance": RANK_TOLERANCE,
         "warnings": list(prepared.warnings),
+    }
+
+
+def _leak_text(leak: Leak, peak_v: float) -> str:
+    return f"{v_to_uv(peak_v):.4f}" if leak.n_pulses else NOT_AVAILABLE
+
+
+def _leak_provenance(leak: Leak) -> dict[str, Any] | None:
+    if not leak.n_pulses:
+        return None
+    peaks_uv = v_to_uv(leak.peaks_v)
+    return {
+        "median_of_pulses": leak.n_pulses,
+        "limit_uv": LEAK_LIMIT_UV,
+        "largest_uv": round(float(peaks_uv.max(initial=0.0)), 4),
+        "epochs_above": int((peaks_uv > LEAK_LIMIT_UV).sum()),
+        "epochs": len(peaks_uv),
     }
 
 
