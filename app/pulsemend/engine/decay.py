@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import json
+from bisect import bisect_right
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -18,15 +20,14 @@ from pulsemend.model.vocabulary import Decay
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.absorption import LATENCIES_S, Absorption, absorption
 from pulsemend.signal.autocovariance import AutocovarianceSum
-from pulsemend.signal.decay import (
-    DecayShape,
+from pulsemend.signal.decay import NOTHING_LATE, DecayShape, Late, fit_shape
+from pulsemend.signal.decay_amplitudes import (
     amplitude_weights,
     block_means,
     covariance_of,
-    fit_shape,
     settled_amplitudes,
 )
-from pulsemend.signal.gaps import window_to_samples
+from pulsemend.signal.gaps import merge_spans, window_to_samples
 
 MOST_PULSES = 300
 """The median pulse is taken over so many, spread evenly over the recording."""
@@ -36,6 +37,12 @@ SHORTEST_S = 0.005
 
 TOLD_APART = 4.0
 """The fall after the gap counts if it is so many times its own standard error over the pulses."""
+
+LATE_S = (0.250, 0.500)
+"""Since the gap's end: the level that the signal falls to is seen here, too, unless the stretch is that long.
+Within 80 ms alone a slow decay and another level look alike, and a wrong level is a wrong tail."""
+
+LATE_BLOCKS = 5
 
 _FIT_HZ = 5000.0
 _MOST_POINTS = 1000
@@ -246,6 +253,10 @@ class _Stretches:
         Of the pulses that the median is taken over; as long as at least half of them reach.
     blocks : float32 array, shape (n_spans, n_blocks, n_members)
         Of all pulses; NaN from where the next gap begins.
+    late : float32 array, shape (n_chosen, LATE_BLOCKS, n_members)
+        Medians over parts of `LATE_S`; NaN where these are not clean.
+    late_s : array, shape (LATE_BLOCKS,)
+        Their middles, from the gap's end.
     pulses : tuple of int
         Place of each row of `blocks` among the pulses.
     times_s : array, shape (n_points,)
@@ -258,6 +269,8 @@ class _Stretches:
     since_pulse_s: float
     points: NDArray[np.float32]
     blocks: NDArray[np.float32]
+    late: NDArray[np.float32]
+    late_s: Floats
     pulses: tuple[int, ...]
     times_s: Floats
     n_onsets: int
@@ -291,6 +304,10 @@ def _read_stretches(
         far = far[np.linspace(0, far.size - 1, MOST_PULSES).round().astype(int)]
     row_of = {int(span): row for row, span in enumerate(far)}
     points = np.empty((far.size, n_points, members.size), np.float32)
+    late = np.full((far.size, LATE_BLOCKS, members.size), np.nan, np.float32)
+    edges = _late_edges(setup)
+    gaps = [gap for segment in setup.facts.segments for gap in setup.lay(group, onsets, segment)]
+    closed = merge_spans([*((gap.start, gap.stop) for gap in gaps), *setup.barriers])
     blocks = np.full((len(spans), grid.n_blocks, members.size), np.nan, np.float32)
     scale_v = setup.scale_v[members]
     for place, span in enumerate(spans):
@@ -307,11 +324,29 @@ def _read_stretches(
         blocks[place, : len(coarse)] = coarse
         if place in row_of:
             points[row_of[place]] = volts[:n_points]
+            for block, (a, b) in enumerate(pairwise(edges)):
+                if span.origin + b <= span.stop and not _touches(closed, span.origin + a, span.origin + b):
+                    y = read_stored(recording, setup, span.origin + a, span.origin + b, origin, np.float32)
+                    late[row_of[place], block] = np.median(y[:, members], axis=0) * scale_v
     # Each point is the mean of its samples and stands in their middle.
     times_s = np.asarray((np.arange(n_points) * grid.point + (grid.point - 1) / 2.0) / rate_hz)
     since_s = window_to_samples(0, group.windows_s[0], rate_hz)[1] / rate_hz
     pulses = tuple(span.pulse for span in spans)
-    return _Stretches(grid, since_s, points, blocks, pulses, times_s, len(onsets))
+    late_s = (np.array(edges[1:]) + np.array(edges[:-1]) - 1) / 2.0 / rate_hz
+    return _Stretches(grid, since_s, points, blocks, late, late_s, pulses, times_s, len(onsets))
+
+
+def _touches(closed: Sequence[tuple[int, int]], start: int, stop: int) -> bool:
+    """Whether one of some sorted spans reaches into [start, stop)."""
+    place = bisect_right(closed, start, key=lambda span: span[1])
+    return place < len(closed) and closed[place][0] < stop
+
+
+def _late_edges(setup: Setup) -> list[int]:
+    """Edges of the late blocks in samples from the gap's end."""
+    first_s = max(LATE_S[0], setup.decay_s)
+    edges_s = np.linspace(first_s, first_s + LATE_S[1] - LATE_S[0], LATE_BLOCKS + 1)
+    return [round(edge * setup.facts.rate_hz) for edge in edges_s.tolist()]
 
 
 def _fit_channel(
@@ -324,12 +359,14 @@ def _fit_channel(
     if len(times_s) < 2 or times_s[-1] < SHORTEST_S:
         return "the next gap follows too soon in most pulses"
     x = stretches.points[:, :, place].astype(np.float64)
-    x -= x.mean(axis=1, keepdims=True)
+    means = x.mean(axis=1, keepdims=True)
+    x -= means
     reason = _not_told_apart(x, times_s)
     if reason:
         return reason
     median = np.median(x, axis=0)
-    fit = fit_shape(times_s, median, setup.decay.value)
+    late = _late(stretches, stretches.late[:, :, place] - means)
+    fit = fit_shape(times_s, median, setup.decay.value, late)
     if fit.shape is None:
         return fit.reason
     least_v = setup.decay_least_v
@@ -338,8 +375,17 @@ def _fit_channel(
     amplitudes, spread = _amplitudes(stretches, place, fit.shape, background)
     absorbed = None
     if with_absorption:
-        absorbed = absorption(times_s, median, fit.shape, stretches.since_pulse_s, _SEED)
+        absorbed = absorption(times_s, median, late, fit, stretches.since_pulse_s, _SEED)
     return _Fitted(fit.shape, amplitudes, spread, absorbed)
+
+
+def _late(stretches: _Stretches, y: Floats) -> Late:
+    """Medians over the pulses of the late blocks that enough pulses show clean."""
+    known = np.isfinite(y).sum(axis=0)
+    enough = known >= max(1, min(3, len(y)), len(y) // 4)
+    if not enough.any():
+        return NOTHING_LATE
+    return Late(stretches.late_s[enough], np.nanmedian(y[:, enough], axis=0))
 
 
 def _not_told_apart(x: Floats, times_s: Floats) -> str:

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from pulsemend.signal.decay import DecayShape, fit_shape
+from pulsemend.signal.decay import DecayFit, Late, fit_again
 from pulsemend.units import uv_to_v
 
 LATENCIES_S = (0.020, 0.030, 0.040, 0.050, 0.065, 0.080, 0.100, 0.130, 0.160, 0.200)
@@ -53,7 +53,7 @@ class Absorption:
 
 
 def absorption(
-    times_s: Floats, median_v: Floats, shape: DecayShape, since_pulse_s: float, seed: int
+    times_s: Floats, median_v: Floats, late: Late, fit: DecayFit, since_pulse_s: float, seed: int
 ) -> Absorption:
     """Add test responses to the median pulse, fit again, and see what comes back.
 
@@ -63,8 +63,10 @@ def absorption(
         Of the stretch that was fitted, from the gap's end.
     median_v : array, shape (n_times,)
         The median pulse, in volts.
-    shape : DecayShape
-        As fitted to it.
+    late : Late
+        The further points that were fitted, in volts.
+    fit : DecayFit
+        As fitted to them, with a shape.
     since_pulse_s : float
         The gap's end, from the pulse.
     seed : int
@@ -73,33 +75,39 @@ def absorption(
     Returns
     -------
     Absorption
+
+    Raises
+    ------
+    ValueError
+        The fit has no shape.
     """
+    if fit.shape is None:
+        raise ValueError("a fit without a shape absorbs nothing")
     rng = np.random.default_rng(seed)
-    step_s = float(times_s[1] - times_s[0])
+    n_draws = len(LATENCIES_S) * N_DRAWS
+    latency_s = np.repeat(LATENCIES_S, N_DRAWS)[:, None]
+    sign = np.tile([1.0, -1.0], n_draws // 2)[:, None]
+    size_v = sign * uv_to_v(rng.uniform(*SIZES_UV, (n_draws, 1)))
+    width_s = rng.uniform(*WIDTHS, (n_draws, 1)) * latency_s
+
+    def responses(at_s: Floats) -> Floats:
+        return np.asarray(size_v * np.exp(-0.5 * ((at_s + since_pulse_s - latency_s) / width_s) ** 2))
+
+    again = fit_again(times_s, median_v + responses(times_s), fit, late, late.y + responses(late.times_s))
+    # Far enough for the last response, at the stretch's own steps.
     reach_s = LATENCIES_S[-1] * (1.0 + 3.0 * WIDTHS[1]) - since_pulse_s
-    long_s = np.arange(max(len(times_s), round(reach_s / step_s))) * step_s + times_s[0]
-    before_v = shape.at(long_s)
-    shares = np.full((len(LATENCIES_S), N_DRAWS), np.nan)
-    for row, latency_s in zip(shares, LATENCIES_S, strict=True):
-        for draw in range(N_DRAWS):
-            size_v = uv_to_v(rng.uniform(*SIZES_UV)) * (-1.0) ** draw
-            width_s = rng.uniform(*WIDTHS) * latency_s
-            if latency_s < since_pulse_s:
-                continue
-            response_v = size_v * np.exp(-0.5 * ((long_s + since_pulse_s - latency_s) / width_s) ** 2)
-            fitted = fit_shape(times_s, median_v + response_v[: len(times_s)], shape.kind, start=shape)
-            # Where the response hides the decay altogether, nothing can be told of it.
-            if fitted.shape is not None:
-                left_v = response_v - (fitted.shape.at(long_s) - before_v)
-                row[draw] = float(left_v @ response_v / (response_v @ response_v))
-            else:
-                row[draw] = 0.0
-    usable = np.isfinite(shares).all(axis=1)
-    low, median, high = np.full((3, len(LATENCIES_S)), np.nan)
-    if usable.any():
-        low[usable], median[usable], high[usable] = np.percentile(
-            shares[usable], [INTERVAL[0], 50.0, INTERVAL[1]], axis=1
-        )
+    long_s = np.arange(times_s[0], max(times_s[-1], reach_s), times_s[1] - times_s[0])
+    before_v, added_v = fit.shape.at(long_s), responses(long_s)
+    shares = np.zeros(n_draws)
+    for place, (one, response_v) in enumerate(zip(again, added_v, strict=True)):
+        # Where the response hides the decay altogether, nothing of it counts as recovered.
+        if one.shape is not None:
+            left_v = response_v - (one.shape.at(long_s) - before_v)
+            shares[place] = left_v @ response_v / (response_v @ response_v)
+    of_latency = shares.reshape(len(LATENCIES_S), N_DRAWS)
+    low, median, high = np.percentile(of_latency, [INTERVAL[0], 50.0, INTERVAL[1]], axis=1)
+    for values in (low, median, high):
+        values[np.array(LATENCIES_S) < since_pulse_s] = np.nan
     return Absorption(np.array(LATENCIES_S), median, low, high)
 
 

@@ -20,7 +20,7 @@ References
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -40,6 +40,8 @@ LEAST_EXPLAINED = 0.5
 """A shape that leaves more than this share of the median pulse's variance unexplained is not its shape."""
 
 _GRID = 16
+_MOST_STEPS = 60
+_SETTLED = 1e-12
 _LARGEST = 3.0
 """A decay many times as large as what is seen of it rests on what lies outside the stretch."""
 
@@ -63,12 +65,12 @@ class DecayShape:
 
     def at(self, times_s: Floats) -> Floats:
         """Size of the decay at times counted as in the fit, in the signal's unit."""
-        return _curve(self.kind, np.array(self.values), np.asarray(times_s, np.float64))
+        return np.asarray(_curves(self.kind, np.array([self.values]), np.asarray(times_s, np.float64))[0])
 
 
 @dataclass(frozen=True)
 class DecayFit:
-    """Result of `fit_shape`.
+    """Result of a fit.
 
     Parameters
     ----------
@@ -85,23 +87,41 @@ class DecayFit:
     reason: str = ""
 
 
+class Late(NamedTuple):
+    """What is known of the signal long after the stretch: it tells a slow decay from another level.
+
+    Parameters
+    ----------
+    times_s : array, shape (n_late,)
+        Counted as in the stretch.
+    y : array, shape (n_late,)
+        Counts together as much as the whole stretch.
+    """
+
+    times_s: Floats
+    y: Floats
+
+
+NOTHING_LATE = Late(np.zeros(0), np.zeros(0))
+
+
 def fit_shape(
-    times_s: Floats, y: Floats, kind: str, *, level: bool = True, start: DecayShape | None = None
+    times_s: Floats, y: Floats, kind: str, late: Late = NOTHING_LATE, *, level: bool = True
 ) -> DecayFit:
-    """Fit a decay by bounded least squares.
+    """Fit a decay by bounded least squares [1]_, from the best of a grid of time constants on.
 
     Parameters
     ----------
     times_s : array, shape (n_times,)
-        Rising. Amplitudes belong to time 0; the first time need not be 0.
+        Rising, evenly. Amplitudes belong to time 0; the first time need not be 0.
     y : array, shape (n_times,)
         The median pulse, in any unit.
     kind : str
         One of `DECAY_KINDS`.
+    late : Late
+        Further points.
     level : bool
         Whether the signal may fall to another level than zero.
-    start : DecayShape or None
-        Where to start from; by default the best of a grid of time constants.
 
     Returns
     -------
@@ -111,196 +131,188 @@ def fit_shape(
     ------
     ValueError
         There is no such kind.
-    """
-    from scipy.optimize import least_squares
 
+    References
+    ----------
+    .. [1] Marquardt DW (1963) An algorithm for least-squares estimation of nonlinear parameters. J Soc Ind
+       Appl Math 11:431-441. doi:10.1137/0111030
+    """
     if kind not in DECAY_KINDS:
         raise ValueError(f"kind must be one of {DECAY_KINDS}; received {kind!r}")
-    times_s, y = np.asarray(times_s, np.float64), np.asarray(y, np.float64)
+    y = np.asarray(y, np.float64)
     if len(y) < 4 * _n_values(kind):
         return DecayFit(None, reason="the stretch after the gap is too short")
     size = float(np.ptp(y))
     if not size or not np.isfinite(size):
         return DecayFit(None, reason="the signal after the gap is constant")
     # Amplitudes near one, whatever the unit; and positive, because all of a decay falls in one direction.
-    third = max(1, len(y) // 3)
-    sign = 1.0 if y[:third].mean() >= y[-third:].mean() else -1.0
-    scaled = sign * y / size
-    first = _from_grid(times_s, scaled, kind, level) if start is None else _scaled(start, scaled, sign / size)
-    low, high = _bounds(kind, times_s)
-    # Without a level the last value is none that is sought.
-    sought = slice(None) if level else slice(-1)
+    end = late.y if late.y.size else y[-max(1, len(y) // 3) :]
+    factor = size if y[: max(1, len(y) // 10)].mean() >= end.mean() else -size
+    points = _points(times_s, kind, late, level)
+    target = np.concatenate([y, late.y])[None] / factor
+    values, _ = _descend(points, target, _from_grid(points, target[0])[None])
+    return _judged(points, values[0], target[0], factor)
 
-    def left(values: Floats) -> Floats:
-        return _curve(kind, values, times_s) + (values[-1] if level else 0.0) - scaled
 
-    def slopes(values: Floats) -> Floats:
-        return _slopes(kind, values, times_s)[:, sought]
+def fit_again(
+    times_s: Floats, ys: Floats, before: DecayFit, late: Late = NOTHING_LATE, late_ys: Floats | None = None
+) -> list[DecayFit]:
+    """Repeat a fit for many signals that differ little from the one it was made for, all at once.
 
-    found = least_squares(
-        left,
-        np.clip(first, low + 1e-9 * np.abs(low), high - 1e-9 * np.abs(high))[sought],
-        slopes,
-        (low[sought], high[sought]),
-        x_scale="jac",
-        ftol=1e-11,
-        xtol=1e-11,
-        gtol=1e-11,
-        max_nfev=60,
+    Parameters
+    ----------
+    times_s : array, shape (n_times,)
+        As in the fit.
+    ys : array, shape (n_signals, n_times)
+        The signals.
+    before : DecayFit
+        With a shape; where the search starts.
+    late : Late
+        As in the fit; only its times count here.
+    late_ys : array, shape (n_signals, n_late), or None
+        The further points of each signal.
+
+    Returns
+    -------
+    list of DecayFit
+        One for each signal.
+
+    Raises
+    ------
+    ValueError
+        The fit before has no shape.
+    """
+    if before.shape is None:
+        raise ValueError("a fit without a shape cannot be repeated")
+    kind = before.shape.kind
+    factor = float(before.shape.at(np.zeros(1))[0])
+    points = _points(times_s, kind, late, True)
+    target = np.hstack([ys] if late_ys is None else [ys, late_ys]) / factor
+    start = np.array([*before.shape.values, before.level])
+    start[[0, -1]] /= factor
+    if kind == "two exponentials":
+        start[2] /= factor
+    values, _ = _descend(points, target, np.tile(start, (len(ys), 1)))
+    return [_judged(points, found, one, factor) for found, one in zip(values, target, strict=True)]
+
+
+@dataclass(frozen=True)
+class _Points:
+    """Where a signal is fitted, and within which bounds."""
+
+    kind: str
+    times_s: Floats
+    n_stretch: int
+    weights: Floats
+    low: Floats
+    high: Floats
+    level: bool
+
+    @property
+    def shortest_s(self) -> float:
+        return LEAST_TAU_S
+
+    @property
+    def longest_s(self) -> float:
+        return LONGEST_TAU * float(self.times_s[self.n_stretch - 1] - self.times_s[0])
+
+
+def _points(times_s: Floats, kind: str, late: Late, level: bool) -> _Points:
+    n = len(times_s)
+    shortest, longest = LEAST_TAU_S, LONGEST_TAU * float(times_s[-1] - times_s[0])
+    if kind == "power":
+        # At time t a power law falls as fast as an exponential of (t0 + t) / p.
+        low, high = [0.0, shortest * POWERS[0], POWERS[0]], [1e6, longest * POWERS[1], POWERS[1]]
+    else:
+        low, high = ([0.0, shortest] * (_n_values(kind) // 2), [1e6, longest] * (_n_values(kind) // 2))
+    least, most = (-1e6, 1e6) if level else (0.0, 0.0)
+    weights = np.ones(n + late.times_s.size)
+    weights[n:] = n / max(1, late.times_s.size)
+    return _Points(
+        kind,
+        np.concatenate([times_s, late.times_s]),
+        n,
+        weights,
+        np.array([*low, least]),
+        np.array([*high, most]),
+        level,
     )
-    reason = _fault(kind, found.x, times_s, scaled, found.fun)
-    if reason:
-        return DecayFit(None, reason=reason)
-    values = found.x[: _n_values(kind)]
-    height = sign * size * float(found.x[-1]) if level else 0.0
-    return DecayFit(_unscaled(kind, values, sign * size), height)
 
 
-def amplitude_weights(shape: Floats, covariance: Floats | None) -> tuple[Floats, float]:
-    """Weigh the samples of a stretch for the amplitude of a shape in it, beside an offset of its own.
-
-    With the background's covariance this is the best linear unbiased estimate (generalised least squares):
-    slow background activity looks like a decay, and ordinary least squares would take it for one.
-
-    Parameters
-    ----------
-    shape : array, shape (n_times,)
-        The decay of the median pulse.
-    covariance : array, shape (n_times, n_times), or None
-        Of the background, positive definite; None counts it as white.
+def _descend(points: _Points, ys: Floats, start: Floats) -> tuple[Floats, Floats]:
+    """Least squares within bounds for many signals, shape (n_signals, n_times), at once.
 
     Returns
     -------
-    weights : array, shape (n_times,)
-        Their products with a stretch add up to its amplitude, relative to `shape`.
-    variance : float
-        Of that amplitude, from the background alone; NaN if that is not known.
+    values : array, shape (n_signals, n_values + 1)
+    costs : array, shape (n_signals,)
     """
-    from scipy.linalg import cho_factor, cho_solve
-
-    design = np.stack([shape / np.abs(shape).max(), np.ones_like(shape)], axis=1)
-    weighted = design if covariance is None else cho_solve(cho_factor(covariance), design)
-    weights = np.linalg.solve(design.T @ weighted, weighted.T)[0] / np.abs(shape).max()
-    return weights, np.nan if covariance is None else float(weights @ covariance @ weights)
-
-
-def covariance_of(autocovariance: Floats) -> Floats:
-    """Turn an autocovariance into a covariance matrix that is positive definite.
-
-    Parameters
-    ----------
-    autocovariance : array, shape (n_lags,)
-        Up to a constant, as `pulsemend.signal.autocovariance` gives it.
-
-    Returns
-    -------
-    array, shape (n_lags, n_lags)
-        Of signal whose offset is unknown.
-    """
-    from scipy.linalg import toeplitz
-
-    n = len(autocovariance)
-    centre = np.eye(n) - 1.0 / n
-    strengths, directions = np.linalg.eigh(centre @ toeplitz(autocovariance) @ centre)
-    # The offset's direction is as strong as any; estimates of the weakest ones may even be negative.
-    least = 1e-6 * strengths[-1] if strengths[-1] > 0.0 else 1.0
-    positive = (directions * np.maximum(strengths, least)) @ directions.T
-    return np.asarray(positive + strengths[-1] / n)
-
-
-OUTLYING = 3.5
-"""A pulse so many standard deviations from the others is one of its own, such as a misfire."""
-
-
-def settled_amplitudes(amplitudes: Floats, variances: Floats) -> tuple[Floats, float]:
-    """Draw noisy amplitudes towards the median pulse's, as far as their noise explains their spread.
-
-    The fitted shape is the median pulse, so the median amplitude is 1. What a pulse differs from it counts by
-    the share of its variance that is the pulses' own (the best linear estimate [1]_); a pulse far outside
-    keeps its own amplitude.
-
-    Parameters
-    ----------
-    amplitudes : array, shape (n_pulses,)
-        As estimated; NaN where it cannot be.
-    variances : array, shape (n_pulses,)
-        Of the estimates, from the background; NaN where it is not known.
-
-    Returns
-    -------
-    amplitudes : array, shape (n_pulses,)
-        Finite, relative to the median pulse.
-    spread : float
-        Standard deviation of the true amplitudes.
-
-    References
-    ----------
-    .. [1] Efron B, Morris C (1973) Stein's estimation rule and its competitors - an empirical Bayes approach.
-       J Am Stat Assoc 68:117-130. doi:10.1080/01621459.1973.10481350
-    """
-    known = np.isfinite(amplitudes) & np.isfinite(variances)
-    settled = np.ones_like(amplitudes)
-    if np.count_nonzero(known) < 3:
-        return settled, 0.0
-    departure = amplitudes[known] - np.median(amplitudes[known])
-    noise = variances[known]
-    spread = float(1.4826 * np.median(np.abs(departure)))
-    own = max(0.0, spread**2 - float(np.median(noise)))
-    share = np.where(own + noise > 0.0, own / np.maximum(own + noise, 1e-300), 0.0)
-    share[np.abs(departure) > OUTLYING * np.sqrt(own + noise)] = 1.0
-    settled[known] += share * departure
-    return settled, float(np.sqrt(own))
+    values = np.clip(start, points.low, points.high)
+    damping = np.full(len(ys), 1e-3)
+    left = _curves(points.kind, values, points.times_s) + values[:, -1:] - ys
+    costs = (left**2) @ points.weights
+    for _ in range(_MOST_STEPS):
+        slopes = _slopes(points.kind, values, points.times_s)
+        weighted = slopes * points.weights[:, None]
+        gradient = np.einsum("dtk,dt->dk", weighted, left)
+        # A value at its bound that would be led beyond it stays there; the others move as if it were known.
+        held = ((values <= points.low) & (gradient > 0.0)) | ((values >= points.high) & (gradient < 0.0))
+        gradient[held] = 0.0
+        normal = np.einsum("dtk,dtl->dkl", weighted, slopes)
+        normal[held[:, :, None] | held[:, None, :]] = 0.0
+        scale = np.maximum(np.einsum("dkk->dk", normal), 1e-300)
+        normal += np.eye(values.shape[1]) * (scale * (damping[:, None] + 1e-14))[:, None, :]
+        normal += np.eye(values.shape[1]) * held[:, None, :]
+        step = -np.linalg.solve(normal, gradient[:, :, None])[:, :, 0]
+        tried = np.clip(values + step, points.low, points.high)
+        tried_left = _curves(points.kind, tried, points.times_s) + tried[:, -1:] - ys
+        tried_costs = (tried_left**2) @ points.weights
+        better = tried_costs < costs
+        moved = np.abs(tried - values) <= 1e-10 * np.abs(values) + 1e-14
+        settled = moved.all(axis=1) | (better & (costs - tried_costs <= _SETTLED * costs))
+        values[better], left[better], costs[better] = tried[better], tried_left[better], tried_costs[better]
+        damping = np.where(better, damping * 0.1, damping * 8.0)
+        if np.all(settled | (damping > 1e12)):
+            break
+    return values, costs
 
 
 def _n_values(kind: str) -> int:
     return {"exponential": 2, "two exponentials": 4, "power": 3}[kind]
 
 
-def _curve(kind: str, values: Floats, times_s: Floats) -> Floats:
+def _curves(kind: str, values: Floats, times_s: Floats) -> Floats:
+    """Curves of many decays, values of shape (n, n_values or more): shape (n, n_times)."""
+    a, first_s = values[:, 0:1], values[:, 1:2]
     if kind == "power":
-        return np.asarray(values[0] * (1.0 + times_s / values[1]) ** -values[2])
-    curve = values[0] * np.exp(-times_s / values[1])
+        return np.asarray(a * (1.0 + times_s / first_s) ** -values[:, 2:3])
+    curves = a * np.exp(-times_s / first_s)
     if kind == "two exponentials":
-        curve += values[2] * np.exp(-times_s / values[3])
-    return np.asarray(curve)
+        curves += values[:, 2:3] * np.exp(-times_s / values[:, 3:4])
+    return np.asarray(curves)
 
 
 def _slopes(kind: str, values: Floats, times_s: Floats) -> Floats:
-    """Give the derivatives by every value, then by the level: shape (n_times, n_values + 1)."""
+    """Give the derivatives by every value, then by the level: shape (n, n_times, n_values + 1)."""
     columns: list[Floats] = []
     if kind == "power":
-        a, t0, p = values[:3]
+        a, t0, p = values[:, 0:1], values[:, 1:2], values[:, 2:3]
         base = 1.0 + times_s / t0
         curve = base**-p
         columns = [curve, a * p * times_s / t0**2 * curve / base, -a * curve * np.log(base)]
     else:
         for place in range(0, _n_values(kind), 2):
-            a, tau = values[place : place + 2]
+            a, tau = values[:, place : place + 1], values[:, place + 1 : place + 2]
             curve = np.exp(-times_s / tau)
             columns += [curve, a * curve * times_s / tau**2]
-    return np.stack([*columns, np.ones_like(times_s)], axis=1)
+    return np.stack([*columns, np.ones_like(columns[0])], axis=2)
 
 
-def _limits_s(times_s: Floats) -> tuple[float, float]:
-    return LEAST_TAU_S, LONGEST_TAU * float(times_s[-1] - times_s[0])
-
-
-def _bounds(kind: str, times_s: Floats) -> tuple[Floats, Floats]:
-    shortest, longest = _limits_s(times_s)
-    if kind == "power":
-        # At time t a power law falls as fast as an exponential of (t0 + t) / p.
-        return (
-            np.array([0.0, shortest * POWERS[0], POWERS[0], -1e3]),
-            np.array([1e6, longest * POWERS[1], POWERS[1], 1e3]),
-        )
-    pairs = _n_values(kind) // 2
-    return np.array([0.0, shortest] * pairs + [-1e3]), np.array([1e6, longest] * pairs + [1e3])
-
-
-def _from_grid(times_s: Floats, y: Floats, kind: str, level: bool) -> Floats:
+def _from_grid(points: _Points, y: Floats) -> Floats:
     """Best of a grid of time constants (and orders), amplitudes and level by linear least squares."""
-    shortest, longest = _limits_s(times_s)
-    taus = np.geomspace(1.5 * shortest, 0.7 * longest, _GRID)
+    times_s, kind, level = points.times_s, points.kind, points.level
+    share = points.weights / points.weights.sum()
+    taus = np.geomspace(1.5 * points.shortest_s, 0.7 * points.longest_s, _GRID)
     if kind == "power":
         fixed = np.array([(tau * p, p) for tau in taus for p in (1.2, 2.0, 3.0)])
         curves = (1.0 + times_s / fixed[:, :1]) ** -fixed[:, 1:]
@@ -311,61 +323,54 @@ def _from_grid(times_s: Floats, y: Floats, kind: str, level: bool) -> Floats:
     else:
         fixed = np.array([(fast, slow) for i, fast in enumerate(taus) for slow in taus[i + 2 :: 2]])
         curves = np.exp(-times_s[None, :, None] / fixed[:, None, :])
-    around = curves.mean(axis=1) if level else np.zeros((len(curves), curves.shape[2]))
-    centred, target = curves - around[:, None, :], y - (y.mean() if level else 0.0)
-    moments = np.einsum("gtk,gtl->gkl", centred, centred) + 1e-9 * len(y) * np.eye(curves.shape[2])
-    amplitudes = np.linalg.solve(moments, np.einsum("gtk,t->gk", centred, target)[:, :, None])[:, :, 0]
+    around = np.einsum("gtk,t->gk", curves, share if level else np.zeros_like(share))
+    mean = float(share @ y) if level else 0.0
+    centred, target = curves - around[:, None, :], y - mean
+    weighted = centred * share[:, None]
+    moments = np.einsum("gtk,gtl->gkl", weighted, centred) + 1e-9 * np.eye(curves.shape[2])
+    amplitudes = np.linalg.solve(moments, np.einsum("gtk,t->gk", weighted, target)[:, :, None])[:, :, 0]
     # Amplitudes of the other sign are not allowed, and make bad starts.
     amplitudes = np.maximum(amplitudes, 1e-3)
-    left = np.sum((np.einsum("gtk,gk->gt", centred, amplitudes) - target) ** 2, axis=1)
+    left = (np.einsum("gtk,gk->gt", centred, amplitudes) - target) ** 2 @ share
     best = int(np.argmin(left))
-    height = float(y.mean() - around[best] @ amplitudes[best]) if level else 0.0
+    height = mean - float(around[best] @ amplitudes[best])
     if kind == "two exponentials":
         pairs = zip(amplitudes[best], fixed[best], strict=True)
         return np.array([*(value for pair in pairs for value in pair), height])
     return np.array([amplitudes[best, 0], *fixed[best], height])
 
 
-def _scaled(start: DecayShape, y: Floats, factor: float) -> Floats:
-    values = np.array([*start.values, float(y[-1])])
-    values[0] = abs(values[0] * factor)
-    if start.kind == "two exponentials":
-        values[2] = abs(values[2] * factor)
-    return values
-
-
-def _unscaled(kind: str, values: Floats, factor: float) -> DecayShape:
-    own = [float(value) for value in values]
+def _judged(points: _Points, values: Floats, y: Floats, factor: float) -> DecayFit:
+    """Turn what was found into a result, in the signal's unit, if it is a decay."""
+    reason = _fault(points, values, y)
+    if reason:
+        return DecayFit(None, reason=reason)
+    own = [float(value) for value in values[:-1]]
     own[0] *= factor
-    if kind == "two exponentials":
+    if points.kind == "two exponentials":
         own[2] *= factor
-    return DecayShape(kind, tuple(own))
+    return DecayFit(DecayShape(points.kind, tuple(own)), factor * float(values[-1]))
 
 
-def _fault(kind: str, values: Floats, times_s: Floats, y: Floats, left: Floats) -> str:
+def _fault(points: _Points, values: Floats, y: Floats) -> str:
     """Why what was found is no decay; empty if it is one."""
-    shortest, longest = _limits_s(times_s)
-    curve = _curve(kind, values, times_s)
-    total = float(np.sum((y - y.mean()) ** 2))
-    if float(np.sum(left**2)) > (1.0 - LEAST_EXPLAINED) * total:
+    stretch_s, y = points.times_s[: points.n_stretch], y[: points.n_stretch]
+    curve = _curves(points.kind, values[None], stretch_s)[0]
+    left = curve + values[-1] - y
+    if float(np.sum(left**2)) > (1.0 - LEAST_EXPLAINED) * float(np.sum((y - y.mean()) ** 2)):
         return "what follows the gap has not this shape"
-    if curve[0] > _LARGEST:
+    if curve[0] > _LARGEST * float(np.ptp(y)):
         return "the signal does not level off within the stretch fitted"
-    # The time in which it falls to 1/e, from the stretch's first sample on.
-    falls_s = float(curve[0] / max(-np.gradient(curve, times_s)[0], 1e-300))
-    if kind != "two exponentials":
-        if falls_s > 0.95 * longest:
-            return "the signal does not level off within the stretch fitted"
-        if falls_s < 1.05 * shortest:
-            return "what follows the gap is over within a millisecond: it belongs into the gap"
+    # The time in which it falls to 1/e, as it begins.
+    if points.kind == "two exponentials":
+        parts = [(values[0], values[1]), (values[2], values[3])]
+    elif points.kind == "power":
+        parts = [(values[0], (values[1] + stretch_s[0]) / values[2])]
     else:
-        for a, tau in (values[0:2], values[2:4]):
-            if a > 0.1 and tau > 0.95 * longest:
-                return "the signal does not level off within the stretch fitted"
+        parts = [(values[0], values[1])]
+    shown = [tau for a, tau in parts if a > 0.1]
+    if any(tau > 0.95 * points.longest_s for tau in shown):
+        return "the signal does not level off within the stretch fitted"
+    if shown and max(shown) < 1.05 * points.shortest_s:
+        return "what follows the gap is over within a millisecond: it belongs into the gap"
     return ""
-
-
-def block_means(x: NDArray[Any], size: int) -> NDArray[Any]:
-    """Mean of every `size` samples along the first axis; what is left over at the end is dropped."""
-    n = len(x) // size
-    return np.asarray(x[: n * size].reshape(n, size, *x.shape[1:]).mean(axis=1))
