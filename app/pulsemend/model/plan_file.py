@@ -192,11 +192,12 @@ def write_plan(path: Path, plan: Plan, text: str = "") -> str:
 
 
 def _meaning(plan: Plan) -> Plan:
-    """Give the plan with its codes and groups in a fixed order: theirs says nothing."""
+    """Give the plan with codes, groups and labels in a fixed order: theirs decides about nothing."""
     return replace(
         plan,
         markers=tuple(sorted(plan.markers, key=lambda marker: marker.code)),
         groups=tuple(sorted(plan.groups, key=lambda group: group.name)),
+        labels=tuple(sorted(plan.labels, key=lambda label: label.name)),
     )
 
 

@@ -13,6 +13,8 @@ from tomlkit.container import Container
 from tomlkit.items import AoT, Comment, InlineTable, Item, Key, Table
 
 Tree = Mapping[str, Any]
+_INLINE = (".labels", "labels.*", ".names", ".roles", ".values", ".columns")
+"""Ends of the paths of tables that are short enough to stand in one line."""
 
 
 def new_text(tree: Tree, defaults: Mapping[str, object], named_by: Mapping[str, str]) -> str:
@@ -77,7 +79,11 @@ def _update(table: MutableMapping[str, Any], tree: Tree, path: str, rules: _Rule
     for name, value in tree.items():
         below = rules.below(path, name)
         if isinstance(value, Mapping):
-            _update_table(table, name, value, below, rules)
+            if name in table:
+                _update(table[name], value, below, rules)
+            elif new := _new_table(value, below, rules):
+                # A code without labels and with no role cannot be, so an empty table says nothing.
+                _add(table, name, new, earlier)
         elif below in rules.named_by:
             _update_array(table, name, value, below, rules)
         elif name in table:
@@ -148,18 +154,8 @@ def _key_place(body: _Body, name: str, earlier: Collection[str]) -> int:
     return place
 
 
-def _update_table(table: MutableMapping[str, Any], name: str, tree: Tree, path: str, rules: _Rules) -> None:
-    if name in table:
-        _update(table[name], tree, path, rules)
-        return
-    new = _new_table(tree, path, rules)
-    # A code without labels and with no role cannot be, so an empty table says nothing.
-    if new:
-        _add(table, name, new, ())
-
-
 def _new_table(tree: Tree, path: str, rules: _Rules) -> Table | InlineTable:
-    new = tomlkit.inline_table() if path.endswith(".labels") else tomlkit.table()
+    new = tomlkit.inline_table() if path.endswith(_INLINE) else tomlkit.table()
     _update(new, tree, path, rules)
     return new
 
