@@ -19,14 +19,13 @@ from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
-from support import greedy_matcher
-from support.marker_streams import LANTERN, RATE_HZ, Mix, Stream, draw_stream
-
 from pulsemend.model.epochs import Trial, Trials
 from pulsemend.model.plan import Group, MarkerPlan, Plan, Slot
 from pulsemend.model.vocabulary import Role
 from pulsemend.trials import alignment
 from pulsemend.trials.matching import match_trials
+from support import greedy_matcher
+from support.marker_streams import LANTERN, RATE_HZ, Mix, Stream, draw_stream
 
 N_TRIALS = 1000
 SHARES = (0.02, 0.05, 0.10)

@@ -246,4 +246,4 @@ def test_best_explanation_of_few_markers() -> None:
 
 @pytest.mark.slow
 def test_best_explanation_of_more_markers(slow_count: Callable[[int], int]) -> None:
-    check_many(range(10_000, 10_000 + slow_count(20_000)), 9)
+    check_many(range(10_000, 10_000 + slow_count(10_000)), 8)

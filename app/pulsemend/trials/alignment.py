@@ -175,6 +175,7 @@ class _Ways:
             for number in self.beginnings[way]:
                 self.sharing.setdefault(number, []).append(way)
         self._states: dict[tuple[Hashable, tuple[int, ...]], _State] = {}
+        self._alike: dict[tuple[_State, _State], bool] = {}
         starts = [
             self.state(self.beginnings[way][place], (place,))
             for way in ways
@@ -189,6 +190,39 @@ class _Ways:
         if found is None:
             found = self._states[beginning, filled] = _State(self, self.sharing[beginning], filled)
         return found
+
+    def goes_on_alike(self, one: _State, other: _State) -> bool:
+        """Tell whether another state can go on in all ways that one can, at no more cost.
+
+        The last filled slots of both, as many as the other has, are filled by the same events.
+        """
+        known = self._alike.get((one, other))
+        if known is None:
+            known = other.after <= one.after and all(
+                any(
+                    role is other_role and self._is_wider(step, as_well)
+                    for other_role, as_well in other.steps
+                )
+                for role, step in one.steps
+            )
+            self._alike[one, other] = known
+        return known
+
+    def _is_wider(self, step: _Step, other: _Step) -> bool:
+        n = len(other.limits)
+        return (
+            other.takes_found >= step.takes_found
+            and other.skipped <= step.skipped
+            and n <= len(step.limits)
+            and all(
+                wide[0] <= limit[0] and limit[1] <= wide[1]
+                for limit, wide in zip(step.limits[-n:], other.limits, strict=True)
+            )
+            # Of the filled slots, too, those that still matter are the same ones, counted from the last.
+            and [n - place for place in other.kept]
+            == [len(step.limits) - place for place in step.kept][-len(other.kept) :]
+            and self.goes_on_alike(step.state, other.state)
+        )
 
 
 @lru_cache(maxsize=4)
@@ -221,16 +255,29 @@ class _State:
         self.slot = filled[-1]
         self.kind = ways[0].kind
         self.name = ways[0].names[self.slot]
+        self.role = ways[0].roles[self.slot]
+        self.takes_found = ways[0].takes_found[self.slot]
         self.before = ways[0].before[self.slot]
         self.after = min(way.after[self.slot] for way in ways)
         # Ways that the trial may have run if it ends here.
         self.ends = tuple({way.required: way for way in ways if way.after[self.slot] == self.after}.values())
-        # What another explanation of the same markers costs at most beyond that of all before: all left over,
-        # or a trial from this slot on, which can do the same unless a later slot needs one filled before.
-        self.at_most = LEFT_OVER * (max(way.size for way in ways) - self.slot)
-        needed = {place for way in ways for place in way.needs}
-        if ways[0].needs[self.slot] is None and needed.isdisjoint(filled[:-1]):
-            self.at_most = min(self.at_most, self.before)
+        self.most_left_over = LEFT_OVER * (max(way.size for way in ways) - self.slot)
+
+    @cached_property
+    def at_most(self) -> int:
+        """What another explanation of the same markers costs at most beyond that of all before.
+
+        Either all are left over, or they are a trial that was seen from here on only and can go on alike.
+        """
+        starts = [
+            start.before
+            for start in self.all_ways.starts
+            if start.before < self.most_left_over
+            and start.role is self.role
+            and start.takes_found >= self.takes_found
+            and self.all_ways.goes_on_alike(self, start)
+        ]
+        return min([self.most_left_over, *starts])
 
     @cached_property
     def steps(self) -> tuple[tuple[Role, _Step], ...]:
@@ -300,10 +347,7 @@ class _Aligner:
         self.foreign = _FOREIGN * ways.most_slots
         self.starts = {
             (role, found): [
-                state
-                for state in ways.starts
-                if state.ways[0].roles[state.slot] is role
-                and (state.ways[0].takes_found[state.slot] or not found)
+                state for state in ways.starts if state.role is role and (state.takes_found or not found)
             ]
             for role in self.of_role
             for found in (False, True)
@@ -335,14 +379,18 @@ class _Aligner:
             else:
                 for _ in key[0].ends:
                     following.offer(node.cost + key[0].after, node)
-                self.go_on(node, key[0])
+        for key, node in nodes.items():
+            self.go_on(node, key[0], following.cost)
 
-    def go_on(self, node: _Node, state: _State) -> None:
-        """Fill each of the trial's later slots."""
+    def go_on(self, node: _Node, state: _State, otherwise: int) -> None:
+        """Fill each of the trial's later slots; `otherwise` is the least cost up to behind the last one."""
         last = node.event + 1 + self.foreign
         cost_here = node.cost - self.cost_before[node.event + 1]
         known = [self.times[event] for event in node.events]
         for role, step in state.steps:
+            # Markers jumped over are left over in both explanations.
+            if node.cost + step.skipped > otherwise + step.state.at_most:
+                continue
             times, places = self.of_role[role]
             least, most = -inf, inf
             for time, (soonest, latest) in zip(known, step.limits, strict=True):
