@@ -22,16 +22,16 @@ from pulsemend.model.plan import Plan
 from pulsemend.model.vocabulary import Role
 from pulsemend.window.elided import ElidedLabel
 from pulsemend.window.fields import Chooser, Field, in_words
-from pulsemend.window.marker_hands import MarkerHands
+from pulsemend.window.marker_hands import MarkerHands, ShortTable
 from pulsemend.window.parts import Card, button
-from pulsemend.window.tables import RowsModel, RowsTable
+from pulsemend.window.tables import RowsModel
 from pulsemend.window.theme import Theme
 from pulsemend.window.traces.clock import clock, number
 from pulsemend.window.traces.shapes import draw_roles
 
 TITLES = ("code", "role", "count", "first", "last", "usually after", "usually before", "labels", "note")
 CODE, ROLE, COUNT, FIRST, LAST, BEFORE, AFTER, LABELS, NOTE = range(len(TITLES))
-_WIDTHS = (
+WIDTHS = (
     "a code of usual length",
     "undecided",
     "12345",
@@ -128,28 +128,22 @@ class CodeModel(RowsModel):
         return super().headerData(section, orientation, role)
 
 
-class CodeTable(RowsTable):
-    """The table of all codes.
+class ShortCodeTable(ShortTable):
+    """The codes where there is little room: code, role and count.
 
     Parameters
     ----------
-    name : str
-        Accessible name.
     model : CodeModel
-        May be shared with another table, which then shows the same selection.
-    columns : sequence of int
-        Those shown.
+        What it shows.
     """
 
-    def __init__(self, name: str, model: CodeModel, columns: Sequence[int]) -> None:
-        super().__init__(name, model, _WIDTHS)
-        self.setTextElideMode(Qt.TextElideMode.ElideMiddle)
-        for column in range(len(TITLES)):
-            self.setColumnHidden(column, column not in columns)
-        if len(columns) < len(TITLES):
-            self.horizontalHeader().setStretchLastSection(False)
-            self.horizontalHeader().setSectionResizeMode(CODE, QHeaderView.ResizeMode.Stretch)
-            self.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
+    def __init__(self, model: CodeModel) -> None:
+        super().__init__("Codes with their roles", model, WIDTHS, _MOST_ROWS)
+        for column in range(COUNT + 1, len(TITLES)):
+            self.setColumnHidden(column, True)
+        self.horizontalHeader().setStretchLastSection(False)
+        self.horizontalHeader().setSectionResizeMode(CODE, QHeaderView.ResizeMode.Stretch)
+        self.setHorizontalScrollBarPolicy(Qt.ScrollBarPolicy.ScrollBarAlwaysOff)
 
 
 class CodesCard(Card):
@@ -170,7 +164,7 @@ class CodesCard(Card):
         self._chosen: list[str] = []
         self.advice = self.add_note()
         self.model = CodeModel(theme)
-        self.table = CodeTable("Codes with their roles", self.model, (CODE, ROLE, COUNT))
+        self.table = ShortCodeTable(self.model)
         self.add(self.table)
         self.name = ElidedLabel("", "title")
         self.add(self.name)
@@ -213,8 +207,7 @@ class CodesCard(Card):
         undecided = sum(row.role is Role.UNDECIDED for row in rows) if plan is not None else 0
         self.note.setText(f"{undecided} undecided" if undecided else "")
         self.table.setVisible(bool(rows))
-        height = self.table.horizontalHeader().sizeHint().height()
-        self.table.setFixedHeight(height + min(len(rows), _MOST_ROWS) * self.table.row_height() + 4)
+        self.table.fit_rows()
         self._show_chosen()
 
     def choose(self, codes: Sequence[str]) -> None:

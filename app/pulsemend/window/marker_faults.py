@@ -11,9 +11,9 @@ from pulsemend.mending.marker_edits import Verdict, verdict_on, with_verdict
 from pulsemend.model.faults import MarkerFault
 from pulsemend.model.marks import NO_MARKS, Marks
 from pulsemend.window.flow import flow_row
-from pulsemend.window.marker_hands import MarkerHands
+from pulsemend.window.marker_hands import MarkerHands, ShortTable
 from pulsemend.window.parts import Card, button, words
-from pulsemend.window.tables import RowsModel, RowsTable
+from pulsemend.window.tables import RowsModel
 
 NO_CURE = "no cure"
 _MOST_ROWS = 6
@@ -67,8 +67,7 @@ class FaultsCard(Card):
         self._key = ""
         self.none = self.add_note("No fault was found.")
         self.model = FaultModel()
-        self.table = RowsTable("Faults of the markers", self.model, ("accepted", ""))
-        self.table.setTextElideMode(Qt.TextElideMode.ElideMiddle)
+        self.table = ShortTable("Faults of the markers", self.model, ("accepted", ""), _MOST_ROWS)
         self.add(self.table)
         self.what = words("", "")
         self.cure = words("", "quiet")
@@ -126,8 +125,7 @@ class FaultsCard(Card):
         self.note.setText(f"{is_open} open" if is_open else "")
         self.none.setVisible(not faults)
         self.table.setVisible(bool(faults))
-        height = self.table.horizontalHeader().sizeHint().height()
-        self.table.setFixedHeight(height + min(len(faults), _MOST_ROWS) * self.table.row_height() + 4)
+        self.table.fit_rows()
         self.notes.setText("\n".join(f"{note[0].upper()}{note[1:]}." for note in notes))
         self.notes.setVisible(bool(notes))
         self._show_current()

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
-from PySide6.QtCore import Signal
+from PySide6.QtCore import QEvent, Qt, Signal
 from PySide6.QtWidgets import QVBoxLayout, QWidget
 
 from pulsemend.errors import InputError, SettingError
@@ -18,6 +18,7 @@ from pulsemend.window.tables import RowsModel, RowsTable
 from pulsemend.window.traces.clock import clock
 from pulsemend.window.workbench import Workbench
 
+_MOST_ROWS = 6
 _ROOM = 1.6
 """Part in view when a stretch is gone to, at least, in lengths of the stretch."""
 
@@ -114,6 +115,40 @@ class ItemModel(RowsModel):
         return "not known" if item.start_s is None else clock(item.start_s, 3)
 
 
+class ShortTable(RowsTable):
+    """A table as high as its rows, up to a number of them; above, it scrolls.
+
+    Parameters
+    ----------
+    name : str
+        Accessible name.
+    model : RowsModel
+        What it shows.
+    widths : sequence of str
+        As for `RowsTable`.
+    most : int
+        Rows shown at once.
+    """
+
+    def __init__(self, name: str, model: RowsModel, widths: Sequence[str], most: int) -> None:
+        self._most = most
+        super().__init__(name, model, widths)
+        self.setTextElideMode(Qt.TextElideMode.ElideMiddle)
+        self.fit_rows()
+
+    def fit_rows(self) -> None:
+        """Take the height of the rows there are."""
+        rows = min(max(1, self.model().rowCount()), self._most)
+        head = self.horizontalHeader().sizeHint().height()
+        self.setFixedHeight(head + rows * self.row_height() + 4)
+
+    def changeEvent(self, event: QEvent) -> None:
+        """Follow the size of the text."""
+        super().changeEvent(event)
+        if event.type() in (QEvent.Type.FontChange, QEvent.Type.StyleChange) and self.model() is not None:
+            self.fit_rows()
+
+
 class ItemLists(QWidget):
     """Several lists of which one is shown, chosen by name; a click or Return on an item goes there.
 
@@ -138,7 +173,7 @@ class ItemLists(QWidget):
         self._lists: dict[str, tuple[str, tuple[Item, ...]]] = {}
         self.chooser = Chooser(f"{name}: which list")
         self.model = ItemModel()
-        self.table = RowsTable(name, self.model, ("0:00:00.000", ""))
+        self.table = ShortTable(name, self.model, ("0:00:00.000", ""), _MOST_ROWS)
         self.table.setToolTip("A click, or Return, brings it into view")
         column = QVBoxLayout(self)
         column.setContentsMargins(0, 0, 0, 0)
@@ -176,7 +211,7 @@ class ItemLists(QWidget):
     def _show(self) -> None:
         items = self._lists.get(self.shown, ("", ()))[1]
         self.model.show_items(items)
-        self.table.setFixedHeight((min(max(len(items), 2), 6) + 1) * self.table.row_height() + 8)
+        self.table.fit_rows()
         self.changed.emit()
 
     def _go(self, row: int) -> None:

@@ -53,12 +53,12 @@ class Histogram(KeptPicture):
         self._edges = np.array([0.0, 1.0])
         self._counts = np.zeros(1)
 
-    def show_intervals(self, intervals: Intervals) -> None:
-        """Show others."""
+    def show_intervals(self, intervals: Intervals, rate_hz: float) -> None:
+        """Show others, of a recording with this rate."""
         self._intervals = intervals
         length_s = intervals.length_s
         if length_s.size:
-            self._edges = _edges(length_s)
+            self._edges = _edges(length_s, rate_hz)
             self._counts = np.histogram(length_s, self._edges)[0].astype(np.float64)
         self.refresh()
 
@@ -252,7 +252,7 @@ class IntervalsPicture(QWidget):
             self._intervals = between_codes(
                 survey, self.first.currentData() or "", self.second.currentData() or ""
             )
-        self.histogram.show_intervals(self._intervals)
+        self.histogram.show_intervals(self._intervals, 1.0 if survey is None else survey.rate_hz)
         self.histogram.setVisible(bool(self._intervals.length_s.size))
         outside = int((self._intervals.shorter | self._intervals.longer).sum())
         self.next_outside.setVisible(self._intervals.limits_s is not None)
@@ -279,15 +279,13 @@ class IntervalsPicture(QWidget):
         self.wanted.emit(*self._gone)
 
 
-def _edges(length_s: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Edges of the bars: of a round width, no more than can be told apart."""
-    low, high = float(length_s.min()), float(length_s.max())
-    if high - low < 1e-9:
-        return np.array([low - 0.0005, low + 0.0005])
-    wanted = (high - low) / min(_MOST_BARS, max(8, 2 * math.sqrt(length_s.size)))
-    step = next(s for s in (nice(wanted), 2 * nice(wanted), 2.5 * nice(wanted)) if s >= wanted * 0.999)
-    first, last = math.floor(low / step + 1e-9), math.floor(high / step + 1e-9) + 1
-    return np.arange(first, last + 1, dtype=np.float64) * step
+def _edges(length_s: NDArray[np.float64], rate_hz: float) -> NDArray[np.float64]:
+    """Edges of the bars, halfway between samples: each bar holds as many possible lengths as any other."""
+    low, high = (float(edge) * rate_hz for edge in (length_s.min(), length_s.max()))
+    n_bars = min(_MOST_BARS, max(8.0, 2 * math.sqrt(length_s.size)))
+    width = max(1, math.ceil((high - low) / n_bars))
+    n_bars = math.floor((high - low) / width + 0.5) + 1
+    return (math.floor(low + 0.5) - 0.5 + width * np.arange(n_bars + 1, dtype=np.float64)) / rate_hz
 
 
 def _said(intervals: Intervals) -> str:

@@ -172,7 +172,7 @@ class Timeline(QAbstractScrollArea):
 
     def minimumSizeHint(self) -> QSize:
         """Room for two rows."""
-        return QSize(240, round(4 * self._row_height()))
+        return QSize(240, round(2 * self._row_height() + self._axis_height()))
 
     # Places
 

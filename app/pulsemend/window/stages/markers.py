@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from PySide6.QtCore import Qt
 from PySide6.QtWidgets import QButtonGroup, QPushButton, QStackedWidget, QVBoxLayout, QWidget
 
 from pulsemend.mending.marker_log import NO_LOG_VIEW
@@ -10,7 +11,7 @@ from pulsemend.model.vocabulary import Role
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import Stage
 from pulsemend.window.flow import column_of, flow_row
-from pulsemend.window.marker_codes import TITLES, CodesCard, CodeTable
+from pulsemend.window.marker_codes import WIDTHS, CodesCard
 from pulsemend.window.marker_faults import FaultsCard
 from pulsemend.window.marker_hands import MarkerHands
 from pulsemend.window.marker_histogram import IntervalsPicture
@@ -22,6 +23,7 @@ from pulsemend.window.marker_trials import TrialsCard
 from pulsemend.window.marker_watch import MarkerWatch
 from pulsemend.window.parts import EmptyState, button
 from pulsemend.window.stages.base import StagePage
+from pulsemend.window.tables import RowsTable
 from pulsemend.window.theme import Theme
 from pulsemend.window.workbench import Workbench
 
@@ -85,7 +87,8 @@ class MarkersStage(StagePage):
         self.settings = column_of(self.codes, self.faults, self.trials, self.log, name="Markers, settings")
         self.timeline = Timeline(theme)
         self.legend = StateLegend(theme)
-        self.table = CodeTable("All codes", self.codes.model, range(len(TITLES)))
+        self.table = RowsTable("All codes", self.codes.model, WIDTHS)
+        self.table.setTextElideMode(Qt.TextElideMode.ElideMiddle)
         self.table.setSelectionModel(self.codes.table.selectionModel())
         self.intervals = IntervalsPicture(theme)
         self.log_picture = LogPicture(theme)
