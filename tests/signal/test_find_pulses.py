@@ -9,7 +9,18 @@ import pytest
 from numpy.typing import NDArray
 from scipy import signal as ss
 
-from pulsemend.signal.find import align_onset, count_pulse_like, steepness, usual_steepness
+from pulsemend.signal.find import (
+    PULSE_LIKE_FACTOR,
+    align_onset,
+    common_to_many,
+    companions,
+    events_of,
+    local_steps,
+    steep_samples,
+    steepness,
+    usual_steepness,
+    usual_steps,
+)
 
 FloatArray = NDArray[np.float64]
 
@@ -41,6 +52,13 @@ def with_pulse(x: FloatArray, onset: int, size_uv: float, rate_hz: float) -> Flo
         size_uv * shape[:, None] * rng.choice([-1, 1], N_CHANNELS) * rng.lognormal(0, 0.7, N_CHANNELS)
     )
     return y
+
+
+def many(x: NDArray[Any], usual: float, spacing: int = 1) -> NDArray[np.intp]:
+    """Events of steps that are common to half of the channels."""
+    at, counts, strengths = steep_samples(x, PULSE_LIKE_FACTOR * usual)
+    keep = common_to_many(counts, x.shape[1])
+    return events_of(at[keep], strengths[keep], spacing)[0]
 
 
 def test_steepness_is_the_median_step() -> None:
@@ -107,7 +125,7 @@ def test_coarse_resolution_does_not_make_every_step_unusual() -> None:
     coarse = np.round(background(25_000.0, 1.0, 6) / 5.0) * 5.0
     usual = usual_steepness([coarse])
     assert usual >= 2.5
-    assert count_pulse_like(coarse, usual).size == 0
+    assert many(coarse, usual).size == 0
 
 
 @pytest.mark.parametrize("rate_hz", [1000.0, 5000.0, 25_000.0])
@@ -118,7 +136,7 @@ def test_unmarked_pulses_are_noticed(rate_hz: float, size_uv: float) -> None:
     onsets = [round(s * rate_hz) for s in (0.2, 0.9, 1.6)]
     for onset in onsets:
         x = with_pulse(x, onset, size_uv, rate_hz)
-    found = count_pulse_like(x, usual, spacing=round(0.1 * rate_hz))
+    found = many(x, usual, spacing=round(0.1 * rate_hz))
     np.testing.assert_array_equal(found, onsets)
 
 
@@ -127,12 +145,12 @@ def test_blocks_that_overlap_by_one_sample_find_the_same() -> None:
     usual = usual_steepness([x])
     for onset in (500, 1000, 1999, 2000, 2001, 3500):
         x = with_pulse(x, onset, 2000.0, 1000.0)
-    whole = count_pulse_like(x, usual)
+    whole = many(x, usual)
     for block in (1000, 333, 7):
         cut = [
             max(0, start - 1) + n
             for start in range(0, len(x), block)
-            for n in count_pulse_like(x[max(0, start - 1) : start + block], usual)
+            for n in many(x[max(0, start - 1) : start + block], usual)
         ]
         np.testing.assert_array_equal(cut, whole)
 
@@ -161,11 +179,65 @@ def test_what_looks_wild_but_is_no_pulse(rate_hz: float) -> None:
         x += muscle * burst
     # A movement: all channels by 300 uV within 100 ms.
     x += 300.0 * np.clip((t - 17.0) / 0.1, 0, 1)[:, None]
-    assert count_pulse_like(x, usual).size == 0
+    assert many(x, usual).size == 0
 
 
 def test_at_least_three_channels_must_agree() -> None:
     x: NDArray[Any] = np.zeros((50, 2))
     x[20:] = 1000.0
-    assert count_pulse_like(x, 1.0).size == 0
-    assert count_pulse_like(np.repeat(x, 2, axis=1)[:, :3], 1.0).tolist() == [20]
+    assert many(x, 1.0).size == 0
+    assert many(np.repeat(x, 2, axis=1)[:, :3], 1.0).tolist() == [20]
+
+
+def test_usual_steps_of_dead_and_loud_channels() -> None:
+    x = background(5000.0, 1.0, 4)
+    usual = usual_steepness([x])
+    x[:, 0] = 7.0
+    x[:, 1] *= 40.0
+    steps = usual_steps([x[:2500], x[2500:]])
+    assert steps[0] == pytest.approx(usual, rel=0.05)
+    assert steps[1] > 20.0 * usual
+    assert steps[2:] == pytest.approx(usual, rel=0.5)
+
+
+def test_local_steps_ignore_a_train() -> None:
+    quiet = background(5000.0, 0.1, 4)
+    train = quiet.copy()
+    for onset in (100, 200, 300, 400):
+        train = with_pulse(train, onset, 3000.0, 5000.0)
+    np.testing.assert_allclose(local_steps(train), local_steps(quiet), rtol=2.0)
+    assert np.all(local_steps(2.0 * quiet) == 2.0 * local_steps(quiet))
+
+
+def test_steps_near_each_other_are_one_event() -> None:
+    at = np.array([10, 14, 18, 60, 69, 79])
+    starts, strengths = events_of(at, np.array([1.0, 5.0, 2.0, 1.0, 2.0, 9.0]), 10)
+    assert starts.tolist() == [10, 60, 79]
+    assert strengths.tolist() == [5.0, 2.0, 9.0]
+    assert events_of(at[:0], np.zeros(0), 10)[0].size == 0
+
+
+def test_companions_are_weak_and_locked() -> None:
+    rng = np.random.default_rng(1)
+    pulses = np.cumsum(rng.integers(4000, 6000, 30))
+    strengths = rng.uniform(80.0, 100.0, 30)
+    recharge = pulses[2:] + 250 + rng.integers(-2, 3, 28)
+    before = pulses[1:] - 100
+    stray = pulses[:3] + np.array([700, 1300, 3000])
+    events = np.concatenate([pulses, recharge, before, stray])
+    all_strengths = np.concatenate([strengths, np.full(28 + 29 + 3, 10.0)])
+    order = np.argsort(events)
+    found = events[order][companions(events[order], all_strengths[order], 1000.0)]
+    assert sorted(found) == sorted([*recharge, *before])
+
+
+def test_pairs_are_no_companions() -> None:
+    rng = np.random.default_rng(2)
+    first = np.cumsum(rng.integers(4000, 6000, 30))
+    events = np.sort(np.concatenate([first, first + 100]))
+    strengths = np.tile([60.0, 100.0], 30)
+    assert not companions(events, strengths, 1000.0).any()
+    # Weaker pulses at latencies of their own are pulses, too.
+    weak = np.sort(np.concatenate([first, first + rng.integers(500, 3500, 30)]))
+    sizes = np.where(np.isin(weak, first), 100.0, 10.0)
+    assert not companions(weak, sizes, 1000.0).any()
