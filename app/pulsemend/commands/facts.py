@@ -128,10 +128,11 @@ def _fault_lines(summary: RecordingSummary) -> list[str]:
     lines = ["", "  faults of markers:"]
     for fault in summary.faults[:_MOST_LISTED]:
         lines.append(f"  - {fault.key}: {fault.words}")
+        decided = summary.cures.get(fault.key, "")
         if fault.cure:
-            lines.append(f"    cure: {fault.cure}")
+            lines.append(f"    cure{f' ({decided})' if decided else ''}: {fault.cure}")
     lines += _more(summary.faults)
-    if any(fault.cure for fault in summary.faults):
+    if any(fault.cure and fault.key not in summary.cures for fault in summary.faults):
         lines.append("  a cure is applied only where the marks name its fault under [cures] accepted = [...]")
     return lines
 
@@ -224,6 +225,7 @@ def _as_json(summary: RecordingSummary) -> dict[str, object]:
                 "kind": fault.kind,
                 "words": fault.words,
                 "cure": fault.cure or None,
+                "decided": summary.cures.get(fault.key),
                 "count": fault.count,
                 "samples": list(fault.at),
             }

@@ -11,16 +11,22 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from pulsemend.errors import UsageError
+from pulsemend.mending.draft_log import log_lines, logs_beside
 from pulsemend.mending.facts import summarise
+from pulsemend.mending.prepare import marks_path
 from pulsemend.mending.pulse_evidence import NO_EVIDENCE, PulseEvidence, pulse_evidence
 from pulsemend.model.keys import Key, show
+from pulsemend.model.log import LogTable
 from pulsemend.model.plan_checks import LARGEST_BAND
+from pulsemend.model.plan_file import parse_plan
 from pulsemend.model.plan_keys import PLAN_KEYS, SCHEMA
 from pulsemend.model.recording import RecordingFacts
 from pulsemend.model.toml_lines import key_text
 from pulsemend.model.toml_tables import write_text
 from pulsemend.model.vocabulary import Role
 from pulsemend.progress import Work
+from pulsemend.readers.common import stem_of
+from pulsemend.trials.faults import find_faults
 from pulsemend.trials.proposal import CodeGuess, Guess, SlotGuess, guess
 
 _ALWAYS = 0.8
@@ -54,8 +60,13 @@ def write_draft(recording: Path, out: Path) -> Work[Path]:
         The recording cannot be used.
     """
     _check_free(out)
-    summary = yield from summarise(recording)
-    text = draft_plan(summary.facts, pulse_evidence(summary.facts, summary.pulses_found))
+    stem = stem_of(recording)
+    # Decisions about this recording that stand beside the plan count here as everywhere.
+    marks = marks_path(out, stem)
+    summary = yield from summarise(recording, marks_path=marks if marks.exists() else None)
+    evidence = pulse_evidence(summary.facts, summary.pulses_found)
+    logs = logs_beside(recording.parent, summary.facts.stem)
+    text = draft_plan(summary.facts, evidence, logs, summary.notes)
     _check_free(out)
     write_text(out, text)
     return out
@@ -68,7 +79,12 @@ def _check_free(out: Path) -> None:
         raise UsageError("is no folder", where=str(out.parent), todo="Make it first")
 
 
-def draft_plan(facts: RecordingFacts, evidence: PulseEvidence = NO_EVIDENCE) -> str:
+def draft_plan(
+    facts: RecordingFacts,
+    evidence: PulseEvidence = NO_EVIDENCE,
+    logs: Sequence[LogTable] = (),
+    notes: Sequence[str] = (),
+) -> str:
     """Write the text of a first plan.
 
     Parameters
@@ -77,6 +93,10 @@ def draft_plan(facts: RecordingFacts, evidence: PulseEvidence = NO_EVIDENCE) -> 
         The recording to start from.
     evidence : PulseEvidence
         What the signal shows; without it only names and intervals speak.
+    logs : sequence of LogTable
+        Tables beside the recording that may be its log.
+    notes : sequence of str
+        What the recording's marks have changed about its markers.
 
     Returns
     -------
@@ -85,17 +105,47 @@ def draft_plan(facts: RecordingFacts, evidence: PulseEvidence = NO_EVIDENCE) -> 
     """
     found = guess(facts.markers, facts.rate_hz, evidence.pulse_codes)
     rate_hz = _output_rate_hz(facts.rate_hz)
-    parts = [
-        _head(facts),
-        _markers(found),
-        _trial(found),
+    before = [_head(facts), _faults(facts, notes), _markers(found), _trial(found)]
+    after = [
         _pulses(found, evidence),
         _filter(facts.rate_hz, rate_hz),
         _section("channels"),
         _epochs(found, rate_hz or facts.rate_hz),
         _section("export"),
     ]
-    return "\n\n".join("\n".join(lines) for lines in parts) + "\n"
+    log = log_lines(logs, facts, parse_plan(_joined([*before, *after])).plan) if logs else []
+    return _joined([*before, log, *after])
+
+
+def _joined(parts: Sequence[Sequence[str]]) -> str:
+    return "\n\n".join("\n".join(lines) for lines in parts if lines) + "\n"
+
+
+def _faults(facts: RecordingFacts, notes: Sequence[str]) -> list[str]:
+    """Name the faults of the markers; those with a cure, with what accepts it."""
+    lines = [f"# By this recording's marks: {_one_line(note)}." for note in notes]
+    faults = find_faults(facts.markers, facts.rate_hz)
+    if faults:
+        lines.append("# Faults found in the markers:")
+    for fault in faults:
+        lines.append(f"# - {_one_line(fault.words)}")
+        if fault.cure:
+            lines.append(f"#   cure: {_one_line(fault.cure)}")
+    keys = [fault.key for fault in faults if fault.cure]
+    if keys:
+        lines += [
+            "# decide: which cures are right. The marks of each recording accept them, in the window or by",
+            f"# hand in marks/{_one_line(facts.stem)}.marks.toml beside this plan; a draft made after that",
+            "# shows the codes as cured:",
+            "# [cures]",
+            f"# accepted = {show(keys)}",
+        ]
+    return lines
+
+
+def _one_line(text: str) -> str:
+    """Make a text fit a comment, which ends with its line and holds no signs of control."""
+    return "".join(sign if sign.isprintable() else "?" for sign in " ".join(text.split()))
 
 
 def _head(facts: RecordingFacts) -> list[str]:
@@ -154,6 +204,7 @@ def _trial(found: Guess) -> list[str]:
         + (f"as in most of {found.n_trials} trials." if found.n_trials > 1 else "as in the only trial.")
         + " decide: right?",
         "# after_s counts from the nearest earlier slot that is not optional.",
+        *_kinds(found),
     ]
     for one in found.slots:
         lines += ["", "[[trial]]", f"slot = {show(one.slot.slot)}", f'role = "{one.slot.role}"']
@@ -164,6 +215,17 @@ def _trial(found: Guess) -> list[str]:
                 f" It was found in {one.found} of {_counted(found.n_trials, 'trial')}"
             )
     return lines
+
+
+def _kinds(found: Guess) -> list[str]:
+    """Say where trials differ by more than answers."""
+    if len(found.ways) < 2:
+        return []
+    return [
+        "# decide: trials do not all run alike. Are they kinds of their own? Then slots that only some have",
+        '# get kinds = ["..."], with the names of these kinds; else a slot that may be missing is optional.',
+        *(f"# {count} trials: {', '.join(role.value for role in roles)}" for roles, count in found.ways),
+    ]
 
 
 def _slot_limits(one: SlotGuess) -> list[str]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from statistics import median
 
@@ -74,6 +74,8 @@ class RecordingSummary:
         Trials by a plan, if one was given.
     notes : tuple of str
         What was done to the markers, one sentence each.
+    cures : mapping of str to str
+        "accepted" or "refused", by the key of a fault that the marks decide about.
     """
 
     facts: RecordingFacts
@@ -83,6 +85,7 @@ class RecordingSummary:
     proposal: Guess
     planned: PlannedEvents | None = None
     notes: tuple[str, ...] = ()
+    cures: Mapping[str, str] = field(default_factory=dict)
 
     @property
     def channel_types(self) -> Mapping[str, int]:
@@ -100,7 +103,7 @@ def summarise(
     path : Path
         The recording.
     plan_path, marks_path : Path or None
-        With a plan, faults and trials are judged by it, and the marks beside it count.
+        With a plan, faults and trials are judged by it, and the marks beside it count, too.
 
     Yields
     ------
@@ -121,8 +124,8 @@ def summarise(
     try:
         facts = recording.facts
         marks = NO_MARKS
-        if plan_path is not None:
-            marks = marks_of(plan_path, facts, marks_path)
+        if plan_path is not None or marks_path is not None:
+            marks = marks_of(plan_path or path, facts, marks_path)
         eeg = np.flatnonzero([channel.type is ChannelType.EEG for channel in facts.channels])
         found: tuple[int, ...] = ()
         if eeg.size:
@@ -143,6 +146,10 @@ def summarise(
         proposal=guess(facts.markers, facts.rate_hz, pulse_evidence(facts, found).pulse_codes),
         planned=planned,
         notes=(*counting.notes, *(planned.notes if planned else ())),
+        cures={
+            **dict.fromkeys(marks.cures_accepted, "accepted"),
+            **dict.fromkeys(marks.cures_refused, "refused"),
+        },
     )
 
 

@@ -80,11 +80,16 @@ class SlotGuess:
 
 @dataclass(frozen=True)
 class Guess:
-    """Codes in order of first appearance, slots in order, and how many trials they were seen in."""
+    """Codes in order of first appearance, slots in order, and how many trials they were seen in.
+
+    ``ways`` holds the sequences of roles that trials often have, and in how many, the commonest first; those
+    that lack no more than answers are not told apart from the one that has them.
+    """
 
     codes: tuple[CodeGuess, ...]
     slots: tuple[SlotGuess, ...]
     n_trials: int
+    ways: tuple[tuple[tuple[Role, ...], int], ...] = ()
 
 
 def guess(markers: Sequence[Marker], rate_hz: float, pulse_codes: Iterable[str] = ()) -> Guess:
@@ -106,8 +111,7 @@ def guess(markers: Sequence[Marker], rate_hz: float, pulse_codes: Iterable[str] 
     """
     codes = _codes(markers, rate_hz, frozenset(pulse_codes))
     roles = {code.code: code.role for code in codes}
-    slots, n_trials = _slots([(roles[m.code], m.sample / rate_hz) for m in markers])
-    return Guess(codes, slots, n_trials)
+    return Guess(codes, *_slots([(roles[m.code], m.sample / rate_hz) for m in markers]))
 
 
 def _codes(markers: Sequence[Marker], rate_hz: float, pulse_codes: frozenset[str]) -> tuple[CodeGuess, ...]:
@@ -184,11 +188,14 @@ def _is_response(code: str, markers: Sequence[Marker], roles: Mapping[str, Role]
     return bool(least_s <= low and high <= most_s and float(np.std(times)) > _RESPONSE_VARIES * median(times))
 
 
-def _slots(events: Sequence[tuple[Role, float]]) -> tuple[tuple[SlotGuess, ...], int]:
+Ways = tuple[tuple[tuple[Role, ...], int], ...]
+
+
+def _slots(events: Sequence[tuple[Role, float]]) -> tuple[tuple[SlotGuess, ...], int, Ways]:
     known = [(role, at_s) for role, at_s in events if role in _TRIAL_ROLES]
     start = _start([role for role, _ in known])
     if start is None:
-        return (), 0
+        return (), 0, ()
     trials: list[list[tuple[Role, float]]] = []
     for place, event in enumerate(known):
         if event[0] is start and (place == 0 or known[place - 1][0] is not start):
@@ -198,12 +205,20 @@ def _slots(events: Sequence[tuple[Role, float]]) -> tuple[tuple[SlotGuess, ...],
     sequences = Counter(tuple(role for role, _ in trial) for trial in trials)
     common = {one: count for one, count in sequences.items() if count >= _COMMON * len(trials)}
     if not common:
-        return (), len(trials)
+        return (), len(trials), ()
     pattern = max(common, key=lambda one: (len(one), common[one]))
     lacking = {place for one in common for place in _lacking(one, pattern)}
     # A missing answer does not spoil a trial, and slow ones lie beyond any limit.
     optional = [place in lacking or role is Role.RESPONSE for place, role in enumerate(pattern)]
-    return _limits(pattern, optional, trials), len(trials)
+    return _limits(pattern, optional, trials), len(trials), _ways(common)
+
+
+def _ways(common: Mapping[tuple[Role, ...], int]) -> Ways:
+    """Count sequences of roles without their answers, of which some are always missing."""
+    counts: Counter[tuple[Role, ...]] = Counter()
+    for sequence, count in common.items():
+        counts[tuple(role for role in sequence if role is not Role.RESPONSE)] += count
+    return tuple(counts.most_common())
 
 
 def _start(roles: Sequence[Role]) -> Role | None:
