@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 
 from pulsemend.errors import MarksError, PlanError
 from pulsemend.model.keys import key_defaults
-from pulsemend.model.marks import NO_MARKS, BadStretch, EpochKey, Marks, MovedPulse
+from pulsemend.model.marks import NO_MARKS, BadStretch, EpochKey, MarkerKey, Marks, MovedPulse
 from pulsemend.model.marks_file import (
     check_files,
     check_fingerprint,
@@ -33,6 +33,7 @@ TEXT = f"""\
 pulsemend_marks = 1
 bad = ["C3", "P 7"]               # loose all session
 trials_excluded = [3, 17]         # fell asleep
+run = "2"                         # after the break
 
 [[fingerprint]]
 name = "lt01_eeg.vhdr"
@@ -71,6 +72,24 @@ rule = "delay1"
 trial = 4
 rule = "baseline"
 piece = 2                         # a blink
+
+[[markers_ignored]]
+sample = 700
+code = "S 21"                     # a test pulse
+[[markers_added]]
+sample = 9100                     # the cable was loose
+code = "arrow left"
+[[markers_added]]
+sample = 9100
+code = "dot"
+
+[cures]
+accepted = ["stuck bit 7", "doubled marker S 21"]   # seen by eye, too
+refused = ["zero codes"]
+
+[log]
+file = "lt01 second.tsv"          # the first one was lost
+rows_excluded = [1, 30]
 """
 MARKS = Marks(
     fingerprint=Fingerprint((("lt01_eeg.vhdr", 1200, "a" * 64), ("lt01_eeg.eeg", 7_000_000, "b" * 64))),
@@ -83,6 +102,13 @@ MARKS = Marks(
     bad_stretches=(BadStretch(0, 5000, "settling"), BadStretch(9000, 9001)),
     trials_excluded=(3, 17),
     epochs_left_out=(EpochKey(4, "delay1"), EpochKey(4, "baseline", 2)),
+    markers_ignored=(MarkerKey(700, "S 21"),),
+    markers_added=(MarkerKey(9100, "arrow left"), MarkerKey(9100, "dot")),
+    cures_accepted=("stuck bit 7", "doubled marker S 21"),
+    cures_refused=("zero codes",),
+    log_file="lt01 second.tsv",
+    log_rows_excluded=(1, 30),
+    run="2",
 )
 
 
@@ -123,10 +149,22 @@ def test_changing_keeps_comments() -> None:
         pulses_moved=(MovedPulse(1500, 1501), MovedPulse(2000, 2012)),
         epochs_left_out=MARKS.epochs_left_out[1:],
         types={"VEOG": ChannelType.MISC, "HEOG": ChannelType.EOG},
+        markers_ignored=(MarkerKey(5, "a"), MarkerKey(700, "S 21")),
+        markers_added=(MarkerKey(9101, "arrow left"), MarkerKey(9100, "dot")),
+        cures_accepted=("stuck bit 7",),
+        cures_refused=("doubled marker S 21", "zero codes"),
+        log_file="",
+        log_rows_excluded=(),
+        run="3",
     )
     text = update_text(TEXT, changed)
     assert parse_marks(text).marks == changed
     assert sorted(re.findall("#.*", text)) == sorted(re.findall("#.*", TEXT))
+
+
+def test_taking_everything_back() -> None:
+    text = update_text(TEXT, NO_MARKS)
+    assert parse_marks(text).marks == NO_MARKS
 
 
 REFUSED = [
@@ -146,6 +184,22 @@ REFUSED = [
     ("stop = 9001", "stop = 9000", "bad_stretches[2].stop", "must be above start"),
     ("piece = 2", "piece = 0", "epochs_left_out[2].piece", "is out of range"),
     ('trial = 4\nrule = "delay1"', "trial = 4", "epochs_left_out[1].rule", "is missing"),
+    ("sample = 700", "sample = -1", "markers_ignored[1].sample", "is out of range"),
+    ("sample = 700", "sample = 7.5", "markers_ignored[1].sample", "must be a whole number"),
+    ('code = "dot"', 'code = ""', "markers_added[2].code", "must not be empty"),
+    ('code = "dot"', "", "markers_added[2].code", "is missing"),
+    ('code = "dot"', "to = 3", "markers_added[2].to", "is unknown"),
+    ('refused = ["zero codes"]', "refused = [1]", "cures.refused[1]", "must be text"),
+    (
+        'refused = ["zero codes"]',
+        'refused = ["zero codes", "stuck bit 7"]',
+        "cures.refused[2]",
+        "is accepted as well",
+    ),
+    ("accepted = [", 'accept = ["a"]\naccepted = [', "cures.accept", "did you mean cures.accepted?"),
+    ("rows_excluded = [1, 30]", "rows_excluded = [0]", "log.rows_excluded[1]", "is out of range"),
+    ("rows_excluded = [1, 30]", "rows_excluded = [1, 1]", "log.rows_excluded", "names something twice"),
+    ('run = "2"', "run = 2", "run", "must be text"),
     ("pulsemend_marks = 1", "pulsemend_marks = 2", "pulsemend_marks", "is from a newer version"),
     ("pulsemend_marks = 1", "pulsemend = 1", "pulsemend", "is unknown"),
 ]
@@ -223,7 +277,8 @@ def test_sizes_are_enough_to_refuse_before_hashing() -> None:
 @pytest.mark.parametrize(
     ("n_samples", "key"),
     [
-        (9001, None),
+        (9101, None),
+        (9100, "markers_added[1].sample"),
         (9000, "bad_stretches[2].stop"),
         (2012, "bad_stretches[1].stop"),
         (2011, "pulses.moved[1].to"),
@@ -238,6 +293,14 @@ def test_samples_beyond_the_end(n_samples: int, key: str | None) -> None:
     with pytest.raises(MarksError) as caught:
         check_samples(MARKS, n_samples)
     assert caught.value.key == key
+
+
+def test_markers_beyond_the_end() -> None:
+    marks = Marks(markers_ignored=(MarkerKey(699, "a"), MarkerKey(700, "a")))
+    check_samples(marks, 701)
+    with pytest.raises(MarksError, match="beyond the recording's end") as caught:
+        check_samples(marks, 700)
+    assert (caught.value.key, caught.value.allowed) == ("markers_ignored[2].sample", "up to 699")
 
 
 # --- any marks --------------------------------------------------------------------------------------
@@ -272,6 +335,13 @@ def any_marks(draw: st.DrawFn) -> Marks:
             EpochKey(draw(st.integers(1, 99)), draw(st.sampled_from(["a", "b-1"])), draw(st.integers(1, 3)))
             for _ in range(draw(st.integers(0, 3)))
         ),
+        markers_ignored=tuple(MarkerKey(draw(samples), draw(names)) for _ in range(draw(st.integers(0, 2)))),
+        markers_added=tuple(MarkerKey(draw(samples), draw(names)) for _ in range(draw(st.integers(0, 2)))),
+        cures_accepted=tuple(draw(st.lists(names.map("a{}".format), max_size=2, unique=True))),
+        cures_refused=tuple(draw(st.lists(names.map("r{}".format), max_size=2, unique=True))),
+        log_file=draw(st.just("") | names),
+        log_rows_excluded=tuple(draw(st.lists(st.integers(1, 99), max_size=3, unique=True))),
+        run=draw(st.just("") | names),
     )
 
 
@@ -280,7 +350,8 @@ def any_marks(draw: st.DrawFn) -> Marks:
 def test_any_marks_survive_writing_and_any_text_can_become_any_marks(first: Marks, second: Marks) -> None:
     text = marks_text(first)
     assert parse_marks(text).marks == first
-    named = {"fingerprint": "name", "pulses.moved": "sample", "bad_stretches": "", "epochs_left_out": ""}
+    named = {"fingerprint": "name", "pulses.moved": "sample"}
+    named |= dict.fromkeys(("bad_stretches", "epochs_left_out", "markers_ignored", "markers_added"), "")
     for start in (text, TEXT):
         edited = updated_text(start, marks_tree(second), key_defaults(MARKS_KEYS), named)
         assert parse_marks(edited).marks == second

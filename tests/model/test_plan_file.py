@@ -452,9 +452,6 @@ def test_unknown_key_in_arrays_of_tables() -> None:
 LATER = [
     ("pulses.times", "signal"),
     ("pulses.times", "both"),
-    ("pulses.decay", "exponential"),
-    ("pulses.decay", "two exponentials"),
-    ("pulses.decay", "power"),
     ("filter.across_pulses", "split"),
     ("channels.find_bad", True),
     ("channels.rebuild_bad", True),
