@@ -264,6 +264,11 @@ class Chain:
                 marked[column, start:stop] = True
         return marked
 
+    def decay_share(self, cut: Cut) -> float:
+        """Give the share of an epoch's samples, over all channels, that `decay_fitted` marks."""
+        marked = self.decay_fitted(cut)
+        return 0.0 if marked is None else float(marked.mean())
+
     def replaced_share(self, cut: Cut) -> float:
         """Give the share of an epoch's samples, over all channels, that `replaced` marks."""
         # Runs of one group may share an output sample that two gaps touch.

@@ -7,9 +7,13 @@ from typing import Any
 
 import numpy as np
 
+from pulsemend.engine.decay import DecayEstimates
+from pulsemend.engine.decay_subtraction import OVER_UV
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.setup import Setup
+from pulsemend.signal.absorption import LATENCIES_S
 from pulsemend.signal.gaps import shortened
+from pulsemend.units import v_to_uv
 
 
 @dataclass(frozen=True)
@@ -28,6 +32,8 @@ def steps(setup: Setup, estimates: Estimates) -> tuple[Step, ...]:
             "not put back, the high-pass removes it" if setup.highpass_on else "put back before the reference"
         )
         taken.append(Step("constant offset", {"of": "each channel", "handling": where}))
+    if estimates.decay is not None:
+        taken.append(Step("decay", _decay_parameters(setup, estimates.decay)))
     if setup.groups and estimates.pulses:
         taken.append(Step("fill", _fill_parameters(setup, estimates)))
     if setup.antialias is not None:
@@ -57,6 +63,31 @@ def steps(setup: Setup, estimates: Estimates) -> tuple[Step, ...]:
             )
         )
     return tuple(taken)
+
+
+def _decay_parameters(setup: Setup, decay: DecayEstimates) -> dict[str, Any]:
+    names = [channel.name for channel in setup.channels]
+    fitted = [
+        {
+            "channel": names[column],
+            "at_the_gaps_end_uv": round(v_to_uv(float(decay.shape(row).at(np.zeros(1))[0])), 3),
+            "shape": [float(f"{value:.6g}") for value in decay.shape(row).values],
+            "spread_of_amplitudes": round(float(decay.spread[row]), 4),
+            "recovered_share": [round(float(x), 3) if np.isfinite(x) else None for x in decay.share[row]],
+        }
+        for row, column in enumerate(decay.columns.tolist())
+    ]
+    return {
+        "kind": decay.kind.value,
+        "stretch_s": setup.decay_s,
+        "least_v": setup.decay_least_v,
+        "shape_from": f"the median of {decay.n_pulses} pulses; only its amplitude is fitted per pulse",
+        "subtracted_until_uv": OVER_UV,
+        "step_at_the_pulse": "not touched: each side keeps its own level",
+        "fitted": fitted,
+        "latencies_of_recovered_share_s": list(LATENCIES_S),
+        "not_fitted": {names[i]: reason for i, reason in enumerate(decay.reasons) if reason},
+    }
 
 
 def _fill_parameters(setup: Setup, estimates: Estimates) -> dict[str, Any]:

@@ -10,7 +10,8 @@ uint64, then the bytes; a list is its length as uint64, then its items.
    as a list;
 5. the list of other label columns sorted by name, each: its name, then its texts as a list;
 6. for every epoch in order: its samples (channel, time) in volts, then one bit for each of them, 1 where it
-   is replaced: eight to a byte, the first in the highest bit, the last byte filled up with zeros.
+   is replaced: eight to a byte, the first in the highest bit, the last byte filled up with zeros; then, in a
+   set with `/decay_fitted` alone, the same of that.
 """
 
 from __future__ import annotations
@@ -68,7 +69,9 @@ class ContentHash:
             self._text(column)
             self._texts(labels.more[column])
 
-    def add(self, data: FloatArray, replaced: NDArray[np.bool_]) -> None:
+    def add(
+        self, data: FloatArray, replaced: NDArray[np.bool_], decay_fitted: NDArray[np.bool_] | None = None
+    ) -> None:
         """Add the next epoch.
 
         Parameters
@@ -77,9 +80,13 @@ class ContentHash:
             Volts.
         replaced : array of bool, shape (n_channels, n_times)
             Which samples are estimates.
+        decay_fitted : array of bool, shape (n_channels, n_times), or None
+            Where the fit of a decay would alter a response; None in a set that does not say so.
         """
         self._hash.update(np.ascontiguousarray(data, self._dtype).data)
         self._hash.update(np.packbits(replaced).data)
+        if decay_fitted is not None:
+            self._hash.update(np.packbits(decay_fitted).data)
 
     def hexdigest(self) -> str:
         """Return the hash of what was added so far."""

@@ -93,6 +93,8 @@ class SetEpoch:
         Sub-sample shift that was applied, or, at the recorded rate, the remainder that was not.
     replaced_share : float
         Share of the epoch's samples, over all channels, that `/replaced` marks; 0 to 1.
+    decay_share : float
+        The same of `/decay_fitted`, in sets that have it.
     leak : str
         What pulses still contribute, in microvolts; "n/a" where no pulse is known.
     """
@@ -102,6 +104,7 @@ class SetEpoch:
     start_s: float
     shift_s: float = 0.0
     replaced_share: float = 0.0
+    decay_share: float = 0.0
     leak: str = "n/a"
 
 
@@ -137,6 +140,8 @@ class SetContents:
         What the samples went through; 0 where no filter was used.
     replaced_reach_s : float
         How far the filters spread a replaced sample.
+    decay_fitted : bool
+        Whether decays were looked for, so that the set has `/decay_fitted`.
     source_sha256 : str
         Digest of the recording's fingerprint.
     provenance : mapping
@@ -166,6 +171,7 @@ class SetContents:
     highpass_hz: float = 0.0
     lowpass_hz: float = 0.0
     replaced_reach_s: float = 0.0
+    decay_fitted: bool = False
     provenance: Mapping[str, object] = field(default_factory=dict)
     pulse_columns: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
     later: Mapping[str, Sequence[str]] = field(default_factory=dict)

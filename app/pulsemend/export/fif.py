@@ -288,6 +288,7 @@ def _metadata(contents: SetContents) -> list[dict[str, Any]]:
             "start_s": epoch.start_s,
             "shift_s": epoch.shift_s,
             "replaced_share": epoch.replaced_share,
+            **({"decay_share": epoch.decay_share} if contents.decay_fitted else {}),
             **{column: epoch.candidate.labels.get(column, "") for column in columns},
         }
         for index, epoch in enumerate(contents.epochs)

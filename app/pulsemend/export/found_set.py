@@ -73,6 +73,8 @@ class FoundSet:
         Epochs that differ between the containers.
     shares : list of float
         Replaced share of every epoch.
+    decay_shares : list of float
+        Share of every epoch that `/decay_fitted` marks; empty where the set has none.
     """
 
     folder: Path
@@ -90,6 +92,7 @@ class FoundSet:
     not_finite: list[str] = field(default_factory=list)
     unequal: list[int] = field(default_factory=list)
     shares: list[float] = field(default_factory=list)
+    decay_shares: list[float] = field(default_factory=list)
 
     def path(self, name: str) -> Path:
         """Path of one of the set's files."""
@@ -214,6 +217,7 @@ def _read_samples(found: FoundSet, done: float, total: float) -> Work[None]:
         OpenRegion(main) as samples,
         OpenRegion(h5.replaced if h5 is not None else main) as flags,
         OpenRegion(fif.data if fif is not None else main) as others,
+        OpenRegion((h5.decay_fitted if h5 is not None else None) or main) as fitted,
     ):
         for index in range(main.shape[0]):
             if index % 16 == 0:
@@ -223,10 +227,13 @@ def _read_samples(found: FoundSet, done: float, total: float) -> Work[None]:
             if h5 is not None:
                 replaced = flags.read(index)
                 found.shares.append(np.count_nonzero(replaced) / replaced.size)
+                marked = fitted.read(index) if h5.decay_fitted is not None else None
+                if marked is not None:
+                    found.decay_shares.append(np.count_nonzero(marked) / marked.size)
                 if missing_allowed:
                     finite |= replaced
                 if content is not None:
-                    content.add(volts, replaced)
+                    content.add(volts, replaced, marked)
             if not finite.all():
                 channel, time = np.argwhere(~finite)[0].tolist()
                 found.not_finite.append(f"epoch {index}, channel {channel}, sample {time}")

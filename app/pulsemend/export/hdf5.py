@@ -2,13 +2,14 @@
 
     /data      (epoch, channel, time)  float32 or float64, attribute units = "V"
     /replaced  (epoch, channel, time)  bool
+    /decay_fitted (epoch, channel, time)  bool; only in sets whose plan has decays fitted
     /times     (time)                  float64, attributes units = "s" and zero = "anchor" | "epoch start"
     /channels/name|type|position|status
     /labels/name|trial|piece|anchor|onset_s|start_s and one dataset per label column
     attributes of the file: schema rate_hz plan source_sha256 content_sha256 replaced_reach_s rank
 
-Texts are UTF-8 of variable length. `/data` and `/replaced` are contiguous and reserved when the file is made,
-so that epochs are written in place without the library in between.
+Texts are UTF-8 of variable length. `/data`, `/replaced` and `/decay_fitted` are contiguous and
+reserved when the file is made, so that epochs are written in place without the library in between.
 """
 
 from __future__ import annotations
@@ -37,6 +38,8 @@ class Hdf5Facts:
     Parameters
     ----------
     data, replaced : Region
+    decay_fitted : Region or None
+        None where the set has none.
     times : array, shape (n_times,), float64
         Seconds from `zero`.
     zero : str
@@ -49,6 +52,7 @@ class Hdf5Facts:
 
     data: Region
     replaced: Region
+    decay_fitted: Region | None
     times: NDArray[np.float64]
     zero: str
     channels: tuple[SetChannel, ...]
@@ -56,7 +60,7 @@ class Hdf5Facts:
     attributes: Mapping[str, Any]
 
 
-def create_hdf5(path: Path, contents: SetContents) -> tuple[Region, Region]:
+def create_hdf5(path: Path, contents: SetContents) -> tuple[Region, Region, Region | None]:
     """Write everything but the samples, and reserve their place.
 
     Parameters
@@ -70,12 +74,16 @@ def create_hdf5(path: Path, contents: SetContents) -> tuple[Region, Region]:
     -------
     data, replaced : Region
         Where the samples go.
+    decay_fitted : Region or None
+        None where the set has none.
     """
+    flags = h5py.h5t.py_create(np.dtype(bool), logical=True)
+    fitted = None
     with h5py.File(path, "w") as file:
         data = _reserve(file, "data", contents.shape, h5py.h5t.py_create(contents.dtype))
-        replaced = _reserve(
-            file, "replaced", contents.shape, h5py.h5t.py_create(np.dtype(bool), logical=True)
-        )
+        replaced = _reserve(file, "replaced", contents.shape, flags)
+        if contents.decay_fitted:
+            fitted = _reserve(file, "decay_fitted", contents.shape, flags)
         file["data"].attrs["units"] = "V"
         file["times"] = np.asarray(contents.times, np.float64)
         file["times"].attrs["units"] = "s"
@@ -91,6 +99,7 @@ def create_hdf5(path: Path, contents: SetContents) -> tuple[Region, Region]:
     return (
         Region(path, data, contents.dtype.newbyteorder("<").str, contents.shape),
         Region(path, replaced, "|b1", contents.shape),
+        None if fitted is None else Region(path, fitted, "|b1", contents.shape),
     )
 
 
@@ -136,9 +145,13 @@ def read_hdf5(path: Path) -> Hdf5Facts:
             raise ValueError(f"/data holds {data.dtype}, /replaced {replaced.dtype}")
         if data.attrs["units"] != "V":
             raise ValueError(f"/data is in {data.attrs['units']}, not in V")
+        fitted = file.get("decay_fitted")
+        if fitted is not None and (fitted.shape != data.shape or fitted.dtype != np.bool_):
+            raise ValueError(f"/decay_fitted holds {fitted.dtype} of the shape {fitted.shape}")
         return Hdf5Facts(
             data=_region(path, data),
             replaced=_region(path, replaced),
+            decay_fitted=None if fitted is None else _region(path, fitted),
             times=np.asarray(file["times"][()], np.float64),
             zero=str(file["times"].attrs["zero"]),
             channels=_read_channels(file["channels"]),

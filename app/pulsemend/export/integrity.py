@@ -40,6 +40,7 @@ def check_integrity(found: FoundSet) -> list[CheckItem]:
         _labels(found),
         _order(found),
         _replaced(found),
+        *_decay_fitted(found),
         _conditions(found),
     ]
 
@@ -352,6 +353,27 @@ def _replaced(found: FoundSet) -> CheckItem:
         problems.append(f"epochs.tsv: {found.problems['replaced']}")
     mean = float(np.mean(found.shares)) if found.shares else 0.0
     return integrity_item("replaced", title, f"{mean:.2%} on average", limit, problems)
+
+
+def _decay_fitted(found: FoundSet) -> list[CheckItem]:
+    """Check the marks of fitted decays, in a set that has any."""
+    told = bool((found.facts or {}).get("decay_fitted"))
+    there = found.hdf5 is not None and found.hdf5.decay_fitted is not None
+    if found.hdf5 is None or not (told or there):
+        return []
+    problems = []
+    if told != there:
+        problems.append("provenance and epochs.h5 disagree whether decays were fitted")
+    with found.reading("decay share"):
+        column = np.array(found.tables[names.EPOCHS_TSV]["decay_share"], float)
+        shares = found.decay_shares
+        if column.shape != (len(shares),) or not np.allclose(column, shares, rtol=0, atol=_SAME_SHARE):
+            problems.append("epochs.tsv and /decay_fitted differ")
+    if "decay share" in found.problems:
+        problems.append(f"epochs.tsv: {found.problems['decay share']}")
+    mean = float(np.mean(found.decay_shares)) if found.decay_shares else 0.0
+    title = "share per epoch where the decay's fit alters a response"
+    return [integrity_item("decay_fitted", title, f"{mean:.2%} on average", "as in the samples", problems)]
 
 
 def _conditions(found: FoundSet) -> CheckItem:

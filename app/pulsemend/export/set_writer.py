@@ -77,6 +77,7 @@ class SetWriter:
         self._part: Path | None = None
         self._data: list[OpenRegion] = []
         self._replaced: OpenRegion | None = None
+        self._decay_fitted: OpenRegion | None = None
         self._next = 0
         check_contents(contents)
         check_place(parent, contents.stem, overwrite=overwrite)
@@ -101,15 +102,22 @@ class SetWriter:
         with self._whole_or_nothing():
             self._part = make_part(self.folder)
             if Format.HDF5 in self.contents.formats:
-                data, replaced = create_hdf5(self._path(names.EPOCHS_H5), self.contents)
+                data, replaced, fitted = create_hdf5(self._path(names.EPOCHS_H5), self.contents)
                 self._data.append(OpenRegion(data, write=True))
                 self._replaced = OpenRegion(replaced, write=True)
+                self._decay_fitted = None if fitted is None else OpenRegion(fitted, write=True)
             if Format.FIF in self.contents.formats:
                 region = create_fif(self._path(names.EPO_FIF), self.contents)
                 self._data.append(OpenRegion(region, write=True))
         return self
 
-    def write(self, index: int, data: FloatArray, replaced: NDArray[np.bool_]) -> None:
+    def write(
+        self,
+        index: int,
+        data: FloatArray,
+        replaced: NDArray[np.bool_],
+        decay_fitted: NDArray[np.bool_] | None = None,
+    ) -> None:
         """Write one epoch to every container.
 
         Parameters
@@ -120,6 +128,8 @@ class SetWriter:
             Volts.
         replaced : array of bool, shape (n_channels, n_times)
             Which samples are estimates.
+        decay_fitted : array of bool, shape (n_channels, n_times), or None
+            Where the fit of a decay would alter a response; for sets that have it.
 
         Raises
         ------
@@ -132,13 +142,17 @@ class SetWriter:
             raise ValueError(
                 f"expected {self.contents.shape[1:]}, received {data.shape} and {replaced.shape}"
             )
+        if (decay_fitted is not None) != self.contents.decay_fitted:
+            raise ValueError("decay_fitted must be given for a set that has it, and for no other")
         volts: NDArray[Any] = data.astype(self.contents.dtype, copy=False)
         with self._whole_or_nothing():
             for region in self._data:
                 region.write(index, volts)
             if self._replaced is not None:
                 self._replaced.write(index, replaced)
-        self._hash.add(volts, replaced)
+            if self._decay_fitted is not None and decay_fitted is not None:
+                self._decay_fitted.write(index, decay_fitted)
+        self._hash.add(volts, replaced, decay_fitted)
         self._next += 1
 
     def finish(
@@ -218,10 +232,10 @@ class SetWriter:
         return file_in(self._part or self.folder, self.folder.name, name)
 
     def _close(self) -> None:
-        for region in (*self._data, self._replaced):
+        for region in (*self._data, self._replaced, self._decay_fitted):
             if region is not None:
                 region.close()
-        self._data, self._replaced = [], None
+        self._data, self._replaced, self._decay_fitted = [], None, None
 
     def _write_beside(
         self, rank: int, extra: Mapping[str, object], save_estimates: Callable[[Path], None]
@@ -344,7 +358,7 @@ def needed_bytes(contents: SetContents) -> int:
     samples = int(np.prod(contents.shape))
     needed = _ROOM_BESIDE + 2 * 256 * (len(contents.ledger) + len(contents.pulses))
     if Format.HDF5 in contents.formats:
-        needed += samples * (contents.dtype.itemsize + 1)
+        needed += samples * (contents.dtype.itemsize + 1 + contents.decay_fitted)
     if Format.FIF in contents.formats:
         needed += fif_bytes(contents)
     return needed
@@ -380,6 +394,7 @@ def set_facts(contents: SetContents, rank: int, content_sha256: str) -> dict[str
         "pulses": len(contents.pulses),
         "rank": rank,
         "replaced_reach_s": contents.replaced_reach_s,
+        "decay_fitted": contents.decay_fitted,
         "source_sha256": contents.source_sha256,
         "content_sha256": content_sha256,
         "names_in_fif": {

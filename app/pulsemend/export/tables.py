@@ -84,11 +84,13 @@ def epochs_text(contents: SetContents) -> str:
             epoch.shift_s,
             *(epoch.candidate.labels.get(column) for column in more),
             epoch.replaced_share,
+            *((epoch.decay_share,) if contents.decay_fitted else ()),
             epoch.leak,
         )
         for index, epoch in enumerate(contents.epochs)
     ]
-    return table_text((*columns, *more, "replaced_share", "leak"), rows)
+    decay = ("decay_share",) if contents.decay_fitted else ()
+    return table_text((*columns, *more, "replaced_share", *decay, "leak"), rows)
 
 
 def ledger_text(contents: SetContents) -> str:

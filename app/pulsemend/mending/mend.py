@@ -99,7 +99,7 @@ def mend(request: Request, out: Path, *, overwrite: bool = False) -> Work[MendRe
                 yield Progress(_STAGE, index, len(cuts))
                 data = prepared.chain.samples(cut)
                 rank.add(data)
-                writer.write(index, data, prepared.chain.replaced(cut))
+                writer.write(index, data, prepared.chain.replaced(cut), prepared.chain.decay_fitted(cut))
             yield Progress("reading back", 0, 0)
             folder = writer.finish(rank.rank(), {}, prepared.estimates.save)
             yield Progress("reading back", 1, 1)
@@ -161,6 +161,7 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut], leak: Leak) -> SetCont
             start_s=candidate.start_s,
             shift_s=cut.shift_s or cut.remainder_s,
             replaced_share=prepared.chain.replaced_share(cut),
+            decay_share=prepared.chain.decay_share(cut),
             leak=_leak_text(leak, peak_v),
         )
         for candidate, cut, peak_v in zip(prepared.kept, cuts, leak.peaks_v.tolist(), strict=True)
@@ -189,6 +190,7 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut], leak: Leak) -> SetCont
         highpass_hz=plan.filter.highpass_hz,
         lowpass_hz=plan.filter.lowpass_hz or reduced_lowpass_hz,
         replaced_reach_s=setup.replaced_reach_s,
+        decay_fitted=prepared.estimates.decay is not None,
         provenance={**provenance(prepared), "leak": _leak_provenance(leak)},
         later=later_labels(prepared),
     )
