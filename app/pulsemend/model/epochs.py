@@ -25,6 +25,7 @@ FIXED_COLUMNS = (
     "shift",
     "shift_s",
     "replaced_share",
+    "decay_share",
     "leak",
     "leak_uv",
     "fate",

@@ -238,7 +238,6 @@ PLAN_KEYS: tuple[Key, ...] = (
         "shape of what a pulse leaves behind after its gap",
         default=Decay.NONE,
         words=Decay,
-        now=(Decay.NONE,),
     ),
     Key(
         "pulses.decay_ms",
@@ -246,8 +245,8 @@ PLAN_KEYS: tuple[Key, ...] = (
         "length of the stretch that the decay is fitted to, from the gap's end",
         default=80.0,
         unit="ms",
-        low=1.0,
-        high=2000.0,
+        low=5.0,
+        high=1000.0,
     ),
     Key(
         "pulses.decay_least_uv",
