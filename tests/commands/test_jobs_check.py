@@ -19,7 +19,10 @@ from support.small_lantern import PLAN, SetOnDisk, Study, run_mend
 BALANCED = PLAN[: PLAN.index('[[epochs.rule]]\nname = "after2"')] + (
     '[[epochs.rule]]\nname = "delay1"\nanchor = "cue1"\nstart_s = 0.5\n'
 )
-"""One rule, so that no readiness item is beyond its limit."""
+"""One rule, so that no readiness item but the leak is beyond its limit."""
+
+SHOWN_HERE = ("replaced_by_rule", "leak")
+"""Items beyond their limit in every set of this study: it accepts gaps, and its decay is not subtracted."""
 
 
 @pytest.fixture(scope="module")
@@ -74,7 +77,9 @@ def test_readiness_beyond_its_limit_is_1_only_with_strict(
     assert (code, items["replaced_by_rule"]) == (0, False)
     assert main(["check", str(whole), "--strict"]) == 1
     assert "LOOK AT" in capsys.readouterr().out
-    balanced = run_mend(study.recording, BALANCED, tmp_path).folder
+    # Without a high-pass nothing of a pulse is carried far: the epochs end 200 ms before theirs.
+    still = BALANCED.replace("start_s = 0.5", "start_s = 0.3") + "[filter]\nhighpass_hz = 0.0\n"
+    balanced = run_mend(study.recording, still, tmp_path).folder
     assert checked(balanced, capsys, "--strict")[0] == 0
 
 
@@ -138,7 +143,7 @@ def test_a_condition_without_epochs_is_1(
     capsys.readouterr()
     code, items = checked(tmp_path / "sub-lt01_task-lantern_desc-mended", capsys)
     assert (code, items["conditions"]) == (1, False)
-    assert [name for name, passed in items.items() if not passed and name != "replaced_by_rule"] == [
+    assert [name for name, passed in items.items() if not passed and name not in SHOWN_HERE] == [
         "conditions",
         "balance",
     ]

@@ -79,6 +79,7 @@ def test_mend_json_is_one_object_and_progress_lines(study: Study, tmp_path: Path
     assert stages == [
         "identifying the recording",
         "learning from the recording",
+        "measuring the leak",
         "writing epochs",
         "reading back",
     ]

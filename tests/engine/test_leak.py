@@ -37,7 +37,7 @@ def decaying(height_uv: float, tau_s: float, onsets: list[int]) -> NDArray[np.fl
 
 def recording(*channels: NDArray[np.float64]) -> ArrayRecording:
     markers = tuple(Marker(float(onset), "pulse") for onset in ONSETS)
-    return ArrayRecording(np.round(np.array(channels, dtype=np.float64)), RATE_HZ, markers)
+    return ArrayRecording(np.rint(np.vstack(channels)), RATE_HZ, markers)
 
 
 def leak_of(
@@ -64,7 +64,7 @@ def test_where_nothing_but_pulses_is_recorded_the_leak_is_what_the_epochs_hold()
 
 
 def test_a_decay_leaks_backwards_by_its_area() -> None:
-    # Closed form: near zero a high-pass is a spike minus 2 fc, so just before the pulse the leak is 2 fc times
+    # Closed form: near zero a high-pass is a spike minus 2 fc, so before the pulse the leak is 2 fc times
     # the area of what the repair left: a ramp across the gap (line fill), and the decay behind it.
     height_v, tau_s, gap_s = 1e-3, 0.020, 0.014
     behind_v = height_v * np.exp(-gap_s / tau_s)
