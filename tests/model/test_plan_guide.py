@@ -34,7 +34,17 @@ def test_facts_of_a_key_are_printed() -> None:
         "`window_ms` | the gap",
         "two numbers, the second above the first, each from -1000 to 5000 ms",
         '"covariance"',
-        '"markers", "none" (more in a later version)',
+        '"hdf5", "fif" (more in a later version)',
+        "### [bits.FIELD]",
+        "`roles.VALUE`",
+        "### [markers.CODE]",
+        "### [group.NAME]",
+        "### [labels.NAME]",
+        "`values.VALUE`",
+        "### [stimulation.columns]",
+        "`FACT`",
+        "`CHANNEL`",
+        "`labels.NAME`",
         "must be given",
     ):
         assert part in text

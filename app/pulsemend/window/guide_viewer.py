@@ -25,6 +25,7 @@ from pulsemend.window.theme import Theme
 PAGES = {
     "start.md": "The job, once through",
     "plan.md": "The plan, key by key",
+    "trials.md": "From markers to trials",
     "marks.md": "Marks",
     "sets.md": "What a set contains",
     "methods.md": "Methods",
