@@ -25,7 +25,7 @@ from pulsemend.model.vocabulary import Role
 from pulsemend.trials import alignment
 from pulsemend.trials.matching import match_trials
 from support import greedy_matcher
-from support.marker_streams import LANTERN, RATE_HZ, Mix, Stream, draw_stream
+from support.marker_streams import BASE, LANTERN, RATE_HZ, Mix, Stream, draw_stream
 
 N_TRIALS = 1000
 SHARES = (0.02, 0.05, 0.10)
@@ -100,7 +100,7 @@ def questions_plan() -> Plan:
         Slot("answer", Role.RESPONSE, (0.2, 0.8), group="question"),
     )
     return replace(
-        LANTERN,
+        BASE,
         markers=tuple(MarkerPlan(slot.role.value, slot.role) for slot in slots),
         trial=slots,
         groups=(Group("question", (1, 8), (0.9, 2.0)),),

@@ -1,4 +1,7 @@
-"""Markers to trials: slots matched in order within their limits."""
+"""The greedy matcher that the alignment replaced: slots matched in order within their limits.
+
+Kept only for tests/benchmarks/matching.py, which shows the difference.
+"""
 
 from __future__ import annotations
 
