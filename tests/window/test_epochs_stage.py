@@ -58,11 +58,18 @@ def put_up(qtbot: QtBot, bench: Workbench) -> EpochsStage:
     return page
 
 
+def wait_counted(qtbot: QtBot, page: EpochsStage) -> None:
+    """Wait until lanes and table show the plan and marks of this moment."""
+    wait_learned(qtbot, page.bench)
+    qtbot.waitUntil(lambda: page.is_counted, timeout=LEARN_MS)
+
+
 @pytest.fixture
 def page(qtbot: QtBot, bench: Workbench, study: Study, tmp_path: Path) -> EpochsStage:
     open_study(bench, study, tmp_path)
     page = put_up(qtbot, bench)
-    wait_learned(qtbot, bench)
+    wait_counted(qtbot, page)
+    page.lane_page.switch["table"].click()
     return page
 
 
@@ -130,7 +137,7 @@ def test_a_typed_start_is_an_entry_with_a_name_and_is_counted(qtbot: QtBot, page
     type_over(qtbot, page.editor.start, "2")
     assert rule(page, 1).start_s == 2.0
     assert page.bench.session.next_undo == "Rule delay1: start 2 s"
-    wait_learned(qtbot, page.bench)
+    wait_counted(qtbot, page)
     # Two seconds after the cue there is a pulse in every trial, whose gap is refused.
     assert cell(page, 1, "delay1", FATE) == str(Fate.TOUCHES_GAP)
     assert cell(page, 1, "delay1", DETAIL).startswith("pulse1 at ")
@@ -414,21 +421,20 @@ def test_empty_states_say_what_to_do(qtbot: QtBot, bench: Workbench, study: Stud
     open_study(bench, study, tmp_path)
     assert page.set_card.isVisible()
     wait_learned(qtbot, bench)
-    assert page.pages.currentWidget() is page.table
+    assert page.pages.currentWidget() is page.lane_page
 
 
 def test_no_trial_is_explained(qtbot: QtBot, page: EpochsStage) -> None:
     session = page.bench.session
     assert session.plan is not None
     markers = tuple(
-        replace(marker, code="lamp") if marker.code == "lanterns up" else marker
-        for marker in session.plan.markers
+        replace(marker, code=f"lamp {place}") for place, marker in enumerate(session.plan.markers)
     )
     session.edit_plan("Another code", replace(session.plan, markers=markers))
     qtbot.waitUntil(lambda: page.pages.currentWidget() is page.empty)
     wait_learned(qtbot, page.bench)
     assert "No trial was found" in page.empty.text.text()
-    assert "(lamp)" in page.empty.text.text()
+    assert "(lamp 0)" in page.empty.text.text()
 
 
 def test_a_problem_of_the_plan_is_said(qtbot: QtBot, page: EpochsStage) -> None:

@@ -123,7 +123,7 @@ def left_out_by_reason(ledger: Sequence[Candidate]) -> tuple[tuple[Fate, int], .
 
 
 def why_no_trial(plan: Plan, facts: RecordingFacts) -> str:
-    """Say why no trial was found, and what can be done: a trial begins with the first slot's marker.
+    """Say why no trial was found, and what can be done.
 
     Parameters
     ----------
@@ -132,19 +132,28 @@ def why_no_trial(plan: Plan, facts: RecordingFacts) -> str:
     facts : RecordingFacts
         The recording's markers.
     """
-    if not plan.trial:
+    slots = expanded_slots(plan)
+    if not slots:
         return "The plan has no slot: name the markers of one trial in order, each under a [[trial]]."
-    first = expanded_slots(plan)[0]
-    codes = [marker.code for marker in plan.markers if marker.role is first.role]
-    codes += [f"by bits {bits.name}" for bits in plan.bits if first.role in bits.roles.values()]
     found = Counter(marker.code for marker in facts.markers)
-    begins = f"A trial begins with the slot {first.slot}, which takes a marker of role {first.role}"
     if not found:
-        return f"{begins}, but the recording has no markers at all. Open a recording with its markers."
+        return "The recording has no markers at all. Open a recording with its markers."
+    present = {plan.role_of(code) for code in found}
+    lacking = next((slot for slot in slots if slot.role not in present and not slot.optional), None)
+    if lacking is None:
+        return (
+            "Codes of all roles are there, but they never follow each other as the slots of the plan allow: "
+            "compare the times of the slots (after_s) with the intervals between the codes."
+        )
+    codes = [marker.code for marker in plan.markers if marker.role is lacking.role]
+    codes += [f"by bits {bits.name}" for bits in plan.bits if lacking.role in bits.roles.values()]
     listed = ", ".join(f"{code} ({count})" for code, count in found.most_common(6))
     listed += ", ..." if len(found) > 6 else ""
     missing = f"the recording has none of its codes ({', '.join(codes)})" if codes else "no code has it"
-    return f"{begins}, and {missing}. The recording has {listed}: give the right one this role in the plan."
+    return (
+        f"The slot {lacking.slot} takes a marker of role {lacking.role}, and {missing}. "
+        f"The recording has {listed}: give the right one this role in the plan."
+    )
 
 
 def _span(one: Candidate, decision: Decision, plan: Plan) -> tuple[int, int] | None:

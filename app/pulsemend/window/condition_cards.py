@@ -160,19 +160,14 @@ class BalanceCard(Card):
         self.choices.chosen.connect(self._choose)
         self.seed.committed.connect(self._draw)
 
-    def show_balance(self, balance: Balance, left_out: int | None) -> None:
-        """Show the plan's balance.
+    def show_left_out(self, left_out: int | None) -> None:
+        """Show how many epochs the plan's balance leaves out; None: not counted."""
+        self.left_out.show_value("not counted" if left_out is None else str(left_out))
 
-        Parameters
-        ----------
-        balance : Balance
-            As edited.
-        left_out : int or None
-            How many epochs it leaves out; None: not known yet.
-        """
+    def show_balance(self, balance: Balance) -> None:
+        """Show the plan's balance, as edited."""
         self._balance = balance
         self.by.show_value(TIMES.join(balance.by) or "nothing")
-        self.left_out.show_value("not counted" if left_out is None else str(left_out))
         self.choices.show_choice(balance.choose.value)
         self.seed.show_value(balance.seed)
         self.seed_field.setVisible(balance.choose is Choose.DRAWN)

@@ -3,7 +3,15 @@
 from __future__ import annotations
 
 from PySide6.QtCore import Signal
-from PySide6.QtWidgets import QButtonGroup, QLabel, QPushButton, QStackedWidget, QVBoxLayout, QWidget
+from PySide6.QtWidgets import (
+    QButtonGroup,
+    QLabel,
+    QPushButton,
+    QStackedWidget,
+    QToolTip,
+    QVBoxLayout,
+    QWidget,
+)
 
 from pulsemend.mending.epoch_lanes import Lanes, LanesShown, with_zero
 from pulsemend.model.marks import EpochKey
@@ -11,7 +19,7 @@ from pulsemend.window.epoch_lanes import LanesView
 from pulsemend.window.epoch_table import EpochTable
 from pulsemend.window.fields import Chooser
 from pulsemend.window.flow import flow_row
-from pulsemend.window.parts import words
+from pulsemend.window.parts import button, words
 from pulsemend.window.theme import Theme
 
 OF_RULE = "*rule"
@@ -47,7 +55,6 @@ class LanePage(QWidget):
         self._lanes: Lanes | None = None
         self._anchor = ""
         self.view = LanesView(theme)
-        self.view.setToolTip("")
         self.view.setWhatsThis(_KEYS)
         self.table = EpochTable(theme)
         self.switch = {
@@ -63,10 +70,12 @@ class LanePage(QWidget):
         self.conditions = Chooser("Lanes of which condition")
         self.count = words("", "quiet")
         self.count.setWordWrap(False)
-        self.hint = words("?", "quiet")
-        self.hint.setToolTip(_KEYS)
+        self.hint = button("Keys", self._show_keys, tooltip=_KEYS)
+        self.hint.setAutoDefault(False)
         self.hint.setAccessibleName("Keys and mouse in the lanes")
         self.hint.setAccessibleDescription(_KEYS)
+        for chooser in (self.zeros, self.shown, self.conditions):
+            chooser.setMinimumContentsLength(9)
         self._lay_out()
         self._listen()
         self.show_lanes(None)
@@ -104,7 +113,7 @@ class LanePage(QWidget):
         self.table.set_theme(theme)
 
     def _lay_out(self) -> None:
-        self._of_lanes = [
+        self._of_lanes: list[QWidget] = [
             part
             for name, field in (("zero at", self.zeros), ("show", self.shown), ("of", self.conditions))
             for part in (_name_of(name, field), field)
@@ -129,6 +138,10 @@ class LanePage(QWidget):
         self.conditions.chosen.connect(lambda _: self._filter())
         self.view.current_changed.connect(self._tell_table)
         self.table.current_changed.connect(self._tell_lanes)
+
+    def _show_keys(self) -> None:
+        below = self.hint.mapToGlobal(self.hint.rect().bottomLeft())
+        QToolTip.showText(below, _KEYS, self.hint)
 
     def _switch_page(self, is_on: bool) -> None:
         if not is_on:

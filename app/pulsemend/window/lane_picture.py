@@ -73,11 +73,6 @@ class LaneLayout:
         """Row at a height; it need not exist."""
         return int((y + self.scroll_px) // self.lane_px)
 
-    def in_sight(self, n_rows: int) -> tuple[int, int]:
-        """First row in sight, and the one behind the last."""
-        first = max(0, self.row_at(0))
-        return min(first, n_rows), min(n_rows, self.row_at(self.bottom - 1) + 1)
-
 
 @dataclass(frozen=True)
 class LaneHand:
@@ -170,9 +165,13 @@ def paint_lanes(
     top, bottom = (0.0, layout.bottom) if between is None else between
     # Words of low lanes reach into their neighbours.
     beyond = math.ceil(metrics.height() / layout.lane_px)
-    first, stop = layout.in_sight(len(rows))
-    sight = max(first, layout.row_at(top) - beyond), min(stop, layout.row_at(bottom) + 1 + beyond)
+    sight = (
+        max(0, layout.row_at(top) - beyond),
+        min(len(rows), layout.row_at(bottom) + 1 + beyond),
+    )
     painter.save()
+    # Patterns move with the lanes, or those that were only scrolled would look different.
+    painter.setBrushOrigin(0, -layout.scroll_px)
     painter.setClipRect(QRectF(0, top, layout.width, bottom - top))
     painter.fillRect(QRectF(0, top, layout.width, bottom - top), QColor(look.theme.panel))
     _paint_grounds(painter, sight, layout, hand, look.theme)

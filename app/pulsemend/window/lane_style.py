@@ -146,12 +146,12 @@ def draw_role(
     half = 0.5 * stamp.width() / ratio
     if ratio == 1.0:
         for x, y in middles:
-            painter.drawImage(round(x - half), round(y - half), stamp)
+            painter.drawImage(math.floor(x - half + 0.5), math.floor(y - half + 0.5), stamp)
         return
     for x, y in middles:
         # On whole pixels of the screen, or shapes would look different from each other.
-        at = QPointF(round((x - half) * ratio) / ratio, round((y - half) * ratio) / ratio)
-        painter.drawImage(at, stamp)
+        left, top = (math.floor((place - half) * ratio + 0.5) / ratio for place in (x, y))
+        painter.drawImage(QPointF(left, top), stamp)
 
 
 @lru_cache(maxsize=256)

@@ -42,7 +42,7 @@ class Words:
         if which not in self._pictures:
             self._pictures[which] = _picture(painter.font(), which, ratio)
         # On whole pixels of the screen, so that letters stay sharp.
-        x, y = (round(place * ratio) / ratio for place in at)
+        x, y = (math.floor(place * ratio + 0.5) / ratio for place in at)
         painter.drawImage(QPointF(x, y), self._pictures[which])
 
 
@@ -50,7 +50,7 @@ def _picture(font: QFont, which: tuple[str, str, int], ratio: float) -> QImage:
     text, colour, room = which
     metrics = QFontMetricsF(font)
     # What cannot fit is cut off first: shortening a long text takes long.
-    most = int(4 * room / max(1.0, metrics.averageCharWidth()))
+    most = int(2 * room / max(1.0, metrics.averageCharWidth()))
     text = metrics.elidedText(text[:most], Qt.TextElideMode.ElideRight, room)
     width = max(1, math.ceil(metrics.horizontalAdvance(text) * ratio) + 2)
     image = QImage(width, math.ceil(metrics.height() * ratio), QImage.Format.Format_ARGB32_Premultiplied)

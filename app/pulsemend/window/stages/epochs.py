@@ -121,6 +121,7 @@ class EpochsStage(StagePage):
         self.set_card.add(self.length_field)
         self.samples = self.set_card.add_line("samples per epoch")
         self.trials = self.set_card.add_line("trials found")
+        self.states = self.set_card.add_note()
         self.excluded = self.set_card.add_line("trials excluded by hand")
         self.kept = self.set_card.add_line("epochs kept")
         self.length.committed.connect(self._take_length)
@@ -260,7 +261,7 @@ class EpochsStage(StagePage):
         merge_key = "balance.seed" if balance.seed != plan.balance.seed else None
         refusal = self._edit("by", label, with_balance(plan, balance), merge_key)
         if refusal:
-            self.balance.show_balance(plan.balance, None)
+            self.balance.show_balance(plan.balance)
         self.balance.refuse(refusal)
 
     # Rules moved in the lanes
@@ -381,6 +382,7 @@ class EpochsStage(StagePage):
         self.length.show_value(plan.epochs.length_s)
         self.length_field.refuse("")
         self.rules.refuse("")
+        self.balance.show_balance(plan.balance)
         self.editor.setVisible(self._place >= 0)
         if self._place >= 0:
             self.editor.show_rule(plan, self._place)
@@ -419,7 +421,7 @@ class EpochsStage(StagePage):
             self.conditions.show_columns((), ())
             self.conditions.show_counts(())
             self.selection.show_nothing("Not counted.")
-            self.balance.show_balance(Balance() if plan is None else plan.balance, None)
+            self.balance.show_left_out(None)
             return
         self.pages.setCurrentWidget(self.lane_page)
         self._lay_out_anew()
@@ -461,12 +463,9 @@ class EpochsStage(StagePage):
         )
 
     def _show_conditions(self, view: ConditionView) -> None:
-        plan = self.bench.session.plan
-        if plan is None:
-            return
         self.conditions.show_columns(view.columns, view.picked)
         self.conditions.show_counts(view.counts)
-        self.balance.show_balance(plan.balance, view.left_out)
+        self.balance.show_left_out(view.left_out)
         self.balance.show_would(view.picked, view.would)
 
     def _why_empty(self) -> str:
@@ -495,6 +494,7 @@ class EpochsStage(StagePage):
         if learned is None or decided is None:
             for line in (self.trials, self.excluded, self.kept):
                 line.show_value("not counted")
+            self.states.hide()
             self.nothing_left_out.setText("Not counted.")
             self.nothing_left_out.show()
             return
@@ -504,8 +504,9 @@ class EpochsStage(StagePage):
             (sum(bool(trial.doubts) for trial in trials), "doubtful"),
             (sum(bool(trial.set_aside) for trial in trials), "set aside"),
         )
-        more = "".join(f", {count} {what}" for count, what in counts if count)
-        self.trials.show_value(f"{len(trials)}{more}", attention=not trials)
+        self.trials.show_value(str(len(trials)), attention=not trials)
+        self.states.setText(", ".join(f"{count} {what}" for count, what in counts if count))
+        self.states.setVisible(bool(self.states.text()))
         self.excluded.show_value(str(len(learned.marks.trials_excluded)))
         n_kept = len(decided[0].kept)
         self.kept.show_value(f"{n_kept} of {len(ledger)}", attention=not n_kept)
