@@ -460,7 +460,7 @@ def test_a_click_on_the_timeline_goes_there(page: MarkersStage, study: MarkerStu
 
 def test_intervals_with_the_plans_limits(page: MarkersStage) -> None:
     switch(page, "Intervals")
-    said = page.intervals.said.text()
+    said = page.intervals.said.toolTip()
     assert said.startswith(f"sample to cue: {N_TRIALS} intervals, median 1.0")
     assert said.endswith("the plan allows 0.8 to 1.4 s; outside: 0 (0 shorter, 0 longer).")
     assert not page.intervals.next_outside.isEnabled()
@@ -468,7 +468,7 @@ def test_intervals_with_the_plans_limits(page: MarkersStage) -> None:
     QTest.keyClick(page.intervals.what, Qt.Key.Key_End)
     assert page.intervals.first.isVisible()
     page.intervals.choose_codes("S 12", "S 31")
-    assert "outside: 1 (0 shorter, 1 longer)." in page.intervals.said.text()
+    assert "outside: 1 (0 shorter, 1 longer)." in page.intervals.said.toolTip()
     click(page.intervals.next_outside)
     selected = page.bench.session.selected.stretch
     assert selected is not None

@@ -20,14 +20,14 @@ from pulsemend.mending.marker_intervals import (
 from pulsemend.mending.marker_view import Survey
 from pulsemend.window.flow import flow_row
 from pulsemend.window.marker_canvas import KeptPicture
-from pulsemend.window.parts import button, words
+from pulsemend.window.parts import button
+from pulsemend.window.pulse_picture import Elided
 from pulsemend.window.theme import Theme
 from pulsemend.window.traces.clock import nice, number
 
 _MOST_BARS = 90
 _PAD = 10
 _CODES = "two codes"
-_TOP = 18
 
 
 class Histogram(KeptPicture):
@@ -76,6 +76,10 @@ class Histogram(KeptPicture):
         room_s = 0.03 * (last_s - first_s)
         return first_s - room_s, last_s + room_s
 
+    def _top(self) -> float:
+        """Room for the names of the limits."""
+        return QFontMetricsF(self.font()).height() + 3
+
     def paint_ground(self, painter: QPainter) -> None:
         """Paint bars, limits and axis."""
         if not self._intervals.length_s.size:
@@ -91,7 +95,7 @@ class Histogram(KeptPicture):
             if not count:
                 continue
             left, right = self.x_of(float(low)), self.x_of(float(high))
-            high_px = max(2.0, float(count) / most * (bottom - _TOP - metrics.height()))
+            high_px = max(2.0, float(count) / most * (bottom - self._top() - metrics.height()))
             box = QRectF(left + 0.5, bottom - high_px, max(1.0, right - left - 1.0), high_px)
             middle_s = (low + high) / 2
             within = limits_s is None or limits_s[0] <= middle_s <= limits_s[1]
@@ -113,11 +117,11 @@ class Histogram(KeptPicture):
         metrics = QFontMetricsF(painter.font())
         low, high = self.x_of(limits_s[0]), self.x_of(limits_s[1])
         soft = QColor(self.theme.attention_soft)
-        painter.fillRect(QRectF(0, _TOP, low, bottom - _TOP), soft)
-        painter.fillRect(QRectF(high, _TOP, self.width() - high, bottom - _TOP), soft)
+        painter.fillRect(QRectF(0, self._top(), low, bottom - self._top()), soft)
+        painter.fillRect(QRectF(high, self._top(), self.width() - high, bottom - self._top()), soft)
         painter.setPen(QPen(QColor(self.theme.attention), 1.2, Qt.PenStyle.DashLine))
         for x in (low, high):
-            painter.drawLine(QPointF(x, _TOP), QPointF(x, bottom))
+            painter.drawLine(QPointF(x, self._top()), QPointF(x, bottom))
         painter.setPen(QColor(self.theme.attention))
         texts = (f"at least {number(limits_s[0])} s", f"at most {number(limits_s[1])} s")
         wide = [metrics.horizontalAdvance(text) for text in texts]
@@ -131,7 +135,8 @@ class Histogram(KeptPicture):
         painter.setPen(QPen(QColor(self.theme.line), 1.0))
         painter.drawLine(QPointF(0, bottom), QPointF(self.width(), bottom))
         first_s, last_s = self._range()
-        step_s = nice((last_s - first_s) / max(2, self.width() // 110))
+        room = metrics.horizontalAdvance("00.00 s") + 20
+        step_s = _at_least((last_s - first_s) / max(1.0, self.width() / room))
         painter.setPen(QColor(self.theme.quiet))
         for k in range(math.ceil(first_s / step_s), math.floor(last_s / step_s) + 1):
             x, text = self.x_of(k * step_s), f"{number(k * step_s)} s"
@@ -139,12 +144,14 @@ class Histogram(KeptPicture):
             painter.drawLine(QPointF(x, bottom), QPointF(x, bottom + 4))
             place = min(max(x - wide / 2, 2.0), self.width() - wide - 2)
             painter.drawText(QPointF(place, bottom + 4 + metrics.ascent()), text)
+        if bottom - self._top() < 3 * metrics.height():
+            return
         # One number is enough to read the others by.
         highest = int(self._counts.argmax())
         x = (self.x_of(float(self._edges[highest])) + self.x_of(float(self._edges[highest + 1]))) / 2
         text = f"{most:.0f}"
         painter.setPen(QColor(self.theme.text))
-        top = _TOP + metrics.ascent()
+        top = self._top() + metrics.ascent()
         painter.drawText(QPointF(x - metrics.horizontalAdvance(text) / 2, top), text)
 
     def mouseReleaseEvent(self, event: QMouseEvent) -> None:
@@ -183,9 +190,9 @@ class IntervalsPicture(QWidget):
         self.second = _combo("To the next")
         self._from, self._to = _name("from", self.first), _name("to the next", self.second)
         self.next_outside = button(
-            "Next one outside", self._go_outside, tooltip="Bring the next one outside the plan into view"
+            "Next outside", self._go_outside, tooltip="Bring the next one outside the plan into view"
         )
-        self.said = words("", "quiet")
+        self.said = Elided()
         self.histogram = Histogram(theme)
         column = QVBoxLayout(self)
         column.setContentsMargins(0, 0, 0, 0)
@@ -258,7 +265,7 @@ class IntervalsPicture(QWidget):
         self.next_outside.setVisible(self._intervals.limits_s is not None)
         self.next_outside.setEnabled(outside > 0)
         text = _said(self._intervals)
-        self.said.setText(text)
+        self.said.show_text(text)
         self.histogram.setAccessibleDescription(text)
 
     def _go_outside(self) -> None:
@@ -277,6 +284,12 @@ class IntervalsPicture(QWidget):
         place = int(np.searchsorted(starts, after, side="right")) % starts.size
         self._gone = (float(starts[place]), float(starts[place] + lengths[place]))
         self.wanted.emit(*self._gone)
+
+
+def _at_least(value: float) -> float:
+    """Smallest of 1, 2 and 5 times a power of ten that is not below a value."""
+    found = nice(value)
+    return found if found >= value * (1 - 1e-9) else nice(2.5 * found)
 
 
 def _edges(length_s: NDArray[np.float64], rate_hz: float) -> NDArray[np.float64]:

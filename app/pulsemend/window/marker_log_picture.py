@@ -13,7 +13,8 @@ from PySide6.QtWidgets import QStackedWidget, QToolTip, QVBoxLayout, QWidget
 from pulsemend.mending.marker_log import NO_LOG_VIEW, LogItem, LogView
 from pulsemend.units import ms_to_s, s_to_ms
 from pulsemend.window.marker_canvas import KeptPicture
-from pulsemend.window.parts import EmptyState, words
+from pulsemend.window.parts import EmptyState
+from pulsemend.window.pulse_picture import Elided
 from pulsemend.window.theme import Theme
 from pulsemend.window.traces.clock import clock, nice, number, ticks
 
@@ -125,7 +126,13 @@ class Residuals(KeptPicture):
     def _paint_axes(self, painter: QPainter) -> None:
         metrics = QFontMetricsF(painter.font())
         left, top, right, bottom = self._box()
-        step = nice(self.most_ms / 1.8)
+        # As many lines as there is room for their numbers.
+        n_lines = max(1.0, (bottom - top) / (1.2 * metrics.height()))
+        step = next(
+            s
+            for s in (k * nice(2 * self.most_ms / n_lines) for k in (1, 2, 2.5, 5))
+            if s * n_lines >= 2 * self.most_ms * 0.999
+        )
         for k in range(-math.floor(self.most_ms / step), math.floor(self.most_ms / step) + 1):
             y = self.place_of(0.0, ms_to_s(k * step)).y()
             painter.setPen(QPen(QColor(self.theme.quiet if k == 0 else self.theme.line), 1.0))
@@ -212,7 +219,7 @@ class LogPicture(QWidget):
     def __init__(self, theme: Theme) -> None:
         super().__init__()
         self.residuals = Residuals(theme)
-        self.said = words("", "quiet")
+        self.said = Elided()
         self.empty = EmptyState("")
         self.empty.text.setWordWrap(True)
         whole = QWidget()
@@ -243,10 +250,10 @@ class LogPicture(QWidget):
         has_clock = view.clock is not None and view.residual_s.size > 0
         self.pages.setCurrentIndex(1 if has_clock else 0)
         if has_clock and view.join is not None:
-            self.said.setText(
+            self.said.show_text(
                 f"How much later than the fitted clock says, {view.time_s.size} pairs; band: one standard "
-                f"deviation; triangles: rows without a trial ({len(view.rows_alone)}, above) and trials "
-                f"without a row ({len(view.trials_alone)}, below)."
+                f"deviation; \u25bc {len(view.rows_alone)} without a trial, \u25b2 {len(view.trials_alone)} "
+                "without a row"
             )
             self.residuals.setAccessibleDescription(view.join.words)
             self.residuals.show_log(view, duration_s)

@@ -171,8 +171,8 @@ class Timeline(QAbstractScrollArea):
         return QSize(600, 200)
 
     def minimumSizeHint(self) -> QSize:
-        """Room for two rows."""
-        return QSize(240, round(2 * self._row_height() + self._axis_height()))
+        """Room for one row."""
+        return QSize(240, round(self._row_height() + self._axis_height()))
 
     # Places
 

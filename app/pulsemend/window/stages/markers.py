@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 from PySide6.QtCore import Qt
-from PySide6.QtWidgets import QButtonGroup, QPushButton, QStackedWidget, QVBoxLayout, QWidget
+from PySide6.QtWidgets import QButtonGroup, QPushButton, QToolButton, QVBoxLayout, QWidget
 
 from pulsemend.mending.marker_log import NO_LOG_VIEW
 from pulsemend.mending.marker_view import TrialState, code_rows, trial_spans, trial_state
 from pulsemend.model.vocabulary import Role
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import Stage
+from pulsemend.window.desk import Pages
 from pulsemend.window.flow import column_of, flow_row
 from pulsemend.window.marker_codes import WIDTHS, CodesCard
 from pulsemend.window.marker_faults import FaultsCard
@@ -21,7 +24,7 @@ from pulsemend.window.marker_log_picture import LogPicture
 from pulsemend.window.marker_timeline import Timeline
 from pulsemend.window.marker_trials import TrialsCard
 from pulsemend.window.marker_watch import MarkerWatch
-from pulsemend.window.parts import EmptyState, button
+from pulsemend.window.parts import EmptyState
 from pulsemend.window.stages.base import StagePage
 from pulsemend.window.tables import RowsTable
 from pulsemend.window.theme import Theme
@@ -108,14 +111,14 @@ class MarkersStage(StagePage):
 
     def _head(self) -> QWidget:
         """Make the switch of the pictures with the timeline's own buttons, and the pictures themselves."""
-        self.pages = QStackedWidget()
+        self.pages = Pages()
         self.switch = QButtonGroup(self.picture)
         timeline = self.timeline
         self._tools = (
-            button("Less time", lambda: timeline.zoom(_ZOOM), tooltip="Ctrl and the wheel, or Ctrl+Up"),
-            button("More time", lambda: timeline.zoom(1 / _ZOOM), tooltip="Ctrl and the wheel, or Ctrl+Down"),
-            button("As the traces", timeline.show_as_traces, tooltip="Show what the traces show"),
-            button("Whole", timeline.show_whole, tooltip="Show the whole recording"),
+            _tool("s \u2212", "Show less time", lambda: timeline.zoom(_ZOOM)),
+            _tool("s +", "Show more time", lambda: timeline.zoom(1 / _ZOOM)),
+            _tool("As traces", "Show what the traces show", timeline.show_as_traces),
+            _tool("Whole", "Show the whole recording", timeline.show_whole),
         )
         buttons = []
         pictures: tuple[tuple[str, QWidget], ...] = (
@@ -246,3 +249,12 @@ class MarkersStage(StagePage):
 
     def _on_chosen(self) -> None:
         self.timeline.show_chosen(self.codes.chosen)
+
+
+def _tool(text: str, name: str, does: Callable[[], None]) -> QToolButton:
+    made = QToolButton()
+    made.setText(text)
+    made.setAccessibleName(name)
+    made.setToolTip(name)
+    made.clicked.connect(lambda _=False: does())
+    return made
