@@ -212,9 +212,11 @@ def test_row_excluded_by_hand_is_not_joined(tmp_path: Path) -> None:
     open_ = dry(recording, PLAN, tmp_path / "study")
     assert "doubtful" in " ".join(open_.warnings).lower()
     assert "cue1.correct" not in open_.trials.trials[1].log
-    decided = dry(recording, PLAN, tmp_path / "study", "[log]\nrows_excluded = [4]\n")
+    decided = dry(recording, PLAN, tmp_path / "study", "[log]\nrows_excluded = [4, 99]\n")
     assert decided.trials.trials[1].log["cue1.correct"] == correct(truth(2, 1))
-    assert any("row 4 of the file" in one for one in decided.warnings)
+    words = " ".join(decided.warnings)
+    assert "Excluded by hand, and not counted above: row 4 of the file." in words
+    assert "Excluded by hand, but not in the file: row 99." in words
     assert decided.decision.logged is not None
     assert decided.decision.logged.join is not None
     assert len(decided.decision.logged.join.pairs) == 2 * N_TRIALS

@@ -225,6 +225,15 @@ def test_blocks_set_trials_aside_and_the_ledger_adds_up(tmp_path: Path) -> None:
     assert len(prepared.kept) == 2 * (N_TRIALS - 4)
     assert [one.labels["place"] for one in prepared.kept if one.trial == 10] == ["3", "3"]
     assert [one.labels["block"] for one in prepared.kept if one.trial == 10] == ["3", "3"]
+    (unnamed,) = (one for one in prepared.warnings if "does not name" in one)
+    assert "block" not in unnamed
+    assert "try out" not in unnamed
+
+
+def test_a_code_of_blocks_that_never_occurs_is_said(recording: Path, tmp_path: Path) -> None:
+    plan = changed(PLAN, ("[labels]", '[blocks]\ncodes = ["blok"]\n[labels]'))
+    warnings = dry(recording, plan, tmp_path).warnings
+    assert "codes that the plan names but the recording lacks: blok" in warnings
 
 
 @pytest.mark.parametrize("choose", ["spread", "drawn"])

@@ -15,6 +15,7 @@ from pulsemend.units import ohm_to_kohm
 if TYPE_CHECKING:
     from pulsemend.mending.facts import RecordingSummary
     from pulsemend.model.epochs import Trial
+    from pulsemend.model.plan import Plan
 
 _MOST_LISTED = 20
 _MOST_CODES = 60
@@ -146,8 +147,8 @@ def _role_lines(summary: RecordingSummary) -> list[str]:
     if summary.planned is not None:
         plan = summary.planned.plan
         named = [
-            (one.code, str(plan.role_of(one.code)), "" if plan.names(one.code) else "not in the plan")
-            for one in sorted(codes, key=lambda one: not plan.names(one.code))
+            (one.code, str(plan.role_of(one.code)), _place_in_plan(one.code, plan))
+            for one in sorted(codes, key=lambda one: _place_in_plan(one.code, plan) == "not in the plan")
         ]
         title = "roles by the plan:"
     else:
@@ -155,6 +156,12 @@ def _role_lines(summary: RecordingSummary) -> list[str]:
         title = "proposed roles:"
     shown = [f"  {code:{width}}  {role:10}  {why}".rstrip() for code, role, why in named[:_MOST_CODES]]
     return ["", f"  {title}", *shown, *_more(named, _MOST_CODES)]
+
+
+def _place_in_plan(code: str, plan: Plan) -> str:
+    if code in (*plan.blocks.codes, *plan.blocks.practice_codes):
+        return "begins a block"
+    return "" if plan.names(code) else "not in the plan"
 
 
 def _trial_lines(summary: RecordingSummary) -> list[str]:

@@ -279,7 +279,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         *estimates.notes,
     )
     warnings = [
-        *_trial_warnings(trials, facts),
+        *_trial_warnings(trials, facts, plan),
         *notes,
         *stale_decisions(trials, plan, geometry),
         *_stale_pulses(facts, plan, marks),
@@ -394,13 +394,17 @@ def need_epochs(prepared: Prepared) -> None:
     )
 
 
-def _trial_warnings(trials: Trials, facts: RecordingFacts) -> list[str]:
+def _trial_warnings(trials: Trials, facts: RecordingFacts, plan: Plan) -> list[str]:
     lines = []
-    if trials.unnamed:
-        listed = _listed([f"{code} ({count})" for code, count in trials.unnamed.items()])
+    of_blocks = (*plan.blocks.codes, *plan.blocks.practice_codes)
+    unnamed = {code: count for code, count in trials.unnamed.items() if code not in of_blocks}
+    if unnamed:
+        listed = _listed([f"{code} ({count})" for code, count in unnamed.items()])
         lines.append(f"codes that the plan does not name count as other: {listed}")
-    if trials.absent:
-        lines.append(f"codes that the plan names but the recording lacks: {_listed(trials.absent)}")
+    present = {marker.code for marker in facts.markers}
+    absent = dict.fromkeys([*trials.absent, *(code for code in of_blocks if code not in present)])
+    if absent:
+        lines.append(f"codes that the plan names but the recording lacks: {_listed([*absent])}")
     if trials.extra:
         first = trials.extra[0]
         lines.append(

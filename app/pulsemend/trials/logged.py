@@ -75,10 +75,7 @@ def with_log(trials: Sequence[Trial], table: LogTable, plan: Plan, marks: Marks,
     except LogError as error:
         return Logged(tuple(trials), None, rows, units, str(error))
     join = join_log(log, units, per_trial=max(1, len(plan.log.slots)))
-    if len(rows) < len(table.rows):
-        excluded = ", ".join(str(row) for row in range(1, len(table.rows) + 1) if row not in rows)
-        words = f"{join.words}\nExcluded by hand, and not counted above: row {excluded} of the file."
-        join = replace(join, words=words)
+    join = replace(join, words="\n".join([join.words, *_excluded_words(table, marks)]))
     if not join.pairs:
         return Logged(tuple(trials), join, rows, units, _one_line(join.words))
     values: dict[int, dict[str, str]] = {}
@@ -92,6 +89,16 @@ def with_log(trials: Sequence[Trial], table: LogTable, plan: Plan, marks: Marks,
         )
     joined = tuple(replace(trial, log=values.get(place, {})) for place, trial in enumerate(trials))
     return Logged(joined, join, rows, units)
+
+
+def _excluded_words(table: LogTable, marks: Marks) -> list[str]:
+    """Say which rows were left out by hand, and which of these are not there."""
+    there = [str(row) for row in marks.log_rows_excluded if row <= len(table.rows)]
+    gone = [str(row) for row in marks.log_rows_excluded if row > len(table.rows)]
+    words = [f"Excluded by hand, and not counted above: row {', '.join(there)} of the file."] if there else []
+    if gone:
+        words.append(f"Excluded by hand, but not in the file: row {', '.join(gone)}.")
+    return words
 
 
 def _one_line(words: str) -> str:
