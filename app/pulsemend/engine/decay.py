@@ -49,6 +49,7 @@ _MOST_POINTS = 1000
 _MOST_BLOCKS = 100
 _LEAST_BLOCKS = 8
 _SEED = 20
+_SMALL = "smaller than decay_least_uv at the gap's end"
 _STAGE = "fitting the decay"
 _ARRAYS = ("columns", "values", "amplitudes", "spread", "share", "share_low", "share_high")
 
@@ -361,7 +362,7 @@ def _fit_channel(
     x = stretches.points[:, :, place].astype(np.float64)
     means = x.mean(axis=1, keepdims=True)
     x -= means
-    reason = _not_told_apart(x, times_s)
+    reason = _too_small(x, times_s, setup.decay_least_v)
     if reason:
         return reason
     median = np.median(x, axis=0)
@@ -371,7 +372,7 @@ def _fit_channel(
         return fit.reason
     least_v = setup.decay_least_v
     if abs(float(fit.shape.at(np.zeros(1))[0])) < least_v:
-        return "smaller than decay_least_uv at the gap's end"
+        return _SMALL
     amplitudes, spread = _amplitudes(stretches, place, fit.shape, background)
     absorbed = None
     if with_absorption:
@@ -388,11 +389,14 @@ def _late(stretches: _Stretches, y: Floats) -> Late:
     return Late(stretches.late_s[enough], np.nanmedian(y[:, enough], axis=0))
 
 
-def _not_told_apart(x: Floats, times_s: Floats) -> str:
-    """Whether the fall over the stretch is within what background leaves in the median over these pulses."""
+def _too_small(x: Floats, times_s: Floats, least_v: float) -> str:
+    """Why the fall over the stretch tells of no decay; empty if it does."""
     early = times_s - times_s[0] < 0.001
     falls = x[:, early].mean(axis=1) - x[:, -(len(times_s) // 4 + 1) :].mean(axis=1)
     middle = float(np.median(falls))
+    # The slowest decay that is told from a drift falls by a third within the stretch.
+    if abs(middle) < 0.3 * least_v:
+        return _SMALL
     if len(falls) < 3:
         return ""
     # Standard error of a median: 1.2533 times that of a mean; 1.4826 times the MAD is a standard deviation.

@@ -40,7 +40,10 @@ LEAST_EXPLAINED = 0.5
 """A shape that leaves more than this share of the median pulse's variance unexplained is not its shape."""
 
 _GRID = 16
-_MOST_STEPS = 60
+_STARTS = 6
+_FIRST_STEPS = 10
+_AGAIN_STEPS = 40
+_MOST_STEPS = 200
 _SETTLED = 1e-12
 _LARGEST = 3.0
 """A decay many times as large as what is seen of it rests on what lies outside the stretch."""
@@ -150,7 +153,9 @@ def fit_shape(
     factor = size if y[: max(1, len(y) // 10)].mean() >= end.mean() else -size
     points = _points(times_s, kind, late, level)
     target = np.concatenate([y, late.y])[None] / factor
-    values, _ = _descend(points, target, _from_grid(points, target[0])[None])
+    starts = _from_grid(points, target[0])
+    values, costs = _descend(points, np.tile(target, (len(starts), 1)), starts, _FIRST_STEPS)
+    values, _ = _descend(points, target, values[[int(np.argmin(costs))]])
     return _judged(points, values[0], target[0], factor)
 
 
@@ -192,7 +197,7 @@ def fit_again(
     start[[0, -1]] /= factor
     if kind == "two exponentials":
         start[2] /= factor
-    values, _ = _descend(points, target, np.tile(start, (len(ys), 1)))
+    values, _ = _descend(points, target, np.tile(start, (len(ys), 1)), _AGAIN_STEPS)
     return [_judged(points, found, one, factor) for found, one in zip(values, target, strict=True)]
 
 
@@ -239,7 +244,9 @@ def _points(times_s: Floats, kind: str, late: Late, level: bool) -> _Points:
     )
 
 
-def _descend(points: _Points, ys: Floats, start: Floats) -> tuple[Floats, Floats]:
+def _descend(
+    points: _Points, ys: Floats, start: Floats, most_steps: int = _MOST_STEPS
+) -> tuple[Floats, Floats]:
     """Least squares within bounds for many signals, shape (n_signals, n_times), at once.
 
     Returns
@@ -251,7 +258,7 @@ def _descend(points: _Points, ys: Floats, start: Floats) -> tuple[Floats, Floats
     damping = np.full(len(ys), 1e-3)
     left = _curves(points.kind, values, points.times_s) + values[:, -1:] - ys
     costs = (left**2) @ points.weights
-    for _ in range(_MOST_STEPS):
+    for _ in range(most_steps):
         slopes = _slopes(points.kind, values, points.times_s)
         weighted = slopes * points.weights[:, None]
         gradient = np.einsum("dtk,dt->dk", weighted, left)
@@ -309,7 +316,7 @@ def _slopes(kind: str, values: Floats, times_s: Floats) -> Floats:
 
 
 def _from_grid(points: _Points, y: Floats) -> Floats:
-    """Best of a grid of time constants (and orders), amplitudes and level by linear least squares."""
+    """Best few of a grid of time constants (and orders), amplitudes and level by linear least squares."""
     times_s, kind, level = points.times_s, points.kind, points.level
     share = points.weights / points.weights.sum()
     taus = np.geomspace(1.5 * points.shortest_s, 0.7 * points.longest_s, _GRID)
@@ -332,12 +339,12 @@ def _from_grid(points: _Points, y: Floats) -> Floats:
     # Amplitudes of the other sign are not allowed, and make bad starts.
     amplitudes = np.maximum(amplitudes, 1e-3)
     left = (np.einsum("gtk,gk->gt", centred, amplitudes) - target) ** 2 @ share
-    best = int(np.argmin(left))
-    height = mean - float(around[best] @ amplitudes[best])
+    best = np.argsort(left)[:_STARTS]
+    heights = mean - np.einsum("gk,gk->g", around[best], amplitudes[best])
     if kind == "two exponentials":
-        pairs = zip(amplitudes[best], fixed[best], strict=True)
-        return np.array([*(value for pair in pairs for value in pair), height])
-    return np.array([amplitudes[best, 0], *fixed[best], height])
+        pairs = np.stack([amplitudes[best], fixed[best]], axis=2).reshape(len(best), 4)
+        return np.column_stack([pairs, heights])
+    return np.column_stack([amplitudes[best], fixed[best], heights])
 
 
 def _judged(points: _Points, values: Floats, y: Floats, factor: float) -> DecayFit:
