@@ -14,7 +14,7 @@ from __future__ import annotations
 import math
 from bisect import bisect_left, bisect_right
 from collections import OrderedDict
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from functools import cache
@@ -28,11 +28,13 @@ from pulsemend.engine.decay_subtraction import DecaySubtraction
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.reading import read_stored
 from pulsemend.engine.setup import Setup
+from pulsemend.engine.splits import gap_spans, overlapping, stretches
 from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.recording import Recording
-from pulsemend.model.vocabulary import Fill
+from pulsemend.model.vocabulary import AcrossPulses, Fill
 from pulsemend.signal.apply_fir import BandedFilter, FftFilter, banded
 from pulsemend.signal.design import fractional_delay
+from pulsemend.signal.extend import LEARN_S, extended
 from pulsemend.signal.fills import FillConfig, Filler
 from pulsemend.signal.gaps import Gap
 
@@ -83,9 +85,17 @@ class Chain:
         Plan and marks, bound to it.
     estimates : Estimates
         From `fit` with the same setup.
+    pulse_spans : sequence of (int, int) or None
+        Recorded samples across which nothing is filtered; None: the pulses' gaps, if the plan wants that.
     """
 
-    def __init__(self, recording: Recording, setup: Setup, estimates: Estimates) -> None:
+    def __init__(
+        self,
+        recording: Recording,
+        setup: Setup,
+        estimates: Estimates,
+        pulse_spans: Sequence[tuple[int, int]] | None = None,
+    ) -> None:
         _one_blas_thread()
         self._recording = recording
         self._setup = setup
@@ -108,6 +118,13 @@ class Chain:
         self._fft = None if setup.band is None else FftFilter(setup.band, setup.work)
         self._low_size = self._low_block_size()
         self._low_blocks = _Recent(2 + (2 * self._fft.margin if self._fft else 0) // self._low_size)
+        if pulse_spans is None:
+            is_split = setup.across_pulses is AcrossPulses.SPLIT
+            pulse_spans = gap_spans(setup, estimates.onsets) if is_split else []
+        self._stretches = [
+            stretches(pulse_spans, span, setup.ratio, setup.rate_hz) for span in self._output_spans
+        ]
+        self._ends = _Recent(6)
         self._band_size = self._fft.block if self._fft else self._low_size
         self._band_blocks = _Recent(3)
 
@@ -354,19 +371,44 @@ class Chain:
             x = self._low(segment, max(lo, first), min(hi, first + self._band_size))
             filtered = np.zeros((x.shape[0], self._band_size), x.dtype)
             filtered[:, max(lo, first) - first : min(hi, first + self._band_size) - first] = x
+        elif len(self._stretches[segment]) == 1:
+            filtered = self._filtered_alone(self._fft, segment, 0, first)
         else:
-            margin = self._fft.margin
-            filtered = self._fft.run(
-                _mirrored(
-                    lambda a, b: self._low(segment, a, b),
-                    lo,
-                    hi,
-                    first - margin,
-                    first + self._band_size + margin,
-                    margin,
-                )
-            )
+            filtered = np.zeros((self._setup.used.size, self._band_size), self._setup.work)
+            for place, part in overlapping(self._stretches[segment], first, first + self._band_size):
+                weights = part.weights(first, first + self._band_size).astype(self._setup.work)
+                filtered += weights * self._filtered_alone(self._fft, segment, place, first)
         return self._referenced(filtered)
+
+    def _filtered_alone(self, fft: FftFilter, segment: int, place: int, first: int) -> Samples:
+        """Filter one stretch as if there were no other; a segment's ends are mirrored, others continued."""
+        part, margin = self._stretches[segment][place], fft.margin
+        start, stop = first - margin, first + self._band_size + margin
+        x = _mirrored(lambda a, b: self._low(segment, a, b), part.start, part.stop, start, stop, margin)
+        lo, hi = self.output_span(segment)
+        if part.start > lo and start < part.start:
+            end = self._ends.get((segment, -place - 1), self._continued)
+            n = min(part.start - start, end.shape[1])
+            x[:, part.start - n - start : part.start - start] = end[:, ::-1][:, end.shape[1] - n :]
+        if part.stop < hi and stop > part.stop:
+            end = self._ends.get((segment, place), self._continued)
+            n = min(stop - part.stop, end.shape[1])
+            x[:, part.stop - start : part.stop - start + n] = end[:, :n]
+        return fft.run(x)
+
+    def _continued(self, segment: int, end: int) -> Samples:
+        """Continue a stretch beyond its end, or, with a negative number, before its start (backwards)."""
+        place = end if end >= 0 else -end - 1
+        part, setup = self._stretches[segment][place], self._setup
+        near = round(LEARN_S * setup.rate_hz)
+        margin = self._fft.margin if self._fft else 0
+        if end >= 0:
+            known = self._low(segment, max(part.start, part.stop - near), part.stop)
+            n_ahead = margin + part.gap_after - part.stop
+        else:
+            known = self._low(segment, part.start, min(part.stop, part.start + near))[:, ::-1]
+            n_ahead = margin + part.start - part.gap_before
+        return extended(known, n_ahead, setup.rate_hz).astype(setup.work)
 
     def _referenced(self, volts: Samples) -> Samples:
         """Put offsets back where no high-pass removed them, then subtract the reference."""

@@ -18,7 +18,9 @@ from numpy.typing import NDArray
 from pulsemend.engine.chain import Chain, Cut
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.setup import Setup
+from pulsemend.engine.splits import gap_spans
 from pulsemend.model.recording import FloatArray, RecordingFacts
+from pulsemend.model.vocabulary import AcrossPulses
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.gaps import window_to_samples
 
@@ -147,7 +149,9 @@ class _Response:
         self.curves: list[NDArray[np.floating]] = []
         for phase in phases:
             recording = _Alone(facts, setup.used, median, quiet + phase)
-            chain = Chain(recording, alone, Estimates(np.zeros(setup.used.size), (), 0.0))
+            is_split = setup.across_pulses is AcrossPulses.SPLIT
+            spans = gap_spans(setup, [quiet + phase - self.first]) if is_split else []
+            chain = Chain(recording, alone, Estimates(np.zeros(setup.used.size), (), 0.0), spans)
             lo, hi = chain.output_span(0)
             self.curves.append(np.array(chain.stretch(0, lo, hi)))
             self.offsets.append(lo - (quiet + phase - self.first) * self.ratio)

@@ -18,6 +18,7 @@ from pulsemend.model.marks import Marks
 from pulsemend.model.plan import OnsetRule, Plan
 from pulsemend.model.recording import Channel, RecordingFacts
 from pulsemend.model.vocabulary import (
+    AcrossPulses,
     ChannelType,
     Decay,
     Fill,
@@ -121,6 +122,8 @@ class Setup:
         Whether a high-pass removes the channels' offsets.
     as_recorded : bool
         Whether nothing at all is done to the samples.
+    across_pulses : AcrossPulses
+        Whether each stretch between pulses is filtered alone.
     """
 
     facts: RecordingFacts
@@ -153,6 +156,7 @@ class Setup:
     out: np.dtype[np.floating]
     highpass_on: bool
     as_recorded: bool
+    across_pulses: AcrossPulses
 
     @property
     def scale_v(self) -> NDArray[np.float64]:
@@ -257,6 +261,7 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         out=np.dtype(np.float32 if single else np.float64),
         highpass_on=plan.filter.highpass_hz > 0.0,
         as_recorded=as_recorded,
+        across_pulses=plan.filter.across_pulses,
     )
 
 

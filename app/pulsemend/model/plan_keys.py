@@ -310,7 +310,6 @@ PLAN_KEYS: tuple[Key, ...] = (
         "what a filter sees at a gap",
         default=AcrossPulses.FILLED,
         words=AcrossPulses,
-        now=(AcrossPulses.FILLED,),
     ),
     Key("channels.bad", Kind.TEXTS, "channels bad in every recording", default=()),
     # The design's default of the next two is true; it comes with the search itself.
