@@ -345,7 +345,7 @@ def any_marks(draw: st.DrawFn) -> Marks:
     )
 
 
-@settings(deadline=None, max_examples=40)
+@settings(deadline=None, max_examples=20)
 @given(any_marks(), any_marks())
 def test_any_marks_survive_writing_and_any_text_can_become_any_marks(first: Marks, second: Marks) -> None:
     text = marks_text(first)

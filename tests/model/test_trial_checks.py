@@ -5,6 +5,7 @@ from __future__ import annotations
 import pytest
 
 from pulsemend.errors import PlanError
+from pulsemend.model.keys import near_names
 from pulsemend.model.plan_file import parse_plan
 
 TEXT = """\
@@ -466,7 +467,7 @@ LABELS = [
         '"cue2.side.x"], same',
         "labels.compared.compare",
         "must name a label of a slot's codes",
-        "cue1.item",
+        "cue2.side | ",
         '"cue2.side.x"',
     ),
     ('map = "cue1.item"', 'map = "item"', "labels.mapped.map", "must name a label", "cue1.item", '"item"'),
@@ -544,7 +545,7 @@ LABELS = [
         "cue1.item",
         '"item"',
     ),
-    ('"before"]', '"after"]', "balance.by[4]", "must name a label column", "before | ", '"after"'),
+    ('"before"]', '"after"]', "balance.by[4]", "must name a label column", " | ...", '"after"'),
     (
         "columns = { intensity",
         "columns = { strength",
@@ -669,3 +670,16 @@ times = "none"
 [epochs]
 length_s = 1.0
 """
+
+
+@pytest.mark.parametrize(
+    ("name", "names", "shown"),
+    [
+        ("cue1.itm", ["dot.match", "cue1.item", "cue2.item"], "cue1.item | cue2.item | ..."),
+        ("zzz", ["a", "b"], "a | b"),
+        ("zzz", list("abcdefgh"), "a | b | c | d | e | f | ..."),
+        ("zzz", [], ""),
+    ],
+)
+def test_few_names_are_shown_of_many(name: str, names: list[str], shown: str) -> None:
+    assert near_names(name, names) == shown

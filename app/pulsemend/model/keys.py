@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import difflib
 import math
 import re
 from collections.abc import Callable, Iterable
@@ -127,6 +128,23 @@ def show(value: object) -> str:
     else:
         text = str(value)
     return text if len(text) <= _MANY else text[: _MANY - 3] + "..."
+
+
+def near_names(name: str, names: Iterable[str], most: int = 6) -> str:
+    """Write names that are like one that was not found, or the first ones where none is; few in any case.
+
+    Parameters
+    ----------
+    name : str
+        What was not found.
+    names : iterable of str
+        What there is.
+    most : int
+        How many are written at most; more are told by three points.
+    """
+    known = list(names)
+    near = difflib.get_close_matches(name, known, n=most, cutoff=0.5) or known[:most]
+    return " | ".join(near) + (" | ..." if len(near) < len(known) else "")
 
 
 def key_defaults(keys: Iterable[Key]) -> dict[str, object]:

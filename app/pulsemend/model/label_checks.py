@@ -8,7 +8,7 @@ from collections.abc import Collection
 
 from pulsemend.errors import PlanError
 from pulsemend.model.epochs import FIXED_COLUMNS
-from pulsemend.model.keys import show
+from pulsemend.model.keys import near_names, show
 from pulsemend.model.label_columns import (
     LOG,
     Meaning,
@@ -169,7 +169,7 @@ def _check_column(plan: Plan, column: str, key: str, hint: str = "") -> None:
             key,
             f"{hint}must name a label of a slot's codes, slot.label, a column of the log, log.column, or a "
             "derived label",
-            allowed=" | ".join(known) or "none: no code of a slot has labels",
+            allowed=near_names(column, known) or "none: no code of a slot has labels",
             received=show(column),
         )
 
@@ -228,7 +228,7 @@ def _check_balance(plan: Plan) -> None:
             raise PlanError(
                 key,
                 "must name a label column",
-                allowed=" | ".join(sorted(known)),
+                allowed=near_names(column, sorted(known)),
                 received=show(column),
             )
 
