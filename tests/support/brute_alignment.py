@@ -21,6 +21,7 @@ FOREIGN_PER_SLOT = 2
 """Most foreign markers between two of a trial, per slot of the longest variant (as `align` documents)."""
 
 TOLERANCE_S = 1e-8
+MOST_RUNS = 15_000
 
 
 @dataclass(frozen=True)
@@ -96,7 +97,13 @@ def _longest_s(slots: tuple[Slot, ...], first: str, second: str) -> tuple[float,
 
 
 def runs(events: Sequence[Event], variants: Sequence[Variant]) -> list[Run]:
-    """List every way to run that could be worth it: what is missing costs no more than what it takes."""
+    """List every way to run that could be worth it: what is missing costs no more than what it takes.
+
+    Raises
+    ------
+    OverflowError
+        Too many to list.
+    """
     foreign = FOREIGN_PER_SLOT * max(len(variant.slots) for variant in variants)
     found: dict[Run, None] = {}
     for variant in variants:
@@ -104,6 +111,8 @@ def runs(events: Sequence[Event], variants: Sequence[Variant]) -> list[Run]:
             missing = tuple(s.slot for s in variant.slots if not s.optional and s.slot not in dict(places))
             if can_be_met(variant.slots, {name: events[place].time_s for name, place in places}):
                 found[Run(variant.kind, places, missing)] = None
+            if len(found) > MOST_RUNS:
+                raise OverflowError(MOST_RUNS)
     return list(found)
 
 
