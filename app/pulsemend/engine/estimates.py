@@ -16,7 +16,7 @@ from pulsemend.engine.decay import DecayEstimates
 from pulsemend.engine.onsets import OnsetShift
 from pulsemend.errors import SetError
 from pulsemend.model.epochs import Pulse
-from pulsemend.model.vocabulary import PulseState
+from pulsemend.model.vocabulary import PulseKind, PulseState
 
 SCHEMA = 1
 
@@ -78,7 +78,14 @@ class Estimates:
             marked = [np.nan if p.marked is None else p.marked for p in self.pulses]
             file["pulses/marked"] = np.array(marked, dtype=np.float64)
             states = [p.state.value for p in self.pulses]
-            file.create_dataset("pulses/state", data=states, dtype=h5py.string_dtype(), shape=(len(states),))
+            kinds = ["" if p.kind is None else p.kind.value for p in self.pulses]
+            for name, words in (("state", states), ("kind", kinds)):
+                data_type = h5py.string_dtype()
+                file.create_dataset(f"pulses/{name}", data=words, dtype=data_type, shape=(len(words),))
+            amplitudes = [np.nan if p.amplitude_v is None else p.amplitude_v for p in self.pulses]
+            file["pulses/amplitude_v"] = np.array(amplitudes, dtype=np.float64)
+            file["pulses/clipped_s"] = np.array([p.clipped_s for p in self.pulses], dtype=np.float64)
+            file["pulses/held_s"] = np.array([p.held_s for p in self.pulses], dtype=np.float64)
             if self.autocovariance is not None:
                 file["autocovariance"] = self.autocovariance
             if self.decay is not None:
@@ -99,15 +106,7 @@ class Estimates:
             with h5py.File(path, "r") as file:
                 if file.attrs["schema"] != SCHEMA:
                     raise SetError("estimates of another version", where=path.name)
-                pulses = tuple(
-                    Pulse(int(sample), None if np.isnan(marked) else float(marked), PulseState(state))
-                    for sample, marked, state in zip(
-                        file["pulses/sample"][()],
-                        file["pulses/marked"][()],
-                        file["pulses/state"].asstr()[()],
-                        strict=True,
-                    )
-                )
+                pulses = _pulses(file["pulses"])
                 return cls(
                     offset=file["offset"][()],
                     pulses=pulses,
@@ -121,6 +120,23 @@ class Estimates:
                 )
         except (OSError, KeyError, ValueError) as error:
             raise SetError(f"no estimates can be read from it ({error})", where=path.name) from error
+
+
+def _pulses(group: Any) -> tuple[Pulse, ...]:
+    words = (group[name].asstr()[()] for name in ("state", "kind"))
+    numbers = (group[name][()] for name in ("sample", "marked", "amplitude_v", "clipped_s", "held_s"))
+    return tuple(
+        Pulse(
+            sample=int(sample),
+            marked=None if np.isnan(marked) else float(marked),
+            state=PulseState(state),
+            kind=PulseKind(kind) if kind else None,
+            amplitude_v=None if np.isnan(amplitude_v) else float(amplitude_v),
+            clipped_s=float(clipped_s),
+            held_s=float(held_s),
+        )
+        for state, kind, sample, marked, amplitude_v, clipped_s, held_s in zip(*words, *numbers, strict=True)
+    )
 
 
 def _onset_shifts(text: str) -> tuple[OnsetShift, ...]:

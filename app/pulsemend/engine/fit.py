@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import math
-from bisect import bisect_right
 from collections.abc import Iterator, Sequence
 
 import numpy as np
@@ -12,17 +10,18 @@ from numpy.typing import NDArray
 from pulsemend.engine.decay import BackgroundSum, learn_decay
 from pulsemend.engine.estimates import Estimates, basis
 from pulsemend.engine.onsets import OnsetShift, measure_onsets
+from pulsemend.engine.pulses import align_pulse, limits_of, seek_pulses, with_shape
 from pulsemend.engine.reading import read_stored
 from pulsemend.engine.scan import find_pulse_like
 from pulsemend.engine.setup import ExpectedPulse, Setup
 from pulsemend.errors import InputError
-from pulsemend.model.epochs import Pulse, nearest_sample
+from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.recording import Recording
-from pulsemend.model.vocabulary import Decay, Fill, PulseState
+from pulsemend.model.vocabulary import Decay, Fill
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.autocovariance import AutocovarianceSum
 from pulsemend.signal.fills import lags_needed
-from pulsemend.signal.find import align_onset, usual_steepness
+from pulsemend.signal.find import usual_steepness, usual_steps
 from pulsemend.signal.gaps import merge_spans, window_to_samples
 from pulsemend.units import ms_to_s
 
@@ -34,9 +33,6 @@ offset and autocovariance; reading hours more would not change a fill."""
 
 AFTER_PULSE_S = 0.1
 """Kept free after a pulse's last gap, besides the gap itself, because artifacts outlast it."""
-
-_FOUND_SEARCH_S = (-0.005, 0.005)
-"""The onset of a pulse found in the signal lies this near to where it was found."""
 
 STEEPNESS_S = 0.25
 """Of each window as much is used for the usual steepness."""
@@ -69,12 +65,11 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         No stretch free of pulses is long enough to learn from.
     """
     judged = _judged_channels(setup)
-    found: tuple[int, ...] = ()
+    found: tuple[ExpectedPulse, ...] = ()
     if setup.seeks_pulses and judged.size:
-        events = yield from find_pulse_like(recording, setup.used[judged])
-        found = _unmarked(events, setup)
-    expected = (*setup.pulses, *(ExpectedPulse(float(sample), None, PulseState.FOUND) for sample in found))
-    windows = quiet_windows(setup, found)
+        found = yield from seek_pulses(recording, setup, judged)
+    expected = (*setup.pulses, *found)
+    windows = quiet_windows(setup, [nearest_sample(pulse.sample) for pulse in found])
     total = len(windows) + len(expected)
     sums = _autocovariance_sum(setup) if expected else None
     background = BackgroundSum(setup) if expected and setup.decay is not Decay.NONE else None
@@ -99,13 +94,15 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         if background is not None:
             background.add(x)
     usual = usual_steepness(steep) if steep else 0.0
+    limits = limits_of(setup, usual_steps(steep) if steep else np.zeros(judged.size), judged)
     pulses = []
     for done, one in enumerate(expected):
         yield Progress(_STAGE, len(windows) + done, total)
-        pulses.append(_align(recording, setup, one, usual, judged))
+        aligned = align_pulse(recording, setup, one, usual, judged)
+        pulses.append(with_shape(recording, setup, aligned, limits, judged))
     unmarked: tuple[int, ...] = ()
     if setup.pulses_known and not setup.seeks_pulses and not setup.pulses and judged.size:
-        unmarked = yield from find_pulse_like(recording, setup.used[judged])
+        unmarked = yield from find_pulse_like(recording, setup.used[judged], setup.find_rules)
     if sums is not None and not sums.n_samples:
         raise InputError(
             "no stretch free of pulses is long enough to learn the signal's autocovariance from",
@@ -173,20 +170,6 @@ def _around_pulse_s(setup: Setup) -> tuple[float, float]:
     return first, last
 
 
-def _unmarked(events: Sequence[int], setup: Setup) -> tuple[int, ...]:
-    """Pulse-like events that belong to no known pulse, nor to one another's gaps."""
-    first, last = (round(edge_s * setup.facts.rate_hz) for edge_s in _around_pulse_s(setup))
-    known = sorted(pulse.sample for pulse in setup.pulses)
-    found: list[int] = []
-    for event in events:
-        if found and event - found[-1] <= last:
-            continue
-        place = bisect_right(known, event - first)
-        if place == 0 or event - known[place - 1] > last:
-            found.append(event)
-    return tuple(found)
-
-
 def _measure_onsets(
     recording: Recording, setup: Setup
 ) -> Work[tuple[tuple[OnsetShift, ...], tuple[str, ...]]]:
@@ -239,35 +222,12 @@ def _offset(setup: Setup, means: list[NDArray[np.float64]]) -> NDArray[np.float6
     return np.where(setup.scale_v == 1.0, offset, np.round(offset))
 
 
-def _align(
-    recording: Recording, setup: Setup, expected: ExpectedPulse, usual: float, judged: NDArray[np.intp]
-) -> Pulse:
-    """Find a pulse's onset near its marker; it stays at the marker where the signal shows none."""
-    search_s = setup.search_s
-    if expected.placed is PulseState.FOUND:
-        search_s = _FOUND_SEARCH_S
-    elif expected.placed is not None:
-        return Pulse(nearest_sample(expected.sample), expected.marked, expected.placed)
-    near = nearest_sample(expected.sample)
-    rate = setup.facts.rate_hz
-    lo, hi = next((s for s in setup.facts.segments if s[0] <= near < s[1]), (0, setup.facts.n_samples))
-    first = max(lo, near + math.floor(search_s[0] * rate) - 1)
-    stop = min(hi, near + math.ceil(search_s[1] * rate) + 1)
-    onset = None
-    if stop - first >= 2 and judged.size:
-        x = read_stored(recording, setup, first, stop)[:, judged] * setup.scale_v[judged]
-        onset = align_onset(x, usual)
-    if onset is None:
-        state = expected.placed or PulseState.MARKED_ONLY
-        return Pulse(min(max(near, 0), setup.facts.n_samples - 1), expected.marked, state)
-    return Pulse(first + 1 + onset, expected.marked, expected.placed or PulseState.ALIGNED)
-
-
 def basis_of(setup: Setup) -> dict[str, str]:
     """Hash, for every estimate, the settings it rests on."""
     source = [setup.facts.parts, setup.facts.n_samples, setup.used, setup.barriers]
     decay = [setup.decay, setup.decay_s] if setup.decay is not Decay.NONE else []
-    quiet = [*source, setup.pulses, setup.groups, setup.search_s, setup.seeks_pulses, *decay]
+    sought = [setup.seeks_pulses, setup.find_rules, setup.to_match]
+    quiet = [*source, setup.pulses, setup.groups, setup.search_s, *sought, *decay]
     return {
         "offset": basis(*quiet, setup.removes_offset, setup.fill),
         "pulses": basis(*quiet, setup.bad),

@@ -12,6 +12,7 @@ from fractions import Fraction
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsemend.engine.scan import FindRules
 from pulsemend.errors import PlanError, UnusableChannels
 from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.marks import Marks
@@ -104,7 +105,11 @@ class Setup:
     pulses_known : bool
         Whether the plan says where pulses come from; False with ``times = "none"``.
     seeks_pulses : bool
-        Whether pulses without a marker are looked for in the signal, as slots with ``from_signal`` want.
+        Whether pulses without a marker are looked for in the signal.
+    find_rules : FindRules
+        What counts as a pulse there.
+    to_match : tuple of float
+        Pulse markers that are only compared with what the signal shows: with ``times = "signal"``.
     onset_rules : tuple of OnsetRule
         Codes whose onsets are measured in a sensor's channel.
     barriers : tuple of (int, int)
@@ -144,6 +149,8 @@ class Setup:
     pulses: tuple[ExpectedPulse, ...]
     pulses_known: bool
     seeks_pulses: bool
+    find_rules: FindRules
+    to_match: tuple[float, ...]
     onset_rules: tuple[OnsetRule, ...]
     barriers: tuple[tuple[int, int], ...]
     antialias: design.Taps | None
@@ -246,9 +253,10 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         decay_least_v=uv_to_v(plan.pulses.decay_least_uv),
         search_s=(ms_to_s(plan.pulses.search_ms[0]), ms_to_s(plan.pulses.search_ms[1])),
         pulses=_expected_pulses(facts, plan, marks),
+        to_match=_markers_to_match(facts, plan, marks),
+        find_rules=FindRules(plan.pulses.onset_factor, ms_to_s(plan.pulses.min_spacing_ms)),
         pulses_known=plan.pulses.times is not PulseTimes.NONE,
-        seeks_pulses=plan.pulses.times is not PulseTimes.NONE
-        and any(slot.from_signal for slot in plan.trial),
+        seeks_pulses=plan.seeks_pulses,
         onset_rules=plan.onset,
         barriers=tuple((stretch.start, stretch.stop) for stretch in marks.bad_stretches),
         antialias=antialias,
@@ -283,9 +291,21 @@ def _expected_pulses(facts: RecordingFacts, plan: Plan, marks: Marks) -> tuple[E
             continue
         if near in moved:
             expected.append(ExpectedPulse(float(moved[near]), marker.sample, PulseState.MOVED))
-        else:
+        elif plan.pulses.times is not PulseTimes.SIGNAL:
             expected.append(ExpectedPulse(marker.sample, marker.sample))
     return tuple(sorted(expected, key=lambda pulse: pulse.sample))
+
+
+def _markers_to_match(facts: RecordingFacts, plan: Plan, marks: Marks) -> tuple[float, ...]:
+    """Pulse markers whose pulses the signal has to show, in order of time."""
+    if plan.pulses.times is not PulseTimes.SIGNAL:
+        return ()
+    by_hand = {*marks.pulses_removed, *(pulse.sample for pulse in marks.pulses_moved)}
+    return tuple(
+        marker.sample
+        for marker in facts.markers
+        if plan.role_of(marker.code) is Role.PULSE and nearest_sample(marker.sample) not in by_hand
+    )
 
 
 def _rates(plan: Plan, recorded_hz: float) -> tuple[Fraction, float]:

@@ -8,7 +8,7 @@ from pathlib import Path
 
 from pulsemend.export.contents import SetContents
 from pulsemend.model.epochs import NOT_AVAILABLE
-from pulsemend.units import s_to_ms
+from pulsemend.units import s_to_ms, v_to_uv
 
 _BREAKS = re.compile(r"[\x00-\x1f\x7f\x85\u2028\u2029]+")
 
@@ -126,12 +126,14 @@ def pulses_text(contents: SetContents) -> str:
             pulse.marked,
             None if pulse.marked is None else round(s_to_ms((pulse.sample - pulse.marked) / rate_hz), 6),
             pulse.state,
+            pulse.kind,
+            None if pulse.amplitude_v is None else round(v_to_uv(pulse.amplitude_v), 3),
             *(texts[index] for texts in contents.pulse_columns.values()),
         )
         for index, pulse in enumerate(contents.pulses)
     ]
-    columns = ("index", "onset_s", "sample", "marker_sample", "latency_ms", "state", *contents.pulse_columns)
-    return table_text(columns, rows)
+    columns = ("index", "onset_s", "sample", "marker_sample", "latency_ms", "state", "kind", "amplitude_uv")
+    return table_text((*columns, *contents.pulse_columns), rows)
 
 
 def channels_text(contents: SetContents) -> str:

@@ -259,7 +259,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         own = [shift for shift in estimates.stimulus_onsets if shift.code in rule.codes]
         markers = shifted(markers, own, rule.use, facts.rate_hz)
     found = [pulse.sample for pulse in estimates.pulses if pulse.state is PulseState.FOUND]
-    trials = match_trials(markers, plan, facts.rate_hz, marks, found)
+    trials = match_trials(markers, plan, facts.rate_hz, _without_ghosts(marks, setup, estimates), found)
     logged = None
     if log.table is not None:
         logged = with_log(trials.trials, log.table, plan, marks, facts.rate_hz)
@@ -296,6 +296,18 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         notes=notes,
         warnings=tuple(warnings),
     )
+
+
+def _without_ghosts(marks: Marks, setup: Setup, estimates: Estimates) -> Marks:
+    """Remove pulse markers without a pulse, where the signal alone tells of pulses."""
+    ghosts = (nearest_sample(sample) for sample in unmatched(setup, estimates))
+    return replace(marks, pulses_removed=tuple(sorted({*marks.pulses_removed, *ghosts})))
+
+
+def unmatched(setup: Setup, estimates: Estimates) -> tuple[float, ...]:
+    """Pulse markers to which the signal shows no pulse, where it alone tells of pulses; recorded samples."""
+    met = {pulse.marked for pulse in estimates.pulses}
+    return tuple(sample for sample in setup.to_match if sample not in met)
 
 
 def run_of(stem: str) -> str:

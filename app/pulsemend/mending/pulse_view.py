@@ -239,6 +239,7 @@ def _adapted(
             pulses.append(known)
         else:
             pulses.append(Pulse(near, expected.marked, PulseState.MARKED_ONLY))
+    pulses += _found_before(setup, earlier)
     offset = earlier.offset if setup.removes_offset else np.zeros(setup.used.size)
     adapted = replace(
         earlier, offset=offset, pulses=tuple(sorted(pulses, key=lambda one: one.sample)), rests_on={}
@@ -252,6 +253,14 @@ def _adapted(
         columns, _ = yield from _picked(recording, ground, request)
         rows = yield from _quick_autocovariance(recording, setup, columns)
     return replace(adapted, autocovariance=rows)
+
+
+def _found_before(setup: Setup, earlier: Estimates) -> list[Pulse]:
+    """Pulses that earlier estimates found in the signal, where the present settings look for them, too."""
+    if not setup.seeks_pulses:
+        return []
+    to_match = set(setup.to_match)
+    return [pulse for pulse in earlier.pulses if pulse.state is PulseState.FOUND or pulse.marked in to_match]
 
 
 def _lags(setup: Setup) -> int:

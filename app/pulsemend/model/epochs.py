@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 from pulsemend.model.recording import Marker
-from pulsemend.model.vocabulary import Fate, PulseState
+from pulsemend.model.vocabulary import Fate, PulseKind, PulseState
 
 NOT_AVAILABLE = "n/a"
 """What a label column holds where there is no label."""
@@ -54,13 +54,25 @@ class Pulse:
     sample : int
         Recorded sample of its onset; gaps and pulse anchors count from here.
     marked : float or None
-        Recorded sample of its marker, or None if it was added by hand.
+        Recorded sample of its marker, or None if it has none.
     state : PulseState
+    kind : PulseKind or None
+        What mark it left; None where the signal shows none, or was not looked at.
+    amplitude_v : float or None
+        Its largest deviation within 10 ms from the level before, median over the EEG channels.
+    clipped_s : float
+        From the onset to the end of clipping in the last channel.
+    held_s : float
+        How long before the onset the amplifier held all channels.
     """
 
     sample: int
     marked: float | None
     state: PulseState
+    kind: PulseKind | None = None
+    amplitude_v: float | None = None
+    clipped_s: float = 0.0
+    held_s: float = 0.0
 
 
 @dataclass(frozen=True)

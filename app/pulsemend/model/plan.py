@@ -309,6 +309,8 @@ class Pulses:
 
     times: PulseTimes = PulseTimes.MARKERS
     search_ms: Window = (-10.0, 10.0)
+    onset_factor: float = 50.0
+    min_spacing_ms: float = 50.0
     window_ms: Window | None = None
     fill: Fill = Fill.COVARIANCE
     side: Side = Side.BOTH
@@ -395,6 +397,18 @@ class Plan:
     onset: tuple[OnsetRule, ...] = ()
     balance: Balance = Balance()
     stimulation: StimulationFacts = field(default_factory=StimulationFacts)
+
+    @property
+    def seeks_pulses(self) -> bool:
+        """Whether pulses without a marker are looked for: everywhere, or for slots with ``from_signal``."""
+        if self.pulses.times is PulseTimes.NONE:
+            return False
+        return self.finds_pulses or any(slot.from_signal for slot in self.trial)
+
+    @property
+    def finds_pulses(self) -> bool:
+        """Whether the signal tells where pulses are, alone or besides the markers."""
+        return self.pulses.times in (PulseTimes.SIGNAL, PulseTimes.BOTH)
 
     def names(self, code: str) -> bool:
         """Whether the plan says what a code stands for, by itself or by a field of bits."""

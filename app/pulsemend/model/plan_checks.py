@@ -315,12 +315,12 @@ def _warnings(plan: Plan) -> tuple[str, ...]:
             f"pulses.window_ms is shorter than {SHORTEST_GAP_MS:g} ms: it is given in milliseconds, "
             "and a pulse's spike lasts longer"
         )
-    if has_pulses and Role.PULSE not in roles:
+    if has_pulses and Role.PULSE not in roles and not plan.finds_pulses:
         found.append('no code has role "pulse", so no pulse is known; say times = "none" if there are none')
     found += [
         f"slot {show(slot.slot)} is optional and no code has its role {show(slot.role)}"
         for slot in plan.trial
-        if slot.optional and slot.role not in roles
+        if slot.optional and slot.role not in roles and not (plan.finds_pulses and slot.role is Role.PULSE)
     ]
     rate_hz, lowpass_hz = plan.filter.rate_hz, plan.filter.lowpass_hz
     if rate_hz and lowpass_hz > LARGEST_BAND * rate_hz:

@@ -200,7 +200,6 @@ PLAN_KEYS: tuple[Key, ...] = (
         "where the times of the pulses come from",
         default=PulseTimes.MARKERS,
         words=PulseTimes,
-        now=(PulseTimes.MARKERS, PulseTimes.NONE),
     ),
     Key(
         "pulses.search_ms",
@@ -210,6 +209,23 @@ PLAN_KEYS: tuple[Key, ...] = (
         unit="ms",
         low=-1000.0,
         high=1000.0,
+    ),
+    Key(
+        "pulses.onset_factor",
+        Kind.NUMBER,
+        "found in the signal: steps so many times steeper than is usual for the channel",
+        default=50.0,
+        low=5.0,
+        high=10000.0,
+    ),
+    Key(
+        "pulses.min_spacing_ms",
+        Kind.NUMBER,
+        "found in the signal: steps closer together are one pulse",
+        default=50.0,
+        unit="ms",
+        low=1.0,
+        high=10000.0,
     ),
     Key(
         "pulses.window_ms",

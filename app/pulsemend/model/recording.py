@@ -40,6 +40,8 @@ class Channel:
         Of the amplifier, where the file gives one.
     status : str
         "good" or "bad", where the file or a table beside it says so; bad channels are not left out by that.
+    range_v : tuple of 2 float or None
+        Lowest and highest voltage that the file can hold, where its header says so.
     """
 
     name: str
@@ -54,6 +56,7 @@ class Channel:
     reference: str = ""
     gain: float | None = None
     status: str = ""
+    range_v: tuple[float, float] | None = None
 
 
 @dataclass(frozen=True)

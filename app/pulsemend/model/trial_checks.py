@@ -87,7 +87,8 @@ def _check_slots(plan: Plan) -> None:
             _check_first_slot(slot, path)
         if slot.after:
             _check_after(slot, path, plan)
-        if slot.role not in roles and not slot.optional:
+        from_signal = plan.finds_pulses and slot.role is Role.PULSE
+        if slot.role not in roles and not slot.optional and not from_signal:
             raise PlanError(
                 key_text((*path, "role")),
                 "no code under [markers] has this role, nor any value under [bits], so every trial would be "
@@ -189,7 +190,8 @@ def _check_stand_in(slot: Slot, path: KeyPath) -> None:
 
 def _check_source_label(slot: Slot, plan: Plan) -> None:
     """Refuse labels of the name that says what filled the slot."""
-    if slot.stand_in is StandIn.NONE and not slot.from_signal:
+    from_signal = slot.from_signal or (plan.finds_pulses and slot.role is Role.PULSE)
+    if slot.stand_in is StandIn.NONE and not from_signal:
         return
     problem = f"is kept for what filled slot {show(slot.slot)}"
     for bits in plan.bits:

@@ -7,6 +7,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 
 from pulsemend.model.plan import Plan, Slot
+from pulsemend.model.vocabulary import Role
 
 LARGEST_VARIANTS = 60
 """More combinations of kinds and repeats than this are refused: no design needs them."""
@@ -39,7 +40,7 @@ def kinds(plan: Plan) -> tuple[str, ...]:
 def expanded_slots(plan: Plan) -> tuple[Slot, ...]:
     """All slots of all kinds in the plan's order, groups with most repeats: what columns are made of."""
     repeats = {group.name: group.times[1] for group in plan.groups}
-    return _resolved(_written_out(plan.trial, repeats, plan))
+    return _resolved(_written_out(_slots(plan), repeats, plan))
 
 
 def slot_names(plan: Plan) -> tuple[str, ...]:
@@ -67,13 +68,20 @@ def variants(plan: Plan) -> tuple[Variant, ...]:
     groups = [group for group in plan.groups if any(slot.group == group.name for slot in plan.trial)]
     ranges = [range(group.times[0], group.times[1] + 1) for group in groups]
     for kind in kinds(plan):
-        own = [slot for slot in plan.trial if not slot.kinds or kind in slot.kinds]
+        own = [slot for slot in _slots(plan) if not slot.kinds or kind in slot.kinds]
         for counts in itertools.product(*ranges):
             repeats = dict(zip((group.name for group in groups), counts, strict=True))
             slots = _resolved(_written_out(own, repeats, plan))
             if slots and all(slots != other.slots for other in found if other.kind == kind):
                 found.append(Variant(kind, repeats, slots))
     return tuple(found)
+
+
+def _slots(plan: Plan) -> tuple[Slot, ...]:
+    """Give the plan's slots; pulses of the signal fill those of pulses where it tells of them anyway."""
+    if not plan.finds_pulses:
+        return plan.trial
+    return tuple(replace(one, from_signal=True) if one.role is Role.PULSE else one for one in plan.trial)
 
 
 def _written_out(slots: Sequence[Slot], repeats: Mapping[str, int], plan: Plan) -> list[Slot]:

@@ -124,6 +124,15 @@ class PulseState(StrEnum):
     FOUND = "found in the signal, no marker"
 
 
+class PulseKind(StrEnum):
+    """What mark a pulse left in the signal."""
+
+    SPIKE = "spike"
+    CLIPPED = "clipped spike"
+    SLOW = "slow recovery from clipping"
+    HELD = "hold and step"
+
+
 class StandIn(StrEnum):
     """What stands in as anchor for a slot that was not found."""
 

@@ -240,6 +240,8 @@ def _channel(signal: Signal) -> Channel:
         return Channel(name, kind, unit=unit or "no unit")
     scale_v = 1.0 if signal.library_unit in _CONVERTED else power_of_ten(_VOLT_EXPONENTS[unit])
     highpass_hz, lowpass_hz = (_cutoff(pattern, signal.prefilter) for pattern in (_HIGHPASS, _LOWPASS))
+    per_unit = power_of_ten(_VOLT_EXPONENTS[unit])
+    low, high = sorted(float(edge) * per_unit for edge in signal.physical)
     return Channel(
         name,
         kind,
@@ -249,6 +251,7 @@ def _channel(signal: Signal) -> Channel:
         lowpass_hz=lowpass_hz,
         coupling="DC" if highpass_hz == 0 else "",
         reference=_reference(signal.label),
+        range_v=(low, high),
     )
 
 

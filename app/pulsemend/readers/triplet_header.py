@@ -311,14 +311,25 @@ def _channel(entries: _Entries, number: int) -> Channel:
         raise entries.damaged(f"the resolution of channel {name} is not a number: {resolution}") from None
     if not (math.isfinite(per_step) and per_step != 0):
         raise entries.damaged(f"the resolution of channel {name} is {resolution}")
+    scale_v = per_step * _VOLTS.get(unit, 1.0)
     return Channel(
         name=name,
         type=type_of(name, in_volts=unit in _VOLTS),
-        scale_v=per_step * _VOLTS.get(unit, 1.0),
+        scale_v=scale_v,
         position_m=_position(entries, number),
         unit=unit,
         reference=reference,
+        range_v=_range_v(_sample_type(entries), scale_v),
     )
+
+
+def _range_v(sample_type: SampleType, scale_v: float) -> tuple[float, float] | None:
+    """Range of whole numbers; floating ones have none."""
+    if sample_type.kind != "i":
+        return None
+    half = 1 << (8 * sample_type.itemsize - 1)
+    low, high = sorted((-half * scale_v, (half - 1) * scale_v))
+    return low, high
 
 
 def _position(entries: _Entries, number: int) -> tuple[float, float, float] | None:
