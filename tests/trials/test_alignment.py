@@ -165,9 +165,10 @@ def check_many(seeds: range, most: int) -> None:
                 f"seed {seed}: {ways}\n{events}\n{align(events, ways)}\n{best_explanations(events, ways)}"
             )
             raise AssertionError(message) from error
-    # Both kinds of case were there.
-    assert 0.1 * len(seeds) < doubtful < 0.9 * len(seeds)
-    assert refused < 0.3 * len(seeds)
+    # Both kinds of case were there, unless there are very few.
+    if len(seeds) >= 100:
+        assert 0.1 * len(seeds) < doubtful < 0.9 * len(seeds)
+    assert refused < 0.5 * len(seeds)
 
 
 def slots(*rows: tuple[str, Role, tuple[float, float] | None, str, bool], kind: str = "") -> Variant:

@@ -119,9 +119,10 @@ def check_many(seeds: range, plan: Plan | None) -> Tally:
     for seed in seeds:
         check_one(random.Random(seed), plan, tally, seed)
     assert tally.recall >= RECALL
-    # The task is neither empty nor without difficulty.
-    assert tally.recoverable > 0.25 * tally.true
-    assert tally.doubtful > 0
+    # The task is neither empty nor without difficulty; a single recording may be either.
+    if len(seeds) > 4:
+        assert tally.recoverable > 0.25 * tally.true
+        assert tally.recoverable < tally.true
     return tally
 
 
