@@ -327,7 +327,11 @@ def test_the_cursor_is_described_for_screen_readers(view: LanesView) -> None:
 
 
 def picture(view: LanesView) -> QImage:
-    return view.viewport().grab().toImage()
+    """Picture with all words, which come with later frames if they are many."""
+    image = view.viewport().grab().toImage()
+    while view._words.owed:
+        image = view.viewport().grab().toImage()
+    return image
 
 
 def test_kept_is_filled_and_left_out_is_hollow(view: LanesView) -> None:
@@ -365,6 +369,20 @@ def test_scrolled_pictures_are_those_painted_anew(
         anew = pixels(picture(long_view))
         # A slanted line that is cut off at an edge may take its steps a pixel aside.
         assert (scrolled != anew).sum() <= 6
+
+
+def test_new_words_are_spread_over_frames(
+    qtbot: QtBot, long_view: LanesView, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    whole = pixels(picture(long_view))
+    long_view._words = type(long_view._words)()
+    start = long_view._words.start
+    monkeypatch.setattr(long_view._words, "start", lambda _: start(-1.0))
+    long_view._image_key = None
+    first = pixels(long_view.viewport().grab().toImage())
+    assert (first != whole).any()
+    qtbot.waitUntil(lambda: not long_view._words.owed)
+    assert (pixels(long_view.viewport().grab().toImage()) == whole).all()
 
 
 def test_other_colours(view: LanesView) -> None:

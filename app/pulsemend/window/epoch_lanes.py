@@ -11,7 +11,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
-from PySide6.QtCore import QEvent, QPoint, QPointF, QRectF, QSize, Qt, Signal
+from PySide6.QtCore import QEvent, QPoint, QPointF, QRectF, QSize, Qt, QTimer, Signal
 from PySide6.QtGui import (
     QColor,
     QFocusEvent,
@@ -41,6 +41,8 @@ LANE_PX = (6, 22, 64)
 """Height of a lane: least, usual and most."""
 STEP_MS = 10.0
 _EDGE_PX = 5.0
+_WORDS_BUDGET_S = 0.0015
+"""Of one frame, for texts that were not in sight before; the rest of them comes with the next frames."""
 _ROOM_S = 0.03
 """Room at both ends of the time axis, in parts of what it shows."""
 _ZOOM = 1.25
@@ -127,6 +129,8 @@ class LanesView(QAbstractScrollArea):
         self._image_key: object = None
         self._image_scroll = 0
         self._words = Words()
+        self._again = QTimer(self, singleShot=True, interval=0)
+        self._again.timeout.connect(self.viewport().update)
         self._grip: _Grip | None = None
         self._try: Try | None = None
         self.setFrameShape(QFrame.Shape.NoFrame)
@@ -393,10 +397,14 @@ class LanesView(QAbstractScrollArea):
         elif self._image.size() != self.viewport().size() * ratio:
             self._image = QPixmap(self.viewport().size() * ratio)
         self._image.setDevicePixelRatio(ratio)
+        self._words.start(_WORDS_BUDGET_S)
         with QPainter(self._image) as painter:
             painter.setFont(self.font())
             paint_lanes(painter, rows, layout, hand, LaneLook(self._theme, ratio, self._words), new)
         self._image_key, self._image_scroll = key, layout.scroll_px
+        if self._words.owed:
+            self._image_key = None
+            self._again.start()
         return self._image
 
     def resizeEvent(self, event: QResizeEvent) -> None:

@@ -185,7 +185,7 @@ def paint_lanes(
         _paint_words(painter, rows, sight, layout, hand, look)
     painter.restore()
     if between is None:
-        _paint_axis(painter, layout, look.theme, metrics)
+        _paint_axis(painter, layout, look, metrics)
 
 
 def _paint_grounds(
@@ -259,9 +259,17 @@ def _paint_boxes(
         place = int(rule[order[first]])
         style = rule_style(place, theme)
         is_kept = bool(rows.box_kept[boxes[order[first]]])
-        painter.setPen(QPen(QColor(style.edge), 2.0 if place == hand.rule else 1.0))
+        painter.setPen(QPen(QColor(style.edge), 1.0))
         painter.setBrush(rule_brush(style, look.ratio) if is_kept else Qt.BrushStyle.NoBrush)
         painter.drawRects([QRectF(x, y, width, height) for x, y, width in zip(*own, strict=True)])
+        if place == hand.rule:
+            # Twice a thin line: a thick one takes ten times as long.
+            painter.setBrush(Qt.BrushStyle.NoBrush)
+            inner = [
+                QRectF(x + 1, y + 1, max(1.0, width - 2), max(1, height - 2))
+                for x, y, width in zip(*own, strict=True)
+            ]
+            painter.drawRects(inner)
         if not is_kept:
             painter.setPen(QPen(QColor(theme.attention), 1.0))
             painter.drawLines([QLineF(x, y + height, x + width, y) for x, y, width in zip(*own, strict=True)])
@@ -346,17 +354,18 @@ def lane_name(trial: int, *, is_whole: bool) -> str:
     return f"{trial}" if is_whole else f"{trial} !"
 
 
-def _paint_axis(painter: QPainter, layout: LaneLayout, theme: Theme, metrics: QFontMetricsF) -> None:
+def _paint_axis(painter: QPainter, layout: LaneLayout, look: LaneLook, metrics: QFontMetricsF) -> None:
+    theme = look.theme
     painter.fillRect(QRectF(0, layout.bottom, layout.width, 100), QColor(theme.panel))
     painter.setPen(QPen(QColor(theme.line), 1.0))
     painter.drawLine(QPointF(layout.left, layout.bottom + 0.5), QPointF(layout.right, layout.bottom + 0.5))
-    base = layout.bottom + 6 + metrics.ascent()
-    painter.setPen(QColor(theme.quiet))
-    painter.drawText(QPointF(8, base), "trial")
+    top = layout.bottom + 6
+    look.words.draw(painter, (8, top), "trial", theme.quiet, layout.left)
     for time_s, text in ticks(layout):
         x = layout.x_of(time_s)
         painter.drawLine(QPointF(x, layout.bottom), QPointF(x, layout.bottom + 4))
-        painter.drawText(QPointF(x - metrics.horizontalAdvance(text) / 2, base), text)
+        left = x - metrics.horizontalAdvance(text) / 2
+        look.words.draw(painter, (left, top), text, theme.quiet, _TICK_PX)
 
 
 def ticks(layout: LaneLayout) -> list[tuple[float, str]]:

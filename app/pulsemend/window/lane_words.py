@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import time
 
 from PySide6.QtCore import QPointF, Qt
 from PySide6.QtGui import QColor, QFont, QFontMetricsF, QImage, QPainter
@@ -12,11 +13,31 @@ MOST = 600
 
 
 class Words:
-    """Pictures of texts in one font."""
+    """Pictures of texts in one font.
+
+    Attributes
+    ----------
+    owed : bool
+        Whether texts were left out since `start`, because making their pictures took too long for one frame.
+    """
 
     def __init__(self) -> None:
+        self.owed = False
+        self._made = False
+        self._until_s = 0.0
         self._key: tuple[str, float] = ("", 0.0)
         self._pictures: dict[tuple[str, str, int], QImage] = {}
+
+    def start(self, budget_s: float) -> None:
+        """Begin a frame.
+
+        Parameters
+        ----------
+        budget_s : float
+            Time that may be spent on new pictures; one is made in any case.
+        """
+        self._until_s = time.perf_counter() + budget_s
+        self.owed = self._made = False
 
     def draw(self, painter: QPainter, at: tuple[float, float], text: str, colour: str, room: float) -> None:
         """Draw a text, shortened to the room there is.
@@ -40,6 +61,10 @@ class Words:
             self._key, self._pictures = key, {}
         which = (text, colour, int(room))
         if which not in self._pictures:
+            if self._made and time.perf_counter() > self._until_s:
+                self.owed = True
+                return
+            self._made = True
             self._pictures[which] = _picture(painter.font(), which, ratio)
         # On whole pixels of the screen, so that letters stay sharp.
         x, y = (math.floor(place * ratio + 0.5) / ratio for place in at)
