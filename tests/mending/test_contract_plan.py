@@ -139,12 +139,12 @@ def test_no_lowpass_at_a_reduced_rate_means_two_fifths_of_it(study: Study, tmp_p
 @pytest.mark.parametrize(
     ("keys", "where"),
     [
-        ('decay = "exponential"', "pulses.decay"),
-        ('times = "signal"', "pulses.times"),
+        ('decay = "sudden"', "pulses.decay"),
+        ('times = "guess"', "pulses.times"),
         ("windows_ms = [1, 2]", "pulses.windows_ms"),
     ],
 )
-def test_keys_of_later_versions_and_unknown_ones_are_refused_by_path(
+def test_unknown_words_and_keys_are_refused_by_path(
     keys: str, where: str, study: Study, tmp_path: Path
 ) -> None:
     error = refused(study, changed(PLAN, ('fill = "line"', f'fill = "line"\n{keys}')), tmp_path)
