@@ -82,7 +82,7 @@ def test_a_smooth_top_is_not_clipped() -> None:
 
 def test_flat_by_coarse_resolution_is_not_held() -> None:
     rng = np.random.default_rng(1)
-    walk = np.cumsum(rng.standard_normal((1000, 31)) * 0.15, axis=0)
+    walk = np.cumsum(rng.standard_normal((1000, 31)) * 0.25, axis=0)
     coarse: NDArray[Any] = np.round(walk[400:])
     assert held_before(coarse, 500, 5000.0) == 0
     coarse[480:500] = coarse[479]

@@ -226,7 +226,7 @@ def basis_of(setup: Setup) -> dict[str, str]:
     """Hash, for every estimate, the settings it rests on."""
     source = [setup.facts.parts, setup.facts.n_samples, setup.used, setup.barriers]
     decay = [setup.decay, setup.decay_s] if setup.decay is not Decay.NONE else []
-    sought = [setup.seeks_pulses, setup.find_rules, setup.to_match]
+    sought = [setup.seeks_pulses, setup.find_rules, setup.to_match, setup.no_pulses]
     quiet = [*source, setup.pulses, setup.groups, setup.search_s, *sought, *decay]
     return {
         "offset": basis(*quiet, setup.removes_offset, setup.fill),

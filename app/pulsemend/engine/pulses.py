@@ -69,6 +69,8 @@ def _own_pulses(events: NDArray[np.float64], known: Sequence[float], setup: Setu
     after_s = max(setup.find_rules.spacing_s, main_s[1])
     reach_s = (min(main_s[0], setup.search_s[0]), max(after_s, setup.search_s[1]))
     inside |= _any_between(events, np.sort(np.array(known, dtype=np.float64)), reach_s, rate_hz)
+    denied = np.array(setup.no_pulses, dtype=np.float64)
+    inside |= _any_between(events, np.sort(denied), (-_EDGE_S, _EDGE_S), rate_hz)
     own: list[float] = []
     for event in events[~inside].tolist():
         if not own or event - own[-1] > after_s * rate_hz:

@@ -110,6 +110,8 @@ class Setup:
         What counts as a pulse there.
     to_match : tuple of float
         Pulse markers that are only compared with what the signal shows: with ``times = "signal"``.
+    no_pulses : tuple of int
+        Recorded samples at which somebody said that there is no pulse.
     onset_rules : tuple of OnsetRule
         Codes whose onsets are measured in a sensor's channel.
     barriers : tuple of (int, int)
@@ -151,6 +153,7 @@ class Setup:
     seeks_pulses: bool
     find_rules: FindRules
     to_match: tuple[float, ...]
+    no_pulses: tuple[int, ...]
     onset_rules: tuple[OnsetRule, ...]
     barriers: tuple[tuple[int, int], ...]
     antialias: design.Taps | None
@@ -254,6 +257,7 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         search_s=(ms_to_s(plan.pulses.search_ms[0]), ms_to_s(plan.pulses.search_ms[1])),
         pulses=_expected_pulses(facts, plan, marks),
         to_match=_markers_to_match(facts, plan, marks),
+        no_pulses=marks.pulses_removed if plan.seeks_pulses else (),
         find_rules=FindRules(plan.pulses.onset_factor, ms_to_s(plan.pulses.min_spacing_ms)),
         pulses_known=plan.pulses.times is not PulseTimes.NONE,
         seeks_pulses=plan.seeks_pulses,

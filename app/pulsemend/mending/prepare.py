@@ -13,6 +13,7 @@ from pulsemend.engine.fit import fit
 from pulsemend.engine.onsets import OnsetShift, shifted
 from pulsemend.engine.setup import Setup, bind
 from pulsemend.errors import InputError, LogError, NoEpochs
+from pulsemend.mending.pulse_findings import pulse_warnings
 from pulsemend.mending.study_log import NO_LOG, StudyLog, read_study_log
 from pulsemend.model.epochs import Candidate, Trials, nearest_sample
 from pulsemend.model.marks import NO_MARKS, Marks
@@ -281,6 +282,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
     warnings = [
         *_trial_warnings(trials, facts, plan),
         *notes,
+        *pulse_warnings(setup, estimates),
         *stale_decisions(trials, plan, geometry),
         *_stale_pulses(facts, plan, marks),
         *matched.warnings,
@@ -455,7 +457,8 @@ def _stale_pulses(facts: RecordingFacts, plan: Plan, marks: Marks) -> list[str]:
     """Pulses moved or removed by hand where no marker is a pulse: plan or marks have changed since."""
     at = {nearest_sample(one.sample) for one in facts.markers if plan.role_of(one.code) is Role.PULSE}
     named = [("moved", pulse.sample) for pulse in marks.pulses_moved]
-    named += [("removed", sample) for sample in marks.pulses_removed]
+    if not plan.seeks_pulses:  # else it was perhaps one that had been found in the signal
+        named += [("removed", sample) for sample in marks.pulses_removed]
     return [
         f"marks: the pulse at sample {sample} is {what}, but no pulse marker is there"
         for what, sample in named
