@@ -142,7 +142,6 @@ def test_many_fits_at_once_are_the_single_ones(kind: str) -> None:
     shapes = 0
     for one, fit in zip(ys, fit_again(STRETCH, ys, before), strict=True):
         alone = fit_shape(STRETCH, one, kind)
-        assert fit.reason == alone.reason
         if fit.shape is not None and alone.shape is not None:
             shapes += 1
             # Two exponentials have flat valleys: how well both fit is what must agree.

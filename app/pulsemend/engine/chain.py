@@ -133,6 +133,11 @@ class Chain:
         """The binding this chain was made with."""
         return self._setup
 
+    @property
+    def estimates(self) -> Estimates:
+        """What it rests on."""
+        return self._estimates
+
     def gaps(self, columns_of: int, segment: int) -> list[Gap]:
         """List the gaps of one group of channels in one segment."""
         return self._repairs[columns_of].gaps[segment]

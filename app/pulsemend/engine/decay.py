@@ -260,6 +260,8 @@ class _Stretches:
         Their middles, from the gap's end.
     pulses : tuple of int
         Place of each row of `blocks` among the pulses.
+    fitted : bool array, shape (n_spans,)
+        Which of these are rows of `points`.
     times_s : array, shape (n_points,)
         From the gap's end.
     n_onsets : int
@@ -273,6 +275,7 @@ class _Stretches:
     late: NDArray[np.float32]
     late_s: Floats
     pulses: tuple[int, ...]
+    fitted: NDArray[np.bool_]
     times_s: Floats
     n_onsets: int
 
@@ -334,7 +337,8 @@ def _read_stretches(
     since_s = window_to_samples(0, group.windows_s[0], rate_hz)[1] / rate_hz
     pulses = tuple(span.pulse for span in spans)
     late_s = (np.array(edges[1:]) + np.array(edges[:-1]) - 1) / 2.0 / rate_hz
-    return _Stretches(grid, since_s, points, blocks, late, late_s, pulses, times_s, len(onsets))
+    fitted = np.isin(np.arange(len(spans)), far)
+    return _Stretches(grid, since_s, points, blocks, late, late_s, pulses, fitted, times_s, len(onsets))
 
 
 def _touches(closed: Sequence[tuple[int, int]], start: int, stop: int) -> bool:
@@ -423,7 +427,7 @@ def _amplitudes(
             rows = lengths == n
             weights, variance = amplitude_weights(means[:n], covariance_of(background[:n]))
             amplitudes[rows], variances[rows] = blocks[rows, :n] @ weights, variance
-    of_all[list(stretches.pulses)], spread = settled_amplitudes(amplitudes, variances)
+    of_all[list(stretches.pulses)], spread = settled_amplitudes(amplitudes, variances, stretches.fitted)
     return of_all, spread
 
 

@@ -47,11 +47,11 @@ def decay_spans(
     firsts = [gap.start for gap in gaps]
     owns = [window_to_samples(onset, group.windows_s[0], rate_hz) for onset in onsets]
     spans: list[DecaySpan] = []
-    for pulse, (_, origin) in enumerate(owns):
+    for pulse, (onset, (_, origin)) in enumerate(zip(onsets, owns, strict=True)):
         stop = min(hi, owns[pulse + 1][0]) if pulse + 1 < len(owns) else hi
         # The gap that holds the pulse's last own sample; at the ends of a segment there may be none.
         place = bisect_right(firsts, origin - 1) - 1
-        if not lo < origin < hi or place < 0 or gaps[place].stop < origin:
+        if not lo <= onset < hi or place < 0 or gaps[place].stop < origin:
             continue
         start = gaps[place].stop
         if stop <= start:

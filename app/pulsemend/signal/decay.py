@@ -41,8 +41,8 @@ LEAST_EXPLAINED = 0.5
 
 _GRID = 16
 _STARTS = 6
-_FIRST_STEPS = 10
-_AGAIN_STEPS = 40
+_FIRST_STEPS = 20
+_KEPT = 3
 _MOST_STEPS = 200
 _SETTLED = 1e-12
 _LARGEST = 3.0
@@ -155,8 +155,10 @@ def fit_shape(
     target = np.concatenate([y, late.y])[None] / factor
     starts = _from_grid(points, target[0])
     values, costs = _descend(points, np.tile(target, (len(starts), 1)), starts, _FIRST_STEPS)
-    values, _ = _descend(points, target, values[[int(np.argmin(costs))]])
-    return _judged(points, values[0], target[0], factor)
+    # What looks best early is not always so in the end.
+    best = values[np.argsort(costs)[:_KEPT]]
+    values, costs = _descend(points, np.tile(target, (len(best), 1)), best)
+    return _judged(points, values[int(np.argmin(costs))], target[0], factor)
 
 
 def fit_again(
@@ -197,7 +199,7 @@ def fit_again(
     start[[0, -1]] /= factor
     if kind == "two exponentials":
         start[2] /= factor
-    values, _ = _descend(points, target, np.tile(start, (len(ys), 1)), _AGAIN_STEPS)
+    values, _ = _descend(points, target, np.tile(start, (len(ys), 1)))
     return [_judged(points, found, one, factor) for found, one in zip(values, target, strict=True)]
 
 
@@ -255,33 +257,42 @@ def _descend(
     costs : array, shape (n_signals,)
     """
     values = np.clip(start, points.low, points.high)
-    damping = np.full(len(ys), 1e-3)
     left = _curves(points.kind, values, points.times_s) + values[:, -1:] - ys
     costs = (left**2) @ points.weights
+    damping = np.full(len(ys), 1e-3)
+    rows = np.arange(len(ys))
     for _ in range(most_steps):
-        slopes = _slopes(points.kind, values, points.times_s)
-        weighted = slopes * points.weights[:, None]
-        gradient = np.einsum("dtk,dt->dk", weighted, left)
-        # A value at its bound that would be led beyond it stays there; the others move as if it were known.
-        held = ((values <= points.low) & (gradient > 0.0)) | ((values >= points.high) & (gradient < 0.0))
-        gradient[held] = 0.0
-        normal = np.einsum("dtk,dtl->dkl", weighted, slopes)
-        normal[held[:, :, None] | held[:, None, :]] = 0.0
-        scale = np.maximum(np.einsum("dkk->dk", normal), 1e-300)
-        normal += np.eye(values.shape[1]) * (scale * (damping[:, None] + 1e-14))[:, None, :]
-        normal += np.eye(values.shape[1]) * held[:, None, :]
-        step = -np.linalg.solve(normal, gradient[:, :, None])[:, :, 0]
-        tried = np.clip(values + step, points.low, points.high)
-        tried_left = _curves(points.kind, tried, points.times_s) + tried[:, -1:] - ys
+        tried = _tried(points, values[rows], left[rows], damping[rows])
+        tried_left = _curves(points.kind, tried, points.times_s) + tried[:, -1:] - ys[rows]
         tried_costs = (tried_left**2) @ points.weights
-        better = tried_costs < costs
-        moved = np.abs(tried - values) <= 1e-10 * np.abs(values) + 1e-14
-        settled = moved.all(axis=1) | (better & (costs - tried_costs <= _SETTLED * costs))
-        values[better], left[better], costs[better] = tried[better], tried_left[better], tried_costs[better]
-        damping = np.where(better, damping * 0.1, damping * 8.0)
-        if np.all(settled | (damping > 1e12)):
+        gain = costs[rows] - tried_costs
+        better = gain > 0.0
+        still = (np.abs(tried - values[rows]) <= 1e-10 * np.abs(values[rows]) + 1e-14).all(axis=1)
+        settled = still | (better & (gain <= _SETTLED * costs[rows])) | (damping[rows] > 1e12)
+        taken = rows[better]
+        values[taken], left[taken], costs[taken] = tried[better], tried_left[better], tried_costs[better]
+        damping[rows] *= np.where(better, 0.1, 8.0)
+        rows = rows[~settled]
+        if not rows.size:
             break
     return values, costs
+
+
+def _tried(points: _Points, values: Floats, left: Floats, damping: Floats) -> Floats:
+    """Where the next step of every signal leads, shape (n_signals, n_values + 1)."""
+    slopes = _slopes(points.kind, values, points.times_s)
+    weighted = (slopes * points.weights[:, None]).transpose(0, 2, 1)
+    gradient = (weighted @ left[:, :, None])[:, :, 0]
+    # A value at its bound that would be led beyond it stays there; the others move as if it were known.
+    held = ((values <= points.low) & (gradient > 0.0)) | ((values >= points.high) & (gradient < 0.0))
+    gradient[held] = 0.0
+    normal = weighted @ slopes
+    normal[held[:, :, None] | held[:, None, :]] = 0.0
+    scale = np.maximum(np.einsum("dkk->dk", normal), 1e-300)
+    identity = np.eye(values.shape[1])
+    normal += identity * (scale * (damping[:, None] + 1e-14) + held)[:, None, :]
+    step = -np.linalg.solve(normal, gradient[:, :, None])[:, :, 0]
+    return np.asarray(np.clip(values + step, points.low, points.high))
 
 
 def _n_values(kind: str) -> int:
@@ -339,7 +350,10 @@ def _from_grid(points: _Points, y: Floats) -> Floats:
     # Amplitudes of the other sign are not allowed, and make bad starts.
     amplitudes = np.maximum(amplitudes, 1e-3)
     left = (np.einsum("gtk,gk->gt", centred, amplitudes) - target) ** 2 @ share
-    best = np.argsort(left)[:_STARTS]
+    # One start for each first time constant: two alike would end alike.
+    order = np.argsort(left)
+    _, first_of_each = np.unique(fixed[order, 0], return_index=True)
+    best = order[np.sort(first_of_each)[:_STARTS]]
     heights = mean - np.einsum("gk,gk->g", around[best], amplitudes[best])
     if kind == "two exponentials":
         pairs = np.stack([amplitudes[best], fixed[best]], axis=2).reshape(len(best), 4)

@@ -65,12 +65,14 @@ def covariance_of(autocovariance: Floats) -> Floats:
     return np.asarray(positive + strengths[-1] / n)
 
 
-def settled_amplitudes(amplitudes: Floats, variances: Floats) -> tuple[Floats, float]:
-    """Draw noisy amplitudes towards the median pulse's, as far as their noise explains their spread.
+def settled_amplitudes(
+    amplitudes: Floats, variances: Floats, fitted: NDArray[np.bool_] | None = None
+) -> tuple[Floats, float]:
+    """Draw noisy amplitudes towards their median, as far as their noise explains their spread.
 
-    The fitted shape is the median pulse, so the median amplitude is 1. What a pulse differs from it counts by
-    the share of its variance that is the pulses' own (the best linear estimate [1]_); a pulse far outside
-    keeps its own amplitude.
+    The shape was fitted to a median pulse, so the median amplitude of the pulses it was taken over is 1. What
+    a pulse differs from the median of all counts by the share of its variance that is the pulses' own (the
+    best linear estimate [1]_); a pulse far outside keeps its own amplitude.
 
     Parameters
     ----------
@@ -78,6 +80,8 @@ def settled_amplitudes(amplitudes: Floats, variances: Floats) -> tuple[Floats, f
         As estimated; NaN where it cannot be.
     variances : array, shape (n_pulses,)
         Of the estimates, from the background; NaN where it is not known.
+    fitted : bool array, shape (n_pulses,), or None
+        The pulses that the median pulse was taken over; None: all.
 
     Returns
     -------
@@ -95,7 +99,10 @@ def settled_amplitudes(amplitudes: Floats, variances: Floats) -> tuple[Floats, f
     settled = np.ones_like(amplitudes)
     if np.count_nonzero(known) < 3:
         return settled, 0.0
-    departure = amplitudes[known] - np.median(amplitudes[known])
+    among = known if fitted is None or not (known & fitted).any() else known & fitted
+    middle = float(np.median(amplitudes[known]))
+    departure = amplitudes[known] - middle
+    settled += middle - float(np.median(amplitudes[among]))
     noise = variances[known]
     spread = float(1.4826 * np.median(np.abs(departure)))
     own = max(0.0, spread**2 - float(np.median(noise)))
