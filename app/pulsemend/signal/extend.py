@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import lfilter, lfiltic
 
 from pulsemend.signal.burg import burg
 
@@ -40,6 +39,9 @@ def extended(x: NDArray[np.floating], n_ahead: int, rate_hz: float) -> NDArray[n
     a stretch autoregressively before filtering it apart from what lies across a pulse is described in
     DOI 10.64898/2026.05.13.725016 (a preprint; its order and length were not seen).
     """
+    # Loading it takes long, and few plans split at pulses: the first traces must not wait for it.
+    from scipy.signal import lfilter, lfiltic
+
     near = np.asarray(x[:, -max(1, round(LEARN_S * rate_hz)) :], dtype=np.float64)
     mean = near.mean(axis=1, keepdims=True)
     order = min(ORDER, near.shape[1] // 3)
