@@ -63,6 +63,7 @@ class ConditionsCard(Card):
         super().__init__("Conditions", "kept of all")
         self.columns = QListWidget()
         self.columns.setAccessibleName("Label columns that make the conditions")
+        self.columns.setSpacing(2)
         self.model = _CountsModel()
         self.table = RowsTable("Epochs per condition", self.model, ())
         header = self.table.horizontalHeader()
@@ -109,7 +110,7 @@ class ConditionsCard(Card):
                 )
         self.columns.setVisible(bool(columns))
         self.no_columns.setVisible(not columns)
-        _fit_rows(self.columns, max(1, self.columns.sizeHintForRow(0)), len(columns), MOST_COLUMNS, 0)
+        _fit_rows(self.columns, max(1, self.columns.sizeHintForRow(0)) + 4, len(columns), MOST_COLUMNS, 0)
 
     def show_counts(self, counts: Sequence[ConditionCount]) -> None:
         """Show how many epochs there are."""

@@ -138,7 +138,7 @@ class EpochsStage(StagePage):
         self.notes_text = self.notes.add_note()
         self.no_plan = Card("Epochs")
         self.no_plan_words = self.no_plan.add_note()
-        counts = (self.conditions, self.reasons, self.selection, self.balance)
+        counts = (self.conditions, self.balance, self.reasons, self.selection)
         self._cards = (self.set_card, self.rules, self.editor, *counts)
         self.settings = column_of(self.no_plan, *self._cards, self.notes, name="Epochs, settings")
         self.lane_page = LanePage(self.bench.theme)
@@ -422,6 +422,8 @@ class EpochsStage(StagePage):
             self.conditions.show_counts(())
             self.selection.show_nothing("Not counted.")
             self.balance.show_left_out(None)
+            self.balance.show_would((), None)
+            self.editor.show_kept(None)
             return
         self.pages.setCurrentWidget(self.lane_page)
         self._lay_out_anew()
