@@ -32,6 +32,9 @@ from pulsemend.signal.gaps import merge_spans, window_to_samples
 MOST_PULSES = 300
 """The median pulse is taken over so many, spread evenly over the recording."""
 
+QUICK_PULSES = 30
+"""For a first picture."""
+
 SHORTEST_S = 0.005
 """A stretch shorter than this before the next gap tells nothing of a decay."""
 
@@ -186,7 +189,7 @@ def learn_decay(
     setup: Setup,
     onsets: Sequence[int],
     background: Floats | None,
-    columns: NDArray[np.intp] | None = None,
+    quick: NDArray[np.intp] | None = None,
 ) -> Work[DecayEstimates]:
     """Fit the decay of every channel: its shape from the median pulse, its amplitude per pulse.
 
@@ -200,8 +203,9 @@ def learn_decay(
         Of the pulses, in order of time.
     background : array, shape (n_used, n_blocks), or None
         From `BackgroundSum`; without it every pulse counts as large as the median pulse.
-    columns : array of int or None
-        Only these of the used channels, and no absorption: for a first picture.
+    quick : array of int or None
+        Only these of the used channels, from `QUICK_PULSES` that count as large as their median, and without
+        absorption: for a first picture.
 
     Yields
     ------
@@ -213,23 +217,23 @@ def learn_decay(
     """
     reasons = [""] * setup.used.size
     found: dict[int, _Fitted] = {}
-    chosen = np.arange(setup.used.size) if columns is None else columns
+    chosen = np.arange(setup.used.size) if quick is None else quick
+    most = MOST_PULSES if quick is None else QUICK_PULSES
     n_pulses = 0
     for group in setup.groups:
         members = np.intersect1d(group.columns, chosen)
-        stretches = yield from _read_stretches(recording, setup, group, members, onsets)
+        stretches = yield from _read_stretches(recording, setup, group, members, onsets, most)
         n_pulses = max(n_pulses, stretches.n_pulses)
         for place, column in enumerate(members.tolist()):
             yield Progress(_STAGE, len(found) + sum(map(bool, reasons)), chosen.size)
             own = None if background is None else background[column]
-            fitted = _fit_channel(setup, stretches, place, own, columns is None)
+            fitted = _fit_channel(setup, stretches, place, own, quick is None)
             if isinstance(fitted, str):
                 reasons[column] = fitted
             else:
                 found[column] = fitted
-    if columns is not None:
-        left = np.setdiff1d(np.arange(setup.used.size), columns)
-        reasons = ["not looked at yet" if i in left else reason for i, reason in enumerate(reasons)]
+    for column in np.setdiff1d(np.arange(setup.used.size), chosen).tolist():
+        reasons[column] = "not looked at yet"
     return _estimates(setup, reasons, found, len(onsets), n_pulses)
 
 
@@ -291,6 +295,7 @@ def _read_stretches(
     group: GapGroup,
     members: NDArray[np.intp],
     onsets: Sequence[int],
+    most: int,
 ) -> Work[_Stretches]:
     grid = decay_grid(setup)
     rate_hz = setup.facts.rate_hz
@@ -304,8 +309,8 @@ def _read_stretches(
     reach = np.array([min((s.clean_stop - s.origin) // grid.point, grid.n_points) for s in spans], np.intp)
     n_points = int(np.sort(reach)[::-1][(len(reach) - 1) // 2]) if len(reach) else 0
     far = np.flatnonzero(reach >= max(n_points, 1))
-    if far.size > MOST_PULSES:
-        far = far[np.linspace(0, far.size - 1, MOST_PULSES).round().astype(int)]
+    if far.size > most:
+        far = far[np.linspace(0, far.size - 1, most).round().astype(int)]
     row_of = {int(span): row for row, span in enumerate(far)}
     points = np.empty((far.size, n_points, members.size), np.float32)
     late = np.full((far.size, LATE_BLOCKS, members.size), np.nan, np.float32)
@@ -317,7 +322,7 @@ def _read_stretches(
     for place, span in enumerate(spans):
         yield Progress("reading the decay", place, len(spans))
         n = int(reach[place])
-        if n < grid.block:
+        if n < grid.block or (most == QUICK_PULSES and place not in row_of):
             continue
         stop = span.origin + n * grid.point
         # Counting from a sample of its own, single precision is enough.

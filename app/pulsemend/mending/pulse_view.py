@@ -17,6 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend.engine.chain import Chain
+from pulsemend.engine.decay import learn_decay
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import fit, quiet_windows
 from pulsemend.engine.reading import read_stored
@@ -26,7 +27,7 @@ from pulsemend.model.epochs import Pulse, nearest_sample
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import About, Channels, Filter, Plan
 from pulsemend.model.recording import Recording
-from pulsemend.model.vocabulary import Fill, PulseState
+from pulsemend.model.vocabulary import Decay, Fill, PulseState
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.autocovariance import AutocovarianceSum
 from pulsemend.signal.fills import lags_needed
@@ -242,8 +243,16 @@ def _adapted(
     pulses += _found_before(setup, earlier)
     offset = earlier.offset if setup.removes_offset else np.zeros(setup.used.size)
     adapted = replace(
-        earlier, offset=offset, pulses=tuple(sorted(pulses, key=lambda one: one.sample)), rests_on={}
+        earlier,
+        offset=offset,
+        pulses=tuple(sorted(pulses, key=lambda one: one.sample)),
+        decay=None,
+        rests_on={},
     )
+    if setup.decay is not Decay.NONE:
+        columns = yield from _decaying(recording, Ground(setup, adapted, provisional=True), request)
+        decay = yield from learn_decay(recording, setup, adapted.onsets, None, columns)
+        adapted = replace(adapted, decay=decay)
     if setup.fill is not Fill.COVARIANCE or not pulses:
         return replace(adapted, autocovariance=None)
     rows = earlier.autocovariance
@@ -261,6 +270,16 @@ def _found_before(setup: Setup, earlier: Estimates) -> list[Pulse]:
         return []
     to_match = set(setup.to_match)
     return [pulse for pulse in earlier.pulses if pulse.state is PulseState.FOUND or pulse.marked in to_match]
+
+
+def _decaying(recording: Recording, ground: Ground, request: PulseRequest) -> Work[NDArray[np.intp]]:
+    """Find the channels whose decay a provisional picture needs: those shown, or the largest steps."""
+    columns = _columns(ground.setup, request)
+    if request.pick is not Pick.WORST:
+        shown, _ = yield from _picked(recording, ground, request)
+        return shown
+    steps_v = yield from _leftover_steps(recording, ground, _onsets(ground, request), columns)
+    return columns[np.sort(np.argsort(-steps_v)[:QUICK_CHANNELS])]
 
 
 def _lags(setup: Setup) -> int:
@@ -446,7 +465,7 @@ def _leftover_steps(
 ) -> Work[NDArray[np.float64]]:
     """Level just after a gap minus just before it: size of the median over the pulses, volts per column.
 
-    A fill changes neither level, so this is what the gap left behind at its edges.
+    A fill changes neither level, so this is what gap and subtraction of decays left behind at its edges.
     """
     setup = ground.setup
     rate_hz = setup.facts.rate_hz
@@ -458,10 +477,13 @@ def _leftover_steps(
     lowest = min(start for _, start, _ in groups) - width
     highest = max(stop for _, _, stop in groups) + width
     steps = np.empty((len(onsets), columns.size))
+    # Nothing is filled here, so that no fill needs what may not be learned yet.
+    chain = Chain(recording, replace(setup, fill=Fill.LEAVE), ground.estimates)
     for row, onset in enumerate(onsets.tolist()):
         yield Progress(_STAGE, row, len(onsets))
-        a, b = max(0, onset + lowest), min(setup.facts.n_samples, onset + highest)
-        x = read_stored(recording, setup, a, b)[:, columns]
+        lo, hi = next(segment for segment in setup.facts.segments if segment[0] <= onset < segment[1])
+        a, b = max(lo, onset + lowest), min(hi, onset + highest)
+        x = chain.before_fill(a, b)[:, columns]
         for members, start, stop in groups:
             # At an end of the recording one sample has to do.
             at, end = max(onset + start - a, 1), min(onset + stop - a, b - a - 1)

@@ -40,6 +40,7 @@ LEAST_EXPLAINED = 0.5
 """A shape that leaves more than this share of the median pulse's variance unexplained is not its shape."""
 
 _GRID = 16
+_FAR = 1e9
 _STARTS = 6
 _FIRST_STEPS = 20
 _KEPT = 3
@@ -229,10 +230,10 @@ def _points(times_s: Floats, kind: str, late: Late, level: bool) -> _Points:
     shortest, longest = LEAST_TAU_S, LONGEST_TAU * float(times_s[-1] - times_s[0])
     if kind == "power":
         # At time t a power law falls as fast as an exponential of (t0 + t) / p.
-        low, high = [0.0, shortest * POWERS[0], POWERS[0]], [1e6, longest * POWERS[1], POWERS[1]]
+        low, high = [0.0, shortest * POWERS[0], POWERS[0]], [_FAR, longest * POWERS[1], POWERS[1]]
     else:
-        low, high = ([0.0, shortest] * (_n_values(kind) // 2), [1e6, longest] * (_n_values(kind) // 2))
-    least, most = (-1e6, 1e6) if level else (0.0, 0.0)
+        low, high = ([0.0, shortest] * (_n_values(kind) // 2), [_FAR, longest] * (_n_values(kind) // 2))
+    least, most = (-_FAR, _FAR) if level else (0.0, 0.0)
     weights = np.ones(n + late.times_s.size)
     weights[n:] = n / max(1, late.times_s.size)
     return _Points(

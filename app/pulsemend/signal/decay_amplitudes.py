@@ -60,7 +60,7 @@ def covariance_of(autocovariance: Floats) -> Floats:
     centre = np.eye(n) - 1.0 / n
     strengths, directions = np.linalg.eigh(centre @ toeplitz(autocovariance) @ centre)
     # The offset's direction is as strong as any; estimates of the weakest ones may even be negative.
-    least = 1e-6 * strengths[-1] if strengths[-1] > 0.0 else 1.0
+    least = 1e-7 * strengths[-1] if strengths[-1] > 0.0 else 1.0
     positive = (directions * np.maximum(strengths, least)) @ directions.T
     return np.asarray(positive + strengths[-1] / n)
 
