@@ -179,7 +179,8 @@ def test_a_refused_name_and_label_stay_to_be_corrected(qtbot: QtBot, page: Epoch
     assert page.editor.name.text() == "delay1"
     type_over(qtbot, page.editor.labels, "asked = cue3.item")
     said = page.editor.fields["labels"].refusal.text()
-    assert "cue1.item | cue2.item" in said
+    assert "cue1.item" in said
+    assert "cue2.item" in said
     assert rule(page, 0).labels == {"asked": "cue2.item"}
     type_over(qtbot, page.editor.labels, "asked = cue1.item, other = cue2.item")
     assert rule(page, 0).labels == {"asked": "cue1.item", "other": "cue2.item"}

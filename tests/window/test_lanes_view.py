@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Callable
+from dataclasses import replace
 
 import pytest
 from PySide6.QtCore import QPoint, QPointF, Qt
@@ -181,6 +182,18 @@ def test_the_edge_of_a_later_piece_is_followed_by_the_mouse(view: LanesView) -> 
     assert view.rect_of(number).right() - rect.right() == pytest.approx(30, abs=1)
     assert view.rect_of(number).left() - rect.left() == pytest.approx(15, abs=1)
     QTest.mouseRelease(view.viewport(), LEFT, pos=rect.center().toPoint())
+
+
+def test_the_time_axis_stands_still_while_something_is_dragged(view: LanesView) -> None:
+    before = view.layout_now()
+    drag(view, middle(view, box(view, 1, "baseline")), -60, let_go=False)
+    shifted = replace(PLAN.epochs.rule[0], start_s=-3.0)
+    plan = replace(PLAN, epochs=replace(PLAN.epochs, rule=(shifted, *PLAN.epochs.rule[1:])))
+    view.show_lanes(lanes_of(plan))
+    assert view.layout_now() == before
+    QTest.mouseRelease(view.viewport(), LEFT, pos=QPoint(300, 10))
+    view.show_lanes(lanes_of(plan))
+    assert view.layout_now().start_s < before.start_s
 
 
 def test_escape_gives_up_a_drag(view: LanesView) -> None:

@@ -77,6 +77,8 @@ class _Grip:
     start_s: float
     length_s: float
     by_edge: bool
+    span_s: tuple[float, float]
+    """What the time axis shows; it must not change under a hand that drags."""
 
 
 class LanesView(QAbstractScrollArea):
@@ -243,7 +245,7 @@ class LanesView(QAbstractScrollArea):
         left = float(metrics.horizontalAdvance("00000 !") + 16)
         words = min(max(width * _WORDS_SHARE, _WORDS_PX[0]), _WORDS_PX[1]) if width > 560 else 12.0
         right = max(left + 40.0, width - words)
-        low_s, high_s = (0.0, 1.0) if self._rows is None else (self._rows.low_s, self._rows.high_s)
+        low_s, high_s = self._span_s()
         room_s = (high_s - low_s) * _ROOM_S
         px_per_s = (right - left) / (high_s - low_s + 2 * room_s) * self._zoom
         return LaneLayout(
@@ -256,6 +258,11 @@ class LanesView(QAbstractScrollArea):
             start_s=low_s - room_s + self.horizontalScrollBar().value() / px_per_s,
             px_per_s=px_per_s,
         )
+
+    def _span_s(self) -> tuple[float, float]:
+        if self._grip is not None:
+            return self._grip.span_s
+        return (0.0, 1.0) if self._rows is None else (self._rows.low_s, self._rows.high_s)
 
     def box_at(self, at: QPointF) -> int:
         """Box at a point, the chosen rule's first; -1 for none."""
@@ -435,7 +442,8 @@ class LanesView(QAbstractScrollArea):
         by_edge = box >= 0 and self._is_edge(box, event.position().x())
         self._put_cursor(row, box)
         start_s = self._start_of(int(self._rows.lanes.box_rule[box])) if box >= 0 else 0.0
-        self._grip = _Grip(row, box, event.position(), start_s, self._length_s, by_edge)
+        span_s = self._span_s()
+        self._grip = _Grip(row, box, event.position(), start_s, self._length_s, by_edge, span_s)
 
     def mouseMoveEvent(self, event: QMouseEvent) -> None:
         """Drag, or show what can be taken hold of."""

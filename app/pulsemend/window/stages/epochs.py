@@ -399,7 +399,8 @@ class EpochsStage(StagePage):
     def _show_counts(self, plan: Plan) -> None:
         decided = self._decided
         counts = () if decided is None else kept_of_all(*decided)
-        self.rules.show_rules(plan.epochs.rule, counts, self._place)
+        shown = self._tried.plan if self._tried is not None and self.lanes.is_dragging else plan
+        self.rules.show_rules(shown.epochs.rule, counts, self._place)
         recording = self.bench.session.recording
         rate_hz = plan.filter.rate_hz or (recording.facts.rate_hz if recording else 0.0)
         self.samples.show_value(
