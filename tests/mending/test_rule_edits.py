@@ -11,6 +11,7 @@ from pulsemend.mending.rule_edits import (
     check_epochs,
     labels_from_text,
     labels_text,
+    with_balance,
     with_copy,
     with_length,
     with_moved_rule,
@@ -18,7 +19,7 @@ from pulsemend.mending.rule_edits import (
     with_rule,
     without_rule,
 )
-from pulsemend.model.plan import Plan
+from pulsemend.model.plan import Balance, Group, Plan
 from pulsemend.model.plan_file import parse_plan, plan_text
 from support.small_lantern import PLAN
 
@@ -75,6 +76,13 @@ def test_first_rule_of_a_plan_and_none_without_slots(plan: Plan) -> None:
     assert changed.epochs.rule == (other, plan.epochs.rule[1])
     assert replace(changed, epochs=plan.epochs) == plan
     assert with_length(plan, 0.5).epochs.length_s == 0.5
+    assert with_balance(plan, Balance(("asked",))).balance.by == ("asked",)
+
+
+def test_a_new_rule_starts_at_the_first_slot_as_it_is_numbered_in_a_group(plan: Plan) -> None:
+    first = replace(plan.trial[0], group="part")
+    grouped = replace(plan, trial=(first, *plan.trial[1:]), groups=(Group("part", (1, 2), (1.0, 2.0)),))
+    assert with_new_rule(grouped, 0).epochs.rule[0].anchor == "sample1"
 
 
 @pytest.mark.parametrize(
@@ -83,6 +91,8 @@ def test_first_rule_of_a_plan_and_none_without_slots(plan: Plan) -> None:
         ("", {}),
         (" , ; ", {}),
         ("cued = cue1.item", {"cued": "cue1.item"}),
+        ("uncued = other(cue1.item), order = first", {"uncued": "other(cue1.item)", "order": "first"}),
+        ('note = "left, then; right", order = "first"', {"note": "left, then; right", "order": "first"}),
         (
             "a=cue1.item,b = cue2.item ;c=x.y\nd = z.w",
             {"a": "cue1.item", "b": "cue2.item", "c": "x.y", "d": "z.w"},
@@ -94,7 +104,7 @@ def test_labels_as_a_person_writes_them(text: str, labels: dict[str, str]) -> No
     assert labels_from_text(labels_text(labels)) == labels
 
 
-@pytest.mark.parametrize("text", ["cued", "cued =", "= cue1.item", "a = x.y, a = x.z"])
+@pytest.mark.parametrize("text", ["cued", "cued =", "= cue1.item", "a = x.y, a = x.z", 'a = "x'])
 def test_labels_that_say_nothing_are_refused(text: str) -> None:
     with pytest.raises(PlanError):
         labels_from_text(text)
