@@ -11,19 +11,22 @@ import numpy as np
 import pytest
 
 from pulsemend.mending.draft import draft_plan, write_draft
-from pulsemend.mending.draft_log import logs_beside
+from pulsemend.mending.draft_log import guess_log, logs_beside
 from pulsemend.mending.prepare import marks_path
 from pulsemend.mending.study_log import read_study_log
 from pulsemend.model.marks import NO_MARKS
 from pulsemend.model.plan import Plan
-from pulsemend.model.plan_file import parse_plan
+from pulsemend.model.plan_file import parse_plan, read_plan
 from pulsemend.model.recording import Channel, Marker, RecordingFacts
 from pulsemend.model.vocabulary import ChannelType
 from pulsemend.progress import finish
 from pulsemend.readers.opening import open_recording
+from pulsemend.resources import sample_folder
+from pulsemend.simulate.lantern import make_lantern
+from pulsemend.simulate.truth import log_text
 from pulsemend.trials.logged import with_log
 from pulsemend.trials.matching import match_trials
-from support.lantern_log import LOG, N_TRIALS, RATE_HZ, STEM, changed_rows, markers_of, recoded, write
+from support.lantern_log import LOG, N_TRIALS, RATE_HZ, STEM, changed_rows, markers_of, recoded, spec, write
 
 NUMBERS = {"lanterns up": 1, "arrow left": 2, "arrow right": 6, "pulse": 8}
 
@@ -136,6 +139,21 @@ def test_times_in_milliseconds_and_with_decimal_comma_are_seen(tmp_path: Path) -
     text = draft_of(recording, tmp_path / "plan.toml")
     log = with_every_role(uncommented(text, "log")).log
     assert (log.time, log.unit, log.columns) == ("at", "ms", ("trial",))
+
+
+@pytest.mark.parametrize("first", [0, 100])
+def test_a_long_log_is_found_wherever_it_begins(first: int, tmp_path: Path) -> None:
+    """Its first rows tell the way, unless the recording began long before."""
+    lantern = make_lantern(replace(spec(), trials=110))
+    rows = log_text(lantern.schedule.questions).splitlines()
+    (tmp_path / f"{STEM}_log.tsv").write_text("\n".join([rows[0], *rows[1 + first :]]), encoding="utf-8")
+    (table,) = logs_beside(tmp_path, STEM)
+    plan = read_plan(sample_folder() / "lantern.toml").plan
+    facts = replace(facts_with(*lantern.markers), rate_hz=RATE_HZ)
+    found = guess_log(table, facts, plan)
+    assert found is not None
+    assert found.times == ("arrow_s", "probe_s", "answer_s")
+    assert found.joined == found.rows == len(rows) - 1 - first
 
 
 def test_another_log_is_named_but_not_joined(tmp_path: Path) -> None:

@@ -20,6 +20,7 @@ from pulsemend.simulate.lantern import LanternSpec
 from pulsemend.simulate.memory import rehearse
 from pulsemend.simulate.sample import SampleResult, write_sample
 from pulsemend.simulate.schedule import Fault, FaultKind
+from pulsemend.simulate.truth import LOG_COLUMNS
 
 TINY = LanternSpec(
     trials=2,
@@ -83,6 +84,11 @@ def test_plan_fits_the_recording(tmp_path: Path) -> None:
     check_decided(plan)
     check_against_rate(plan, TINY.rate_hz)
     assert check_channels(plan, NO_MARKS, TINY.channels) == ()
+    assert {plan.log.time, *plan.log.columns} <= set(LOG_COLUMNS)
+    assert result.logs[0].name == plan.log.file.replace("{stem}", TINY.stem)
+    assert {label.name for label in plan.labels} == {"second"}
+    # The same columns in every rule, so that both delays pool.
+    assert {tuple(sorted(rule.labels)) for rule in plan.epochs.rule} == {("cued", "order", "uncued")}
     codes = {m.code for m in rehearse(replace(TINY, trials=8)).lantern.markers}
     assert codes == {marker.code for marker in plan.markers}
 

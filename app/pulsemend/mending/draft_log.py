@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import itertools
+import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
 from pulsemend.errors import LogError, PlanError
+from pulsemend.model.epochs import Trial
 from pulsemend.model.keys import show
 from pulsemend.model.log import LogTable
 from pulsemend.model.marks import NO_MARKS
@@ -26,6 +28,7 @@ _OTHER_TABLES = ("events", "channels", "electrodes", "coordsystem", "scans")
 
 _MOST_ROWS_OF_TRIAL = 6
 _LEAST_JOINED = 0.5
+_BEGINNING = 60
 _AS_TIGHT, _LEAST_SPREAD_S = 3.0, 0.001
 """Clocks whose spreads are within this factor fit equally well; below a millisecond they all do."""
 
@@ -50,7 +53,7 @@ class LogGuess:
     joined: int
     rows: int
     spread_s: float
-    times: tuple[str, ...]
+    times: tuple[str, ...] = ()
 
 
 def logs_beside(folder: Path, stem: str) -> tuple[LogTable, ...]:
@@ -144,23 +147,43 @@ def guess_log(table: LogTable, facts: RecordingFacts, plan: Plan) -> LogGuess | 
     try:
         trials = match_trials(facts.markers, plan, facts.rate_hz).trials
     except PlanError:
+        # A draft's limits are as seen, so they agree; those of a plan need not.
         return None
     times = tuple(column for column, unit in units.items() if unit and _rises(table, column, unit))
+    ways = [
+        Log(file=table.name, slots=slots, time=column, unit=TimeUnit(units[column] or "s"))
+        for slots, column in itertools.product(_slot_sets(plan), times)
+    ]
+    # The beginning tells which way is right; all of it is joined once, or tried where that tells nothing.
+    n_trials = math.ceil(_BEGINNING * len(trials) / len(table.rows))
+    beginning = replace(table, rows=table.rows[:_BEGINNING], lines=table.lines[:_BEGINNING])
+    best = _best_way(ways, beginning, trials[:n_trials], plan, facts.rate_hz)
+    if len(table.rows) > _BEGINNING:
+        best = _best_way([best.log] if best else ways, table, trials, plan, facts.rate_hz)
+    return None if best is None else replace(best, times=times)
+
+
+def _best_way(
+    ways: Sequence[Log], table: LogTable, trials: Sequence[Trial], plan: Plan, rate_hz: float
+) -> LogGuess | None:
+    """Join in every way and choose; None where not even half of the rows find their trial."""
     found: list[LogGuess] = []
-    for slots, column in itertools.product(_slot_sets(plan, len(table.rows), len(trials)), times):
-        log = Log(file=table.name, slots=slots, time=column, unit=TimeUnit(units[column] or "s"))
-        join = with_log(trials, table, replace(plan, log=log), NO_MARKS, facts.rate_hz).join
+    for log in ways:
+        join = with_log(trials, table, replace(plan, log=log), NO_MARKS, rate_hz).join
         if join is not None and join.clock is not None:
-            spread_s = join.clock.residual_sd_s
-            found.append(LogGuess(log, len(join.pairs), len(table.rows), spread_s, times))
+            found.append(LogGuess(log, len(join.pairs), len(table.rows), join.clock.residual_sd_s))
     most = max((one.joined for one in found), default=0)
     if not most or most < _LEAST_JOINED * len(table.rows):
         return None
     best = [one for one in found if one.joined == most]
     tight_s = _AS_TIGHT * max(min(one.spread_s for one in best), _LEAST_SPREAD_S)
     optional = {slot.slot for slot in expanded_slots(plan) if slot.optional}
+
+    def rank(one: LogGuess) -> tuple[bool, int, bool]:
+        return one.spread_s > tight_s, len(one.log.slots), not optional.isdisjoint(one.log.slots)
+
     # Several columns may do, each with its own slot: the first that every trial has.
-    return min(best, key=lambda one: (one.spread_s > tight_s, not optional.isdisjoint(one.log.slots)))
+    return min(best, key=rank)
 
 
 def _rises(table: LogTable, column: str, unit: str) -> bool:
@@ -176,16 +199,11 @@ def _rises(table: LogTable, column: str, unit: str) -> bool:
     return len(set(values)) > len(values) / 2 and sum(step > 0 for step in steps) >= 0.9 * len(steps) > 0
 
 
-def _slot_sets(plan: Plan, n_rows: int, n_trials: int) -> Iterator[tuple[str, ...]]:
-    """Slots that rows may stand for: one, or all of one role, as many as there are rows in a trial."""
-    rows = round(n_rows / n_trials) if n_trials else 0
-    if rows > _MOST_ROWS_OF_TRIAL:
-        return
+def _slot_sets(plan: Plan) -> Iterator[tuple[str, ...]]:
+    """Slots that rows may stand for: one, or all of one role."""
     slots = expanded_slots(plan)
-    if rows <= 1:
-        yield from ((slot.slot,) for slot in slots)
-        return
+    yield from ((slot.slot,) for slot in slots)
     for role in dict.fromkeys(slot.role for slot in slots):
         own = tuple(slot.slot for slot in slots if slot.role is role)
-        if len(own) == rows:
+        if 1 < len(own) <= _MOST_ROWS_OF_TRIAL:
             yield own
