@@ -203,3 +203,18 @@ def test_the_table_of_events_has_the_moved_markers(tmp_path: Path) -> None:
 def test_a_channel_that_is_not_there_is_one_clear_line(recording: Path, tmp_path: Path) -> None:
     with pytest.raises(InputError, match='no channel "Photo" to measure onsets in'):
         dry(recording, changed(PLAN, ("[pulses]", ONSET)), tmp_path)
+
+
+def test_what_a_person_calls_no_pulse_is_not_found_again(tmp_path: Path) -> None:
+    """Neither at a marker nor where the signal alone showed one."""
+    recording = write(tmp_path / "in", faults=(UNMARKED,))
+    plan = changed(PLAN, ('slot = "pulse2"\nrole = "pulse"', SIGNAL_FILLS))
+    open_ = dry(recording, plan, tmp_path / "study")
+    (found,) = (pulse.sample for pulse in open_.estimates.pulses if pulse.marked is None)
+    marked = sample_of(2, "pulse1")
+    marks = f"[pulses]\nremoved = [{marked}, {found}]\n"
+    decided = dry(recording, plan, tmp_path / "study", marks)
+    assert len(decided.estimates.pulses) == 2 * N_TRIALS - 2
+    assert all(
+        abs(pulse.sample - gone) > 100 for pulse in decided.estimates.pulses for gone in (marked, found)
+    )
