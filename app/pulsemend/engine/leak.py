@@ -84,7 +84,8 @@ def measure_leak(chain: Chain, estimates: Estimates, cuts: Sequence[Cut]) -> Wor
     median, n_pulses = yield from _median(chain, estimates)
     if not n_pulses:
         return nothing
-    response = _Response(setup, median)
+    response = _Response(setup)
+    yield from response.learn(median)
     peaks = np.zeros(len(cuts))
     for place, cut in enumerate(cuts):
         if place % 64 == 0:
@@ -129,13 +130,19 @@ def _median(chain: Chain, estimates: Estimates) -> Work[tuple[NDArray[np.float64
 class _Response:
     """What arrives of one pulse's median at the end of the chain, wherever between samples its onset is."""
 
-    def __init__(self, setup: Setup, median: NDArray[np.float64]) -> None:
+    def __init__(self, setup: Setup) -> None:
         self.setup = setup
         self.ratio = float(setup.ratio)
         self.first, stop = _span(setup)
         self.reach = math.ceil(setup.replaced_reach_s * setup.rate_hz) + 2
         self.own = (self.first * self.ratio, (stop - 1) * self.ratio)  # in output samples from the onset
         self.judged = np.append(setup.eeg & ~setup.bad, np.ones(len(setup.names) - setup.used.size, np.bool_))
+        self.offsets: list[float] = []  # output samples from the onset to the response's first sample
+        self.curves: list[NDArray[np.floating]] = []
+
+    def learn(self, median: NDArray[np.float64]) -> Work[None]:
+        """Send the median through the chain, once for each place of the onset between output samples."""
+        setup = self.setup
         denominator = setup.ratio.denominator
         phases = sorted(
             {round(k * denominator / MOST_PHASES) for k in range(MOST_PHASES)} & set(range(denominator))
@@ -145,9 +152,8 @@ class _Response:
         facts = replace(setup.facts, n_samples=n_samples, boundaries=(), markers=())
         # Nothing is filled, learned or put back: the median is of repaired signal.
         alone = replace(setup, facts=facts, pulses=(), barriers=(), groups=())
-        self.offsets: list[float] = []  # output samples from the onset to the response's first sample
-        self.curves: list[NDArray[np.floating]] = []
         for phase in phases:
+            yield Progress(_STAGE, 0, 0)
             recording = _Alone(facts, setup.used, median, quiet + phase)
             is_split = setup.across_pulses is AcrossPulses.SPLIT
             spans = gap_spans(setup, [quiet + phase - self.first]) if is_split else []
