@@ -8,13 +8,15 @@ from __future__ import annotations
 
 import os
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 
 from pulsemend.errors import UsageError
 from pulsemend.mending.draft_log import log_lines, logs_beside
-from pulsemend.mending.facts import summarise
+from pulsemend.mending.facts import RecordingSummary, summarise
+from pulsemend.mending.gap_suggestion import GapSuggestion
 from pulsemend.mending.prepare import marks_path
-from pulsemend.mending.pulse_evidence import NO_EVIDENCE, PulseEvidence, pulse_evidence
+from pulsemend.mending.pulse_evidence import NO_EVIDENCE, PulseEvidence, gaps_around, pulse_evidence
 from pulsemend.model.keys import Key, show
 from pulsemend.model.log import LogTable
 from pulsemend.model.plan_checks import LARGEST_BAND
@@ -26,6 +28,7 @@ from pulsemend.model.toml_tables import write_text
 from pulsemend.model.vocabulary import Role
 from pulsemend.progress import Work
 from pulsemend.readers.common import stem_of
+from pulsemend.readers.opening import open_recording
 from pulsemend.trials.faults import find_faults
 from pulsemend.trials.proposal import CodeGuess, Guess, SlotGuess, guess
 
@@ -64,12 +67,25 @@ def write_draft(recording: Path, out: Path) -> Work[Path]:
     # Decisions about this recording that stand beside the plan count here as everywhere.
     marks = marks_path(out, stem)
     summary = yield from summarise(recording, marks_path=marks if marks.exists() else None)
-    evidence = pulse_evidence(summary.facts, summary.pulses_found)
+    evidence = yield from _evidence(recording, summary)
     logs = logs_beside(recording.parent, summary.facts.stem)
     text = draft_plan(summary.facts, evidence, logs, summary.notes)
     _check_free(out)
     write_text(out, text)
     return out
+
+
+def _evidence(path: Path, summary: RecordingSummary) -> Work[PulseEvidence]:
+    """Assign the pulses found to markers, and look around them for where they end."""
+    evidence = pulse_evidence(summary.facts, summary.pulses_found)
+    if not summary.pulses_found:
+        return evidence
+    recording = open_recording(path)
+    try:
+        gaps = yield from gaps_around(recording, summary.pulses_found)
+    finally:
+        recording.close()
+    return replace(evidence, gaps=gaps)
 
 
 def _check_free(out: Path) -> None:
@@ -249,10 +265,11 @@ def _pulses(found: Guess, evidence: PulseEvidence) -> list[str]:
     ]
     if evidence.unmarked:
         lines.append(
-            "# decide: 1 of them has no marker; if it is a pulse, add it in the recording's marks."
+            "# decide: 1 of them has no marker; if it is a pulse, add it in the recording's marks, or say"
+            ' times = "both".'
             if evidence.unmarked == 1
             else f"# decide: {evidence.unmarked} of them have no marker; add those that are pulses in the"
-            " recording's marks."
+            ' recording\'s marks, or say times = "both".'
         )
     roles = {one.role for one in found.codes}
     if Role.PULSE not in roles and Role.UNDECIDED not in roles and found.codes and not evidence.n_events:
@@ -262,8 +279,44 @@ def _pulses(found: Guess, evidence: PulseEvidence) -> list[str]:
         "# decide: the gap around every pulse, from before its onset until the spike and the muscle response",
         "# are over in the channels near the coil. Look at the pulses, then write for example:",
         "# window_ms = [-2.0, 14.0]   # replaced, in ms since the onset",
+        *_gap_evidence(evidence.gaps),
     ]
-    return [*lines, *_section("pulses", window_ms=gap)]
+    return [*lines, *_section("pulses", window_ms=gap), *_further_gaps(evidence.gaps)]
+
+
+def _gap_evidence(gaps: GapSuggestion) -> list[str]:
+    """Say what the signal shows; the window stays to be decided."""
+    if not gaps.n_pulses:
+        return []
+    low, high = gaps.window_ms
+    short = len(gaps.ends) - len(gaps.exceptions)
+    lines = [
+        f"# Seen at {_counted(gaps.n_pulses, 'pulse')}: [{low}, {high}] would cover the artifact in "
+        f"{short} of {_counted(len(gaps.ends), 'channel')}",
+        f"# ({gaps.words}); muscle activity may last to 20 ms.",
+    ]
+    going_on = [end.channel for end in gaps.ends if end.goes_on]
+    if going_on:
+        lines.append(f"# Not over after 60 ms, a matter of the decay: {', '.join(going_on)}.")
+    return [*lines, f"# {gaps.ringing[0].upper()}{gaps.ringing[1:]}."] if gaps.ringing else lines
+
+
+def _further_gaps(gaps: GapSuggestion) -> list[str]:
+    lines = []
+    for offer in gaps.recharges:
+        lines += [
+            f"# decide: a recharge? {offer.words[0].upper()}{offer.words[1:]}; to replace it, too:",
+            "# [[pulses.also]]",
+            f"# window_ms = [{offer.window_ms[0]}, {offer.window_ms[1]}]",
+        ]
+    if gaps.exceptions:
+        signs = {end.channel: end.sign for end in gaps.ends}
+        lines += ["# decide: longer gaps for single channels?", "# [pulses.channels]"]
+        lines += [
+            f"# {key_text((name,))} = [{low}, {high}]   # {signs[name]}"
+            for name, (low, high) in gaps.exceptions.items()
+        ]
+    return lines
 
 
 def _filter(recorded_hz: float, rate_hz: float) -> list[str]:

@@ -7,8 +7,14 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from statistics import median
 
-from pulsemend.model.plan import Pulses
-from pulsemend.model.recording import RecordingFacts
+from pulsemend.engine.fit import fit
+from pulsemend.engine.setup import bind
+from pulsemend.mending.gap_suggestion import NO_SUGGESTION, GapSuggestion, suggested_gaps
+from pulsemend.model.marks import Marks
+from pulsemend.model.plan import About, Channels, Epochs, Export, Filter, Plan, Pulses
+from pulsemend.model.recording import Recording, RecordingFacts
+from pulsemend.model.vocabulary import Fill
+from pulsemend.progress import Work
 from pulsemend.units import ms_to_s, s_to_ms
 
 _ALWAYS = 0.8
@@ -40,11 +46,15 @@ class CodeEvidence:
 
 @dataclass(frozen=True)
 class PulseEvidence:
-    """Pulse-like events in the signal, by the codes they belong to; `unmarked` belong to none."""
+    """Pulse-like events in the signal, by the codes they belong to; `unmarked` belong to none.
+
+    `gaps` is what the signal around them suggests, where somebody has looked.
+    """
 
     codes: tuple[CodeEvidence, ...] = ()
     n_events: int = 0
     unmarked: int = 0
+    gaps: GapSuggestion = NO_SUGGESTION
 
     @property
     def pulse_codes(self) -> tuple[str, ...]:
@@ -80,3 +90,41 @@ def pulse_evidence(facts: RecordingFacts, pulses_found: Sequence[int]) -> PulseE
         CodeEvidence(code, counts[code], len(ms), median(ms), min(ms), max(ms)) for code, ms in seen.items()
     )
     return PulseEvidence(codes, len(pulses_found), unmarked)
+
+
+def gaps_around(recording: Recording, pulses_found: Sequence[int]) -> Work[GapSuggestion]:
+    """Look around pulse-like events for what a gap would have to cover, before there is any plan.
+
+    Parameters
+    ----------
+    recording : Recording
+        Read by the caller alone.
+    pulses_found : sequence of int
+        Recorded samples of pulse-like events.
+
+    Yields
+    ------
+    Progress
+
+    Returns
+    -------
+    GapSuggestion
+
+    Raises
+    ------
+    UnusableChannels
+        No channel of a usable type.
+    """
+    bare = Plan(
+        about=About(),
+        markers=(),
+        trial=(),
+        pulses=Pulses(fill=Fill.LINE),
+        filter=Filter(0.0, 0.0, 0.0),
+        channels=Channels(reference="as recorded"),
+        epochs=Epochs(1.0, ()),
+        export=Export(),
+    )
+    setup = bind(recording.facts, bare, Marks(pulses_added=tuple(pulses_found)))
+    estimates = yield from fit(recording, setup)
+    return (yield from suggested_gaps(recording, setup, estimates))
