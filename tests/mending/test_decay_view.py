@@ -7,11 +7,14 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
+from pulsemend.mending.decay_view import decay_rows, decay_words
 from pulsemend.mending.learned import Learned, learn
 from pulsemend.mending.pulse_view import Pick, PulseRequest, first_batch, gather, ground_of, sketch, step_left
 from pulsemend.model.marks import NO_MARKS
 from pulsemend.model.vocabulary import Decay, Fill
 from pulsemend.progress import finish
+from pulsemend.signal.absorption import LATENCIES_S
+from pulsemend.units import v_to_uv
 from support.decay_cases import RATE_HZ, background, pulses, recording, with_decays
 from support.engine_cases import UNTOUCHED, ArrayRecording, plan
 
@@ -35,7 +38,7 @@ def _learned(rec: ArrayRecording, decay: Decay, fill: Fill = Fill.COVARIANCE) ->
 def _left_uv(view: object) -> float:
     repaired = view.repaired  # type: ignore[attr-defined]
     behind = (view.times_s > 0.0145) & (view.times_s < 0.1)  # type: ignore[attr-defined]
-    return float(np.abs(repaired.median_v[behind]).max() * 1e6)
+    return float(np.abs(repaired.median_v[behind]).max()) * 1e6
 
 
 def test_picture_and_step_are_those_of_the_chain(decaying: ArrayRecording) -> None:
@@ -78,3 +81,34 @@ def test_a_first_picture_shows_the_decay_subtracted(
     # And with another kind, gap or none at all, it is learned anew, not taken over.
     none = replace(the_plan, pulses=replace(the_plan.pulses, decay=Decay.NONE))
     assert finish(sketch(decaying, none, NO_MARKS, ground, request)).estimates.decay is None
+
+
+def test_rows_and_words_tell_what_was_fitted_and_what_it_costs(decaying: ArrayRecording) -> None:
+    learned = _learned(decaying, Decay.EXPONENTIAL)
+    rows = decay_rows(learned.setup, learned.estimates)
+    assert [row.channel for row in rows] == ["E1", "E2", "E3", "E4", "E5"]
+    assert [bool(row.reason) for row in rows] == [False, False, True, False, True]
+    first, largest = rows[0], rows[3]
+    # 1 mV, and 2 mV, of 20 ms at 14.2 ms.
+    assert v_to_uv(first.size_v) == pytest.approx(1000.0 * np.exp(-0.71), rel=0.05)
+    assert v_to_uv(largest.size_v) == pytest.approx(2000.0 * np.exp(-0.71), rel=0.05)
+    assert first.spread == pytest.approx(0.1, abs=0.04)
+    # Until 0.1 uV: tau times the logarithm of how many times larger it begins.
+    assert first.lasts_s == pytest.approx(0.020 * np.log(492.0 / 0.1), rel=0.05)
+    assert first.absorption is not None
+    shares = first.absorption.median
+    late = np.array(LATENCIES_S)[np.abs(1.0 - shares) > 0.2].max()
+    assert late <= first.altered_until_s < 0.2
+    (words,) = decay_words(learned.setup, learned.estimates)
+    assert words.startswith("decay: fitted in 3 of 5 channels; until ")
+    assert words in learned.warnings
+    plain = _learned(decaying, Decay.NONE)
+    assert decay_rows(plain.setup, plain.estimates) == ()
+    assert decay_words(plain.setup, plain.estimates) == ()
+
+
+def test_words_where_nothing_was_fitted() -> None:
+    quiet = recording(background(3, 40 * RATE_HZ, seed=2), ONSETS)
+    learned = _learned(quiet, Decay.POWER)
+    (words,) = decay_words(learned.setup, learned.estimates)
+    assert words.startswith("decay: fitted in none of 3 channels; in ")

@@ -13,6 +13,7 @@ from pulsemend.engine.fit import fit
 from pulsemend.engine.onsets import OnsetShift, shifted
 from pulsemend.engine.setup import Setup, bind
 from pulsemend.errors import InputError, LogError, NoEpochs
+from pulsemend.mending.decay_view import decay_words
 from pulsemend.mending.pulse_findings import pulse_warnings
 from pulsemend.mending.study_log import NO_LOG, StudyLog, read_study_log
 from pulsemend.model.epochs import Candidate, Trials, nearest_sample
@@ -283,6 +284,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         *_trial_warnings(trials, facts, plan),
         *notes,
         *pulse_warnings(setup, estimates),
+        *decay_words(setup, estimates),
         *stale_decisions(trials, plan, geometry),
         *_stale_pulses(facts, plan, marks),
         *matched.warnings,
