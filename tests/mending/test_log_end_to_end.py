@@ -215,7 +215,7 @@ def test_row_excluded_by_hand_is_not_joined(tmp_path: Path) -> None:
     decided = dry(recording, PLAN, tmp_path / "study", "[log]\nrows_excluded = [4, 99]\n")
     assert decided.trials.trials[1].log["cue1.correct"] == correct(truth(2, 1))
     words = " ".join(decided.warnings)
-    assert "Excluded by hand, and not counted above: row 4 of the file." in words
+    assert "Excluded by hand: row 4." in words
     assert "Excluded by hand, but not in the file: row 99." in words
     assert decided.decision.logged is not None
     assert decided.decision.logged.join is not None

@@ -54,11 +54,22 @@ class LogTimes:
         Time of each row on the log's own clock.
     numbers : tuple of int or None
         Trial number of each row; empty if the log has none.
+    rows : tuple of int
+        What each row is called, from 1; empty where all rows of the file are there.
     """
 
     name: str
     times_s: tuple[float | None, ...]
     numbers: tuple[int | None, ...] = ()
+    rows: tuple[int, ...] = ()
+
+    def row_name(self, row: int) -> str:
+        """Name a row by its number below the header, as a spreadsheet without it does."""
+        return f"row {self.row_number(row)}"
+
+    def row_number(self, row: int) -> int:
+        """Give the number of a row below the header, from 1."""
+        return self.rows[row] if self.rows else row + 1
 
     def number(self, row: int) -> int | None:
         """Trial number of a row."""

@@ -67,7 +67,7 @@ def read_log(path: Path) -> LogTable:
         comma = [name for name, values in zip(names, columns, strict=True) if has_decimal_comma(values)]
     if comma:
         notes.append(f"numbers have a decimal comma in: {', '.join(comma)}")
-    if separator:
+    if separator and not (separator == "\t" and path.suffix.lower() in (".tsv", ".tab")):
         notes.append(f"columns are separated by {_SEPARATORS[separator]}s")
     sha256 = hashlib.sha256(content).hexdigest()
     return LogTable(path.name, tuple(names), rows, tuple(cut.lines[1:]), sha256, tuple(comma), tuple(notes))

@@ -9,7 +9,6 @@ from itertools import pairwise
 import numpy as np
 
 from pulsemend.model.log import LogTimes, TrialTime
-from pulsemend.trials.log_words import row_name
 
 LEAST_TIMED = 3
 """Pairs that a clock needs."""
@@ -28,7 +27,7 @@ def unusable(log: LogTimes, trials: Sequence[TrialTime]) -> str:
     for (_, before_s), (row, time_s) in pairwise(present):
         if time_s < before_s - _LONGEST_BACK_S:
             return (
-                f"Its time goes back from {before_s:.3f} to {time_s:.3f} s at {row_name(row)}. "
+                f"Its time goes back from {before_s:.3f} to {time_s:.3f} s at {log.row_name(row)}. "
                 "If the task program was started again, give each part its own log."
             )
     return _other_unit(
@@ -61,7 +60,7 @@ def _usual_step(times_s: list[float]) -> float:
 def numbers_twice(log: LogTimes, trials: Sequence[TrialTime], per_trial: int) -> str:
     """Name the first trial number that occurs too often on either side."""
     sides = (
-        ("The log", [log.number(row) for row in range(len(log.times_s))], row_name),
+        ("The log", [log.number(row) for row in range(len(log.times_s))], log.row_name),
         ("The recording", [trial.number for trial in trials], lambda place: trials[place].name),
     )
     for side, numbers, name in sides:

@@ -109,7 +109,8 @@ class _Draft:
         if found is None or found.best is None:
             return not_found(len(self.timed_rows), len(self.timed_trials))
         if found.rival is not None:
-            return rival_words(self.trials, *(self.in_places(one) for one in (found.best, found.rival)))
+            best, rival = (self.in_places(one) for one in (found.best, found.rival))
+            return rival_words(self.log, self.trials, best, rival)
         self.by = "time"
         self.take(found.best, {})
         self.between_neighbours()

@@ -1,4 +1,4 @@
-"""What a joined log is told in: rows count from 1 below the header, as a spreadsheet without it does."""
+"""What a joined log is told in."""
 
 from __future__ import annotations
 
@@ -10,11 +10,6 @@ from pulsemend.units import s_to_ms
 
 _MOST_NAMED = 20
 _FEW = 8  # intervals of two lengths agree by chance so far
-
-
-def row_name(row: int) -> str:
-    """Name a row by its number below the header."""
-    return f"row {row + 1}"
 
 
 def distance(seconds: float) -> str:
@@ -34,16 +29,16 @@ def joined_words(join: LogJoin, log: LogTimes, trials: Sequence[TrialTime]) -> L
     if join.by == "time" and len(join.pairs) < _FEW:
         lines.append("So few events prove little: compare some rows with their trials.")
     if join.by_order and join.by != "order":
-        names = [f"{row_name(row)} with {trials[trial].name}" for row, trial in join.by_order]
+        names = [f"{log.row_name(row)} with {trials[trial].name}" for row, trial in join.by_order]
         lines.append(f"By their place between two neighbours, for want of a time: {_listed(names)}.")
     if join.rows_alone:
-        lines.append(f"Rows without a trial: {_listed(str(row + 1) for row in join.rows_alone)}.")
+        lines.append(f"Rows without a trial: {_listed(str(log.row_number(row)) for row in join.rows_alone)}.")
     if join.trials_alone:
         lines.append(f"Without a row: {_listed(trials[trial].name for trial in join.trials_alone)}.")
     if join.doubtful:
         lines.append("Doubtful, not joined:")
     for doubt in join.doubtful:
-        names = [*map(row_name, doubt.rows), *(trials[trial].name for trial in doubt.trials)]
+        names = [*map(log.row_name, doubt.rows), *(trials[trial].name for trial in doubt.trials)]
         lines.append(f"  {_listed(names)}: {doubt.why}.")
     return replace(join, words="\n".join(lines))
 
@@ -77,19 +72,19 @@ def contradiction(n_same: int, most_drift: float) -> str:
 
 
 def rival_words(
-    trials: Sequence[TrialTime], best: list[tuple[int, int]], rival: list[tuple[int, int]]
+    log: LogTimes, trials: Sequence[TrialTime], best: list[tuple[int, int]], rival: list[tuple[int, int]]
 ) -> str:
     """Name two explanations of a log by what they make of the same row."""
     other = dict(rival)
     both = next(((row, trial) for row, trial in best if other.get(row, trial) != trial), None)
     if both is None:
         row, trial = best[0]
-        second = f"{row_name(rival[0][0])} with {trials[rival[0][1]].name}"
+        second = f"{log.row_name(rival[0][0])} with {trials[rival[0][1]].name}"
     else:
         row, trial = both
-        second = f"{row_name(row)} with {trials[other[row]].name}"
+        second = f"{log.row_name(row)} with {trials[other[row]].name}"
     return (
-        f"Two explanations fit about equally well: {row_name(row)} with {trials[trial].name} "
+        f"Two explanations fit about equally well: {log.row_name(row)} with {trials[trial].name} "
         f"({len(best)} rows joined), or {second} ({len(rival)} rows joined). "
         "Trial numbers in both, or an event at irregular times, would decide."
     )

@@ -95,7 +95,7 @@ def _excluded_words(table: LogTable, marks: Marks) -> list[str]:
     """Say which rows were left out by hand, and which of these are not there."""
     there = [str(row) for row in marks.log_rows_excluded if row <= len(table.rows)]
     gone = [str(row) for row in marks.log_rows_excluded if row > len(table.rows)]
-    words = [f"Excluded by hand, and not counted above: row {', '.join(there)} of the file."] if there else []
+    words = [f"Excluded by hand: row {', '.join(there)}."] if there else []
     if gone:
         words.append(f"Excluded by hand, but not in the file: row {', '.join(gone)}.")
     return words
@@ -135,6 +135,7 @@ def _log_times(table: LogTable, plan: Plan, rows: Sequence[int]) -> LogTimes:
         name=table.name,
         times_s=tuple(times[row - 1] if times else None for row in rows),
         numbers=tuple(numbers[row - 1] for row in rows) if numbers and plan.log.recorded_trial else (),
+        rows=tuple(rows),
     )
 
 

@@ -91,7 +91,8 @@ class _Known:
 def _known(markers: Sequence[Marker], plan: Plan, marks: Marks, found: Iterable[int]) -> list[_Known]:
     """Markers with their roles in order of time, pulses as the marks have them."""
     removed = set(marks.pulses_removed)
-    known = [_Known(marker, plan.role_of(marker.code)) for marker in markers]
+    # A code that the plan does not name fills no slot, not even one of role other.
+    known = [_Known(marker, plan.role_of(marker.code)) for marker in markers if plan.names(marker.code)]
     # Marks count whole samples, formats that give times do not.
     kept = [
         one for one in known if one.role is not Role.PULSE or nearest_sample(one.marker.sample) not in removed

@@ -9,9 +9,10 @@ from PySide6.QtCore import QObject, QTimer, Signal
 
 from pulsemend.errors import ChangedOnDisk, PulsemendError
 from pulsemend.mending.draft import draft_plan
-from pulsemend.mending.pulse_evidence import pulse_evidence
+from pulsemend.mending.draft_log import logs_beside
 from pulsemend.mending.facts import summarise
 from pulsemend.mending.prepare import marks_path
+from pulsemend.mending.pulse_evidence import pulse_evidence
 from pulsemend.model.marks import NO_MARKS
 from pulsemend.model.marks_file import MarksFile, check_files, check_samples, read_marks
 from pulsemend.model.plan_file import PlanFile, parse_plan, read_plan
@@ -104,7 +105,9 @@ class Opener(QObject):
 
         def work(_shelf: Shelf) -> Work[object]:
             summary = yield from summarise(path)
-            return draft_plan(summary.facts, pulse_evidence(summary.facts, summary.pulses_found))
+            evidence = pulse_evidence(summary.facts, summary.pulses_found)
+            logs = logs_beside(path.parent, summary.facts.stem)
+            return draft_plan(summary.facts, evidence, logs, summary.notes)
 
         job = self._bench.jobs.submit("draft", work)
         job.returned.connect(lambda text: self._take_draft(path, text))
