@@ -7,7 +7,8 @@ from collections.abc import Iterator, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from pulsemend.engine.decay import BackgroundSum, learn_decay
+from pulsemend.engine.decay import learn_decay
+from pulsemend.engine.decay_stretches import BackgroundSum
 from pulsemend.engine.estimates import Estimates, basis
 from pulsemend.engine.onsets import OnsetShift, measure_onsets
 from pulsemend.engine.pulses import align_pulse, limits_of, seek_pulses, with_shape
