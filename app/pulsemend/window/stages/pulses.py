@@ -29,6 +29,8 @@ from pulsemend.model.vocabulary import ChannelType, PulseTimes
 from pulsemend.progress import Work
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import Stage
+from pulsemend.window.decay_card import DecayCard
+from pulsemend.window.leak_card import LeakCard
 from pulsemend.window.parts import scrolling_column
 from pulsemend.window.pulse_canvas import Shown
 from pulsemend.window.pulse_picture import PulsePicture
@@ -82,11 +84,20 @@ class PulsesStage(StagePage):
         self.list_card = PulseListCard(self._edits)
         self.gap_card = GapCard(self._edits)
         self.fill_card = FillCard(self._edits)
+        self.decay_card = DecayCard(self._edits, bench.theme)
         self.other_card = OtherGapsCard(self._edits)
+        self.leak_card = LeakCard(self._edits)
         self.effect_card = EffectCard()
-        self.settings = scrolling_column(
-            self.list_card, self.gap_card, self.fill_card, self.other_card, self.effect_card, name="Pulses"
+        self._cards = (
+            self.list_card,
+            self.gap_card,
+            self.fill_card,
+            self.decay_card,
+            self.other_card,
+            self.leak_card,
+            self.effect_card,
         )
+        self.settings = scrolling_column(*self._cards, name="Pulses")
         self.picture: PulsePicture = PulsePicture(bench.theme)
         self._soon = QTimer(self.picture)
         self._soon.setSingleShot(True)
@@ -112,6 +123,7 @@ class PulsesStage(StagePage):
         """Ask for nothing any more."""
         super().hide_stage()
         self._soon.stop()
+        self.leak_card.stop()
 
     def close(self) -> None:
         """Listen to nobody and ask for nothing any more."""
@@ -121,6 +133,7 @@ class PulsesStage(StagePage):
     def set_theme(self, theme: Theme) -> None:
         """Paint the picture in other colours."""
         self.picture.set_theme(theme)
+        self.decay_card.set_theme(theme)
 
     # What changes
 
@@ -166,7 +179,7 @@ class PulsesStage(StagePage):
         session = self.bench.session
         plan, opened = session.plan, session.recording
         usable = plan is not None and opened is not None
-        for card in (self.list_card, self.gap_card, self.fill_card, self.other_card, self.effect_card):
+        for card in self._cards:
             card.setEnabled(usable)
         if plan is None or opened is None:
             self.picture.show_over(None)
@@ -182,6 +195,8 @@ class PulsesStage(StagePage):
         unmarked = () if self._ground is None or rows else self._ground.estimates.unmarked
         self.list_card.show_unmarked(unmarked if plan.pulses.times is not PulseTimes.NONE else ())
         self.fill_card.show_values(plan.pulses)
+        self.decay_card.show_values(plan.pulses)
+        self.leak_card.show_values(plan)
         self.other_card.show_values(plan.pulses, facts.rate_hz)
         self._show_gap_card()
         self._follow_view()
@@ -197,6 +212,7 @@ class PulsesStage(StagePage):
             return
         picked = [name for name in session.view.rows if name in session.view.picked]
         self.gap_card.channel = self._channel
+        self.decay_card.show_channel(self._channel)
         self.gap_card.show_values(session.plan, session.marks, self.picture.rate_hz, picked)
 
     def _follow_view(self) -> None:
@@ -335,10 +351,14 @@ class PulsesStage(StagePage):
         if learned is None or self.bench.provisional:
             waiting = self.bench.problem or "being computed"
             self.effect_card.show_effect(None, waiting if self.bench.session.plan is not None else "")
+            self.decay_card.show_waiting(self.bench.problem)
+            self.leak_card.show_waiting(self.bench.problem)
             if self.bench.problem:
                 self.gap_card.show_left(None)
             # Otherwise what was left before stays until it is measured anew: nothing moves under the hand.
             return
+        self.decay_card.show_learned(learned)
+        self.leak_card.show_learned(learned)
         self.bench.start(
             "effect of the gaps", lambda recording: effect(recording, learned), self._take_effect
         )
@@ -346,6 +366,7 @@ class PulsesStage(StagePage):
     def _take_effect(self, found: Effect) -> None:
         self.effect_card.show_effect(found)
         self.gap_card.show_left(found.left)
+        self.decay_card.show_left(found.left)
 
 
 def _remembering(new: Ground, old: Ground | None) -> Ground:
