@@ -150,7 +150,7 @@ def quiet_windows(setup: Setup, found: Sequence[int] = ()) -> list[tuple[int, in
     closed += [window_to_samples(sample, around_s, rate) for sample in pulses]
     length, least = round(WINDOW_S * rate), max(2, round(LEAST_WINDOW_S * rate))
     windows: list[tuple[int, int]] = []
-    for start, stop in _open_stretches(setup.facts.segments, merge_spans(closed)):
+    for start, stop in open_stretches(setup.facts.segments, merge_spans(closed)):
         pieces = max(1, (stop - start) // length)
         for piece in range(pieces):
             at = start + piece * length
@@ -183,9 +183,10 @@ def _measure_onsets(
     return tuple(shifts), tuple(note for shift in shifts for note in shift.notes)
 
 
-def _open_stretches(
+def open_stretches(
     segments: Sequence[tuple[int, int]], closed: Sequence[tuple[int, int]]
 ) -> Iterator[tuple[int, int]]:
+    """Give what sorted, separate closed spans leave open of each segment, as sample spans."""
     for lo, hi in segments:
         at = lo
         for start, stop in closed:
