@@ -51,8 +51,15 @@ class DecaySubtraction:
         self._table = np.ascontiguousarray(
             ((volts * lasts) / setup.scale_v[self.columns][:, None]).T.astype(setup.work)
         )[: int(lasts.any(axis=0).sum())]
+        self._rate_hz = setup.facts.rate_hz
+        self._end = window_to_samples(0, group.windows_s[0], self._rate_hz)[1]
         self._amplitudes = estimates.amplitudes[rows].T.astype(setup.work)
-        self._marked = self._marked_runs(setup, group, estimates, rows, lasts)
+        self._marked = self._marked_runs(estimates, rows, lasts)
+
+    @property
+    def altered_until_s(self) -> list[tuple[int, float]]:
+        """Used channels, and until when since the pulse a response may be altered in them."""
+        return [(column, (self._end + stop) / self._rate_hz) for column, _, stop in self._marked]
 
     def subtract(self, x: NDArray[Any], origin: int, segment: int) -> None:
         """Subtract in place what reaches into a stretch of one segment.
@@ -94,15 +101,12 @@ class DecaySubtraction:
 
     def _marked_runs(
         self,
-        setup: Setup,
-        group: GapGroup,
         estimates: DecayEstimates,
         rows: NDArray[np.intp],
         lasts: NDArray[np.bool_],
     ) -> list[tuple[int, int, int]]:
         """List the fitted channels with their runs of samples from the gap's end that alter a response."""
-        rate_hz = setup.facts.rate_hz
-        since_s = (window_to_samples(0, group.windows_s[0], rate_hz)[1] + np.arange(lasts.shape[1])) / rate_hz
+        since_s = (self._end + np.arange(lasts.shape[1])) / self._rate_hz
         runs: list[tuple[int, int, int]] = []
         for row, column, lasting in zip(rows.tolist(), self.columns.tolist(), lasts, strict=True):
             marked = altered(estimates.absorption(row), since_s) & lasting

@@ -13,7 +13,7 @@ from pulsemend.engine.fit import fit
 from pulsemend.engine.onsets import OnsetShift, shifted
 from pulsemend.engine.setup import Setup, bind
 from pulsemend.errors import InputError, LogError, NoEpochs
-from pulsemend.mending.decay_view import decay_words
+from pulsemend.mending.decay_words import decay_words
 from pulsemend.mending.pulse_findings import pulse_warnings
 from pulsemend.mending.study_log import NO_LOG, StudyLog, read_study_log
 from pulsemend.model.epochs import Candidate, Trials, nearest_sample
