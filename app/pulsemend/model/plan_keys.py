@@ -261,7 +261,7 @@ PLAN_KEYS: tuple[Key, ...] = (
         "length of the stretch that the decay is fitted to, from the gap's end",
         default=80.0,
         unit="ms",
-        low=5.0,
+        low=10.0,
         high=1000.0,
     ),
     Key(
