@@ -307,7 +307,7 @@ def prepare(
     autocovariance, background = yield from _learned_of_quiet(recording, setup, estimates, methods)
     decay: DecayEstimates | None = None
     if estimates.decay is not None:
-        decay = yield from learn_decay(planted, bound, layout.onsets, background, estimates.decay.columns)
+        decay = yield from learn_decay(planted, bound, layout.onsets, background)
     found = replace(
         estimates,
         pulses=tuple(Pulse(onset, None, PulseState.ADDED) for onset in layout.onsets),
