@@ -83,16 +83,39 @@ def spline_weights(
     ValueError
         Fewer than `LEAST_GOOD` good electrodes, or one at the centre.
     """
-    if len(good) < LEAST_GOOD:
-        message = f"{len(good)} good electrodes are too few for a surface"
-        raise ValueError(message)
-    n = len(good)
     sources, targets = _directions(good), _directions(wanted)
-    system = np.ones((n + 1, n + 1))
-    system[:n, :n] = spline_kernel(sources @ sources.T, terms=terms) + regularisation * np.eye(n)
-    system[n, n] = 0.0
-    at_targets = np.ones((n + 1, len(targets)))
-    at_targets[:n] = spline_kernel(sources @ targets.T, terms=terms)
+    return weights_by_kernel(
+        spline_kernel(sources @ sources.T, terms=terms) + regularisation * np.eye(len(good)),
+        spline_kernel(sources @ targets.T, terms=terms),
+    )
+
+
+def weights_by_kernel(between: NDArray[np.float64], to_wanted: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Solve for the weights of `spline_weights` where kernels are known already.
+
+    Parameters
+    ----------
+    between : array, shape (n_good, n_good)
+        Kernels between good electrodes, regularised.
+    to_wanted : array, shape (n_good, n_wanted)
+        Kernels between good electrodes and the sites.
+
+    Returns
+    -------
+    array, shape (n_wanted, n_good)
+
+    Raises
+    ------
+    ValueError
+        Fewer than `LEAST_GOOD` good electrodes.
+    """
+    n = len(between)
+    if n < LEAST_GOOD:
+        message = f"{n} good electrodes are too few for a surface"
+        raise ValueError(message)
+    system, at_targets = np.ones((n + 1, n + 1)), np.ones((n + 1, to_wanted.shape[1]))
+    system[:n, :n], system[n, n] = between, 0.0
+    at_targets[:n] = to_wanted
     # The system is symmetric, so its solution for the kernels at the targets is the weights themselves.
     return np.asarray(np.linalg.solve(system, at_targets)[:n].T)
 
