@@ -55,9 +55,14 @@ class LeakView:
     n_pulses: int
 
     @property
-    def largest_v(self) -> float:
-        """Leak into the worst epoch of all."""
-        return max((rule.largest_v for rule in self.rules.values()), default=0.0)
+    def n_epochs(self) -> int:
+        """Count the kept epochs."""
+        return sum(rule.n_epochs for rule in self.rules.values())
+
+    @property
+    def n_above(self) -> int:
+        """Count the kept epochs above the limit."""
+        return sum(rule.n_above for rule in self.rules.values())
 
 
 def leak_per_rule(

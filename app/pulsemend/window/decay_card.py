@@ -37,10 +37,12 @@ NOTHING_FITTED = (
     "decay after the gap; what it costs is then shown here."
 )
 WAITING = "Being fitted."
+NONE_FITTED = "No channel has a fitted decay, so no response loses anything."
 NO_PULSE = "No pulse is known, so there is nothing to fit. Say above where the pulses are."
 MEANING = (
     "Test responses of 3 to 9 \u00b5V are added to the pulses of this recording and the fit is repeated: "
-    "shown is the share that comes back. Where less than 80 % does, or as much too much, samples are marked "
+    "shown is the share that comes back; the band holds most of them. Where less than 80 % comes back, or as "
+    "much too much, samples are marked "
     "as decay-fitted in every output."
 )
 
@@ -194,8 +196,10 @@ class DecayCard(Card):
         summary = decay_summary(learned.setup, decay)
         self._show_summary(summary)
         view = absorption_view(learned.setup, decay, self._channel)
-        self.plot.show_view(view, "" if view else self._why_none(learned, summary))
-        self._show_marked(view)
+        reason = "" if view else why_not(learned.setup, decay, self._channel)
+        view = view or absorption_view(learned.setup, decay)
+        self.plot.show_view(view, "" if view else NONE_FITTED)
+        self._show_marked(view, reason)
 
     def _waiting_words(self, kind: Decay) -> str:
         is_old = kind is not Decay.NONE and self._edits.bench.provisional and not self._problem
@@ -229,29 +233,20 @@ class DecayCard(Card):
             self._reasons.addWidget(label)
             self.reasons.append(label)
 
-    def _why_none(self, learned: Learned, summary: DecaySummary) -> str:
-        if not summary.n_fitted:
-            return "No channel has a fitted decay, so no response loses anything."
-        decay = learned.estimates.decay
-        reason = "" if decay is None else why_not(learned.setup, decay, self._channel)
-        return (
-            f"{self._channel} has no fitted decay{f': {self._said(reason)}' if reason else ''}. "
-            "Choose another channel in the picture, or all channels."
-        )
-
     def _said(self, reason: str) -> str:
         """Put the number of now where a reason names the plan's key."""
         learned = self._learned
         least_uv = 0.0 if learned is None else learned.plan.pulses.decay_least_uv
         return reason.replace("decay_least_uv", f"{least_uv:g} \u00b5V")
 
-    def _show_marked(self, view: AbsorptionView | None) -> None:
+    def _show_marked(self, view: AbsorptionView | None, reason: str) -> None:
         for label in (self.what, self.marked, self.note_below):
             label.setVisible(view is not None)
         if view is None:
             return
         of_all = f"median over {view.n_channels} fitted channels" if view.n_channels > 1 else "fitted channel"
-        self.what.setText(f"Share of a test response that comes back: {view.channel or of_all}")
+        not_this = f"{self._channel} is left alone: {self._said(reason)}. " if reason else ""
+        self.what.setText(f"{not_this}Share of a test response that comes back, {view.channel or of_all}:")
         spans = ", ".join(f"{s_to_ms(a):.0f} to {s_to_ms(b):.0f}" for a, b in view.marked_s)
         where = "" if view.channel else " in at least half of them"
         self.marked.setText(

@@ -5,7 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import replace
 
-from PySide6.QtWidgets import QLabel, QVBoxLayout
+from PySide6.QtCore import Qt
+from PySide6.QtWidgets import QGridLayout, QLabel, QWidget
 
 from pulsemend.export.readiness import LEAK_LIMIT_UV
 from pulsemend.mending.leak_view import LeakView, RuleLeak, leak_per_rule
@@ -14,16 +15,18 @@ from pulsemend.model.plan import Plan
 from pulsemend.model.vocabulary import AcrossPulses
 from pulsemend.units import v_to_uv
 from pulsemend.window.job import Job
-from pulsemend.window.parts import Card, Choices, ValueLine, button
+from pulsemend.window.parts import Card, Choices, button, words
 from pulsemend.window.stages.pulse_cards import Edits
 
-_WAYS: Mapping[AcrossPulses, tuple[str, str]] = {
+_WAYS: Mapping[AcrossPulses, tuple[str, str, str]] = {
     AcrossPulses.FILLED: (
         "across the filled gaps",
+        "across",
         "Filters run through the gaps and see what was filled in.",
     ),
     AcrossPulses.SPLIT: (
         "each stretch alone",
+        "alone",
         "Each stretch between pulses is filtered alone, its ends continued as they usually go on: nothing of "
         "a pulse reaches another stretch, but near the ends a filter knows less.",
     ),
@@ -51,18 +54,16 @@ class LeakCard(Card):
         self._found_with: object = None
         self._found: dict[AcrossPulses, LeakView] = {}
         self._jobs: dict[AcrossPulses, tuple[Job, int]] = {}
-        self.across = Choices("Filters run", [(way.value, name) for way, (name, _) in _WAYS.items()])
-        self.across.setToolTip("On the right: the largest leak into an epoch, measured on this recording")
+        self.across = Choices("Filters run", [(way.value, name) for way, (name, *_) in _WAYS.items()])
+        self.across.setToolTip(f"On the right: kept epochs of this recording with a leak above {LEAK_LIMIT_UV:g} \u00b5V")
         for label in self.across.findChildren(QLabel):
             label.setMinimumWidth(1)
         self.add(self.across)
         self.meaning = self.add_note()
         self.other = button("Measure the other way, too", self._measure_other)
         self.add(self.other)
-        self._rules: list[str] = []
-        self.lines: dict[str, tuple[ValueLine, ValueLine]] = {}
-        self._column = QVBoxLayout()
-        self.body.addLayout(self._column)
+        self.table = _LeakTable()
+        self.add(self.table)
         self.add_note(MEANING)
         self.across.chosen.connect(self._choose)
 
@@ -70,7 +71,7 @@ class LeakCard(Card):
         """Show what the plan says now."""
         way = plan.filter.across_pulses
         self.across.show_choice(way.value)
-        self.meaning.setText(_WAYS[way][1])
+        self.meaning.setText(_WAYS[way][2])
         self._show()
 
     def show_learned(self, learned: Learned) -> None:
@@ -142,41 +143,79 @@ class LeakCard(Card):
         self.other.setEnabled(self._learned is not None and _other(way) not in self._jobs)
         if way in found:
             self.note.setText("")
-            self._show_rules(found[way].rules if found[way].n_pulses else {})
+            self.table.show_leaks(way, found)
         elif plan is None or self._problem:
             self.note.setText(self._problem)
-            self._show_rules({})
+            self.table.show_leaks(way, {})
         else:
             self.note.setText("being measured")
-
-    def _show_rules(self, rules: Mapping[str, RuleLeak]) -> None:
-        if list(rules) != list(self.lines):
-            for pair in self.lines.values():
-                for line in pair:
-                    line.hide()
-                    self._column.removeWidget(line)
-                    line.deleteLater()
-            self.lines = {}
-            for name in rules:
-                pair = ValueLine(f"Largest in {name}"), ValueLine(f"of these above {LEAK_LIMIT_UV:g} \u00b5V")
-                pair[1].setAccessibleName(f"Epochs of {name} above {LEAK_LIMIT_UV:g} \u00b5V")
-                self.lines[name] = pair
-                for line in pair:
-                    self._column.addWidget(line)
-        for name, rule in rules.items():
-            largest, above = self.lines[name]
-            above.setVisible(rule.n_epochs > 0)
-            if not rule.n_epochs:
-                largest.show_value("no epoch kept")
-                continue
-            largest.show_value(uv_words(rule.largest_v), attention=rule.n_above > 0)
-            above.show_value(f"{rule.n_above} of {rule.n_epochs} epochs", attention=rule.n_above > 0)
 
     def _choose(self, key: str) -> None:
         plan = self._edits.bench.session.plan
         if plan is not None:
             changed = replace(plan.filter, across_pulses=AcrossPulses(key))
             self._edits.plan(f"Filters across pulses: {key}", replace(plan, filter=changed))
+
+
+class _LeakTable(QWidget):
+    """Largest leak into each rule's epochs and how many are above the limit, for the ways measured."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.setAccessibleName(f"Leak by epoch rule, and epochs above {LEAK_LIMIT_UV:g} \u00b5V")
+        self.grid = QGridLayout(self)
+        self.grid.setContentsMargins(0, 0, 0, 0)
+        self.grid.setVerticalSpacing(2)
+        self.grid.setHorizontalSpacing(12)
+        self.grid.setColumnStretch(0, 1)
+        self.cells: dict[tuple[str, AcrossPulses], tuple[QLabel, QLabel]] = {}
+
+    def show_leaks(self, way: AcrossPulses, found: Mapping[AcrossPulses, LeakView]) -> None:
+        """Show the way of now, and beside it the other if it was measured."""
+        self._clear()
+        shown = [one for one in _WAYS if one in found and found[one].n_pulses]
+        if way not in shown:
+            return
+        if len(shown) > 1:
+            for column, one in enumerate(shown, 1):
+                self._put(0, column, _WAYS[one][1], "quiet", right=True)
+        for place, name in enumerate(found[way].rules):
+            row = 1 + 2 * place
+            self._put(row, 0, name, "")
+            self._put(row + 1, 0, f"above {LEAK_LIMIT_UV:g} \u00b5V", "quiet")
+            for column, one in enumerate(shown, 1):
+                largest, above = _cell_words(found[one].rules[name])
+                kind = "attention" if found[one].rules[name].n_above else "value"
+                cells = (
+                    self._put(row, column, largest, kind if one is way else "quiet", right=True),
+                    self._put(row + 1, column, above, "quiet", right=True),
+                )
+                for cell, text in zip(cells, (largest, above), strict=True):
+                    cell.setAccessibleName(f"{name}, {_WAYS[one][0]}: {text}")
+                self.cells[name, one] = cells
+
+    def _put(self, row: int, column: int, text: str, kind: str, *, right: bool = False) -> QLabel:
+        label = words(text, kind)
+        label.setWordWrap(column == 0)
+        if right:
+            label.setAlignment(Qt.AlignmentFlag.AlignRight)
+        self.grid.addWidget(label, row, column)
+        return label
+
+    def _clear(self) -> None:
+        self.cells = {}
+        while self.grid.count():
+            item = self.grid.takeAt(0)
+            old = None if item is None else item.widget()
+            if old is not None:
+                old.hide()
+                old.deleteLater()
+
+
+def _cell_words(rule: RuleLeak) -> tuple[str, str]:
+    if not rule.n_epochs:
+        return "no epoch kept", ""
+    return uv_words(rule.largest_v), f"{rule.n_above} of {rule.n_epochs}"
 
 
 def uv_words(value_v: float) -> str:
@@ -192,4 +231,6 @@ def _other(way: AcrossPulses) -> AcrossPulses:
 def _evidence(found: LeakView | None) -> str:
     if found is None:
         return ""
-    return f"at most {uv_words(found.largest_v)}" if found.n_pulses else "no pulse has 100 ms of its own"
+    if not found.n_pulses:
+        return "no pulse has 100 ms of its own"
+    return f"{found.n_above} of {found.n_epochs} above"
