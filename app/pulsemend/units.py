@@ -11,6 +11,7 @@ Number = TypeVar("Number", float, NDArray[np.float32], NDArray[np.float64])
 
 UV_PER_V = 1e6
 MS_PER_S = 1e3
+_US_PER_S = 1e6
 _OHM_PER_KOHM = 1e3
 
 
@@ -32,6 +33,11 @@ def s_to_ms(seconds: Number) -> Number:
 def ms_to_s(milliseconds: Number) -> Number:
     """Milliseconds to seconds."""
     return milliseconds / MS_PER_S
+
+
+def s_to_us(seconds: Number) -> Number:
+    """Seconds to microseconds; of a ratio of times, parts per million."""
+    return seconds * _US_PER_S
 
 
 def ohm_to_kohm(ohms: Number) -> Number:

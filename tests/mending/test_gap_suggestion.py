@@ -60,8 +60,8 @@ def test_channels_near_the_coil_need_longer_gaps(lantern: Rehearsal, suggestion:
     low, high = suggestion.window_ms
     assert low == -2.0
     covered = [end for end in ends.values() if (end or 3.0) <= high]
-    assert len(covered) >= 0.9 * len(CHANNELS)
-    assert all(own[1] > high for own in suggestion.exceptions.values())
+    assert len(covered) >= 0.8 * len(CHANNELS)
+    assert all(own[1] > high + 0.5 for own in suggestion.exceptions.values())
     assert set(suggestion.exceptions) == {name for name, end in ends.items() if (end or 3.0) > high}
 
 

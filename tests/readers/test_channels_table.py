@@ -59,6 +59,7 @@ def test_everything_that_a_table_says(path: Path, tmp_path: Path) -> None:
     assert facts.channels[0] == Channel(
         "Fz", facts.channels[0].type, facts.channels[0].scale_v, None, "uV",
         highpass_hz=0.1, lowpass_hz=250.0, reference="FCz", status="good",
+        range_v=facts.channels[0].range_v,
     )  # fmt: skip
     assert [one.status for one in facts.channels] == ["good", "bad", "good", "good"]
     assert channel(path, "C3").highpass_hz is None

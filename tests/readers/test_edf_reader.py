@@ -180,8 +180,9 @@ def test_annotations_against_the_standard_are_errors(content: bytes, tmp_path: P
 def test_step_of_a_full_range_is_a_tenth_of_a_microvolt(tmp_path: Path) -> None:
     """Facts T-4.8."""
     digital = np.array([[-32768, -1, 0, 1, 32766, 32767]])
-    _, volts = opened(made_file(tmp_path / "a.edf", [Made("Cz", digital)]))
+    facts, volts = opened(made_file(tmp_path / "a.edf", [Made("Cz", digital)]))
     np.testing.assert_allclose(volts[0], digital[0] * 1e-7, rtol=0, atol=1e-15)
+    assert facts.channels[0].range_v == pytest.approx((-3276.8e-6, 3276.7e-6))
     np.testing.assert_allclose(volts[0, [0, -1]], [-3276.8e-6, 3276.7e-6], rtol=1e-12)
 
 

@@ -83,7 +83,11 @@ def test_cutoffs_in_hertz_gain_and_decimal_commas(tmp_path: Path) -> None:
     assert (found["Fz"].highpass_hz, found["Fz"].lowpass_hz, found["Fz"].gain) == (0.016, 280.0, 150.0)
     assert (found["C3"].highpass_hz, found["C3"].lowpass_hz, found["C3"].gain) == (None, 280.5, None)
     assert [channel.coupling for channel in found.values()] == ["AC", "DC", "AC", ""]
-    assert found["VEOG"] == Channel("VEOG", found["VEOG"].type, found["VEOG"].scale_v, unit="uV")
+    range_v = found["VEOG"].range_v
+    assert range_v == pytest.approx((-0.0032768, 0.0032767))  # 16 bits of 0.1 uV
+    assert found["VEOG"] == Channel(
+        "VEOG", found["VEOG"].type, found["VEOG"].scale_v, unit="uV", range_v=range_v
+    )
 
 
 def test_filters_of_recorder_and_amplifier_both_count(tmp_path: Path) -> None:

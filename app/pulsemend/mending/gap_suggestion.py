@@ -23,9 +23,10 @@ USUAL_START_MS = -2.0
 
 MARGIN_MS = 0.5
 STEP_MS = 0.5
-COVERED_SHARE = 0.9
-"""The suggested gap is long enough for so many of the channels; the others get one of their own.
-Common practice: none known."""
+COVERED_SHARE = 0.8
+NEAR_MS = 3.0
+"""The suggested gap is long enough for so many of the channels, and for those that end shortly after; the
+others get one of their own. Common practice: none known."""
 
 RISE_SAMPLES = 2
 """So many samples before the onset are the rise of the spike itself, no ringing."""
@@ -137,7 +138,8 @@ def _suggestion(setup: Setup, found: GapEvidence, held_ms: float) -> GapSuggesti
     pairs = list(zip(names, found.ends, strict=True))
     ends = sorted((_channel_end(*pair) for pair in pairs), key=lambda one: -(one.end_ms or 0.0))
     known_ms = sorted(_end_ms(end) for end in found.ends)
-    covered = known_ms[max(0, math.ceil(COVERED_SHARE * len(known_ms)) - 1)]
+    most_ms = known_ms[max(0, math.ceil(COVERED_SHARE * len(known_ms)) - 1)]
+    covered = max(end_ms for end_ms in known_ms if end_ms <= most_ms + NEAR_MS)
     start_ms = USUAL_START_MS
     ringing = ""
     least_s = RISE_SAMPLES / setup.facts.rate_hz

@@ -13,7 +13,7 @@ from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.setup import Setup
 from pulsemend.model.epochs import Pulse
 from pulsemend.model.vocabulary import PulseState
-from pulsemend.units import s_to_ms, v_to_uv
+from pulsemend.units import s_to_ms, s_to_us, v_to_uv
 
 LATE_MS = 2.0
 """Marker and artifact further apart are told (common practice: triggers are right within a millisecond)."""
@@ -118,7 +118,7 @@ def latency_drift(pulses: Sequence[Pulse], rate_hz: float) -> Drift | None:
     slope = float(at_s @ latency_s) / power
     left = latency_s - latency_s.mean() - slope * at_s
     error = math.sqrt(float(left @ left) / (len(pairs) - 2) / power)
-    return Drift(1e6 * slope, 1e6 * error, len(pairs))
+    return Drift(s_to_us(slope), s_to_us(error), len(pairs))
 
 
 def unusual_amplitudes(amplitudes_v: Sequence[float | None]) -> tuple[bool, ...]:

@@ -231,6 +231,10 @@ class GapCard(Card):
         self.hint.setVisible(bool(text))
         self._names = tuple(names)
 
+    def put_beside_edges(self, widget: QWidget) -> None:
+        """Give a widget its place just below the edges of the gap."""
+        self.body.insertWidget(self.body.indexOf(self.gap_fields) + 1, widget)
+
     def show_left(self, left: StepLeft | None) -> None:
         """Say beside the gap what it leaves in the worst channel, if that is much."""
         step_uv = 0.0 if left is None else v_to_uv(left.step_v)
@@ -364,6 +368,11 @@ def _listed(names: Sequence[str]) -> str:
 
 def _exception_words(one: GapException) -> str:
     return f"{one.channel}: {window_words(one.window_ms)}, {one.source}"
+
+
+def in_micro(text: str) -> str:
+    """Write a sentence made for plain files as the window writes units."""
+    return text.replace(" uV", " \u00b5V").replace(" +- ", " \u00b1 ")
 
 
 def window_words(window_ms: Window) -> str:

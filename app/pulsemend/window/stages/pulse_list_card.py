@@ -10,6 +10,7 @@ from PySide6.QtCore import QAbstractTableModel, QModelIndex, QPersistentModelInd
 from PySide6.QtGui import QKeyEvent
 from PySide6.QtWidgets import QAbstractItemView, QHBoxLayout, QHeaderView, QTableView, QVBoxLayout, QWidget
 
+from pulsemend.mending.pulse_findings import Drift, Trains, unusual_amplitudes
 from pulsemend.mending.pulse_list import (
     PulseCounts,
     PulseRow,
@@ -25,19 +26,29 @@ from pulsemend.model.marks import Marks
 from pulsemend.model.vocabulary import PulseState, PulseTimes
 from pulsemend.session.found import NOTHING_SELECTED, Selected
 from pulsemend.session.messages import Level, Message
-from pulsemend.units import ms_to_s, s_to_ms
+from pulsemend.units import ms_to_s, s_to_ms, v_to_uv
 from pulsemend.window.parts import Card, Choices, button, words
-from pulsemend.window.stages.pulse_cards import Edits, MsField, SlimField
+from pulsemend.window.stages.pulse_cards import Edits, MsField, SlimField, in_micro
 
 Index = QModelIndex | QPersistentModelIndex
 _ROOT = QModelIndex()
-_COLUMNS = ("Time", "Latency", "State")
-_TIMES = ((PulseTimes.MARKERS, "at their markers"), (PulseTimes.NONE, "there are no pulses"))
+_COLUMNS = ("Time s", "Late ms", "Size \u00b5V", "State")
+_TIMES = (
+    (PulseTimes.MARKERS, "at their markers"),
+    (PulseTimes.SIGNAL, "where the signal shows them"),
+    (PulseTimes.BOTH, "both: either is enough"),
+    (PulseTimes.NONE, "there are no pulses"),
+)
+_TOOLTIPS = {
+    "Late ms": "How long after its marker the pulse is",
+    "Size \u00b5V": "Largest deviation within 10 ms, median over the EEG channels; ! stands out",
+}
 
 
 _SHORT: dict[PulseState | None, str] = {
     PulseState.ALIGNED: "in signal",
     PulseState.MARKED_ONLY: "not in signal",
+    PulseState.FOUND: "no marker",
     PulseState.ADDED: "added",
     PulseState.MOVED: "moved",
 }
@@ -50,12 +61,15 @@ class PulseModel(QAbstractTableModel):
     def __init__(self) -> None:
         super().__init__()
         self.rows: tuple[PulseRow, ...] = ()
+        self.unusual: tuple[bool, ...] = ()
         self.rate_hz = 1.0
 
     def show_rows(self, rows: tuple[PulseRow, ...], rate_hz: float) -> None:
         """Show another list."""
         self.beginResetModel()
         self.rows, self.rate_hz = rows, rate_hz
+        seen = (PulseState.MARKED_ONLY, None)
+        self.unusual = unusual_amplitudes([None if r.state in seen else r.amplitude_v for r in rows])
         self.endResetModel()
 
     def rowCount(self, parent: Index = _ROOT) -> int:
@@ -72,24 +86,29 @@ class PulseModel(QAbstractTableModel):
         """Name the columns."""
         if orientation is not Qt.Orientation.Horizontal:
             return None
-        if role == Qt.ItemDataRole.ToolTipRole and _COLUMNS[section] == "Latency":
-            return "How long after its marker the pulse is"
+        if role == Qt.ItemDataRole.ToolTipRole:
+            return _TOOLTIPS.get(_COLUMNS[section])
         return _COLUMNS[section] if role == Qt.ItemDataRole.DisplayRole else None
 
     def data(self, index: Index, role: int = Qt.ItemDataRole.DisplayRole) -> Any:
         """Give the text of a cell; the tooltip is the whole line."""
-        row = self.rows[index.row()]
+        row, stands_out = self.rows[index.row()], self.unusual[index.row()]
         texts = self._texts(row)
         if role == Qt.ItemDataRole.DisplayRole:
-            return (*texts[:2], _SHORT.get(row.state, row.words))[index.column()]
+            time, latency, size = (text.partition(" ")[0] for text in texts[:3])
+            size = f"{size} !" if stands_out else size
+            return (time, latency, size, _SHORT.get(row.state, row.words))[index.column()]
         if role in (Qt.ItemDataRole.ToolTipRole, Qt.ItemDataRole.AccessibleTextRole):
-            return ", ".join(text for text in texts if text)
+            kind = "" if row.kind is None else row.kind.value
+            odd = "amplitude stands out" if stands_out else ""
+            return ", ".join(text for text in (*texts, kind, odd) if text)
         return None
 
-    def _texts(self, row: PulseRow) -> tuple[str, str, str]:
+    def _texts(self, row: PulseRow) -> tuple[str, str, str, str]:
         latency_ms = row.latency_ms(self.rate_hz)
         latency = "" if latency_ms is None else f"{latency_ms:.2f} ms"
-        return f"{row.onset / self.rate_hz:.4f} s", latency, row.words
+        size = "" if row.amplitude_v is None else f"{v_to_uv(row.amplitude_v):.0f} \u00b5V"
+        return f"{row.onset / self.rate_hz:.4f} s", latency, size, row.words
 
 
 class _PulseTable(QTableView):
@@ -127,8 +146,14 @@ class PulseListCard(Card):
         self.known = self.add_line("Known")
         self.aligned = self.add_line("marked and in the signal")
         self.marked_only = self.add_line("marked, not in the signal")
+        self.found_only = self.add_line("in the signal, no marker")
         self.by_hand = self.add_line("by hand")
         self.lead = self.add_note()
+        self.drift = self.add_note()
+        self.told = words("", "attention")
+        self.told.setWordWrap(True)
+        self.told.hide()
+        self.add(self.told)
         self.unmarked = self.add_note()
         self.add_all = button("Add them as pulses", self._add_unmarked)
         self.add(self.add_all)
@@ -183,6 +208,19 @@ class PulseListCard(Card):
         self.unmarked.setVisible(bool(samples))
         self.add_all.setVisible(bool(samples))
 
+    def show_findings(self, drift: Drift | None, grouped: Trains | None, told: Sequence[str]) -> None:
+        """Say how the latency drifts, which pulses follow each other closely, and what is worth a look."""
+        lines = []
+        if drift is not None:
+            slope = f"{drift.slope_ppm:+.1f} \u00b1 {drift.error_ppm:.1f} \u00b5s per second"
+            lines.append(f"Drift of the latency: {slope}.")
+        if grouped is not None and grouped.words:
+            lines.append(f"{grouped.words[0].upper()}{grouped.words[1:]}.")
+        self.drift.setText(" ".join(lines))
+        self.drift.setVisible(bool(lines))
+        self.told.setText("\n".join(f"{line[0].upper()}{in_micro(line)[1:]}." for line in told))
+        self.told.setVisible(bool(told))
+
     def show_selected(self, selected: Selected, middle_s: float) -> None:
         """Follow the selection of the window."""
         rate_hz = self.model.rate_hz
@@ -219,7 +257,7 @@ class PulseListCard(Card):
     def _fit_columns(self) -> None:
         """Fit to the text of now, whatever size it has; without asking every row."""
         metrics = self.table.fontMetrics()
-        for column, widest in enumerate(("0000.0000 s", "00.00 ms")):
+        for column, widest in enumerate(("0000.0000", "Late ms", "Size \u00b5V")):
             self.table.setColumnWidth(column, metrics.horizontalAdvance(widest) + 12)
         height = metrics.height() + 8
         self.table.verticalHeader().setDefaultSectionSize(height)
@@ -230,6 +268,8 @@ class PulseListCard(Card):
         self.aligned.show_value(str(counts.aligned))
         self.marked_only.show_value(str(counts.marked_only), attention=counts.marked_only > 0)
         self.marked_only.setVisible(counts.marked_only > 0)
+        self.found_only.show_value(str(counts.found_only))
+        self.found_only.setVisible(counts.found_only > 0)
         by_hand = {"added": counts.added, "moved": counts.moved, "removed": counts.removed}
         said = ", ".join(f"{count} {name}" for name, count in by_hand.items() if count)
         self.by_hand.show_value(said)

@@ -8,7 +8,9 @@ from dataclasses import replace
 from PySide6.QtCore import QTimer
 
 from pulsemend.errors import PulsemendError
+from pulsemend.mending.gap_suggestion import NO_SUGGESTION, GapSuggestion, suggested_gaps
 from pulsemend.mending.pulse_effect import Effect, effect
+from pulsemend.mending.pulse_findings import latency_drift, pulse_warnings, trains
 from pulsemend.mending.pulse_gaps import Source, gap_of
 from pulsemend.mending.pulse_list import pulse_rows
 from pulsemend.mending.pulse_view import (
@@ -25,7 +27,7 @@ from pulsemend.mending.pulse_view import (
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import Plan, Window
 from pulsemend.model.recording import Recording
-from pulsemend.model.vocabulary import ChannelType, PulseTimes
+from pulsemend.model.vocabulary import ChannelType, PulseState, PulseTimes
 from pulsemend.progress import Work
 from pulsemend.session.changed import Changed
 from pulsemend.session.found import Stage
@@ -45,6 +47,7 @@ from pulsemend.window.stages.pulse_cards import (
     set_exceptions,
 )
 from pulsemend.window.stages.pulse_list_card import PulseListCard
+from pulsemend.window.stages.pulse_suggestions import OfferedGaps, SuggestedGap
 from pulsemend.window.theme import Theme
 from pulsemend.window.workbench import Workbench
 
@@ -88,6 +91,12 @@ class PulsesStage(StagePage):
         self.other_card = OtherGapsCard(self._edits)
         self.leak_card = LeakCard(self._edits)
         self.effect_card = EffectCard()
+        self.suggested = SuggestedGap(self._edits)
+        self.gap_card.put_beside_edges(self.suggested)
+        self.offered = OfferedGaps(self._edits)
+        self.other_card.add(self.offered)
+        self._suggestion: GapSuggestion = NO_SUGGESTION
+        self._suggestion_of: object = None
         self._cards = (
             self.list_card,
             self.gap_card,
@@ -141,6 +150,7 @@ class PulsesStage(StagePage):
         opened = self.bench.session.recording
         if not keep:
             self._ground, self._view_of = None, None
+            self._suggestion, self._suggestion_of = NO_SUGGESTION, None
             self.picture.canvas.show_view(None)
         if opened is not None:
             shown = [c.name for c in opened.facts.channels if c.type in _SHOWN]
@@ -161,6 +171,7 @@ class PulsesStage(StagePage):
             return
         self._show_values()
         self._ask_effect()
+        self._ask_suggestion()
         self._soon.start()
 
     def _on_view(self) -> None:
@@ -194,6 +205,7 @@ class PulsesStage(StagePage):
         self.list_card.show_values(rows, facts.rate_hz, facts.n_samples, plan.pulses.times)
         unmarked = () if self._ground is None or rows else self._ground.estimates.unmarked
         self.list_card.show_unmarked(unmarked if plan.pulses.times is not PulseTimes.NONE else ())
+        self._show_findings(plan)
         self.fill_card.show_values(plan.pulses)
         self.decay_card.show_values(plan.pulses)
         self.leak_card.show_values(plan)
@@ -214,6 +226,8 @@ class PulsesStage(StagePage):
         self.gap_card.channel = self._channel
         self.decay_card.show_channel(self._channel)
         self.gap_card.show_values(session.plan, session.marks, self.picture.rate_hz, picked)
+        self.suggested.show_suggestion(self._suggestion, session.plan, session.marks, self._channel)
+        self.offered.show_offers(self._suggestion.recharges)
 
     def _follow_view(self) -> None:
         session = self.bench.session
@@ -320,6 +334,7 @@ class PulsesStage(StagePage):
         if self._ground is None:
             self._ground = ground
             self._show_values()
+            self._ask_suggestion()
         # Where the workbench cannot learn yet, this is all there will be.
         can_learn = ground.decided and not self.bench.problem
         if whole is not None and not can_learn and _is_part(first_batch(whole), ground):
@@ -363,10 +378,43 @@ class PulsesStage(StagePage):
             "effect of the gaps", lambda recording: effect(recording, learned), self._take_effect
         )
 
+    def _show_findings(self, plan: Plan) -> None:
+        ground = self._ground
+        if ground is None or plan.pulses.times is PulseTimes.NONE:
+            self.list_card.show_findings(None, None, ())
+            return
+        pulses, rate_hz = ground.estimates.pulses, ground.setup.facts.rate_hz
+        real = [one.sample for one in pulses if one.state is not PulseState.MARKED_ONLY]
+        told = pulse_warnings(ground.setup, ground.estimates) if ground.decided else []
+        self.list_card.show_findings(latency_drift(pulses, rate_hz), trains(real, rate_hz), told)
+
+    def _ask_suggestion(self) -> None:
+        """Look around the pulses again, if they or the channels are others than before."""
+        ground = self._ground
+        if ground is None or not ground.estimates.pulses:
+            return
+        wanted = (ground.estimates.pulses, ground.setup.bad.tobytes(), _windows_of(ground))
+        if wanted == self._suggestion_of:
+            return
+        self.bench.start(
+            "suggested gaps",
+            lambda recording: suggested_gaps(recording, ground.setup, ground.estimates),
+            lambda found: self._take_suggestion(found, wanted),
+        )
+
+    def _take_suggestion(self, found: GapSuggestion, of: object) -> None:
+        self._suggestion, self._suggestion_of = found, of
+        self._show_gap_card()
+
     def _take_effect(self, found: Effect) -> None:
         self.effect_card.show_effect(found)
         self.gap_card.show_left(found.left)
         self.decay_card.show_left(found.left)
+
+
+def _windows_of(ground: Ground) -> tuple[tuple[Window, ...], ...]:
+    """Every group's gaps: recharges within them are not offered again."""
+    return tuple(group.windows_s for group in ground.setup.groups)
 
 
 def _remembering(new: Ground, old: Ground | None) -> Ground:
