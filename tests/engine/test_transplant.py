@@ -289,8 +289,8 @@ def test_neither_order_nor_company_changes_a_gap(filters: Filter) -> None:
 def test_rhythms_of_the_truth_are_those_of_the_signal() -> None:
     # A tone of 10 Hz and 20 uV in all channels: its amplitude, and its phase at each stretch's latencies.
     t = np.arange(60_000) / RATE_HZ
-    stored = np.round(np.tile(200.0 * np.cos(2 * np.pi * 10.0 * t + 0.4), (2, 1)))
-    found = with_pulses(stored, RATE_HZ, [1500, 3000, 4500])
+    stored = np.tile(np.round(200.0 * np.cos(2 * np.pi * 10.0 * t + 0.4)), (2, 1))
+    found = with_pulses(stored.astype(np.float64), RATE_HZ, [1500, 3000, 4500])
     setup = bind(found.facts, a_plan(), NO_MARKS)
     layout = lay_out(setup, finish(fit(found, setup)), PLAIN)
     truth, errors = measured(found, a_plan())

@@ -46,8 +46,11 @@ BEFORE_PULSE_S = 0.02
 LEVEL_S = 0.02
 """An artifact counts from its mean over this time before the gap."""
 
-REST_S = 0.3
-"""What is left of the median pulse is looked at for so long after the onset."""
+REST_S = (0.5, 0.1, 0.0)
+"""What is left of the median pulse is looked at for so long after the onset; less in trains of pulses."""
+
+PAUSE_S = 0.005
+"""What is large again after a longer pause is background and no artifact."""
 
 RESPONSE_UV = 20.0
 """Of the median pulse behind the gap, what exceeds this and three standard errors is no response."""
@@ -209,8 +212,12 @@ def draw_artifacts(
     """
     rate_hz = setup.facts.rate_hz
     first, stop = gap_reach(setup)
-    before, until = max(1, round(LEVEL_S * rate_hz)), max(stop, round(REST_S * rate_hz))
-    alone = _lying_alone(setup, estimates.pulses, first - before, until)
+    before, until = max(1, round(LEVEL_S * rate_hz)), stop
+    alone: list[int] = []
+    for rest_s in REST_S:
+        if len(alone) < LEAST_PULSES:
+            until = max(stop, round(rest_s * rate_hz))
+            alone = _lying_alone(setup, estimates.pulses, first - before, until)
     if not alone:
         raise InputError("no pulse lies alone, so its artifact cannot be taken", where=setup.facts.stem)
     most = max(3, MOST_BYTES // ((until - first) * setup.used.size * np.dtype(np.float32).itemsize))
@@ -226,7 +233,7 @@ def draw_artifacts(
         courses[row] = x[before:] - levels[row]
     in_gap = _in_gap(setup, first, until)
     decay = _decay(setup, estimates, layout.size + first)
-    rest = _rest(setup, courses[:, -first:], decay[:until])
+    rest = _rest(setup, courses[:, -first:], decay[:until], in_gap[-first:])
     # Within gaps everything is the single pulse's.
     for course in (rest, decay):
         course[:until][in_gap[-first:]] = 0.0
@@ -289,7 +296,7 @@ def _decay(setup: Setup, estimates: Estimates, n_samples: int) -> Floats:
     return table
 
 
-def _rest(setup: Setup, courses: NDArray[np.float32], decay: Floats) -> Floats:
+def _rest(setup: Setup, courses: NDArray[np.float32], decay: Floats, in_gap: NDArray[np.bool_]) -> Floats:
     """Find what of the median pulse, besides its decay, is too large for a response, in stored units."""
     if len(courses) < LEAST_PULSES:
         return np.zeros(decay.shape)
@@ -299,4 +306,11 @@ def _rest(setup: Setup, courses: NDArray[np.float32], decay: Floats) -> Floats:
     error = 1.2533 * 1.4826 * spread / math.sqrt(len(courses))
     limit = uv_to_v(RESPONSE_UV) / np.abs(setup.scale_v) + 3.0 * error
     left = median.astype(np.float64) - decay
-    return np.asarray(np.sign(left) * np.maximum(np.abs(left) - limit, 0.0))
+    excess = np.maximum(np.abs(left) - limit, 0.0)
+    # An artifact follows its gap; what is large only later is background.
+    pause = max(1, round(PAUSE_S * setup.facts.rate_hz))
+    since = np.full(setup.used.size, pause + 1)
+    for at, (in_gap_now, large_now) in enumerate(zip(in_gap, excess > 0.0, strict=True)):
+        since = np.where(in_gap_now | (large_now & (since <= pause)), 0, since + 1)
+        excess[at, since > pause] = 0.0
+    return np.asarray(np.sign(left) * excess)
