@@ -91,7 +91,7 @@ def test_leak_of_a_rule_is_what_its_epochs_hold(
 
 def test_epochs_above_the_limit_are_counted(recording: ArrayRecording, learned: Learned) -> None:
     found = finish(leak_per_rule(recording, learned))
-    # Before the pulse it is 2 fc times the area of what is left, 6 uV s: far above; 2 s later filters are over.
+    # Before the pulse it is 2 fc times the area of what is left, 6 uV s: far above. Filters end before 2 s.
     assert found.rules["before"].largest_v > 5e-6
     assert found.rules["before"].n_above == len(ONSETS)
     assert found.rules["far"].n_above == 0

@@ -55,7 +55,7 @@ class LeakCard(Card):
         self._found: dict[AcrossPulses, LeakView] = {}
         self._jobs: dict[AcrossPulses, tuple[Job, int]] = {}
         self.across = Choices("Filters run", [(way.value, name) for way, (name, *_) in _WAYS.items()])
-        self.across.setToolTip(f"On the right: kept epochs of this recording with a leak above {LEAK_LIMIT_UV:g} \u00b5V")
+        self.across.setToolTip(f"On the right: kept epochs with a leak above {LEAK_LIMIT_UV:g} \u00b5V")
         for label in self.across.findChildren(QLabel):
             label.setMinimumWidth(1)
         self.add(self.across)
