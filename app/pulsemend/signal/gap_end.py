@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
 from dataclasses import dataclass
 from enum import StrEnum
 from typing import Any
@@ -46,6 +45,9 @@ RINGING_FACTOR = 1.5
 RINGING_LEAST_CHANNELS = 3
 """Ringing before a pulse: the median pulse leaves so many times the range it has up to 30 ms before, in three
 channels."""
+
+
+_CHANNELS_AT_ONCE = 8
 
 
 class Sign(StrEnum):
@@ -161,17 +163,43 @@ def _fast(
 ) -> NDArray[np.bool_]:
     width = max(5, round(WINDOW_S * rate_hz))
     before = np.arange(usual[0], usual[1] - width + 1, hop)
-    most = np.max(list(_left_of_parabola(x, before, width)), axis=0)
-    return np.array([left > FAST_FACTOR * most for left in _left_of_parabola(x, places, width)])
+    found = np.empty((places.size, x.shape[2]), dtype=np.bool_)
+    # A few channels at a time: the sums take four times the memory of the signal, in double precision.
+    for first in range(0, x.shape[2], _CHANNELS_AT_ONCE):
+        columns = slice(first, first + _CHANNELS_AT_ONCE)
+        left = _left_of_parabola(x[:, :, columns], np.concatenate([before, places]), width)
+        found[:, columns] = left[before.size :] > FAST_FACTOR * left[: before.size].max(axis=0)
+    return found
 
 
-def _left_of_parabola(x: NDArray[Any], places: NDArray[np.intp], width: int) -> Iterator[NDArray[np.float64]]:
-    """For every place what a parabola leaves of the window from there, RMS, median over the pulses."""
-    basis, _ = np.linalg.qr(np.vander(np.linspace(-1.0, 1.0, width), 3))
-    for place in places.tolist():
-        window = x[:, place : place + width].astype(np.float64)
-        left = window - np.einsum("tk,pkc->ptc", basis, np.einsum("tk,ptc->pkc", basis, window))
-        yield np.median(np.sqrt(np.mean(left**2, axis=1)), axis=0)
+def _left_of_parabola(x: NDArray[Any], places: NDArray[np.intp], width: int) -> NDArray[np.float64]:
+    """For every place what a parabola leaves of the window from there, RMS, median over the pulses.
+
+    By running sums of the signal times powers of time, from which the parts along three orthonormal
+    polynomials follow.
+    """
+    monomials = np.vander(np.arange(width, dtype=np.float64), 3, increasing=True)
+    _, mixing = np.linalg.qr(monomials)
+    unmixing = np.linalg.inv(mixing)
+    at = np.arange(x.shape[1], dtype=np.float64)[:, None]
+    x = x.astype(np.float64)
+    sums = [_running(x), _running(x * at), _running(x * at**2)]
+    energy = _running(x**2)
+    left = np.empty((places.size, x.shape[2]))
+    for row, place in enumerate(places.tolist()):
+        zero, one, two = (total[:, place + width] - total[:, place] for total in sums)
+        moments = np.stack([zero, one - place * zero, two - 2.0 * place * one + place**2 * zero])
+        parts = np.tensordot(unmixing.T, moments, axes=1)
+        rest = energy[:, place + width] - energy[:, place] - (parts**2).sum(axis=0)
+        left[row] = np.median(np.sqrt(np.maximum(rest, 0.0) / width), axis=0)
+    return left
+
+
+def _running(x: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Add up all samples before each, along the second axis; one more than there are samples."""
+    total = np.zeros((x.shape[0], x.shape[1] + 1, x.shape[2]))
+    np.cumsum(x, axis=1, out=total[:, 1:])
+    return total
 
 
 def _at_coil(
