@@ -47,7 +47,7 @@ _TOOLTIPS = {
 
 _SHORT: dict[PulseState | None, str] = {
     PulseState.ALIGNED: "in signal",
-    PulseState.MARKED_ONLY: "not in signal",
+    PulseState.MARKED_ONLY: "not seen",
     PulseState.FOUND: "no marker",
     PulseState.ADDED: "added",
     PulseState.MOVED: "moved",
