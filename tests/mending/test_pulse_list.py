@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import numpy as np
 import pytest
 
+from pulsemend.engine.leak import Leak
 from pulsemend.mending.learned import learn
 from pulsemend.mending.mend import cut_all, set_contents
 from pulsemend.mending.prepare import prepare
@@ -174,12 +176,18 @@ def test_effect_counts_what_is_replaced(study: Study) -> None:
     assert list(done.replaced) == ["after2", "delay1"]
 
 
-def test_effect_is_what_the_set_will_say(study: Study, tmp_path_factory: pytest.TempPathFactory) -> None:
+@pytest.mark.parametrize("mirror", [False, True])
+def test_effect_is_what_the_set_will_say(
+    mirror: bool, study: Study, tmp_path_factory: pytest.TempPathFactory
+) -> None:
     text = study.plan.read_text(encoding="utf-8")
+    if mirror:
+        text = changed(text, ("start_s = 0.5", "start_s = 0.5\nmirror_gaps = true"))
     request = make_request(study.recording, text, tmp_path_factory.mktemp("effect"))
     prepared = finish(prepare(request))
     try:
-        epochs = set_contents(prepared, cut_all(prepared)).epochs
+        cuts = cut_all(prepared)
+        epochs = set_contents(prepared, cuts, Leak(np.zeros(len(cuts)), 0)).epochs
         found = finish(learn(prepared.recording, prepared.plan, NO_MARKS))
         done = finish(effect(prepared.recording, found))
     finally:
@@ -188,6 +196,7 @@ def test_effect_is_what_the_set_will_say(study: Study, tmp_path_factory: pytest.
         of_rule = [one.replaced_share for one in epochs if one.candidate.rule == rule]
         assert share == pytest.approx(sum(of_rule) / len(of_rule))
     assert (done.replaced["after2"] or 0.0) > 0.01
+    assert ((done.replaced["delay1"] or 0.0) > 0.01) == mirror
 
 
 def test_shortened_flanks_and_rules_without_epochs_are_told(study: Study) -> None:

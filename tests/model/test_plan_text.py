@@ -363,6 +363,7 @@ def plans(draw: st.DrawFn) -> Plan:
             draw(st.tuples(st.integers(0, 50), st.integers(0, 50)).map(lambda p: (float(p[0]), float(p[1])))),
             draw(st.sampled_from(["", *names])),
             draw(st.dictionaries(columns, st.sampled_from(sources), max_size=2)) if sources else {},
+            draw(st.booleans()),
         )
         for name in draw(st.lists(words, min_size=1, max_size=3, unique=True))
     )

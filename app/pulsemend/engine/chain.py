@@ -15,7 +15,8 @@ import math
 from bisect import bisect_left, bisect_right
 from collections import OrderedDict
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
+from copy import copy
+from dataclasses import dataclass, replace
 from fractions import Fraction
 from functools import cache
 from typing import Any
@@ -137,6 +138,28 @@ class Chain:
     def estimates(self) -> Estimates:
         """What it rests on."""
         return self._estimates
+
+    def with_gaps_at(self, onsets: Sequence[int]) -> Chain:
+        """Make a chain that also fills gaps where no pulse was, as if one had its onset there.
+
+        Decays are subtracted and filters split at the real pulses only. The new chain shares what never
+        changes and keeps blocks of its own, so what it fills appears in nothing that this one gives.
+
+        Parameters
+        ----------
+        onsets : sequence of int
+            Recorded samples.
+        """
+        setup, other = self._setup, copy(self)
+        every = (*self._estimates.onsets, *onsets)
+        other._repairs = [
+            replace(repair, gaps=[setup.lay(group, every, segment) for segment in setup.facts.segments])
+            for repair, group in zip(self._repairs, setup.groups, strict=True)
+        ]
+        other._low_blocks, other._band_blocks, other._ends = (
+            blocks.empty() for blocks in (self._low_blocks, self._band_blocks, self._ends)
+        )
+        return other
 
     def gaps(self, columns_of: int, segment: int) -> list[Gap]:
         """List the gaps of one group of channels in one segment."""
@@ -494,6 +517,10 @@ class _Recent:
     def __init__(self, most: int) -> None:
         self._most = most
         self._blocks: OrderedDict[tuple[int, int], Samples] = OrderedDict()
+
+    def empty(self) -> _Recent:
+        """Make another for as many blocks, with none in it."""
+        return _Recent(self._most)
 
     def get(self, key: tuple[int, int], make: Callable[[int, int], Samples]) -> Samples:
         if key in self._blocks:

@@ -97,6 +97,9 @@ class SetEpoch:
         The same of `/decay_fitted`, in sets that have it.
     leak : str
         What pulses still contribute, in microvolts; "n/a" where no pulse is known.
+    mirror_latencies_s : tuple of float
+        Where mirror gaps were placed as if a pulse had its onset there, since the first sample; empty
+        without.
     """
 
     candidate: Candidate
@@ -106,6 +109,7 @@ class SetEpoch:
     replaced_share: float = 0.0
     decay_share: float = 0.0
     leak: str = "n/a"
+    mirror_latencies_s: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -142,6 +146,8 @@ class SetContents:
         How far the filters spread a replaced sample.
     decay_fitted : bool
         Whether decays were looked for, so that the set has `/decay_fitted`.
+    mirror_gaps : bool
+        Whether a rule wants them, so that the table of epochs has their latencies.
     source_sha256 : str
         Digest of the recording's fingerprint.
     provenance : mapping
@@ -172,6 +178,7 @@ class SetContents:
     lowpass_hz: float = 0.0
     replaced_reach_s: float = 0.0
     decay_fitted: bool = False
+    mirror_gaps: bool = False
     provenance: Mapping[str, object] = field(default_factory=dict)
     pulse_columns: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
     later: Mapping[str, Sequence[str]] = field(default_factory=dict)

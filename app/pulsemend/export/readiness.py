@@ -2,15 +2,26 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
+
 from pulsemend.export.check_items import CheckItem
 from pulsemend.export.contents import EPOCHS_TSV
 from pulsemend.export.found_set import FoundSet
 from pulsemend.export.integrity import epochs_per_rule
+from pulsemend.model.epochs import NOT_AVAILABLE
 from pulsemend.model.vocabulary import ChannelType
 
 LEAK_LIMIT_UV = 0.5
 """Leak above which an epoch should be looked at (common practice: none known; the mean of 100 epochs of 10 uV
 has a noise of 1 uV)."""
+
+
+REPLACED_LIMIT = 0.01
+"""Difference of replaced shares above which two conditions should be looked at before they are compared
+(common practice: none known; in an epoch of 1 s it is 10 ms)."""
+
+MOST_CONDITIONS = 12
+"""Labels with more distinct values within a rule are numbers or free text, not conditions."""
 
 
 def check_readiness(found: FoundSet) -> list[CheckItem]:
@@ -36,14 +47,7 @@ def check_readiness(found: FoundSet) -> list[CheckItem]:
         eeg = sum(c.type is ChannelType.EEG and c.status == "good" for c in found.hdf5.channels)
         limit = f"at least {eeg - 1}: {eeg} good EEG channels, one less for a common reference"
         items.append(CheckItem("rank", "rank of the samples", str(rank), limit, rank >= eeg - 1, "readiness"))
-    shares = _share_per_rule(found)
-    if shares:
-        value = ", ".join(f"{name} {share:.2%}" for name, share in shares.items())
-        passed = max(shares.values()) - min(shares.values()) <= 0.01
-        limit = "rules within 1 percentage point of each other"
-        items.append(
-            CheckItem("replaced_by_rule", "replaced share per rule", value, limit, passed, "readiness")
-        )
+    items += _replaced_by_condition(found)
     leaks = _leak_per_rule(found)
     if leaks:
         every = [one for rule in leaks.values() for one in rule]
@@ -55,13 +59,42 @@ def check_readiness(found: FoundSet) -> list[CheckItem]:
     return items
 
 
-def _share_per_rule(found: FoundSet) -> dict[str, float]:
-    if found.hdf5 is None or len(found.shares) != len(found.hdf5.labels.name):
-        return {}
-    per_rule: dict[str, list[float]] = {}
-    for name, share in zip(found.hdf5.labels.name, found.shares, strict=True):
-        per_rule.setdefault(name, []).append(share)
-    return {name: sum(shares) / len(shares) for name, shares in per_rule.items()}
+def _replaced_by_condition(found: FoundSet) -> list[CheckItem]:
+    """Compare replaced shares between rules, and between the conditions of each label within a rule."""
+    if found.hdf5 is None or len(found.shares) != len(found.hdf5.labels.name) or not found.shares:
+        return []
+    labels = found.hdf5.labels
+    rules = _mean_shares(labels.name, found.shares)
+    value = ", ".join(f"{name} {share:.2%}" for name, share in rules.items())
+    differences, apart = [_range(rules)], []
+    for rule in rules:
+        of_rule = [place for place, name in enumerate(labels.name) if name == rule]
+        for column, texts in labels.more.items():
+            known = [place for place in of_rule if texts[place] not in ("", NOT_AVAILABLE)]
+            values = _mean_shares([texts[i] for i in known], [found.shares[i] for i in known])
+            if not 2 <= len(values) <= MOST_CONDITIONS:
+                continue
+            differences.append(_range(values))
+            if _range(values) > REPLACED_LIMIT:
+                least, most = (choose(values, key=values.__getitem__) for choose in (min, max))
+                apart.append(f"{rule}, {column}: {most} {values[most]:.2%}, {least} {values[least]:.2%}")
+    limit = "rules, and conditions within a rule, within 1 percentage point of each other"
+    title = "replaced share per rule and condition"
+    passed = max(differences) <= REPLACED_LIMIT
+    detail = "; ".join(apart)
+    return [CheckItem("replaced_by_rule", title, value, limit, passed, "readiness", detail)]
+
+
+def _mean_shares(groups: Sequence[str], shares: Sequence[float]) -> dict[str, float]:
+    per_group: dict[str, list[float]] = {}
+    for group, share in zip(groups, shares, strict=True):
+        per_group.setdefault(group, []).append(share)
+    return {group: sum(of_group) / len(of_group) for group, of_group in per_group.items()}
+
+
+def _range(values: Mapping[str, float]) -> float:
+    # Shares are sums of flags over counts: a limit that is met exactly must not be missed by rounding.
+    return round(float(max(values.values()) - min(values.values())), 9)
 
 
 def _leak_per_rule(found: FoundSet) -> dict[str, list[float]]:

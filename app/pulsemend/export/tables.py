@@ -86,11 +86,17 @@ def epochs_text(contents: SetContents) -> str:
             epoch.replaced_share,
             *((epoch.decay_share,) if contents.decay_fitted else ()),
             epoch.leak,
+            *((_seconds(epoch.mirror_latencies_s),) if contents.mirror_gaps else ()),
         )
         for index, epoch in enumerate(contents.epochs)
     ]
     decay = ("decay_share",) if contents.decay_fitted else ()
-    return table_text((*columns, *more, "replaced_share", *decay, "leak"), rows)
+    mirror = ("mirror_latency_s",) if contents.mirror_gaps else ()
+    return table_text((*columns, *more, "replaced_share", *decay, "leak", *mirror), rows)
+
+
+def _seconds(latencies_s: Sequence[float]) -> str:
+    return ", ".join(f"{latency_s:.6f}" for latency_s in latencies_s)
 
 
 def ledger_text(contents: SetContents) -> str:

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend import DATA_VERSION, __version__
-from pulsemend.engine.chain import Cut
+from pulsemend.engine.chain import Chain, Cut
 from pulsemend.engine.leak import Leak, measure_leak
 from pulsemend.engine.onsets import OnsetShift
 from pulsemend.engine.steps import steps
@@ -27,6 +27,7 @@ from pulsemend.model.epochs import NOT_AVAILABLE
 from pulsemend.progress import Progress, Work
 from pulsemend.readers.opening import open_recording
 from pulsemend.trials.later import later_by_rule
+from pulsemend.trials.mirrors import SEED_RULE, MirrorGaps
 from pulsemend.units import v_to_uv
 
 RANK_TOLERANCE = 1e-5
@@ -95,11 +96,12 @@ def mend(request: Request, out: Path, *, overwrite: bool = False) -> Work[MendRe
         contents = set_contents(prepared, cuts, leak)
         rank = _Rank(contents.shape)
         with SetWriter(contents, out, overwrite) as writer:
-            for index, cut in enumerate(cuts):
+            for index, (cut, mirror) in enumerate(zip(cuts, prepared.mirrors, strict=True)):
                 yield Progress(_STAGE, index, len(cuts))
-                data = prepared.chain.samples(cut)
+                chain = chain_of(prepared, mirror)
+                data = chain.samples(cut)
                 rank.add(data)
-                writer.write(index, data, prepared.chain.replaced(cut), prepared.chain.decay_fitted(cut))
+                writer.write(index, data, chain.replaced(cut), chain.decay_fitted(cut))
             yield Progress("reading back", 0, 0)
             folder = writer.finish(rank.rank(), {}, prepared.estimates.save)
             yield Progress("reading back", 1, 1)
@@ -140,6 +142,14 @@ def cut_all(prepared: Prepared) -> list[Cut]:
     ]
 
 
+def chain_of(prepared: Prepared, mirror: MirrorGaps | None) -> Chain:
+    """Give the chain that one epoch is read from: its own where it has mirror gaps, else the common one.
+
+    Mirror gaps exist in this chain alone, and no other epoch is read from it.
+    """
+    return prepared.chain.with_gaps_at(mirror.onsets) if mirror else prepared.chain
+
+
 def set_contents(prepared: Prepared, cuts: Sequence[Cut], leak: Leak) -> SetContents:
     """Describe the set before its first sample.
 
@@ -154,17 +164,21 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut], leak: Leak) -> SetCont
     """
     plan, setup = prepared.plan, prepared.setup
     recorded_hz = setup.facts.rate_hz
+    mirrors = prepared.mirrors
     epochs = tuple(
         SetEpoch(
             candidate=candidate,
             onset_s=(candidate.anchor_sample or 0.0) / recorded_hz,
             start_s=candidate.start_s,
             shift_s=cut.shift_s or cut.remainder_s,
-            replaced_share=prepared.chain.replaced_share(cut),
+            replaced_share=chain_of(prepared, mirror).replaced_share(cut),
             decay_share=prepared.chain.decay_share(cut),
             leak=_leak_text(leak, peak_v),
+            mirror_latencies_s=mirror.latencies_s if mirror else (),
         )
-        for candidate, cut, peak_v in zip(prepared.kept, cuts, leak.peaks_v.tolist(), strict=True)
+        for candidate, cut, mirror, peak_v in zip(
+            prepared.kept, cuts, mirrors, leak.peaks_v.tolist(), strict=True
+        )
     )
     starts = {round(candidate.start_s * setup.rate_hz) for candidate in prepared.kept}
     zero: Zero = "anchor" if len(starts) == 1 else "epoch start"
@@ -191,7 +205,12 @@ def set_contents(prepared: Prepared, cuts: Sequence[Cut], leak: Leak) -> SetCont
         lowpass_hz=plan.filter.lowpass_hz or reduced_lowpass_hz,
         replaced_reach_s=setup.replaced_reach_s,
         decay_fitted=prepared.estimates.decay is not None,
-        provenance={**provenance(prepared), "leak": _leak_provenance(leak)},
+        mirror_gaps=any(rule.mirror_gaps for rule in plan.epochs.rule),
+        provenance={
+            **provenance(prepared),
+            "leak": _leak_provenance(leak),
+            "mirror_gaps": _mirror_provenance(prepared, mirrors),
+        },
         later=later_labels(prepared),
     )
 
@@ -257,6 +276,21 @@ def _leak_provenance(leak: Leak) -> dict[str, Any] | None:
         "largest_uv": round(float(peaks_uv.max(initial=0.0)), 4),
         "epochs_above": int((peaks_uv > LEAK_LIMIT_UV).sum()),
         "epochs": len(peaks_uv),
+    }
+
+
+def _mirror_provenance(prepared: Prepared, mirrors: Sequence[MirrorGaps | None]) -> dict[str, Any] | None:
+    rules = [rule.name for rule in prepared.plan.epochs.rule if rule.mirror_gaps]
+    if not rules:
+        return None
+    counts = Counter(
+        candidate.rule for candidate, mirror in zip(prepared.kept, mirrors, strict=True) if mirror is not None
+    )
+    return {
+        "epochs_per_rule": {rule: counts[rule] for rule in rules},
+        "latencies_from": SEED_RULE,
+        "handling": "windows, exceptions and fill as for a pulse; each epoch is filled and filtered for "
+        "itself, no decay is subtracted at a mirror gap and no filter stops there",
     }
 
 

@@ -42,6 +42,7 @@ from pulsemend.trials.candidates import GapSpan, Geometry, candidates, set_order
 from pulsemend.trials.effective import effective_markers
 from pulsemend.trials.logged import Logged, needs_log, with_log
 from pulsemend.trials.matching import match_trials
+from pulsemend.trials.mirrors import MirrorGaps, mirror_gaps, mirror_warnings
 from pulsemend.units import s_to_ms
 
 _MOST_LISTED = 30
@@ -144,6 +145,11 @@ class Prepared:
     def kept(self) -> tuple[Candidate, ...]:
         """Kept candidates, in the order of the set."""
         return self.decision.kept
+
+    @property
+    def mirrors(self) -> tuple[MirrorGaps | None, ...]:
+        """Mirror gaps of every kept candidate; None where it has none. Drawn anew whenever asked for."""
+        return mirror_gaps(self.kept, self.plan, self.decision.geometry)
 
     @property
     def plan(self) -> Plan:
@@ -273,6 +279,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         candidates(trials, plan, geometry), plan.balance.by, plan.balance.choose, plan.balance.seed
     )
     ledger = matched.candidates
+    kept = set_order(ledger, geometry)
     problem = log.problem or (logged.problem if logged else "")
     notes = (
         *([f"the log was not joined: {problem}"] if problem else []),
@@ -288,6 +295,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         *stale_decisions(trials, plan, geometry),
         *_stale_pulses(facts, plan, marks),
         *matched.warnings,
+        *mirror_warnings(kept, plan, geometry),
     ]
     return Decision(
         trials=trials,
@@ -296,7 +304,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         log_problem=problem,
         geometry=geometry,
         ledger=ledger,
-        kept=set_order(ledger, geometry),
+        kept=kept,
         notes=notes,
         warnings=tuple(warnings),
     )

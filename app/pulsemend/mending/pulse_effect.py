@@ -10,6 +10,7 @@ from pulsemend.mending.pulse_view import StepLeft, ground_of, step_left
 from pulsemend.model.recording import Recording
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.gaps import shortened, window_to_samples
+from pulsemend.trials.mirrors import mirror_gaps
 from pulsemend.units import s_to_ms
 
 
@@ -30,8 +31,8 @@ class Effect:
     left : StepLeft or None
         What the gap leaves at its end in the worst channel.
     replaced : mapping of str to float or None
-        By rule, in the plan's order: share of its kept epochs' samples that rest on replaced ones; None
-        without kept epochs.
+        By rule, in the plan's order: share of its kept epochs' samples that rest on replaced ones, in mirror
+        gaps too; None without kept epochs.
     """
 
     gap_samples: int
@@ -74,11 +75,13 @@ def effect(recording: Recording, learned: Learned) -> Work[Effect]:
     chain = learned.chain(recording)
     n_times = round(plan.epochs.length_s * setup.rate_hz)
     shares: dict[str, list[float]] = {rule.name: [] for rule in plan.epochs.rule}
-    for done, candidate in enumerate(kept):
+    mirrors = mirror_gaps(kept, plan, learned.decision.geometry)
+    for done, (candidate, mirror) in enumerate(zip(kept, mirrors, strict=True)):
         yield Progress("counting replaced samples", done, len(kept))
         if candidate.anchor_sample is not None:
             cut = chain.cut(candidate.anchor_sample, candidate.start_s, n_times)
-            shares[candidate.rule].append(float(chain.replaced(cut).mean()))
+            of_epoch = chain.with_gaps_at(mirror.onsets) if mirror else chain
+            shares[candidate.rule].append(of_epoch.replaced_share(cut))
     return Effect(
         gap_samples=size,
         gap_ms=s_to_ms(size / setup.facts.rate_hz),

@@ -28,6 +28,7 @@ FIXED_COLUMNS = (
     "decay_share",
     "leak",
     "leak_uv",
+    "mirror_latency_s",
     "fate",
     "detail",
 )

@@ -349,7 +349,10 @@ class Channels:
 
 @dataclass(frozen=True)
 class EpochRule:
-    """How one kind of epoch is cut."""
+    """How one kind of epoch is cut.
+
+    With ``mirror_gaps`` those without a pulse receive the gaps of those with one.
+    """
 
     name: str
     anchor: str
@@ -359,6 +362,7 @@ class EpochRule:
     clear_ms: Window = (0.0, 0.0)
     stop_before: str = ""
     labels: Mapping[str, str] = field(default_factory=dict)
+    mirror_gaps: bool = False
 
 
 @dataclass(frozen=True)

@@ -387,6 +387,12 @@ PLAN_KEYS: tuple[Key, ...] = (
         default="",
     ),
     Key(
+        "epochs.rule[].mirror_gaps",
+        Kind.FLAG,
+        "whether epochs without a pulse receive the gaps of epochs with one, so that the repair cancels",
+        default=False,
+    ),
+    Key(
         "epochs.rule[].labels.*", Kind.TEXT, "label column, from a slot's label, e.g. cue1.item", filled=True
     ),
     Key(
