@@ -128,9 +128,10 @@ def whole_test(decay: Decay, compare: bool) -> None:
     before = time.process_time()
     cost = finish(repair_cost(recording, learned, compare=compare, config=TransplantConfig(most_gaps=N_GAPS)))
     taken_s = time.process_time() - before
+    own = cost.methods[0]
     print(
         f"  decay {decay.value:12s} {len(cost.methods)} fills, {cost.n_gaps} gaps: {taken_s:6.2f} s; "
-        f"in the gap {v_to_uv(cost.methods[0].in_gap.value):.2f} uV, trustworthy from {cost.methods[0].earliest_s}"
+        f"in the gap {v_to_uv(own.in_gap.value):.2f} uV, trustworthy from {own.earliest_s}"
     )
 
 

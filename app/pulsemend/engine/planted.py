@@ -42,7 +42,11 @@ class Layout:
     @property
     def onsets(self) -> tuple[int, ...]:
         """Samples of the planted onsets."""
-        return tuple(place * self.size + self.before for place in range(len(self.starts)))
+        return tuple(self.onset(place) for place in range(len(self.starts)))
+
+    def onset(self, place: int) -> int:
+        """Sample of one planted onset."""
+        return place * self.size + self.before
 
     def pieces(self) -> list[tuple[int, int]]:
         """First recorded sample and first sample here of each piece that was recorded in one go."""
@@ -74,6 +78,11 @@ class Responses:
         """Responses of some stretches, in their order."""
         rows = np.array(places, np.intp)
         return Responses(self.latencies_s[rows], self.widths_s[rows], self.sizes_v[rows])
+
+    def span_s(self, place: int) -> tuple[float, float]:
+        """Where one stretch's response is more than a thousandth of its peak."""
+        reach_s = 4.0 * float(self.widths_s[place])
+        return float(self.latencies_s[place]) - reach_s, float(self.latencies_s[place]) + reach_s
 
     def shape(self, place: int, since_s: Floats) -> Floats:
         """Course of one stretch's response, 1 at its peak."""
@@ -186,15 +195,18 @@ class PlantedRecording:
 
     def _add_response(self, responses: Responses, place: int, start: int, out: FloatArray) -> None:
         """Add what lies after the onset, within the stretch."""
-        onset = self._layout.onsets[place]
-        a, b = max(start, onset), min(start + len(out), (place + 1) * self._layout.size)
+        onset = self._layout.onset(place)
+        first, last = (round(edge_s * self._setup.facts.rate_hz) for edge_s in responses.span_s(place))
+        # Nothing precedes the onset or reaches into the next stretch.
+        a = max(start, onset + max(0, first))
+        b = min(start + len(out), onset + last, (place + 1) * self._layout.size)
         if a < b:
             shape = responses.shape(place, (np.arange(a, b) - onset) / self._setup.facts.rate_hz)
             sizes = responses.sizes_v[place] / self._setup.scale_v
-            out[a - start : b - start, self._columns] += shape[:, None] * sizes
+            out[a - start : b - start, self._columns] += np.outer(shape, sizes).astype(out.dtype, copy=False)
 
     def _add_artifact(self, artifact: Artifact, place: int, start: int, out: FloatArray) -> None:
-        onset = self._layout.onsets[place]
+        onset = self._layout.onset(place)
         stop = start + len(out)
         for added, amplitudes in ((artifact.rest, None), (artifact.decay, artifact.amplitudes[place])):
             a, b = max(start, onset), min(stop, onset + len(added))

@@ -178,7 +178,10 @@ class Bench:
         numbers = np.arange(math.ceil(begin_s * rate_hz / step), math.floor(end_s * rate_hz / step) + 1)
         self._shown = numbers * step - self._first
         weights = [rhythm_weights(self.times_s, band.frequency_hz, s) for band in BANDS for s in RHYTHM_S]
-        self._weights = np.stack(weights, axis=1).astype(np.complex64)
+        joined = np.stack(weights, axis=1)
+        # The far ends of the windows would only make products too small for the processor to be quick with.
+        joined[np.abs(joined) < 1e-7 * np.abs(joined).max(axis=0)] = 0.0
+        self._weights = np.hstack([joined.real, joined.imag]).astype(np.float32)
 
     @property
     def n_gaps(self) -> int:
@@ -225,18 +228,16 @@ class Bench:
             yield Progress(_STAGE, row, len(chosen))
             onset = self.estimates.onsets[place]
             true = self._seen(self._truth, onset)
-            level = true.mean(axis=1, keepdims=True)
-            true_rhythms = (true - level).astype(np.float32) @ self._weights
-            truth.variance_v2[row] = true.var(axis=1)
-            truth.rhythms[row] = true_rhythms.reshape(-1, *bands)
+            about_mean = true - true.mean(axis=1, keepdims=True)
+            truth.variance_v2[row] = np.einsum("ct,ct->c", about_mean, about_mean) / about_mean.shape[1]
+            truth.rhythms[row] = self._rhythms(about_mean)
             response = None if self._alone is None else self._seen(self._alone, onset)
             if response is not None:
                 truth.response_v2[row] = np.einsum("ct,ct->c", response, response)
             for chain, of_method in zip(chains, found, strict=True):
                 error = self._seen(chain, onset) - true
                 of_method.error_v[row] = error[:, self._shown]
-                rhythms = true_rhythms + error.astype(np.float32) @ self._weights
-                of_method.rhythms[row] = rhythms.reshape(-1, *bands)
+                of_method.rhythms[row] = truth.rhythms[row] + self._rhythms(error)
                 if response is not None:
                     of_method.taken_v2[row] = np.einsum("ct,ct->c", error, response)
         return truth, tuple(found)
@@ -245,6 +246,12 @@ class Bench:
         """Chain of the whole plan on the planted recording."""
         setup = replace(self.setup, fill=method.fill, side=method.side, flank=method.flank)
         return Chain(self._with_artifacts, setup, self.estimates)
+
+    def _rhythms(self, volts: NDArray[np.float64]) -> NDArray[np.complex64]:
+        """Complex amplitudes of all bands at all latencies, shape (n_channels, n_bands, len(RHYTHM_S))."""
+        found = volts.astype(np.float32) @ self._weights
+        half = found.shape[1] // 2
+        return np.asarray(found[:, :half] + 1j * found[:, half:]).reshape(-1, len(BANDS), len(RHYTHM_S))
 
     def _seen(self, chain: Chain, onset: int) -> NDArray[np.float64]:
         """Output samples around an onset, in volts, shape (n_channels, n_times)."""
