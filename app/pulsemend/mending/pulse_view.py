@@ -17,12 +17,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend.engine.chain import Chain
-from pulsemend.engine.decay import learn_decay
 from pulsemend.engine.estimates import Estimates
-from pulsemend.engine.fit import fit, quiet_windows
+from pulsemend.engine.fit import basis_of, fit, quiet_windows
 from pulsemend.engine.reading import read_stored
 from pulsemend.engine.setup import GapGroup, Setup, bind
 from pulsemend.mending.learned import Learned
+from pulsemend.mending.quick_decay import quick_decay
 from pulsemend.model.epochs import Pulse, nearest_sample
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import About, Channels, Filter, Plan
@@ -249,9 +249,11 @@ def _adapted(
         decay=None,
         rests_on={},
     )
-    if setup.decay is not Decay.NONE:
+    if earlier.rests_on.get("decay") == basis_of(setup)["decay"] and adapted.onsets == earlier.onsets:
+        adapted = replace(adapted, decay=earlier.decay)
+    elif setup.decay is not Decay.NONE:
         columns = yield from _decaying(recording, Ground(setup, adapted, provisional=True), request)
-        decay = yield from learn_decay(recording, setup, adapted.onsets, None, columns)
+        decay = yield from quick_decay(recording, setup, adapted.onsets, columns)
         adapted = replace(adapted, decay=decay)
     if setup.fill is not Fill.COVARIANCE or not pulses:
         return replace(adapted, autocovariance=None)

@@ -221,15 +221,19 @@ class DecayCard(Card):
         self._show_reasons(summary.left_alone)
 
     def _show_reasons(self, left_alone: tuple[LeftAlone, ...]) -> None:
+        texts = [f"{len(one.channels)} left alone: {self._said(one.reason)}" for one in left_alone]
+        listed = [", ".join(one.channels) for one in left_alone]
+        if [(label.text(), label.toolTip()) for label in self.reasons] == [*zip(texts, listed, strict=True)]:
+            return
         for label in self.reasons:
             label.hide()
             self._reasons.removeWidget(label)
             label.deleteLater()
         self.reasons = []
-        for one in left_alone:
-            label = words(f"{len(one.channels)} left alone: {self._said(one.reason)}", "quiet")
-            label.setToolTip(", ".join(one.channels))
-            label.setAccessibleDescription(", ".join(one.channels))
+        for text, names in zip(texts, listed, strict=True):
+            label = words(text, "quiet")
+            label.setToolTip(names)
+            label.setAccessibleDescription(names)
             self._reasons.addWidget(label)
             self.reasons.append(label)
 

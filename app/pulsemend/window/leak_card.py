@@ -169,9 +169,13 @@ class _LeakTable(QWidget):
         self.grid.setHorizontalSpacing(12)
         self.grid.setColumnStretch(0, 1)
         self.cells: dict[tuple[str, AcrossPulses], tuple[QLabel, QLabel]] = {}
+        self._shown: tuple[AcrossPulses, Mapping[AcrossPulses, LeakView]] | None = None
 
     def show_leaks(self, way: AcrossPulses, found: Mapping[AcrossPulses, LeakView]) -> None:
         """Show the way of now, and beside it the other if it was measured."""
+        if self._shown == (way, found):
+            return
+        self._shown = way, dict(found)
         self._clear()
         shown = [one for one in _WAYS if one in found and found[one].n_pulses]
         if way not in shown:
