@@ -372,7 +372,7 @@ def plans(draw: st.DrawFn) -> Plan:
         tuple(markers),
         tuple(slots),
         Pulses(
-            times=draw(st.sampled_from([PulseTimes.MARKERS, PulseTimes.NONE])),
+            times=draw(st.sampled_from(PulseTimes)),
             search_ms=draw(windows(-20, 20)),
             window_ms=draw(windows(-20, 20)),
             fill=draw(st.sampled_from([fill for fill in Fill if fill is not Fill.LEAVE])),
