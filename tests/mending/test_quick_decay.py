@@ -86,3 +86,15 @@ def test_another_fill_takes_the_decays_over(decaying: Counting, learned: Learned
     assert again.decay is not None
     assert again.decay is not learned.estimates.decay
     assert again.decay.amplitudes.shape[1] == len(ONSETS) + 1
+
+
+@pytest.mark.parametrize("pick", [Pick.ONE, Pick.ALL, Pick.WORST])
+def test_the_very_first_picture_fits_few_pulses_too(decaying: Counting, pick: Pick) -> None:
+    the_plan = plan(pulses=pulses(Decay.EXPONENTIAL), filter=UNTOUCHED, reference="as recorded")
+    ground = finish(sketch(decaying, the_plan, NO_MARKS, None, PulseRequest(pick, "E2")))
+    found = ground.estimates.decay
+    assert ground.provisional
+    assert found is not None
+    assert found.n_pulses == MOST_PULSES
+    assert np.isnan(found.share).all()
+    assert "E2" in [ground.setup.channels[column].name for column in found.columns]

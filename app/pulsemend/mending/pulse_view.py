@@ -219,7 +219,10 @@ def sketch(
     )
     setup = bind(recording.facts, bare, marks)
     if earlier is None or not np.array_equal(earlier.setup.used, setup.used):
-        estimates = yield from fit(recording, setup)
+        # Decays are fitted to all channels and pulses only once, by whoever learns for good.
+        estimates = yield from fit(recording, replace(setup, decay=Decay.NONE))
+        if setup.decay is not Decay.NONE:
+            estimates = yield from _adapted(recording, setup, estimates, request)
     else:
         estimates = yield from _adapted(recording, setup, earlier.estimates, request)
     return Ground(setup, estimates, decided, provisional=True)
