@@ -355,7 +355,8 @@ def need_known_pulses(estimates: Estimates, facts: RecordingFacts) -> None:
         f"no pulse is known, but {len(estimates.unmarked)} pulse-like events are in the signal, "
         f"the first at {first_s:.3f} s",
         where=facts.stem,
-        todo='Give the pulse markers role = "pulse", or set pulses.times = "none" if these are no pulses',
+        todo='Give the pulse markers role = "pulse", set pulses.times = "signal" to take them from there, '
+        'or pulses.times = "none" if these are no pulses',
     )
 
 
