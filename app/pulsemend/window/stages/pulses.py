@@ -373,10 +373,10 @@ class PulsesStage(StagePage):
             # Otherwise what was left before stays until it is measured anew: nothing moves under the hand.
             return
         self.decay_card.show_learned(learned)
-        self.leak_card.show_learned(learned)
         self.bench.start(
             "effect of the gaps", lambda recording: effect(recording, learned), self._take_effect
         )
+        self.leak_card.show_learned(learned)
 
     def _show_findings(self, plan: Plan) -> None:
         ground = self._ground
