@@ -79,7 +79,7 @@ def test_where_errors_never_get_small_no_latency_is_trustworthy() -> None:
     left = ArrayRecording(stored, RATE_HZ, found.facts.markers)
     cost = cost_of(left, a_plan(), config=PLAIN)
     assert cost.methods[0].earliest_s is None
-    assert any(words.startswith("There is no trustworthy latency") for words in cost.words)
+    assert any(words.startswith("No latency that was looked at is trustworthy") for words in cost.words)
 
 
 def test_exceptions_have_latencies_of_their_own() -> None:
@@ -100,6 +100,7 @@ def test_errors_in_the_gap_are_those_of_lines_drawn_by_hand() -> None:
     gap = cost.methods[0].in_gap
     assert gap.value == pytest.approx(expected_v, rel=0.03)
     assert gap.low < expected_v < gap.high
+    assert f"In the gap the error is {1e6 * gap.value:.1f} \u00b5V" in cost.words[2]
     assert cost.spread_v == pytest.approx([150.0 * STEP_V] * 3, rel=0.03)
     inside = (cost.latencies_s > -0.0025) & (cost.latencies_s < 0.0145)
     # Of a normal distribution: half below 0.674 and most below 1.96 standard deviations.
@@ -190,7 +191,7 @@ def test_it_can_be_cancelled_and_tells_how_far_it_is() -> None:
 
 def test_too_few_stretches_are_one_clear_sentence() -> None:
     found = recording(seconds=25)
-    with pytest.raises(InputError, match=r"only 6 stretches of 1\.10 s are free of pulses") as caught:
+    with pytest.raises(InputError, match=r"only 6 stretches of 1\.00 s are free of pulses") as caught:
         cost_of(found, a_plan())
     assert str(caught.value).count(".") == 1  # within the number
     assert "\n" not in str(caught.value)

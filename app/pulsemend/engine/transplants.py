@@ -32,7 +32,7 @@ from pulsemend.units import uv_to_v
 LEAST_GAPS = 20
 """With fewer, the error that one gap in twenty exceeds is not known."""
 
-SEEN_S = (-0.3, 0.5)
+SEEN_S = (-0.25, 0.45)
 """Around the onset: what errors are looked for in, and rhythms need."""
 
 MARGIN_S = 0.15

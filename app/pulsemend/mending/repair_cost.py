@@ -336,6 +336,11 @@ def _words(
     if config.resets:
         planted += ", and the background's phase was reset at each"
     words = [BEST_CASE, planted + "."]
+    own = costs[0].in_gap
+    words.append(
+        f"In the gap the error is {v_to_uv(own.value):.1f} \u00b5V "
+        f"({v_to_uv(own.low):.1f} to {v_to_uv(own.high):.1f}), root mean square."
+    )
     words.append(_earliest_words(costs[0]))
     if setup.side is Side.BOTH:
         words.append(
@@ -350,11 +355,11 @@ def _words(
 
 def _earliest_words(cost: MethodCost) -> str:
     rule = (
-        f"after the gap, from which on {100 * MOST:.0f} % of the errors stay below {100 * SHARE:.0f} % "
+        f"after the gap from which on {100 * MOST:.0f} % of the errors stay below {100 * SHARE:.0f} % "
         "of the background's spread"
     )
     if cost.earliest_s is None:
-        return f"There is no trustworthy latency in what was looked at: none, {rule}."
+        return f"No latency that was looked at is trustworthy: there is none {rule}."
     return f"Earliest trustworthy latency: {s_to_ms(cost.earliest_s):.0f} ms, the first {rule}."
 
 
