@@ -34,26 +34,28 @@ def gap_plan(fill: Fill, across: AcrossPulses = AcrossPulses.FILLED) -> Plan:
     return plan(pulses=pulses, filter=replace(Filter(), across_pulses=across), precision=Precision.DOUBLE)
 
 
-def filled_by_hand(chain: Chain, recording: ArrayRecording) -> NDArray[np.float64]:
+def filled_by_hand(chain: Chain, recording: ArrayRecording, onset: int) -> NDArray[np.float64]:
     """Stored numbers in which the mirror gaps are filled with the plan's fill and nothing else is changed."""
     setup, known = chain.setup, chain.estimates.autocovariance
     filler = Filler(FillConfig(setup.fill, setup.side, setup.flank, RATE_HZ, known), 4, np.float64)
     x = recording.stored.T.copy()
     for start, stop in WINDOWS:
-        filler.fill(x, 0, Gap(MIRROR + start, MIRROR + stop, setup.flank, setup.flank))
+        filler.fill(x, 0, Gap(onset + start, onset + stop, setup.flank, setup.flank))
     return x.T
 
 
 @pytest.mark.parametrize("fill", [Fill.LINE, Fill.CUBIC, Fill.COVARIANCE])
 @pytest.mark.parametrize("across", AcrossPulses)
+@pytest.mark.parametrize(("onset", "anchor"), [(MIRROR, EPOCH), (400, 100), (68_000, 67_400)])
 def test_a_mirrored_epoch_is_the_same_signal_filled_by_hand(
-    fill: Fill, across: AcrossPulses, recording: ArrayRecording
+    fill: Fill, across: AcrossPulses, onset: int, anchor: int, recording: ArrayRecording
 ) -> None:
+    """In the middle of the recording and at both ends, where filters see it mirrored oddly."""
     chain = make_chain(recording, gap_plan(fill, across))
-    by_hand = ArrayRecording(filled_by_hand(chain, recording), RATE_HZ, recording.facts.markers)
+    by_hand = ArrayRecording(filled_by_hand(chain, recording, onset), RATE_HZ, recording.facts.markers)
     truth = Chain(by_hand, chain.setup, chain.estimates)
-    cut = chain.cut(float(EPOCH), 0.0, 500)
-    mirrored = chain.with_gaps_at([MIRROR]).samples(cut)
+    cut = chain.cut(float(anchor), 0.0, 500)
+    mirrored = chain.with_gaps_at([onset]).samples(cut)
     np.testing.assert_allclose(mirrored, truth.samples(cut), rtol=0, atol=1e-12)
     assert np.abs(mirrored - chain.samples(cut)).max() > 1e-7  # else nothing was compared
 

@@ -128,6 +128,8 @@ class Chain:
         self._ends = _Recent(6)
         self._band_size = self._fft.block if self._fft else self._low_size
         self._band_blocks = _Recent(3)
+        self._shares: Chain | None = None
+        self._unlike: list[list[Gap]] = []
 
     @property
     def setup(self) -> Setup:
@@ -159,6 +161,15 @@ class Chain:
         other._low_blocks, other._band_blocks, other._ends = (
             blocks.empty() for blocks in (self._low_blocks, self._band_blocks, self._ends)
         )
+        pairs = list(zip(self._repairs, other._repairs, strict=True))
+        other._unlike = [
+            [gap for one, its in pairs for gap in {*one.gaps[segment]} ^ {*its.gaps[segment]}]
+            for segment in range(len(setup.facts.segments))
+        ]
+        other._shares = self
+        # Both filter the same decimated blocks, but those around the further gaps: keep them for one block.
+        margin = self._fft.margin if self._fft else 0
+        self._low_blocks.hold(3 + (self._band_size + 2 * margin) // self._low_size)
         return other
 
     def gaps(self, columns_of: int, segment: int) -> list[Gap]:
@@ -369,6 +380,8 @@ class Chain:
         lo, hi = self.output_span(segment)
         first = block * self._low_size
         start, stop = max(lo, first), min(hi, first + self._low_size)
+        if self._shares is not None and not self._is_unlike(segment, start, stop):
+            return self._shares._low_blocks.get((segment, block), self._shares._low_block)
         volts = np.zeros((self._setup.used.size, self._low_size), self._setup.work)
         if self._decimator is None:
             stored = self.repaired(start, stop)
@@ -388,6 +401,14 @@ class Chain:
             stored = y[skipped : skipped + stop - start]
         np.multiply(stored.T, self._scale, out=volts[:, start - first : stop - first])
         return volts
+
+    def _is_unlike(self, segment: int, start: int, stop: int) -> bool:
+        """Whether decimated samples differ from those of the chain that blocks are shared with."""
+        ratio = float(self._setup.ratio)
+        # Mirrored at a segment's end, a block rests on samples up to twice the margin away.
+        reach = 2 * self._decimator.matrix.shape[1] if self._decimator is not None else 0
+        low, high = start / ratio - reach, stop / ratio + reach
+        return any(gap.start < high and gap.stop > low for gap in self._unlike[segment])
 
     def _from_blocks(self, segment: int, start: int, stop: int) -> Samples:
         return self._joined(self._band_blocks, self._band_size, self._band_block, segment, start, stop)
@@ -521,6 +542,10 @@ class _Recent:
     def empty(self) -> _Recent:
         """Make another for as many blocks, with none in it."""
         return _Recent(self._most)
+
+    def hold(self, most: int) -> None:
+        """Keep so many from now on, if it were fewer."""
+        self._most = max(self._most, most)
 
     def get(self, key: tuple[int, int], make: Callable[[int, int], Samples]) -> Samples:
         if key in self._blocks:
