@@ -59,7 +59,7 @@ def test_onsets_and_kinds_of_pulses_that_nobody_marked(stream: PulseStream) -> N
 
 @pytest.mark.parametrize("rate_hz", [1000.0, 25_000.0])
 def test_onsets_at_other_rates(rate_hz: float) -> None:
-    stream = pulse_stream(rate_hz, 10.0, 32)
+    stream = pulse_stream(rate_hz, 7.0, 32)
     pulses = learned(stream, [], PulseTimes.BOTH)
     late = [abs(pulse.sample - onset) for pulse, onset in zip(pulses, stream.onsets, strict=True)]
     assert max(late) <= 1
