@@ -30,6 +30,9 @@ MOST_PULSES = 300
 QUICK_PULSES = 30
 """For a first picture."""
 
+NOT_LOOKED_AT = "not looked at yet"
+"""Reason of a channel that was not asked for."""
+
 SHORTEST_S = 0.005
 """A stretch shorter than this before the next gap tells nothing of a decay."""
 
@@ -168,7 +171,7 @@ def learn_decay(
             else:
                 found[column] = fitted
     for column in np.setdiff1d(np.arange(setup.used.size), chosen).tolist():
-        reasons[column] = "not looked at yet"
+        reasons[column] = NOT_LOOKED_AT
     return _estimates(setup, reasons, found, len(onsets), n_pulses)
 
 

@@ -17,12 +17,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend.engine.chain import Chain
+from pulsemend.engine.decay import NOT_LOOKED_AT, learn_decay
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import basis_of, fit, quiet_windows
 from pulsemend.engine.reading import read_stored
 from pulsemend.engine.setup import GapGroup, Setup, bind
 from pulsemend.mending.learned import Learned
-from pulsemend.mending.quick_decay import quick_decay
 from pulsemend.model.epochs import Pulse, nearest_sample
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import About, Channels, Filter, Plan
@@ -256,7 +256,7 @@ def _adapted(
         adapted = replace(adapted, decay=earlier.decay)
     elif setup.decay is not Decay.NONE:
         columns = yield from _decaying(recording, Ground(setup, adapted, provisional=True), request)
-        decay = yield from quick_decay(recording, setup, adapted.onsets, columns)
+        decay = yield from learn_decay(recording, setup, adapted.onsets, None, columns)
         adapted = replace(adapted, decay=decay)
     if setup.fill is not Fill.COVARIANCE or not pulses:
         return replace(adapted, autocovariance=None)
@@ -420,6 +420,11 @@ def _picked(
     onsets = _onsets(ground, request)
     if not onsets.size:
         return columns[:1], None
+    decay = ground.estimates.decay
+    if decay is not None:
+        # A first picture knows the decays of the largest steps only; others would pass for the worst.
+        looked_at = np.array([reason != NOT_LOOKED_AT for reason in decay.reasons])
+        columns = columns[looked_at[columns]]
     steps_v = yield from _leftover_steps(recording, ground, onsets, columns)
     worst = int(np.argmax(steps_v))
     return columns[worst : worst + 1], float(steps_v[worst])
