@@ -223,7 +223,8 @@ def test_single_is_double_rounded(highpass_hz: float, study: Study, tmp_path: Pa
     plan = changed(PLAN, ("[epochs]", f"[filter]\nhighpass_hz = {highpass_hz}\n[epochs]"))
     data = {}
     for precision in ("single", "double"):
-        text = f'{plan}\n[export]\nprecision = "{precision}"\n[channels]\nreference = "as recorded"\n'
+        channels = '[channels]\nfind_bad = false\nrebuild_bad = false\nreference = "as recorded"\n'
+        text = f'{plan}\n[export]\nprecision = "{precision}"\n{channels}'
         data[precision] = SetOnDisk(run_mend(study.recording, text, tmp_path / precision).folder).hdf5("data")
     assert data["double"].dtype == np.float64
     # Electrode offsets are millivolts.
@@ -250,7 +251,7 @@ def test_left_gaps_are_no_step_for_the_filters(highpass_hz: float, study: Study,
     plan = changed(
         PLAN,
         ('fill = "line"', 'fill = "leave"'),
-        ("[epochs]", f"[filter]\nhighpass_hz = {highpass_hz}\n[epochs]"),
+        ("[epochs]", f"[filter]\nhighpass_hz = {highpass_hz}\n[channels]\nfind_bad = false\n[epochs]"),
     )
     data = {}
     for precision in ("single", "double"):
@@ -268,7 +269,7 @@ def test_provenance_tells_where_the_set_comes_from(written: SetOnDisk, study: St
     names = [step["name"] for step in provenance["steps"]]
     assert names == [
         "constant offset", "fill", "anti-alias and decimate", "high-pass", "line removal", "low-pass",
-        "reference",
+        "search for bad channels", "rebuild bad channels", "reference",
     ]  # fmt: skip
     assert {"python", "numpy", "scipy", "mne", "h5py"} <= set(provenance["versions"])
     files = {part["file"]: part["size"] for part in provenance["recording"]["fingerprint"]}
@@ -319,7 +320,7 @@ def test_identity_is_free_of_containers_time_and_of_what_changes_no_sample(
     others = [
         changed(PLAN, ("[-2.0, 14.0]", "[-2.0, 14.2]")),
         changed(PLAN, ('asked = "cue1.item"', 'asked = "cue2.item"')),
-        changed(PLAN, ("[epochs]", '[channels]\nbad = ["TP8"]\n[epochs]')),
+        changed(PLAN, ("[epochs]", '[channels]\nbad = ["O1"]\n[epochs]')),
         f'{PLAN}\n[export]\nprecision = "double"\n',
     ]
     hashes = {
@@ -330,7 +331,7 @@ def test_identity_is_free_of_containers_time_and_of_what_changes_no_sample(
 
 def test_restored_reference_becomes_the_last_channel(study: Study, tmp_path: Path) -> None:
     """FCz, put back as zeros before averaging, is minus the mean of the others afterwards."""
-    plan = changed(PLAN, ("[epochs]", '[channels]\nrecorded_reference = "FCz"\n[epochs]'))
+    plan = changed(PLAN, ("[epochs]", '[channels]\nfind_bad = false\nrecorded_reference = "FCz"\n[epochs]'))
     written = SetOnDisk(run_mend(study.recording, plan, tmp_path).folder)
     names = written.hdf5("channels/name").tolist()
     assert names[-1] == "FCz"

@@ -76,7 +76,7 @@ UNTOUCHED = changed(
         'times = "none"',
     ),
     ("highpass_hz = 2.0\nlowpass_hz = 40.0\nrate_hz = 125.0", "highpass_hz = 0\nlowpass_hz = 0\nrate_hz = 0"),
-    ("[epochs]", '[channels]\nreference = "as recorded"\n[epochs]'),
+    ("[epochs]", '[channels]\nreference = "as recorded"\nfind_bad = false\nrebuild_bad = false\n[epochs]'),
     ('formats = ["hdf5"]', 'formats = ["hdf5"]\nprecision = "double"'),
 )
 

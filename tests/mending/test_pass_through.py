@@ -1,6 +1,6 @@
 """Pass-through epochs equal the reader library's, through the whole of `mend` and back from both containers.
 
-Nothing is done to the samples (filters, line, pulses, limits off; rate and reference as recorded), so the
+Nothing is done to the samples (filters, line, pulses, bad channels, limits off; rate and reference as recorded), so the
 outside reference is `mne.Epochs` on the same file, its tmax one sample before the end: "double" equal to the
 last bit, "single" as float32.
 
@@ -61,6 +61,8 @@ lowpass_hz = 0
 rate_hz = 0
 [channels]
 reference = "as recorded"
+find_bad = false
+rebuild_bad = false
 [epochs]
 length_s = {ask.n_times / ask.rate_hz!r}
 [[epochs.rule]]

@@ -112,8 +112,8 @@ across_pulses = "filled"
 
 [channels]
 bad = []                          # bad in every recording
-find_bad = false
-rebuild_bad = false
+find_bad = true
+rebuild_bad = true
 recorded_reference = ""           # put back before averaging
 reference = "average"
 positions = "10-05"
@@ -204,14 +204,14 @@ def line_with(text: str, part: str) -> int:
 
 
 def test_shortest_plan_has_the_defaults() -> None:
-    # Defaults: design section 4.2; the search for bad channels comes later, so its default is false here.
+    # Defaults: design section 4.2.
     assert parse_plan(SHORTEST).plan == Plan(
         about=About("", 0.0),
         markers=(MarkerPlan("lamp", Role.SAMPLE, {}),),
         trial=(Slot("sample", Role.SAMPLE),),
         pulses=Pulses(window_ms=(-2.0, 14.0)),
         filter=Filter(1.0, 100.0, 1000.0),
-        channels=Channels((), False, False, "", "average", "10-05"),
+        channels=Channels((), True, True, "", "average", "10-05"),
         epochs=Epochs(1.0, (EpochRule("baseline", "sample", -1.0),)),
         export=Export((Format.HDF5, Format.FIF), Precision.SINGLE),
     )

@@ -69,12 +69,13 @@ def test_clean_recordings_have_none(names: tuple[str, ...]) -> None:
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize("names", [CAP, CAP_32])
-def test_none_is_found_in_19_of_20_clean_recordings(names: tuple[str, ...]) -> None:
-    falsely = [
-        seed for seed in range(100, 200) if known(judged(clean(seed)[:, columns_of(names)], names)).bad.any()
-    ]
-    assert len(falsely) <= 5, falsely
+@pytest.mark.parametrize("first", range(100, 200, 10))
+def test_nothing_is_found_in_a_hundred_clean_recordings(first: int) -> None:
+    """The issue asks for 95 of 100; none of these has a finding, on either cap."""
+    for seed in range(first, first + 10):
+        volts = clean(seed)
+        for names in (CAP, CAP_32):
+            assert not named(known(judged(volts[:, columns_of(names)], names)), names), (seed, len(names))
 
 
 def test_without_positions_loud_dead_and_noisy_channels_are_found() -> None:

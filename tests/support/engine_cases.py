@@ -87,7 +87,7 @@ def plan(
         trial=(Slot("cue1", Role.CUE),),
         pulses=pulses or Pulses(window_ms=(-2.0, 14.0), fill=Fill.LINE),
         filter=filter or Filter(),
-        channels=replace(Channels(reference=reference), **channels),
+        channels=replace(Channels(reference=reference, find_bad=False, rebuild_bad=False), **channels),
         epochs=Epochs(1.0, (EpochRule("delay1", "cue1", 0.0),)),
         export=Export(precision=precision),
     )

@@ -1,6 +1,7 @@
 """Second pass: the one chain from recorded samples to repaired epochs.
 
-    offset -> decay -> fill -> anti-alias + decimate -> drift, line and band filters -> reference -> cut
+    offset -> decay -> fill -> anti-alias + decimate -> drift, line and band filters -> bad channels rebuilt
+      -> reference -> cut
 
 Nothing is estimated here. Every step is a pure function of recorded samples, estimates and absolute sample
 number, computed on a fixed grid of blocks counted from the start of the recording, and pulled from the end:
@@ -25,6 +26,7 @@ import numpy as np
 import threadpoolctl
 from numpy.typing import NDArray
 
+from pulsemend.engine.bad_channels import found_bad, rebuilding, reference_from
 from pulsemend.engine.decay_subtraction import DecaySubtraction
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.reading import read_stored
@@ -111,7 +113,14 @@ class Chain:
             (_ceil(lo * setup.ratio), _floor((hi - 1) * setup.ratio) + 1) for lo, hi in setup.facts.segments
         ]
         self._scale = setup.scale_v.astype(setup.work)[:, None]
-        self._mean_of = (setup.reference_from / max(1, setup.reference_from.sum())).astype(setup.work)
+        found = found_bad(setup, estimates.channels)
+        mean_of = reference_from(setup, found)
+        self._mean_of = (mean_of / max(1, mean_of.sum())).astype(setup.work)
+        self._rebuilding = rebuilding(setup, found)
+        self._weights = self._rebuilding.weights.astype(setup.work)
+        offset_v = estimates.offset * setup.scale_v
+        offset_v[self._rebuilding.rows] = self._rebuilding.weights @ offset_v
+        self._offset_v = offset_v.astype(setup.work)[:, None]
         self._subtracted_from = _runs(setup.reference_to)
         self._decimator: BandedFilter | None = None
         if setup.antialias is not None:
@@ -300,7 +309,7 @@ class Chain:
         marked = np.zeros((len(self._setup.names), cut.n_times), dtype=np.bool_)
         for columns, start, stop in self._replaced_runs(cut):
             marked[columns, start:stop] = True
-        return marked
+        return self._as_rebuilt(marked)
 
     def decay_fitted(self, cut: Cut) -> NDArray[np.bool_] | None:
         """Tell which samples of an epoch lie where the decay's fit would alter a response.
@@ -318,7 +327,7 @@ class Chain:
             for column, a, b in decay.altered_runs(cut.segment, lo, hi):
                 start, stop = self._output_run(cut, a, b)
                 marked[column, start:stop] = True
-        return marked
+        return self._as_rebuilt(marked)
 
     def decay_share(self, cut: Cut) -> float:
         """Give the share of an epoch's samples, over all channels, that `decay_fitted` marks."""
@@ -327,6 +336,8 @@ class Chain:
 
     def replaced_share(self, cut: Cut) -> float:
         """Give the share of an epoch's samples, over all channels, that `replaced` marks."""
+        if self._rebuilding.rows.size:
+            return float(self.replaced(cut).mean())
         # Runs of one group may share an output sample that two gaps touch.
         touched: dict[int, NDArray[np.bool_]] = {}
         sizes: dict[int, int] = {}
@@ -335,6 +346,14 @@ class Chain:
             sizes[id(columns)] = columns.size
         marked = sum(sizes[group] * int(times.sum()) for group, times in touched.items())
         return marked / (len(self._setup.names) * cut.n_times)
+
+    def _as_rebuilt(self, marked: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        """Mark a rebuilt channel where any of the channels is marked that it rests on, and nowhere else."""
+        ways = self._rebuilding
+        if ways.rows.size:
+            used = marked[: self._setup.used.size]
+            marked[ways.rows] = [used[sources].any(axis=0) for sources in ways.sources]
+        return marked
 
     def _replaced_runs(self, cut: Cut) -> Iterator[tuple[NDArray[np.intp], int, int]]:
         """Places of channels, and the run [start, stop) of output samples that one gap touches in them."""
@@ -460,10 +479,12 @@ class Chain:
         return extended(known, n_ahead, setup.rate_hz).astype(setup.work)
 
     def _referenced(self, volts: Samples) -> Samples:
-        """Put offsets back where no high-pass removed them, then subtract the reference."""
+        """Rebuild bad channels, put offsets back where no high-pass removed them, subtract the reference."""
         setup = self._setup
+        if self._rebuilding.rows.size:
+            volts[self._rebuilding.rows] = self._weights @ volts
         if setup.removes_offset and not setup.highpass_on:
-            volts = volts + (self._estimates.offset * setup.scale_v).astype(setup.work)[:, None]
+            volts = volts + self._offset_v
         if setup.restored:
             volts = np.concatenate([volts, np.zeros((1, volts.shape[1]), volts.dtype)])
         if setup.reference_from.any():

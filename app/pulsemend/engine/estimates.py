@@ -12,11 +12,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend import DATA_VERSION
+from pulsemend.engine.bad_channels import load_judgement, save_judgement
 from pulsemend.engine.decay import DecayEstimates
 from pulsemend.engine.onsets import OnsetShift
 from pulsemend.errors import SetError
 from pulsemend.model.epochs import Pulse
 from pulsemend.model.vocabulary import PulseKind, PulseState
+from pulsemend.signal.channels import Judgement
 
 SCHEMA = 1
 
@@ -41,6 +43,8 @@ class Estimates:
         Onsets of stimuli, measured in a sensor's channel, where the plan wants it.
     decay : DecayEstimates or None
         None where the plan wants none.
+    channels : Judgement or None
+        What speaks against each used channel; None where bad ones are not looked for, or cannot be told.
     notes : tuple of str
         What the fit had to decide, one sentence each.
     rests_on : mapping of str to str
@@ -54,6 +58,7 @@ class Estimates:
     unmarked: tuple[int, ...] = ()
     stimulus_onsets: tuple[OnsetShift, ...] = ()
     decay: DecayEstimates | None = None
+    channels: Judgement | None = None
     notes: tuple[str, ...] = ()
     rests_on: dict[str, str] = field(default_factory=dict)
 
@@ -90,6 +95,8 @@ class Estimates:
                 file["autocovariance"] = self.autocovariance
             if self.decay is not None:
                 self.decay.save(file.create_group("decay"))
+            if self.channels is not None:
+                save_judgement(self.channels, file.create_group("channels"))
 
     @classmethod
     def load(cls, path: Path) -> Estimates:
@@ -115,6 +122,7 @@ class Estimates:
                     unmarked=tuple(int(n) for n in file["unmarked"][()]),
                     stimulus_onsets=_onset_shifts(str(file.attrs.get("stimulus_onsets", "[]"))),
                     decay=DecayEstimates.load(file["decay"]) if "decay" in file else None,
+                    channels=load_judgement(file["channels"]) if "channels" in file else None,
                     notes=tuple(json.loads(file.attrs["notes"])),
                     rests_on=json.loads(file.attrs["rests_on"]),
                 )

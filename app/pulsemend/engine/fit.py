@@ -7,6 +7,7 @@ from collections.abc import Iterator, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsemend.engine.bad_channels import ChannelSearch
 from pulsemend.engine.decay import learn_decay
 from pulsemend.engine.decay_stretches import BackgroundSum
 from pulsemend.engine.estimates import Estimates, basis
@@ -74,13 +75,15 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
     total = len(windows) + len(expected)
     sums = _autocovariance_sum(setup) if expected else None
     background = BackgroundSum(setup) if expected and setup.decay is not Decay.NONE else None
+    search = ChannelSearch(setup) if setup.finds_bad else None
+    whole = sums is not None or background is not None or search is not None
     scale_v = setup.scale_v.astype(np.float32)
     short = max(2, round(STEEPNESS_S * setup.facts.rate_hz))
     means: list[NDArray[np.float64]] = []
     steep: list[NDArray[np.float64]] = []
     for done, (start, until) in enumerate(windows):
         yield Progress(_STAGE, done, total)
-        stop = until if sums is not None or background is not None else min(until, start + short)
+        stop = until if whole else min(until, start + short)
         # Counting from a sample of its own, single precision is enough.
         origin = read_stored(recording, setup, start, start + 1)[0]
         x = read_stored(recording, setup, start, stop, origin, np.float32)
@@ -94,6 +97,8 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
             sums.add(x)
         if background is not None:
             background.add(x)
+        if search is not None:
+            search.add(x)
     usual = usual_steepness(steep) if steep else 0.0
     limits = limits_of(setup, usual_steps(steep) if steep else np.zeros(judged.size), judged)
     pulses = []
@@ -125,6 +130,7 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         unmarked=unmarked,
         stimulus_onsets=onsets,
         decay=decay,
+        channels=None if search is None else search.result(),
         notes=notes,
         rests_on=basis_of(setup),
     )
@@ -236,6 +242,9 @@ def basis_of(setup: Setup) -> dict[str, str]:
         "usual_steepness": basis(*quiet, setup.bad),
         "autocovariance": basis(*quiet, setup.flank, setup.fill),
         "decay": basis(*quiet, setup.decay_least_v, setup.bad) if decay else basis("none"),
+        "channels": basis(*quiet, setup.bad, setup.channels, setup.line_hz)
+        if setup.finds_bad
+        else basis("none"),
         "stimulus_onsets": basis(
             *source, setup.onset_rules, setup.facts.markers if setup.onset_rules else ()
         ),

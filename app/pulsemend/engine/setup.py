@@ -86,6 +86,12 @@ class Setup:
     channels : tuple of Channel
         The used channels, types as the marks have them.
     bad, eeg : bool arrays, shape (n_used,)
+    good : bool array, shape (n_used,)
+        Channels that are never found bad, by the marks.
+    finds_bad, rebuilds : bool
+        Whether bad channels are searched for, and whether they are rebuilt.
+    line_hz : float
+        Mains frequency; 0: none is removed.
     ratio : Fraction
         Output over recorded rate.
     rate_hz : float
@@ -122,6 +128,8 @@ class Setup:
         What `band` is made of, for the provenance.
     reference_from, reference_to : bool arrays, shape (n_used + extra,)
         Channels whose mean is subtracted, and from which; all False as recorded.
+    averages : bool
+        Whether the reference is the mean of all good channels: it leaves out what is found bad.
     restored : str
         Name of the recorded reference that is put back as a further channel; empty for none.
     work, out : numpy dtypes of processing and of the result.
@@ -138,6 +146,10 @@ class Setup:
     channels: tuple[Channel, ...]
     bad: NDArray[np.bool_]
     eeg: NDArray[np.bool_]
+    good: NDArray[np.bool_]
+    finds_bad: bool
+    rebuilds: bool
+    line_hz: float
     ratio: Fraction
     rate_hz: float
     groups: tuple[GapGroup, ...]
@@ -161,6 +173,7 @@ class Setup:
     band_steps: tuple[tuple[str, dict[str, object]], ...]
     reference_from: NDArray[np.bool_]
     reference_to: NDArray[np.bool_]
+    averages: bool
     restored: str
     work: np.dtype[np.floating]
     out: np.dtype[np.floating]
@@ -229,14 +242,17 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         )
     channels = tuple(typed[i] for i in used)
     names = [c.name for c in channels]
-    bad = np.isin(names, [*plan.channels.bad, *marks.bad])
+    good = np.isin(names, marks.good)
+    bad = (np.isin(names, plan.channels.bad) & ~good) | np.isin(names, marks.bad)
     eeg = np.array([c.type is ChannelType.EEG for c in channels])
     ratio, rate_hz = _rates(plan, facts.rate_hz)
     antialias, band, steps = _filters(plan, facts.rate_hz, ratio, rate_hz)
     restored, mean_of, subtract_from = _reference(plan, names, bad, eeg)
     groups = _gap_groups(plan, marks, names)
     as_recorded = (
-        antialias is None and band is None and not groups and not subtract_from.any() and not restored
+        antialias is None
+        and band is None
+        and not (groups or restored or subtract_from.any() or plan.channels.rebuild_bad)
     )
     single = plan.export.precision is Precision.SINGLE
     return Setup(
@@ -245,6 +261,10 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         channels=channels,
         bad=bad,
         eeg=eeg,
+        good=good,
+        finds_bad=plan.channels.find_bad,
+        rebuilds=plan.channels.rebuild_bad,
+        line_hz=plan.about.line_hz,
         ratio=ratio,
         rate_hz=rate_hz,
         groups=groups,
@@ -268,6 +288,7 @@ def bind(facts: RecordingFacts, plan: Plan, marks: Marks) -> Setup:
         band_steps=steps,
         reference_from=mean_of,
         reference_to=subtract_from,
+        averages=plan.channels.reference == "average",
         restored=restored,
         work=np.dtype(np.float32 if single and not as_recorded else np.float64),
         out=np.dtype(np.float32 if single else np.float64),

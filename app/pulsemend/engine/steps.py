@@ -6,13 +6,17 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
+from pulsemend.engine.bad_channels import found_bad, rebuilding, reference_from
 from pulsemend.engine.decay import DecayEstimates
 from pulsemend.engine.decay_subtraction import OVER_UV
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.setup import Setup
 from pulsemend.signal.absorption import LATENCIES_S
+from pulsemend.signal.channels import WINDOW_SHARE, Judgement
 from pulsemend.signal.gaps import shortened
+from pulsemend.signal.splines import ORDER, REGULARISATION
 from pulsemend.units import v_to_uv
 
 
@@ -50,13 +54,33 @@ def steps(setup: Setup, estimates: Estimates) -> tuple[Step, ...]:
             )
         )
     taken += [Step(name, {**parameters, "phase": "zero"}) for name, parameters in setup.band_steps]
+    names = np.array(setup.names)
+    found = found_bad(setup, estimates.channels)
+    if estimates.channels is not None:
+        taken.append(Step("search for bad channels", _search_parameters(setup, estimates.channels)))
+    ways = rebuilding(setup, found)
+    if ways.rows.size:
+        taken.append(
+            Step(
+                "rebuild bad channels",
+                {
+                    "channels": names[ways.rows].tolist(),
+                    "method": "spherical splines",
+                    "order": ORDER,
+                    "regularisation": REGULARISATION,
+                    "rests_on": {
+                        str(names[row]): names[: setup.used.size][sources].tolist()
+                        for row, sources in zip(ways.rows, ways.sources, strict=True)
+                    },
+                },
+            )
+        )
     if setup.reference_from.any():
-        names = np.array(setup.names)
         taken.append(
             Step(
                 "reference",
                 {
-                    "mean_of": names[setup.reference_from].tolist(),
+                    "mean_of": names[reference_from(setup, found)].tolist(),
                     "subtracted_from": names[setup.reference_to].tolist(),
                     "recorded_reference_put_back": setup.restored,
                 },
@@ -88,6 +112,34 @@ def _decay_parameters(setup: Setup, decay: DecayEstimates) -> dict[str, Any]:
         "latencies_of_recovered_share_s": list(LATENCIES_S),
         "not_fitted": {names[i]: reason for i, reason in enumerate(decay.reasons) if reason},
     }
+
+
+def _search_parameters(setup: Setup, judgement: Judgement) -> dict[str, Any]:
+    """Tell what was found, with each value beside its limit, and what the marks made of it."""
+    against = {
+        channel.name: {
+            one.label.value: {
+                "value": round(float(one.value[place]), 3),
+                "limit": one.limit,
+                "windows": int(one.n_over[place]),
+            }
+            for one in judgement.criteria
+            if judgement.flagged(one)[place]
+        }
+        for place, channel in enumerate(setup.channels)
+        if judgement.bad[place]
+    }
+    return {
+        "windows": judgement.n_windows,
+        "share_of_windows": WINDOW_SHARE,
+        "against": against,
+        "good_by_the_marks": [name for name in against if name in _names(setup, setup.good)],
+        "bridged": [[setup.channels[a].name, setup.channels[b].name] for a, b in judgement.bridged],
+    }
+
+
+def _names(setup: Setup, chosen: NDArray[np.bool_]) -> list[str]:
+    return [channel.name for channel, is_chosen in zip(setup.channels, chosen, strict=True) if is_chosen]
 
 
 def _fill_parameters(setup: Setup, estimates: Estimates) -> dict[str, Any]:

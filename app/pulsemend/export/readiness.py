@@ -15,7 +15,6 @@ LEAK_LIMIT_UV = 0.5
 """Leak above which an epoch should be looked at (common practice: none known; the mean of 100 epochs of 10 uV
 has a noise of 1 uV)."""
 
-
 REPLACED_LIMIT = 0.01
 """Difference of replaced shares above which two conditions should be looked at before they are compared
 (common practice: none known; in an epoch of 1 s it is 10 ms)."""
@@ -45,7 +44,10 @@ def check_readiness(found: FoundSet) -> list[CheckItem]:
     rank = (found.facts or {}).get("rank")
     if found.hdf5 is not None and isinstance(rank, int):
         eeg = sum(c.type is ChannelType.EEG and c.status == "good" for c in found.hdf5.channels)
+        rebuilt = sum(c.type is ChannelType.EEG and c.status == "rebuilt" for c in found.hdf5.channels)
         limit = f"at least {eeg - 1}: {eeg} good EEG channels, one less for a common reference"
+        if rebuilt:
+            limit += f"; {rebuilt} rebuilt from these add nothing"
         items.append(CheckItem("rank", "rank of the samples", str(rank), limit, rank >= eeg - 1, "readiness"))
     items += _replaced_by_condition(found)
     leaks = _leak_per_rule(found)

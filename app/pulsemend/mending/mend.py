@@ -15,11 +15,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsemend import DATA_VERSION, __version__
+from pulsemend.engine.bad_channels import found_bad, reasons, rebuilding
 from pulsemend.engine.chain import Chain, Cut
 from pulsemend.engine.leak import Leak, measure_leak
 from pulsemend.engine.onsets import OnsetShift
 from pulsemend.engine.steps import steps
-from pulsemend.export.contents import SetChannel, SetContents, SetEpoch, Zero
+from pulsemend.export.contents import ChannelStatus, SetChannel, SetContents, SetEpoch, Zero
 from pulsemend.export.readiness import LEAK_LIMIT_UV
 from pulsemend.export.set_writer import SetWriter, check_place
 from pulsemend.mending.prepare import Prepared, Request, marked_only, need_epochs, prepare, set_channels
@@ -327,23 +328,23 @@ def kept_per_rule(prepared: Prepared) -> dict[str, int]:
 
 
 def _channels(prepared: Prepared) -> tuple[SetChannel, ...]:
-    setup = prepared.setup
-    in_plan = set(prepared.plan.channels.bad)
+    setup, judgement = prepared.setup, prepared.estimates.channels
+    found = found_bad(setup, judgement)
+    rebuilt = set(rebuilding(setup, found).rows.tolist())
     channels = []
     for place, channel in enumerate(set_channels(setup)):
-        bad = place < setup.bad.size and bool(setup.bad[place])
-        note = (
-            ""
-            if not bad
-            else "named bad in the plan"
-            if channel.name in in_plan
-            else "named bad in the marks"
-        )
+        note = ""
+        if place < setup.bad.size and setup.bad[place]:
+            where = "marks" if channel.name in prepared.marks.bad else "plan"
+            note = f"named bad in the {where}"
+        elif place < setup.bad.size and found[place]:
+            note = f"found: {', '.join(reasons(judgement, place))}"
+        bad: ChannelStatus = "rebuilt" if place in rebuilt else "bad"
         channels.append(
             SetChannel(
                 channel.name,
                 channel.type,
-                "bad" if bad else "good",
+                bad if note else "good",
                 note,
                 channel.position_m,
                 impedance_ohm=channel.impedance_ohm,

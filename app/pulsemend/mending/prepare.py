@@ -7,6 +7,7 @@ from contextlib import nullcontext
 from dataclasses import dataclass, replace
 from pathlib import Path
 
+from pulsemend.engine.bad_channels import channel_notes
 from pulsemend.engine.chain import Chain
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import fit
@@ -285,6 +286,7 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         *([f"the log was not joined: {problem}"] if problem else []),
         *_log_notes(logged, log),
         *(_shift_note(shift) for shift in estimates.stimulus_onsets if shift.is_used),
+        *channel_notes(setup, estimates.channels),
         *estimates.notes,
     )
     warnings = [

@@ -215,7 +215,7 @@ def sketch(
         pulses=pulses,
         about=About(),
         filter=Filter(0.0, 0.0, 0.0),
-        channels=Channels(bad=plan.channels.bad, reference="as recorded"),
+        channels=Channels(plan.channels.bad, find_bad=False, rebuild_bad=False, reference="as recorded"),
     )
     setup = bind(recording.facts, bare, marks)
     if earlier is None or not np.array_equal(earlier.setup.used, setup.used):

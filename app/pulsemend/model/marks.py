@@ -56,6 +56,8 @@ class Marks:
         The recording these marks belong to; None for marks that were never a file.
     bad : tuple of str
         Channels bad in this recording, besides the plan's.
+    good : tuple of str
+        Channels good in this recording, whatever the plan says or the search finds.
     types : mapping of str to ChannelType
         Channel types that override the file's.
     pulses_added, pulses_removed : tuple of int
@@ -81,6 +83,7 @@ class Marks:
 
     fingerprint: Fingerprint | None = None
     bad: tuple[str, ...] = ()
+    good: tuple[str, ...] = ()
     types: Mapping[str, ChannelType] = field(default_factory=dict)
     pulses_added: tuple[int, ...] = ()
     pulses_removed: tuple[int, ...] = ()

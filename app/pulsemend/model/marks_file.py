@@ -258,6 +258,7 @@ def marks_tree(marks: Marks) -> dict[str, Any]:
     return {
         "pulsemend_marks": SCHEMA,
         "bad": marks.bad,
+        "good": marks.good,
         "trials_excluded": marks.trials_excluded,
         "fingerprint": [{"name": name, "size": size, "sha256": sha256} for name, size, sha256 in parts],
         "types": dict(marks.types),
@@ -283,6 +284,7 @@ def _marks(tree: Mapping[str, Any]) -> Marks:
     return Marks(
         fingerprint=Fingerprint(parts) if parts else None,
         bad=tree["bad"],
+        good=tree["good"],
         types=tree["types"],
         pulses_added=pulses["added"],
         pulses_removed=pulses["removed"],
@@ -315,6 +317,9 @@ def _check(marks: Marks) -> None:
                 allowed="64 of the signs 0-9 and a-f",
                 received=show(sha256),
             )
+    for place, name in enumerate(marks.good, start=1):
+        if name in marks.bad:
+            raise MarksError(f"good[{place}]", "is bad as well", received=show(name))
     seen: set[int] = set()
     for place, moved in enumerate(marks.pulses_moved, start=1):
         if moved.sample in seen or moved.sample in marks.pulses_removed:

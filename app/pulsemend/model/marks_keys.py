@@ -12,6 +12,7 @@ _LAST_SAMPLE = 2.0**53
 MARKS_KEYS: tuple[Key, ...] = (
     Key("pulsemend_marks", Kind.WHOLE, "version of the format of marks", low=1, high=SCHEMA),
     Key("bad", Kind.TEXTS, "channels bad in this recording", default=()),
+    Key("good", Kind.TEXTS, "channels good in this recording, over the plan and the search", default=()),
     Key("trials_excluded", Kind.WHOLES, "trials left out whole, from 1", default=(), low=1, high=1_000_000.0),
     Key("fingerprint[].name", Kind.TEXT, "a file of the recording, without its folder", filled=True),
     Key("fingerprint[].size", Kind.WHOLE, "its size", unit="bytes", low=0, high=_LAST_SAMPLE),
@@ -77,5 +78,5 @@ MARKS_KEYS: tuple[Key, ...] = (
     ),
 )
 
-LATER_MARKS_KEYS = frozenset({"good", "positions", "epochs_kept"})
+LATER_MARKS_KEYS = frozenset({"positions", "epochs_kept"})
 """Keys that a later version has: refused as "not in this version" instead of as unknown."""

@@ -340,8 +340,8 @@ class Channels:
     """
 
     bad: tuple[str, ...] = ()
-    find_bad: bool = False
-    rebuild_bad: bool = False
+    find_bad: bool = True
+    rebuild_bad: bool = True
     recorded_reference: str = ""
     reference: str | tuple[str, ...] = "average"
     positions: str = "10-05"

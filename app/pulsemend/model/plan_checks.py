@@ -208,9 +208,13 @@ def check_channels(plan: Plan, marks: Marks, names: Collection[str]) -> tuple[st
         for name in used:
             _need(MarksError, key_text((table, name)), name, names)
     return tuple(
-        f"{where}: bad channel {show(name)} is not in the recording"
-        for where, bad in (("plan", channels.bad), ("marks", marks.bad))
-        for name in bad
+        f"{where}: {what} channel {show(name)} is not in the recording"
+        for where, what, named in (
+            ("plan", "bad", channels.bad),
+            ("marks", "bad", marks.bad),
+            ("marks", "good", marks.good),
+        )
+        for name in named
         if name not in names
     )
 

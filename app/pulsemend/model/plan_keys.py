@@ -328,9 +328,8 @@ PLAN_KEYS: tuple[Key, ...] = (
         words=AcrossPulses,
     ),
     Key("channels.bad", Kind.TEXTS, "channels bad in every recording", default=()),
-    # The design's default of the next two is true; it comes with the search itself.
-    Key("channels.find_bad", Kind.FLAG, "search for bad channels", default=False, now=(False,)),
-    Key("channels.rebuild_bad", Kind.FLAG, "rebuild bad channels", default=False, now=(False,)),
+    Key("channels.find_bad", Kind.FLAG, "search for bad channels in pulse-free signal", default=True),
+    Key("channels.rebuild_bad", Kind.FLAG, "rebuild bad EEG channels from the good ones", default=True),
     Key(
         "channels.recorded_reference",
         Kind.TEXT,
