@@ -62,28 +62,17 @@ def mirror_gaps(kept: Sequence[Candidate], plan: Plan, geometry: Geometry) -> tu
     tuple of MirrorGaps or None
         One for each of `kept`; None where nothing is mirrored.
     """
-    wanting = {rule.name for rule in plan.epochs.rule if rule.mirror_gaps}
-    if not wanting:
-        return (None,) * len(kept)
-    lending = {rule.name for rule in plan.epochs.rule if rule.pulse is PulseRule.ACCEPT_FILLED}
-    firsts = [geometry.first_sample(one.anchor_sample or 0.0, one.start_s) for one in kept]
-    pulses = _pulses_touching(firsts, plan, geometry)
-    lenders = [place for place, one in enumerate(kept) if pulses[place] and one.rule in lending]
-    mirrored: list[MirrorGaps | None] = []
-    for one, first, own in zip(kept, firsts, pulses, strict=True):
-        if one.rule not in wanting or own or not lenders:
-            mirrored.append(None)
-            continue
-        drawn = max((_draw(one, kept[place]), place) for place in lenders)[1]
-        onsets = tuple(nearest_sample(first + (pulse - firsts[drawn])) for pulse in pulses[drawn])
+    sides = _Sides(kept, plan, geometry)
+    mirrored: list[MirrorGaps | None] = [None] * len(kept)
+    if not sides.lending:
+        return tuple(mirrored)
+    for place in sides.receiving:
+        first = sides.firsts[place]
+        drawn = max((_draw(kept[place], kept[other]), other) for other in sides.lending)[1]
+        onsets = tuple(nearest_sample(first + (pulse - sides.firsts[drawn])) for pulse in sides.pulses[drawn])
+        latencies_s = tuple((onset - first) / geometry.recorded_hz for onset in onsets)
         lender = kept[drawn]
-        mirrored.append(
-            MirrorGaps(
-                EpochKey(lender.trial, lender.rule, lender.piece),
-                onsets,
-                tuple((onset - first) / geometry.recorded_hz for onset in onsets),
-            )
-        )
+        mirrored[place] = MirrorGaps(EpochKey(lender.trial, lender.rule, lender.piece), onsets, latencies_s)
     return tuple(mirrored)
 
 
@@ -99,21 +88,27 @@ def mirror_warnings(kept: Sequence[Candidate], plan: Plan, geometry: Geometry) -
     geometry : Geometry
         Gaps of the pulses.
     """
-    wanting = [rule.name for rule in plan.epochs.rule if rule.mirror_gaps]
-    if not wanting or any(mirror_gaps(kept, plan, geometry)):
+    sides = _Sides(kept, plan, geometry)
+    if sides.lending or not sides.receiving:
         return ()
-    firsts = [geometry.first_sample(one.anchor_sample or 0.0, one.start_s) for one in kept]
-    free = [
-        one
-        for one, own in zip(kept, _pulses_touching(firsts, plan, geometry), strict=True)
-        if one.rule in wanting and not own
-    ]
-    if not free:
-        return ()
+    rules = ", ".join(dict.fromkeys(kept[place].rule for place in sides.receiving))
     return (
-        f"mirror_gaps: {len(free)} epochs of {', '.join(wanting)} receive none, because no kept epoch of a "
+        f"mirror_gaps: {len(sides.receiving)} epochs of {rules} receive none, because no kept epoch of a "
         'rule with pulse = "accept filled" has a pulse\'s gap to take as the pattern',
     )
+
+
+class _Sides:
+    """Which of the kept epochs receive gaps, which can lend theirs, and where all of these are."""
+
+    def __init__(self, kept: Sequence[Candidate], plan: Plan, geometry: Geometry) -> None:
+        wanting = {rule.name for rule in plan.epochs.rule if rule.mirror_gaps}
+        accepting = {rule.name for rule in plan.epochs.rule if rule.pulse is PulseRule.ACCEPT_FILLED}
+        self.firsts = [geometry.first_sample(one.anchor_sample or 0.0, one.start_s) for one in kept]
+        self.pulses = _pulses_touching(self.firsts, plan, geometry) if wanting else [()] * len(kept)
+        both = [(place, one.rule, bool(self.pulses[place])) for place, one in enumerate(kept)]
+        self.receiving = [place for place, rule, has_gap in both if rule in wanting and not has_gap]
+        self.lending = [place for place, rule, has_gap in both if rule in accepting and has_gap]
 
 
 def _draw(mirrored: Candidate, lender: Candidate) -> str:
