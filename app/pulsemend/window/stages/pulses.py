@@ -36,6 +36,7 @@ from pulsemend.window.leak_card import LeakCard
 from pulsemend.window.parts import scrolling_column
 from pulsemend.window.pulse_canvas import Shown
 from pulsemend.window.pulse_picture import PulsePicture
+from pulsemend.window.repair_cost_card import RepairCostCard
 from pulsemend.window.stages.base import StagePage
 from pulsemend.window.stages.pulse_cards import (
     GAP_KEY,
@@ -91,6 +92,7 @@ class PulsesStage(StagePage):
         self.other_card = OtherGapsCard(self._edits)
         self.leak_card = LeakCard(self._edits)
         self.effect_card = EffectCard()
+        self.cost_card = RepairCostCard(self._edits, bench.theme)
         self.suggested = SuggestedGap(self._edits)
         self.gap_card.put_beside_edges(self.suggested)
         self.offered = OfferedGaps(self._edits)
@@ -105,6 +107,7 @@ class PulsesStage(StagePage):
             self.other_card,
             self.leak_card,
             self.effect_card,
+            self.cost_card,
         )
         self.settings = scrolling_column(*self._cards, name="Pulses")
         self.picture: PulsePicture = PulsePicture(bench.theme)
@@ -133,6 +136,7 @@ class PulsesStage(StagePage):
         super().hide_stage()
         self._soon.stop()
         self.leak_card.stop()
+        self.cost_card.stop()
 
     def close(self) -> None:
         """Listen to nobody and ask for nothing any more."""
@@ -143,6 +147,7 @@ class PulsesStage(StagePage):
         """Paint the picture in other colours."""
         self.picture.set_theme(theme)
         self.decay_card.set_theme(theme)
+        self.cost_card.set_theme(theme)
 
     # What changes
 
@@ -368,6 +373,7 @@ class PulsesStage(StagePage):
             self.effect_card.show_effect(None, waiting if self.bench.session.plan is not None else "")
             self.decay_card.show_waiting(self.bench.problem)
             self.leak_card.show_waiting(self.bench.problem)
+            self.cost_card.show_waiting(self.bench.problem)
             if self.bench.problem:
                 self.gap_card.show_left(None)
             # Otherwise what was left before stays until it is measured anew: nothing moves under the hand.
@@ -377,6 +383,7 @@ class PulsesStage(StagePage):
             "effect of the gaps", lambda recording: effect(recording, learned), self._take_effect
         )
         self.leak_card.show_learned(learned)
+        self.cost_card.show_learned(learned)
 
     def _show_findings(self, plan: Plan) -> None:
         ground = self._ground
