@@ -34,7 +34,7 @@ from pulsemend.session.session import Session
 from pulsemend.session.settings import Settings
 from pulsemend.session.view import Shown
 from pulsemend.window.bad_stretches import view_around
-from pulsemend.window.channel_table import WHY_PLAN, Column
+from pulsemend.window.channel_table import WHY_FOUND, WHY_PLAN, Column
 from pulsemend.window.job import Job
 from pulsemend.window.stages.recording import RecordingStage
 from pulsemend.window.theme import DARK
@@ -236,6 +236,31 @@ def choose_type(desk: Desk, name: str, steps: int) -> None:
         QTest.keyClick(box.view(), Qt.Key.Key_Down if steps > 0 else Qt.Key.Key_Up)
     QTest.keyClick(box.view(), Qt.Key.Key_Return)
     desk.qtbot.waitUntil(lambda: not isValid(box))
+
+
+def test_a_channel_found_bad_is_shown_with_its_evidence_and_called_good_again(desk: Desk) -> None:
+    """TP8 only records noise. One click says that it is good after all, one more that it is bad."""
+    desk.open()
+    desk.qtbot.waitUntil(lambda: "1 found bad (TP8)" in desk.stage.channels.note.text(), timeout=20_000)
+
+    def told(role: Qt.ItemDataRole) -> Any:
+        order = desk.stage.channels.table.order
+        return order.data(order.index(desk.names().index("TP8"), Column.BAD), role)
+
+    assert told(Qt.ItemDataRole.DisplayRole) == "found"
+    assert Qt.CheckState(told(Qt.ItemDataRole.CheckStateRole)) == Qt.CheckState.Checked
+    tip = str(told(Qt.ItemDataRole.ToolTipRole))
+    assert WHY_FOUND in tip
+    assert "loud or dead: " in tip
+    assert "limit 6 (in " in tip
+    assert "found bad" in str(told(Qt.ItemDataRole.AccessibleTextRole))
+    desk.click("TP8", Column.BAD)
+    assert (desk.bad(), desk.session.marks.good) == ((), ("TP8",))
+    assert desk.stage.channels.note.text() == "none bad"
+    assert "loud or dead: " in str(told(Qt.ItemDataRole.ToolTipRole))
+    desk.click("TP8", Column.BAD)
+    assert (desk.bad(), desk.session.marks.good) == (("TP8",), ())
+    assert "1 bad here" in desk.stage.channels.note.text()
 
 
 def test_a_type_is_chosen_by_keys_and_that_of_the_file_needs_no_mark(desk: Desk) -> None:
@@ -445,7 +470,8 @@ def test_the_spectrum_is_that_of_the_part_in_view(desk: Desk) -> None:
     assert shown.line_hz == 50.0
     assert shown.spread is not None
     assert shown.curves == ()
-    assert "8 good EEG channels · as recorded" in desk.stage.spectrum.note.text()
+    # TP8 was found bad meanwhile.
+    assert "7 good EEG channels · as recorded" in desk.stage.spectrum.note.text()
     assert "left out" in desk.stage.spectrum.note.text()
 
 

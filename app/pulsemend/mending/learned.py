@@ -12,6 +12,7 @@ from pulsemend.engine.chain import Chain
 from pulsemend.engine.estimates import Estimates
 from pulsemend.engine.fit import basis_of, fit
 from pulsemend.engine.setup import Setup
+from pulsemend.mending.channel_evidence import ChannelEvidence, channel_evidence
 from pulsemend.mending.prepare import Decision, bind_checked, decide
 from pulsemend.mending.study_log import read_study_log
 from pulsemend.model.marks import Marks
@@ -40,6 +41,11 @@ class Learned:
     estimates: Estimates
     decision: Decision
     warnings: tuple[str, ...]
+
+    @property
+    def against(self) -> dict[str, ChannelEvidence]:
+        """What speaks against channels, by name."""
+        return channel_evidence(self.setup, self.estimates)
 
     def chain(self, recording: Recording) -> Chain:
         """Build the chain on a recording that the caller alone reads."""

@@ -5,7 +5,9 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, replace
 from enum import StrEnum
+from types import MappingProxyType
 
+from pulsemend.mending.channel_evidence import NO_EVIDENCE, ChannelEvidence
 from pulsemend.mending.prepare import with_positions
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import Plan
@@ -36,6 +38,7 @@ class Condition(StrEnum):
     GOOD = "good"
     BAD = "bad"
     BAD_IN_PLAN = "bad by the plan"
+    FOUND_BAD = "found bad"
 
 
 @dataclass(frozen=True)
@@ -51,6 +54,8 @@ class ChannelRow:
     placed : Placed
     position_m : tuple of 3 float or None
     condition : Condition
+    evidence : tuple of str
+        What speaks against it in the signal, with limits; also where the marks say that it is good.
     """
 
     name: str
@@ -59,6 +64,7 @@ class ChannelRow:
     placed: Placed
     position_m: tuple[float, float, float] | None
     condition: Condition
+    evidence: tuple[str, ...] = ()
 
     @property
     def is_bad(self) -> bool:
@@ -68,10 +74,15 @@ class ChannelRow:
     @property
     def words(self) -> str:
         """Name, type and condition, for tooltips and screen readers."""
-        return f"{self.name}, {TYPE_WORDS[self.type]}, {self.condition}"
+        return ", ".join([self.name, TYPE_WORDS[self.type], self.condition, *self.evidence])
 
 
-def channel_rows(facts: RecordingFacts, plan: Plan | None, marks: Marks) -> tuple[ChannelRow, ...]:
+def channel_rows(
+    facts: RecordingFacts,
+    plan: Plan | None,
+    marks: Marks,
+    against: Mapping[str, ChannelEvidence] = MappingProxyType({}),
+) -> tuple[ChannelRow, ...]:
     """List the channels in the order of the file.
 
     Parameters
@@ -82,6 +93,8 @@ def channel_rows(facts: RecordingFacts, plan: Plan | None, marks: Marks) -> tupl
         Its bad channels are bad in every recording.
     marks : Marks
         Of this recording.
+    against : mapping of str to ChannelEvidence
+        What was learned from the signal, by name.
     """
     in_plan = frozenset(plan.channels.bad) if plan is not None else frozenset()
     placed = with_positions(facts).channels
@@ -92,7 +105,8 @@ def channel_rows(facts: RecordingFacts, plan: Plan | None, marks: Marks) -> tupl
             type_of_file=channel.type,
             placed=_placed(channel, known),
             position_m=known.position_m,
-            condition=_condition(channel.name, in_plan, marks),
+            condition=_condition(channel.name, in_plan, marks, against.get(channel.name, NO_EVIDENCE)),
+            evidence=against.get(channel.name, NO_EVIDENCE).lines,
         )
         for channel, known in zip(facts.channels, placed, strict=True)
     )
@@ -137,7 +151,9 @@ def _placed(channel: Channel, known: Channel) -> Placed:
     return Placed.UNKNOWN if known.position_m is None else Placed.BY_NAME
 
 
-def _condition(name: str, in_plan: frozenset[str], marks: Marks) -> Condition:
-    if name in in_plan:
+def _condition(name: str, in_plan: frozenset[str], marks: Marks, against: ChannelEvidence) -> Condition:
+    if name in in_plan and name not in marks.good:
         return Condition.BAD_IN_PLAN
-    return Condition.BAD if name in marks.bad else Condition.GOOD
+    if name in marks.bad:
+        return Condition.BAD
+    return Condition.FOUND_BAD if against.is_found and name not in marks.good else Condition.GOOD

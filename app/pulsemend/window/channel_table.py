@@ -48,6 +48,8 @@ _CHECKABLE = _CHOOSABLE | Qt.ItemFlag.ItemIsUserCheckable
 _EDITABLE = _CHOOSABLE | Qt.ItemFlag.ItemIsEditable
 
 IN_PLAN = "plan"
+FOUND = "found"
+WHY_FOUND = "Found bad in the signal. Take the cross away to say that it is good after all."
 WHY_PLAN = "Bad in every recording: that is said in the plan (channels.bad) and changed there, not here."
 TYPE_TIP = "Double-click or press Return to say what this channel records."
 
@@ -203,10 +205,11 @@ class BadDelegate(QStyledItemDelegate):
         if row.is_bad:
             painter.drawLine(QLineF(box.topLeft(), box.bottomRight()))
             painter.drawLine(QLineF(box.topRight(), box.bottomLeft()))
-        if row.condition is Condition.BAD_IN_PLAN:
+        who = _text(row, Column.BAD)
+        if who:
             painter.setPen(QColor(self.theme.quiet))
             beside = QRectF(plain.rect).adjusted(box.width() + 12, 0, 0, 0)
-            painter.drawText(beside, Qt.AlignmentFlag.AlignLeft | Qt.AlignmentFlag.AlignVCenter, IN_PLAN)
+            painter.drawText(beside, Qt.AlignmentFlag.AlignLeft | Qt.AlignmentFlag.AlignVCenter, who)
         painter.restore()
 
     def editorEvent(
@@ -319,7 +322,7 @@ class ChannelTable(QTableView):
         self.verticalHeader().setMinimumSectionSize(1)
         self.verticalHeader().setDefaultSectionSize(metrics.height() + 8)
         self.setMinimumHeight(_ROWS_SEEN * (metrics.height() + 8))
-        header.resizeSection(Column.BAD, metrics.ascent() + metrics.horizontalAdvance(IN_PLAN) + 18)
+        header.resizeSection(Column.BAD, metrics.ascent() + metrics.horizontalAdvance(FOUND) + 18)
         header.resizeSection(Column.TYPE, metrics.horizontalAdvance(TYPE_WORDS[ChannelType.TRIGGER]) + 18)
         places = max(metrics.horizontalAdvance(text) for text in (*Placed, _TITLES[Column.POSITION]))
         header.resizeSection(Column.POSITION, places + 18)
@@ -404,7 +407,7 @@ class ChannelTable(QTableView):
 
 def _text(row: ChannelRow, column: Column) -> str:
     if column is Column.BAD:
-        return IN_PLAN if row.condition is Condition.BAD_IN_PLAN else ""
+        return {Condition.BAD_IN_PLAN: IN_PLAN, Condition.FOUND_BAD: FOUND}.get(row.condition, "")
     if column is Column.TYPE:
         return TYPE_WORDS[row.type]
     return row.name if column is Column.NAME else str(row.placed)
@@ -416,7 +419,8 @@ def _tip(row: ChannelRow, column: Column) -> str:
     if column is Column.TYPE:
         of_file = "" if row.type is row.type_of_file else f" The file says {TYPE_WORDS[row.type_of_file]}."
         return TYPE_TIP + of_file
-    return row.words
+    why = [WHY_FOUND] if row.condition is Condition.FOUND_BAD and column is Column.BAD else []
+    return "\n".join([*why, f"{row.name}, {TYPE_WORDS[row.type]}, {row.condition}", *row.evidence])
 
 
 def _sort_key(row: ChannelRow, column: Column) -> tuple[Any, ...]:

@@ -31,17 +31,24 @@ class MarkActs:
         return self._bench.session
 
     def set_bad(self, names: frozenset[str], *, bad: bool) -> None:
-        """Mark channels bad in this recording, or take that back."""
+        """Mark channels bad in this recording, or take that back; what was found bad becomes good by hand."""
         session = self._session
-        plan_wide = frozenset(session.plan.channels.bad if session.plan else ()) & names
+        good = frozenset(session.marks.good)
+        plan_wide = (frozenset(session.plan.channels.bad if session.plan else ()) & names) - good
         if plan_wide and not bad:
             text = f"{', '.join(sorted(plan_wide))}: bad in every recording by the plan; change it there"
             session.say(Message(Level.NOTE, text))
         before = session.marks.bad
         kept = tuple(name for name in before if name not in names)
         after = (*kept, *sorted(names - set(kept) - plan_wide)) if bad else kept
+        against = {} if self._bench.learned is None else self._bench.learned.against
+        found = {name for name in names - plan_wide if name in against and against[name].is_found}
+        good = good - names if bad else good | found
         listed = ", ".join(sorted(names)[:3]) + (" ..." if len(names) > 3 else "")
-        session.edit_marks(f"{listed} {'bad' if bad else 'not bad'}", replace(session.marks, bad=after))
+        session.edit_marks(
+            f"{listed} {'bad' if bad else 'not bad'}",
+            replace(session.marks, bad=after, good=tuple(sorted(good))),
+        )
 
     def toggle_bad(self) -> None:
         """Mark the picked channels bad, or not bad if all are."""

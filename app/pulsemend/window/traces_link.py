@@ -73,8 +73,15 @@ def overlays(session: Session, learned: Learned | None) -> Overlays:
             tuple(s[2] or "bad" for s in stretches),
         ),
         epochs=_epoch_bands(learned),
-        bad=frozenset(marks.bad) | frozenset(plan.channels.bad if plan is not None else ()),
+        bad=_bad(plan, marks, learned),
     )
+
+
+def _bad(plan: Plan | None, marks: Marks, learned: Learned | None) -> frozenset[str]:
+    """Channels that are bad by the plan or the search, unless the marks say good; and by the marks."""
+    in_plan = plan.channels.bad if plan is not None else ()
+    found = () if learned is None else (name for name, one in learned.against.items() if one.is_found)
+    return (frozenset((*in_plan, *found)) - frozenset(marks.good)) | frozenset(marks.bad)
 
 
 def _events(session: Session, learned: Learned | None) -> Events:

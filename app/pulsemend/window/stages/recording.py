@@ -129,6 +129,8 @@ class ChannelsCard(Card):
         theirs = [row.name for row in rows if row.condition is Condition.BAD_IN_PLAN]
         counts = [f"{ours} bad here"] if ours else []
         counts += [f"{len(theirs)} bad by the plan"] if theirs else []
+        found = [row.name for row in rows if row.condition is Condition.FOUND_BAD]
+        counts += [f"{len(found)} found bad ({listed(found)})"] if found else []
         self.note.setText(", ".join(counts) or "none bad")
         self.in_plan.setText(f"{listed(theirs)}: {WHY_PLAN[0].lower()}{WHY_PLAN[1:]}" if theirs else "")
         self.in_plan.setVisible(bool(theirs))
@@ -178,7 +180,7 @@ class RecordingStage(StagePage):
         self.follow(self._show_view, Changed.VIEW)
         self.follow(self.stretches.show_marks, Changed.RECORDING, Changed.MARKS)
         self.follow(self.stretches.show_selected, Changed.VIEW)
-        self.hear(bench.learned_changed, self.spectrum.request)
+        self.hear(bench.learned_changed, self._show_channels)
         self._show_recording()
 
     def close(self) -> None:
@@ -252,7 +254,9 @@ class RecordingStage(StagePage):
     def _show_channels(self) -> None:
         session = self.bench.session
         opened = session.recording
-        rows = channel_rows(opened.facts, session.plan, session.marks) if opened is not None else ()
+        learned = self.bench.learned
+        against = {} if learned is None else learned.against
+        rows = channel_rows(opened.facts, session.plan, session.marks, against) if opened is not None else ()
         if rows != self._rows:
             self._rows = rows
             self.facts.show_types(rows)
