@@ -107,7 +107,7 @@ def test_decisions_about_what_does_not_exist_are_warned_of(study: Study, tmp_pat
 
 
 def test_bad_channels_stay_in_the_set_and_out_of_the_reference(study: Study, tmp_path: Path) -> None:
-    plan = changed(PLAN, ("[epochs]", '[channels]\nbad = ["O1"]\n[epochs]'))
+    plan = changed(PLAN, ("[epochs]", '[channels]\nbad = ["O1"]\nrebuild_bad = false\n[epochs]'))
     written = SetOnDisk(run_mend(study.recording, plan, tmp_path, 'bad = ["TP8"]\n').folder)
     table = written.table("channels.tsv")
     assert {n: s for n, s in zip(table["name"], table["status"], strict=True) if s != "good"} == {
@@ -163,11 +163,34 @@ def test_pulse_removed_by_hand_is_neither_repaired_nor_an_anchor(study: Study, t
     assert fate_of(after.folder, "after2", 3) == Fate.NO_ANCHOR
 
 
+@pytest.mark.parametrize(
+    ("marks", "status", "note"),
+    [
+        (None, "rebuilt", "found: fast noise"),
+        ('good = ["TP8"]\n', "good", "n/a"),
+        ('bad = ["TP8"]\n', "rebuilt", "named bad in the marks"),
+    ],
+)
+def test_channel_found_bad_is_rebuilt_unless_the_marks_say_good(
+    marks: str | None, status: str, note: str, study: Study, tmp_path: Path
+) -> None:
+    written = SetOnDisk(run_mend(study.recording, PLAN, tmp_path, marks).folder)
+    table = written.table("channels.tsv")
+    place = table["name"].index("TP8")
+    assert table["status"][place] == status
+    assert table["status_description"][place].startswith(note)
+    assert {*table["status"][:place], *table["status"][place + 1 :]} == {"good"}
+    assert written.hdf5("channels/status").tolist() == list(table["status"])
+    # One less for the reference, one less where a channel is made of the others.
+    assert written.attributes()["rank"] == len(table["name"]) - 1 - (status == "rebuilt")
+
+
 def test_gap_of_one_channel_in_this_recording_wins(study: Study, tmp_path: Path) -> None:
     marks = "[gaps_ms]\nP3 = [-2.0, 14.0]\nO1 = [-2.0, 40.0]\n"
+    plan = changed(PLAN, ("[epochs]", "[channels]\nfind_bad = false\n[epochs]"))
     counts = {}
     for name, text in (("plan", None), ("marks", marks)):
-        written = SetOnDisk(run_mend(study.recording, PLAN, tmp_path / name, text).folder)
+        written = SetOnDisk(run_mend(study.recording, plan, tmp_path / name, text).folder)
         first = written.hdf5("replaced")[written.hdf5("labels/name") == "after2"][0]
         counts[name] = dict(zip(written.hdf5("channels/name"), first.sum(axis=1).tolist(), strict=True))
     usual = counts["plan"]["C3"]
