@@ -89,6 +89,18 @@ def test_exceptions_have_latencies_of_their_own() -> None:
     assert own.earliest_s == pytest.approx(0.026)
 
 
+def test_bad_channels_count_in_no_sum() -> None:
+    found = recording()
+    stored = found.stored.copy()
+    stored[1] *= 30.0
+    loud = ArrayRecording(stored, RATE_HZ, found.facts.markers)
+    the_plan = replace(a_plan(), channels=replace(a_plan().channels, bad=("E2",)))
+    cost, usual = cost_of(loud, the_plan, config=PLAIN), cost_of(found, the_plan, config=PLAIN)
+    assert cost.methods[0].in_gap == usual.methods[0].in_gap
+    assert cost.spread_v[1] > 20.0 * cost.spread_v[0]
+    assert cost.methods[0].channel_most_v[1].max() > 5.0 * cost.methods[0].channel_most_v[0].max()
+
+
 def test_errors_in_the_gap_are_those_of_lines_drawn_by_hand() -> None:
     # In white noise a line between two samples errs by the noise and what the two samples bring.
     rng = np.random.default_rng(6)
@@ -122,6 +134,12 @@ def test_rhythms_suffer_at_the_pulse_and_not_long_after_it() -> None:
         assert 0.0 <= at.phase_most.value <= np.pi
         assert after.amplitude.value < 0.2 * at.amplitude.value
         assert after.phase.value < 0.2 * at.phase.value
+    at = rhythms["alpha", 0.0]
+    assert any(
+        f"alpha {100 * at.amplitude.value:.0f} % and {np.degrees(at.phase.value):.0f}\u00b0, up to "
+        f"{100 * at.amplitude_most.value:.0f} % and {np.degrees(at.phase_most.value):.0f}\u00b0" in words
+        for words in cost.words
+    )
     # The gap of 17 ms is a larger part of a faster rhythm's period.
     assert rhythms["gamma", 0.0].phase.value > rhythms["theta", 0.0].phase.value
 
@@ -137,7 +155,8 @@ def test_responses_far_from_the_gap_come_back_whole() -> None:
     for one in cost.methods[0].responses:
         assert one.ratio.value == pytest.approx(1.0, abs=1e-6)
         assert one.ratio.high - one.ratio.low < 1e-6
-    assert any("test responses" in words for words in cost.words)
+    assert any("with test responses of 3 to 9" in words for words in cost.words)
+    assert any(words.endswith("ms: 100 % (100 to 100).") for words in cost.words)
 
 
 def test_methods_whose_intervals_overlap_are_called_equal() -> None:

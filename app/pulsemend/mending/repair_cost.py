@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsemend.engine.bad_channels import found_bad
 from pulsemend.engine.setup import Setup
 from pulsemend.engine.transplant import (
     RHYTHM_S,
@@ -205,8 +206,8 @@ def repair_cost(
     bench = yield from prepare(recording, setup, learned.estimates, methods, config)
     truth, errors = yield from bench.measure(methods)
     yield Progress(_STAGE, 0, len(errors))
-    spread_v = np.sqrt(np.median(truth.variance_v2, axis=0))
-    judge = _Judge(setup, truth, spread_v, config.seed)
+    bad = setup.bad | found_bad(setup, learned.estimates.channels)
+    judge = _Judge(setup, truth, bad, config.seed)
     costs = []
     for done, of_method in enumerate(errors):
         costs.append((yield from judge.cost(of_method, done, len(errors))))
@@ -218,7 +219,7 @@ def repair_cost(
         names=setup.names,
         latencies_s=truth.latencies_s,
         gap_s=gap_s,
-        spread_v=spread_v,
+        spread_v=judge.spread_v,
         methods=found,
         words=_words(setup, config, bench.n_gaps, found),
     )
@@ -227,10 +228,11 @@ def repair_cost(
 class _Judge:
     """Sums up the errors of one method after another against the same truth."""
 
-    def __init__(self, setup: Setup, truth: Truth, spread_v: Floats, seed: int) -> None:
-        self._setup, self._truth, self._spread_v = setup, truth, spread_v
+    def __init__(self, setup: Setup, truth: Truth, bad: NDArray[np.bool_], seed: int) -> None:
+        self._setup, self._truth = setup, truth
+        self.spread_v = spread_v = np.sqrt(np.median(truth.variance_v2, axis=0))
         extra = len(setup.names) - setup.used.size
-        good = np.append(setup.eeg & ~setup.bad, np.ones(extra, np.bool_))
+        good = np.append(setup.eeg & ~bad, np.ones(extra, np.bool_))
         # A recording without EEG is judged by what there is; a flat channel has no spread to compare with.
         self._good = np.flatnonzero((good if good.any() else ~good) & (spread_v > 0.0))
         self._counts = draw_counts(len(truth.variance_v2), N_DRAWS, seed)
@@ -253,7 +255,7 @@ class _Judge:
         of_good = size_v[:, good]
         median_v, most_v = (_over_all(of_good, share) for share in (0.5, MOST))
         yield Progress(_STAGE, done + 0.2, total)
-        most_share = _over_all(of_good / self._spread_v[good, None].astype(np.float32), MOST)
+        most_share = _over_all(of_good / self.spread_v[good, None].astype(np.float32), MOST)
         channel_most_v = np.quantile(size_v, MOST, axis=0).astype(np.float64)
         yield Progress(_STAGE, done + 0.4, total)
         times_s = truth.latencies_s
@@ -265,7 +267,7 @@ class _Judge:
             if self._leaves(BANDS[b]):
                 rhythms.append(self._rhythm(errors, b, r))
             yield Progress(_STAGE, done + 0.5 + 0.5 * place / (len(BANDS) * len(RHYTHM_S)), total)
-        spread_v = np.maximum(self._spread_v, np.finfo(np.float64).tiny)
+        spread_v = np.maximum(self.spread_v, np.finfo(np.float64).tiny)
         return MethodCost(
             method=errors.method,
             in_gap=Interval(*(math.sqrt(v) for v in (mean_square.value, mean_square.low, mean_square.high))),
@@ -342,6 +344,7 @@ def _words(
         f"({v_to_uv(own.low):.1f} to {v_to_uv(own.high):.1f}), root mean square."
     )
     words.append(_earliest_words(costs[0]))
+    words += [*_rhythm_words(costs[0]), *_response_words(costs[0])]
     if setup.side is Side.BOTH:
         words.append(
             "Samples after the pulse shaped the fill, so that the gap holds something of what follows."
@@ -361,6 +364,33 @@ def _earliest_words(cost: MethodCost) -> str:
     if cost.earliest_s is None:
         return f"No latency that was looked at is trustworthy: there is none {rule}."
     return f"Earliest trustworthy latency: {s_to_ms(cost.earliest_s):.0f} ms, the first {rule}."
+
+
+def _rhythm_words(cost: MethodCost) -> list[str]:
+    at_pulse = [one for one in cost.rhythms if one.latency_s == RHYTHM_S[0]]
+    if not at_pulse:
+        return []
+    told = "; ".join(
+        f"{one.band.name} {100 * one.amplitude.value:.0f} % and {math.degrees(one.phase.value):.0f}\u00b0, "
+        f"up to {100 * one.amplitude_most.value:.0f} % and {math.degrees(one.phase_most.value):.0f}\u00b0"
+        for one in at_pulse
+    )
+    return [
+        "Errors of amplitude and phase at the pulse, in the middle and up to what "
+        f"{100 * MOST:.0f} % stay below: {told}."
+    ]
+
+
+def _response_words(cost: MethodCost) -> list[str]:
+    known = [one for one in cost.responses if math.isfinite(one.ratio.value)]
+    if not known:
+        return []
+    least = min(known, key=lambda one: one.ratio.value)
+    ratio = least.ratio
+    return [
+        f"Of test responses least comes back at {s_to_ms(least.latency_s):.0f} ms: {100 * ratio.value:.0f} % "
+        f"({100 * ratio.low:.0f} to {100 * ratio.high:.0f})."
+    ]
 
 
 def _compared(costs: Sequence[MethodCost]) -> list[str]:

@@ -265,6 +265,8 @@ class RepairCostPlot(QWidget):
         painter.setPen(QPen(QColor(self._theme.attention), 1.4, Qt.PenStyle.DashLine))
         painter.drawLine(QPointF(x, area.top()), QPointF(x, area.bottom()))
         text = f"trustworthy from {s_to_ms(earliest_s):.0f} ms"
+        if x + metrics.horizontalAdvance(text) + 8 > area.right():
+            text = f"{s_to_ms(earliest_s):.0f} ms"
         box = QRectF(x + 4, area.top(), metrics.horizontalAdvance(text) + 4, metrics.height())
         if box.right() > area.right():
             box.moveRight(x - 4)
