@@ -52,6 +52,8 @@ window_ms = [-2.0, 14.0]
 fill = "{fill}"
 [channels]
 recorded_reference = ""
+find_bad = false
+rebuild_bad = false
 [epochs]
 length_s = 1.0
 """
