@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -27,7 +28,7 @@ from support.engine_cases import NO_PULSES, UNTOUCHED, plan
 from support.faulty_channels import BROKEN, RATE_HZ, broken, clean
 
 WINDOW_MS = (-2.0, 14.0)
-FOUND = {"find_bad": True, "rebuild_bad": True}
+FOUND: dict[str, Any] = {"find_bad": True, "rebuild_bad": True}
 
 
 def learned(

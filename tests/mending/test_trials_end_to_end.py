@@ -231,9 +231,9 @@ def test_blocks_set_trials_aside_and_the_ledger_adds_up(tmp_path: Path) -> None:
 
 
 def test_a_code_of_blocks_that_never_occurs_is_said(recording: Path, tmp_path: Path) -> None:
-    plan = changed(PLAN, ("[labels]", '[blocks]\ncodes = ["blok"]\n[labels]'))
+    plan = changed(PLAN, ("[labels]", '[blocks]\ncodes = ["rest"]\n[labels]'))
     warnings = dry(recording, plan, tmp_path).warnings
-    assert "codes that the plan names but the recording lacks: blok" in warnings
+    assert "codes that the plan names but the recording lacks: rest" in warnings
 
 
 @pytest.mark.parametrize("choose", ["spread", "drawn"])

@@ -87,9 +87,9 @@ def stretches(
     edges = [(start, stop) for start, stop in edges if start - lo >= least and hi - stop >= least]
     starts = [lo, *(stop for _, stop in edges)]
     stops = [*(start for start, _ in edges), hi]
-    befores = [lo, *(start for start, _ in edges)]
-    afters = [*(stop for _, stop in edges), hi]
-    return [Stretch(*one) for one in zip(starts, stops, befores, afters, strict=True)]
+    gaps_before = [lo, *(start for start, _ in edges)]
+    gaps_after = [*(stop for _, stop in edges), hi]
+    return [Stretch(*one) for one in zip(starts, stops, gaps_before, gaps_after, strict=True)]
 
 
 def overlapping(found: Sequence[Stretch], first: int, stop: int) -> list[tuple[int, Stretch]]:
