@@ -1,8 +1,8 @@
 """Pass-through epochs equal the reader library's, through the whole of `mend` and back from both containers.
 
-Nothing is done to the samples (filters, line, pulses, bad channels, limits off; rate and reference as recorded),
-so the outside reference is `mne.Epochs` on the same file, its tmax one sample before the end: "double" equal to
-the last bit, "single" as float32.
+Nothing is done to the samples (filters, line, pulses, bad channels, limits off; rate and reference as
+recorded), so the outside reference is `mne.Epochs` on the same file, its tmax one sample before the end:
+"double" equal to the last bit, "single" as float32.
 """
 
 from __future__ import annotations
