@@ -43,6 +43,9 @@ class Estimates:
         Onsets of stimuli, measured in a sensor's channel, where the plan wants it.
     decay : DecayEstimates or None
         None where the plan wants none.
+    level_left_v : array, shape (n_used,), or None
+        How far from its level before a channel is at its gap's end, from `engine.level_left`; None without
+        gaps, or where a decay is subtracted there.
     channels : Judgement or None
         What speaks against each used channel; None where bad ones are not looked for, or cannot be told.
     notes : tuple of str
@@ -58,6 +61,7 @@ class Estimates:
     unmarked: tuple[int, ...] = ()
     stimulus_onsets: tuple[OnsetShift, ...] = ()
     decay: DecayEstimates | None = None
+    level_left_v: NDArray[np.float64] | None = None
     channels: Judgement | None = None
     notes: tuple[str, ...] = ()
     rests_on: dict[str, str] = field(default_factory=dict)
@@ -95,6 +99,8 @@ class Estimates:
                 file["autocovariance"] = self.autocovariance
             if self.decay is not None:
                 self.decay.save(file.create_group("decay"))
+            if self.level_left_v is not None:
+                file["level_left_v"] = self.level_left_v
             if self.channels is not None:
                 save_judgement(self.channels, file.create_group("channels"))
 
@@ -122,6 +128,7 @@ class Estimates:
                     unmarked=tuple(int(n) for n in file["unmarked"][()]),
                     stimulus_onsets=_onset_shifts(str(file.attrs.get("stimulus_onsets", "[]"))),
                     decay=DecayEstimates.load(file["decay"]) if "decay" in file else None,
+                    level_left_v=file["level_left_v"][()] if "level_left_v" in file else None,
                     channels=load_judgement(file["channels"]) if "channels" in file else None,
                     notes=tuple(json.loads(file.attrs["notes"])),
                     rests_on=json.loads(file.attrs["rests_on"]),

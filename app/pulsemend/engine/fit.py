@@ -11,6 +11,7 @@ from pulsemend.engine.bad_channels import ChannelSearch
 from pulsemend.engine.decay import learn_decay
 from pulsemend.engine.decay_stretches import BackgroundSum
 from pulsemend.engine.estimates import Estimates, basis
+from pulsemend.engine.level_left import level_left
 from pulsemend.engine.onsets import OnsetShift, measure_onsets
 from pulsemend.engine.pulses import align_pulse, limits_of, seek_pulses, with_shape
 from pulsemend.engine.reading import read_stored
@@ -19,7 +20,7 @@ from pulsemend.engine.setup import ExpectedPulse, Setup
 from pulsemend.errors import InputError
 from pulsemend.model.epochs import nearest_sample
 from pulsemend.model.recording import Recording
-from pulsemend.model.vocabulary import Decay, Fill
+from pulsemend.model.vocabulary import Decay, Fill, PulseState
 from pulsemend.progress import Progress, Work
 from pulsemend.signal.autocovariance import AutocovarianceSum
 from pulsemend.signal.fills import lags_needed
@@ -122,6 +123,10 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         decay = yield from learn_decay(
             recording, setup, [pulse.sample for pulse in pulses], background.result()
         )
+    left_v = None
+    if setup.groups and setup.decay is Decay.NONE:
+        seen = [pulse.sample for pulse in pulses if pulse.state is not PulseState.MARKED_ONLY]
+        left_v = level_left(recording, setup, seen)
     return Estimates(
         offset=_offset(setup, means),
         pulses=tuple(pulses),
@@ -130,6 +135,7 @@ def fit(recording: Recording, setup: Setup) -> Work[Estimates]:
         unmarked=unmarked,
         stimulus_onsets=onsets,
         decay=decay,
+        level_left_v=left_v,
         channels=None if search is None else search.result(),
         notes=notes,
         rests_on=basis_of(setup),
@@ -242,6 +248,7 @@ def basis_of(setup: Setup) -> dict[str, str]:
         "usual_steepness": basis(*quiet, setup.bad),
         "autocovariance": basis(*quiet, setup.flank, setup.fill),
         "decay": basis(*quiet, setup.decay_least_v, setup.bad) if decay else basis("none"),
+        "level_left_v": basis(*quiet, setup.bad) if not decay else basis("none"),
         "channels": basis(*quiet, setup.bad, setup.channels, setup.line_hz)
         if setup.finds_bad
         else basis("none"),

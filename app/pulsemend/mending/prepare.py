@@ -15,6 +15,7 @@ from pulsemend.engine.onsets import OnsetShift, shifted
 from pulsemend.engine.setup import Setup, bind
 from pulsemend.errors import InputError, LogError, NoEpochs
 from pulsemend.mending.decay_words import decay_words
+from pulsemend.mending.gap_findings import gap_warnings
 from pulsemend.mending.pulse_findings import pulse_warnings
 from pulsemend.mending.study_log import NO_LOG, StudyLog, read_study_log
 from pulsemend.model.epochs import Candidate, Trials, nearest_sample
@@ -38,6 +39,7 @@ from pulsemend.readers.names import standard_positions
 from pulsemend.readers.opening import open_recording
 from pulsemend.signal.gaps import window_to_samples
 from pulsemend.trials.balance import balanced
+from pulsemend.trials.baselines import baseline_warnings
 from pulsemend.trials.blocks import with_blocks
 from pulsemend.trials.candidates import GapSpan, Geometry, candidates, set_order, stale_decisions
 from pulsemend.trials.effective import effective_markers
@@ -293,11 +295,13 @@ def decide(setup: Setup, estimates: Estimates, plan: Plan, marks: Marks, log: St
         *_trial_warnings(trials, facts, plan),
         *notes,
         *pulse_warnings(setup, estimates),
+        *gap_warnings(setup, estimates),
         *decay_words(setup, estimates),
         *stale_decisions(trials, plan, geometry),
         *_stale_pulses(facts, plan, marks),
         *matched.warnings,
         *mirror_warnings(kept, plan, geometry),
+        *baseline_warnings(kept, trials, plan, geometry),
     ]
     return Decision(
         trials=trials,

@@ -250,6 +250,7 @@ def _adapted(
         offset=offset,
         pulses=tuple(sorted(pulses, key=lambda one: one.sample)),
         decay=None,
+        level_left_v=None,
         rests_on={},
     )
     if earlier.rests_on.get("decay") == basis_of(setup)["decay"] and adapted.onsets == earlier.onsets:

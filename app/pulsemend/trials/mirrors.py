@@ -105,7 +105,7 @@ class _Sides:
         wanting = {rule.name for rule in plan.epochs.rule if rule.mirror_gaps}
         accepting = {rule.name for rule in plan.epochs.rule if rule.pulse is PulseRule.ACCEPT_FILLED}
         self.firsts = [geometry.first_sample(one.anchor_sample or 0.0, one.start_s) for one in kept]
-        self.pulses = _pulses_touching(self.firsts, plan, geometry) if wanting else [()] * len(kept)
+        self.pulses = pulses_touching(self.firsts, plan, geometry) if wanting else [()] * len(kept)
         both = [(place, one.rule, bool(self.pulses[place])) for place, one in enumerate(kept)]
         self.receiving = [place for place, rule, has_gap in both if rule in wanting and not has_gap]
         self.lending = [place for place, rule, has_gap in both if rule in accepting and has_gap]
@@ -116,8 +116,18 @@ def _draw(mirrored: Candidate, lender: Candidate) -> str:
     return hashlib.sha256(" < ".join(names).encode()).hexdigest()
 
 
-def _pulses_touching(firsts: Sequence[float], plan: Plan, geometry: Geometry) -> list[tuple[int, ...]]:
-    """Onsets of the pulses of which a gap touches each epoch, by the reach of the set's `replaced` marks."""
+def pulses_touching(firsts: Sequence[float], plan: Plan, geometry: Geometry) -> list[tuple[int, ...]]:
+    """Find the onsets of the pulses of which a gap touches each epoch, by the reach of `replaced` marks.
+
+    Parameters
+    ----------
+    firsts : sequence of float
+        Recorded samples of the epochs' first output samples, from `Geometry.first_sample`.
+    plan : Plan
+        The length of epochs.
+    geometry : Geometry
+        Gaps of the pulses.
+    """
     gaps = sorted(geometry.gaps)
     starts = [gap.start for gap in gaps]
     longest = max((gap.stop - gap.start for gap in gaps), default=0)
