@@ -211,6 +211,13 @@ def test_each_choice_about_gaps_has_its_count_beside_it(qtbot: QtBot, page: Epoc
     assert evidence["accept filled"].text() == "keeps 2"
 
 
+def test_columns_of_the_log_are_offered_as_soon_as_they_are_known(page: EpochsStage) -> None:
+    """A log is read after the rule is shown."""
+    assert "log." not in page.editor.known_labels.text()
+    page.editor.show_log_columns(["log.correct", "log.reaction_s"])
+    assert "log.correct, log.reaction_s. Or other(column)" in page.editor.known_labels.text()
+
+
 def test_add_copy_move_remove(qtbot: QtBot, page: EpochsStage) -> None:
     def names() -> list[str]:
         plan = page.bench.session.plan

@@ -214,6 +214,7 @@ class RuleEditor(Card):
         self._edit = edit
         self._rule: EpochRule | None = None
         self._place = 0
+        self._plan: Plan | None = None
         self._log_columns: tuple[str, ...] = ()
         self.name = QLineEdit()
         self.name.setAccessibleName("Name of the rule")
@@ -258,7 +259,7 @@ class RuleEditor(Card):
             Which rule, from 0.
         """
         rule = plan.epochs.rule[place]
-        self._rule, self._place = rule, place
+        self._rule, self._place, self._plan = rule, place, plan
         slots = [
             (slot.slot, slot.slot if slot.slot == slot.role else f"{slot.slot} ({slot.role})")
             for slot in expanded_slots(plan)
@@ -281,6 +282,8 @@ class RuleEditor(Card):
     def show_log_columns(self, columns: Sequence[str]) -> None:
         """Offer the columns of the log, which only the log knows, as labels from now on."""
         self._log_columns = tuple(columns)
+        if self._plan is not None:
+            self.known_labels.setText(_offered(self._plan, self._log_columns))
 
     def show_kept(self, kept: Mapping[PulseRule, int] | None) -> None:
         """Show how many epochs each choice about gaps keeps; None while that is not known."""
