@@ -265,6 +265,7 @@ def test_a_fault_is_gone_to_and_its_cure_accepted_and_taken_back(
     assert in_view(page, cue_s)
     assert "comes again" in page.faults.what.text()
     click(page.faults.accept)
+    assert page.faults.table.hasFocus()
     assert page.bench.session.marks.cures_accepted == ("doubled marker S 12",)
     assert page.bench.session.next_undo == "Accept the cure of doubled marker S 12"
     wait(qtbot, page)
@@ -283,6 +284,7 @@ def test_a_refused_cure_is_decided_too(qtbot: QtBot, page: MarkersStage) -> None
     fault(page, "zero codes of S")
     click(page.faults.refuse)
     wait(qtbot, page)
+    assert page.faults.table.hasFocus()  # not the opposite decision, which the next Space would take
     assert page.faults.model.text(0, 0) == "refused"
     assert "zero codes" not in state(page)[1]
     assert ["S 0", "other", str(3 * N_TRIALS)] in cells(page)

@@ -189,5 +189,5 @@ class FaultsCard(Card):
         self._hands.change_marks(
             f"{verb[verdict]} the cure of {fault.key}", with_verdict(marks, fault.key, verdict)
         )
-        if not self.accept.isEnabled() and not self.back.isEnabled():
-            self.table.setFocus(Qt.FocusReason.OtherFocusReason)
+        # The button just pressed is off now; left alone, the focus would go to the opposite decision.
+        self.table.setFocus(Qt.FocusReason.OtherFocusReason)
