@@ -199,6 +199,28 @@ def test_doubled_start_is_a_doubt() -> None:
     assert len(found.extra) == 1
 
 
+def test_a_doubled_last_marker_is_no_doubt_of_the_trial_after_it() -> None:
+    """Both stand before the second trial begins: only the first can end with either."""
+    found = match(
+        f"{WHOLE.replace('T@6.2', 'T@6.2 T@6.21')} {shifted(WHOLE, 20).replace('A@22.5', 'A@22.5 A@22.51')}"
+    )
+    first, second = found.trials
+    (doubt,) = first.doubts
+    assert doubt.startswith("pulse2 at ")
+    assert sorted(re.findall(r"[0-9.]+ s", doubt)) == ["6.200 s", "6.210 s"]
+    (doubt,) = second.doubts
+    assert doubt.startswith("cue1 at ")
+    assert sorted(re.findall(r"[0-9.]+ s", doubt)) == ["22.500 s", "22.510 s"]
+
+
+def test_the_times_in_a_doubt_tell_samples_apart() -> None:
+    at = {"L": 5000, "A": 12500, "T": 16000, "P": 22500}
+    markers = [Marker(sample, code) for code, sample in at.items()] + [Marker(12502, "A")]
+    found = match_trials(sorted(markers, key=lambda one: one.sample), PLAN, 5000.0)
+    (doubt,) = found.trials[0].doubts
+    assert sorted(re.findall(r"[0-9.]+ s", doubt)) == ["2.5000 s", "2.5004 s"]
+
+
 def test_a_trial_broken_off_is_an_incomplete_trial() -> None:
     found = match(f"L@1 A@2.5 {shifted(WHOLE, 10)} L@21 {shifted(WHOLE, 30)} L@41 A@42.5 T@43.2")
     assert [set(trial.markers) for trial in found.trials] == [

@@ -69,7 +69,10 @@ def match_trials(
     placed = align(events, ways)
     begun = _begun(known, placed, ways, rate_hz)
     taken = {place for one in (*placed, *begun) for place in one.places.values()}
-    trials = [_trial(one, known, rate_hz) for one in (*placed, *begun)]
+    trials = [
+        _trial(one, known, rate_hz, before) for before, one in zip((None, *placed), placed, strict=False)
+    ]
+    trials += [_trial(one, known, rate_hz) for one in begun]
     trials.sort(key=lambda trial: trial.first_sample)
     numbered = [replace(trial, number=number, place=number) for number, trial in enumerate(trials, start=1)]
     counts = Counter(marker.code for marker in markers)
@@ -106,28 +109,43 @@ def _known(markers: Sequence[Marker], plan: Plan, marks: Marks, found: Iterable[
     return sorted(kept, key=lambda one: (one.marker.sample, order.get(one.role, len(order))))
 
 
-def _trial(placed: Placed, known: Sequence[_Known], rate_hz: float) -> Trial:
+def _trial(placed: Placed, known: Sequence[_Known], rate_hz: float, before: Placed | None = None) -> Trial:
     return Trial(
         number=0,
         markers={name: known[place].marker for name, place in placed.places.items()},
         missing=placed.missing,
         kind=placed.kind,
-        doubts=_doubts(placed, known, rate_hz) if placed.is_doubtful else (),
+        doubts=_doubts(placed, known, rate_hz, before) if placed.is_doubtful else (),
     )
 
 
-def _doubts(placed: Placed, known: Sequence[_Known], rate_hz: float) -> tuple[str, ...]:
+def _doubts(
+    placed: Placed, known: Sequence[_Known], rate_hz: float, before: Placed | None
+) -> tuple[str, ...]:
     """Say where another explanation is as good."""
-
-    def at(place: int) -> str:
-        return f"{known[place].marker.sample / rate_hz:.3f} s"
-
     phrases = [f"a trial of kind {kind} as well" for kind in placed.other_kinds]
-    for name, places in placed.others.items():
+    start = min(placed.places.values())
+    for name, found in placed.others.items():
         own = placed.places.get(name)
-        others = " or ".join(map(at, places))
-        phrases.append(f"{name} perhaps at {others}" if own is None else f"{name} at {at(own)} or {others}")
+        # What may end the trial before, and stands before this one begins, is a doubt of that trial alone.
+        of_before = () if before is None else before.others.get(name, ())
+        places = [place for place in found if place >= start or place not in of_before]
+        if not places:
+            continue
+        every = places if own is None else [own, *places]
+        times = " or ".join(_told_apart([known[place].marker.sample / rate_hz for place in every]))
+        phrases.append(f"{name} {'perhaps ' if own is None else ''}at {times}")
     return tuple(phrases) or ("its markers may belong to a neighbouring trial, or to none",)
+
+
+def _told_apart(times_s: Sequence[float]) -> list[str]:
+    """Write times to the millisecond; where that makes two of them one, more finely."""
+    texts: list[str] = []
+    for digits in (3, 4, 5):
+        texts = [f"{time_s:.{digits}f} s" for time_s in times_s]
+        if len(set(texts)) == len(texts):
+            break
+    return texts
 
 
 def _begun(
