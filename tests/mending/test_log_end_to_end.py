@@ -242,7 +242,7 @@ def test_rows_lost_and_added_are_listed_and_cost_only_themselves(tmp_path: Path)
 
     prepared = dry(write(tmp_path / "in", log=changed_rows(fault)), PLAN, tmp_path / "study")
     words = " ".join(prepared.warnings)
-    assert "23 of 24 rows joined with 23 of 24" in words
+    assert "23 of 24 rows joined with 23 of 24 slots of the trials, by time" in words
     assert "Rows without a trial: 11." in words
     assert "Without a row: trial 3 cue2." in words
     for number, trial in enumerate(prepared.trials.trials, start=1):

@@ -64,7 +64,7 @@ def join_log(log: LogTimes, trials: Sequence[TrialTime], per_trial: int = 1) -> 
         refusal = draft.by_time()
     else:
         refusal = draft.by_place()
-    return draft.finished() if not refusal else _nothing(log, trials, refusal, draft.doubtful)
+    return draft.finished(per_trial) if not refusal else _nothing(log, trials, refusal, draft.doubtful)
 
 
 def _nothing(
@@ -298,7 +298,7 @@ class _Draft:
                 self.pairs[lonely[0]] = lonely[1]
                 self.by_order.append(lonely)
 
-    def finished(self) -> LogJoin:
+    def finished(self, per_trial: int) -> LogJoin:
         """Add what is left over, and the words."""
         used_rows, used_trials = self.used(0), self.used(1)
         join = LogJoin(
@@ -311,7 +311,7 @@ class _Draft:
             by_order=tuple(self.by_order),
             words="",
         )
-        return joined_words(join, self.log, self.trials)
+        return joined_words(join, self.log, self.trials, per_trial)
 
 
 def _agreeing(

@@ -17,12 +17,13 @@ def distance(seconds: float) -> str:
     return f"{s_to_ms(seconds):.3g} ms"
 
 
-def joined_words(join: LogJoin, log: LogTimes, trials: Sequence[TrialTime]) -> LogJoin:
-    """Give a join its words."""
+def joined_words(join: LogJoin, log: LogTimes, trials: Sequence[TrialTime], per_trial: int = 1) -> LogJoin:
+    """Give a join its words; with several rows per trial, these belong to slots."""
     n_rows, n_trials = len(log.times_s), len(trials)
+    units = "trials" if per_trial == 1 else "slots of the trials"
     lines = [
-        f"{log.name}: {len(join.pairs)} of {n_rows} rows joined with {len(join.pairs)} of {n_trials} trials, "
-        f"by {join.by}."
+        f"{log.name}: {len(join.pairs)} of {n_rows} rows joined with {len(join.pairs)} of {n_trials} "
+        f"{units}, by {join.by}."
     ]
     if join.clock is not None:
         lines.append(_clock_words(join.clock))
