@@ -73,6 +73,18 @@ def test_faults_are_named_with_the_keys_that_accept_their_cures(tmp_path: Path) 
     assert "# [cures]" not in text
 
 
+def test_every_cure_is_named_in_full_however_many_there_are() -> None:
+    codes = [f"S {number}" for number in range(20, 40)]
+    markers = [
+        Marker(float(500 + 9000 * round_ + 400 * place + more), code)
+        for round_ in range(4)
+        for place, code in enumerate(codes)
+        for more in (0, 3)
+    ]
+    cures = tomllib.loads(uncommented(draft_plan(facts_with(*markers)), "cures"))["cures"]
+    assert sorted(cures["accepted"]) == sorted(f"doubled marker {code}" for code in codes)
+
+
 def test_healthy_markers_have_no_word_about_faults(tmp_path: Path) -> None:
     text = draft_of(write(tmp_path / "in"), tmp_path / "plan.toml")
     assert "ault" not in text.replace("default", "")

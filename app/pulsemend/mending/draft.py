@@ -154,7 +154,9 @@ def _faults(facts: RecordingFacts, notes: Sequence[str]) -> list[str]:
             f"# hand in marks/{_one_line(facts.stem)}.marks.toml beside this plan; a draft made after that",
             "# shows the codes as cured:",
             "# [cures]",
-            f"# accepted = {show(keys)}",
+            "# accepted = [",
+            *(f"#   {show(key)}," for key in keys),
+            "# ]",
         ]
     return lines
 
