@@ -150,6 +150,7 @@ def test_markers_added_and_ignored_by_hand(tmp_path: Path) -> None:
     open_ = dry(recording, PLAN, tmp_path / "study")
     assert [trial.number for trial in open_.trials.trials if trial.missing] == [3]
     assert [one.sample for one in open_.trials.extra] == [stray]
+    assert f"one marker belongs to no trial: arrow left at {stray / RATE_HZ:.3f} s" in open_.warnings
     marks = (
         f'[[markers_added]]\nsample = {lost}\ncode = "{code}"\n'
         f'[[markers_ignored]]\nsample = {stray}\ncode = "arrow left"\n'

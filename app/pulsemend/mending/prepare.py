@@ -438,10 +438,9 @@ def _trial_warnings(trials: Trials, facts: RecordingFacts, plan: Plan) -> list[s
         lines.append(f"codes that the plan names but the recording lacks: {_listed([*absent])}")
     if trials.extra:
         first = trials.extra[0]
-        lines.append(
-            f"{len(trials.extra)} markers belong to no trial, the first is {first.code} at "
-            f"{first.sample / facts.rate_hz:.3f} s"
-        )
+        at = f"{first.code} at {first.sample / facts.rate_hz:.3f} s"
+        many = f"{len(trials.extra)} markers belong to no trial, the first is"
+        lines.append(f"one marker belongs to no trial: {at}" if len(trials.extra) == 1 else f"{many} {at}")
     return lines
 
 
