@@ -9,14 +9,19 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from pulsemend.engine.estimates import Estimates
+from pulsemend.engine.setup import bind
 from pulsemend.mending.pulse_findings import (
     amplitude_change,
     latency_drift,
+    pulse_warnings,
     trains,
     unusual_amplitudes,
 )
 from pulsemend.model.epochs import Pulse
+from pulsemend.model.marks import NO_MARKS
 from pulsemend.model.vocabulary import PulseState
+from support import engine_cases
 from support.lantern_log import (
     N_TRIALS,
     PLAN,
@@ -64,6 +69,26 @@ def test_pairs_and_trains_follow_from_the_intervals() -> None:
     mixed = trains([*singles, *train], 1000.0)
     assert (mixed.n_single, mixed.sizes, mixed.interval_s) == (3, {10: 1}, 0.05)
     assert mixed.words == "a train of 10, 50 ms apart, 3 alone"
+
+
+def test_clipping_and_holding_beyond_the_gap_are_told() -> None:
+    """A gap of -2 to 14 ms: 12 ms of clipping lie inside it, 20 ms beyond; likewise a hold of 3 ms."""
+    plan = engine_cases.plan()
+    recording = engine_cases.ArrayRecording(np.zeros((2, 100)), 5000.0)
+    setup = bind(recording.facts, plan, NO_MARKS)
+
+    def told(*shapes: tuple[float, float]) -> str:
+        pulses = tuple(
+            Pulse(10_000 * place, None, PulseState.ADDED, clipped_s=clipped_s, held_s=held_s)
+            for place, (clipped_s, held_s) in enumerate(shapes)
+        )
+        return "; ".join(pulse_warnings(setup, Estimates(np.zeros(2), pulses, 0.0)))
+
+    assert told((0.012, 0.001), (0.0, 0.0)) == ""
+    assert "clipped beyond the gap after 1 pulse, up to 20.0 ms after the onset" in told(
+        (0.020, 0.0), (0.0, 0.0)
+    )
+    assert "holds its output from 3.0 ms before the onset" in told((0.0, 0.003))
 
 
 def test_a_misfire_and_a_moved_coil_stand_out() -> None:

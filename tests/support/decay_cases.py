@@ -16,10 +16,12 @@ GAP = (-10, 71)
 """Samples replaced by a window of -2 to 14 ms: first, and first after it."""
 
 
-def background(n_channels: int, n_samples: int, seed: int, alpha: bool = True) -> NDArray[np.float64]:
+def background(
+    n_channels: int, n_samples: int, seed: int, alpha: bool = True, rate_hz: float = RATE_HZ
+) -> NDArray[np.float64]:
     """Pink background of 12 uV with, if wanted, 8 uV of alpha, and offsets: tenths of microvolts."""
     rng = np.random.default_rng(seed)
-    f = np.fft.rfftfreq(n_samples, 1.0 / RATE_HZ)
+    f = np.fft.rfftfreq(n_samples, 1.0 / rate_hz)
     f[0] = f[1]
     shape = (n_channels, f.size)
 

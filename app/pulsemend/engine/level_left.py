@@ -82,7 +82,8 @@ def _clean_gaps(
     spans = merge_spans(
         [window_to_samples(at, window_s, rate_hz) for at in onsets for window_s in group.windows_s]
     )
-    ends = sorted(window_to_samples(at, group.windows_s[0], rate_hz)[1] for at in onsets)
+    ends = np.sort([window_to_samples(at, group.windows_s[0], rate_hz)[1] for at in onsets])
+    segments = setup.facts.segments
     closed = merge_spans(setup.barriers)
     clean = []
     for place, (start, stop) in enumerate(spans):
@@ -93,7 +94,7 @@ def _clean_gaps(
             and (place == 0 or spans[place - 1][1] <= first)
             and (place + 1 == len(spans) or last <= spans[place + 1][0])
             and not any(lo < last and hi > first for lo, hi in closed)
-            and any(lo <= first and last <= hi for lo, hi in setup.facts.segments)
+            and any(lo <= first and last <= hi for lo, hi in segments)
         ):
             clean.append((start, stop))
     return clean
