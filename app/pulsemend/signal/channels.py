@@ -22,7 +22,6 @@ from enum import StrEnum
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import signal
 
 from pulsemend.signal.design import harmonics, lowpass
 from pulsemend.signal.splines import REGULARISATION, spline_kernel, weights_by_kernel
@@ -227,8 +226,11 @@ class WindowMeter:
         if self._taps is None:
             slow, fast_v = y, np.full(len(y), np.nan)
         else:
+            # Loading it takes half a second, and the first traces of a window must not wait for it.
+            from scipy.signal import oaconvolve
+
             half = self._taps.size // 2
-            slow = signal.oaconvolve(y, self._taps[None, :], mode="valid", axes=1)
+            slow = oaconvolve(y, self._taps[None, :], mode="valid", axes=1)
             fast_v = _robust_sd((y[:, half : half + slow.shape[1]] - slow)[:, ::2])
             # Nothing above 60 Hz is left.
             slow = slow[:, :: max(1, int(self._rate_hz // (5.0 * SPLIT_HZ)))]
