@@ -120,6 +120,7 @@ class Result:
 
     cell: Cell
     found: dict[str, Found] = field(default_factory=dict)
+    own: Decay = Decay.EXPONENTIAL
     fitted: dict[Decay, int] = field(default_factory=dict)
     changed: dict[Decay, int] = field(default_factory=dict)
     n_channels: int = 0
@@ -260,6 +261,11 @@ class Repair:
             self._learned[decay] = finish(fit(self._simulated.recording, self.setup(decay)))
         return self._learned[decay]
 
+    def n_fitted(self, decay: Decay) -> int:
+        """Count the channels with a fitted decay."""
+        found = self.learned(decay).decay
+        return 0 if found is None else found.columns.size
+
     def epochs(self, decay: Decay, across: AcrossPulses = AcrossPulses.FILLED) -> Floats:
         """Epochs, shape (n_pulses, n_channels, n_times), volts."""
         chain = Chain(self._simulated.recording, self.setup(decay, across), self.learned(decay))
@@ -327,23 +333,29 @@ def measure(cell: Cell, seed: int) -> Result:
         result.found[name] = compare(cell, epochs, truth)
     truth = without_artifact(cell, simulated)
     repair = Repair(cell, simulated)
-    own = cell.decay if cell.size_uv else Decay.EXPONENTIAL
+    if cell.size_uv:
+        result.own = cell.decay
     done: dict[Any, Floats] = {}
     for name in OURS:
         kind, across = name.split(", ")
-        key = own if kind == "own" else Decay.POWER, AcrossPulses(across)
+        key = result.own if kind == "own" else Decay.POWER, AcrossPulses(across)
         if key not in done:
             done[key] = repair.epochs(*key)
         result.found[name] = compare(cell, done[key], truth)
+        result.fitted[key[0]] = repair.n_fitted(key[0])
     if not cell.size_uv:
-        unfitted = repair.epochs(Decay.NONE).mean(axis=0)
-        heard = WINDOWS_S[0][0] - 1e-6 < TIMES_S
-        for kind_ in KINDS:
-            decay = repair.learned(kind_).decay
-            result.fitted[kind_] = 0 if decay is None else decay.columns.size
-            change = np.ptp((repair.epochs(kind_).mean(axis=0) - unfitted)[:, heard], axis=1)
-            result.changed[kind_] = int(np.sum(change >= 0.01 * np.ptp(unfitted[:, heard], axis=1)))
+        count_changed(repair, result)
     return result
+
+
+def count_changed(repair: Repair, result: Result) -> None:
+    """Count, for every kind of decay asked for, the channels that it is fitted in and those it changes."""
+    unfitted = repair.epochs(Decay.NONE).mean(axis=0)
+    heard = WINDOWS_S[0][0] - 1e-6 < TIMES_S
+    for kind in KINDS:
+        result.fitted[kind] = repair.n_fitted(kind)
+        change = np.ptp((repair.epochs(kind).mean(axis=0) - unfitted)[:, heard], axis=1)
+        result.changed[kind] = int(np.sum(change >= 0.01 * np.ptp(unfitted[:, heard], axis=1)))
 
 
 def print_tables(results: list[Result]) -> None:
@@ -351,10 +363,12 @@ def print_tables(results: list[Result]) -> None:
     names = (*SCRIPTS, *OURS)
     heads = [*(f"({letter}) {name}" for letter, name in zip("abcd", SCRIPTS, strict=True)), *OURS]
     print("RMS error in microvolts, from the gap's end to 60 ms / in the epochs before the pulse:\n")
-    print("| | recording | decay, µV | also |", " | ".join(heads), "|")
-    print("|---" * (4 + len(names)) + "|")
+    print("| | recording | decay, µV | also |", " | ".join(heads), "| fitted in: own, power |")
+    print("|---" * (5 + len(names)) + "|")
     for number, result in enumerate(results, 1):
         columns = [f"{result.found[n].after_uv:.1f} / {result.found[n].before_uv:.2f}" for n in names]
+        fitted = result.fitted[result.own], result.fitted[Decay.POWER]
+        columns.append(f"{fitted[0]}, {fitted[1]} of {result.n_channels}")
         print(f"| {number} | {result.cell.words} |", " | ".join(columns), "|")
     some = ("plain", "ramps", "one exp.", *OURS)
     print("\nEvoked response: amplitude ratio and latency shift in ms, 20 to 60 ms; 60 to 200 ms:\n")
@@ -362,7 +376,7 @@ def print_tables(results: list[Result]) -> None:
     print("| | recording | decay, µV | also |", " | ".join(heads), "|")
     print("|---" * (4 + len(some)) + "|")
     for number, result in enumerate(results, 1):
-        columns = ["; ".join(f"{r:.2f} {s:+.0f}" for r, s in result.found[n].evoked) for n in some]
+        columns = ["; ".join(f"{r:.2f} {round(s):+d}" for r, s in result.found[n].evoked) for n in some]
         print(f"| {number} | {result.cell.words} |", " | ".join(columns), "|")
 
 

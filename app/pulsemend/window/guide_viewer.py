@@ -29,6 +29,7 @@ PAGES = {
     "marks.md": "Marks",
     "sets.md": "What a set contains",
     "methods.md": "Methods",
+    "accuracy.md": "How exact the repair is",
     "changes.md": "Changes",
 }
 """Files of the pages with their names, in reading order."""
