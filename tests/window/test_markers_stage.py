@@ -339,6 +339,7 @@ def test_a_marker_of_no_trial_is_ignored_and_counted_again(qtbot: QtBot, page: M
     assert page.bench.session.marks.markers_ignored == (MarkerKey(round(STRAY_S * RATE_HZ), "S 31"),)
     assert page.bench.session.next_undo == "Ignore marker S 31"
     wait(qtbot, page)
+    assert lists.table.hasFocus()
     assert page.trials.extra.value.text() == "1"
     lists.choose("ignored")
     click_row(lists.table, 0)

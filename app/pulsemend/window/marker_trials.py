@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from collections import Counter
 
+from PySide6.QtCore import Qt
+
 from pulsemend.mending.marker_edits import with_ignored, without_ignored
 from pulsemend.mending.marker_view import Survey, TrialState, raw_key, trial_state
 from pulsemend.model.epochs import Trial
@@ -107,11 +109,17 @@ class TrialsCard(Card):
         keys = [key for marker in extra if (key := raw_key(marker, survey.raw, survey.rate_hz)) is not None]
         marks = self._hands.bench.session.marks
         self._hands.change_marks(f"Ignore {_markers(keys)}", with_ignored(marks, keys))
+        self._keep_focus()
 
     def _count_again(self) -> None:
         keys = [item.key for item in self.lists.selected if isinstance(item.key, MarkerKey)]
         marks = self._hands.bench.session.marks
         self._hands.change_marks(f"Count {_markers(keys)} again", without_ignored(marks, keys))
+        self._keep_focus()
+
+    def _keep_focus(self) -> None:
+        """Stay at the list: its button may be gone now, and the focus would go to another card."""
+        self.lists.table.setFocus(Qt.FocusReason.OtherFocusReason)
 
 
 def _markers(keys: list[MarkerKey]) -> str:
