@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import re
 import tomllib
 from pathlib import Path
 
@@ -53,6 +54,10 @@ def test_facts_for_people_list_every_code(study: Study, capsys: pytest.CaptureFi
     assert "41.9 s at 5000 Hz, 8 channels (8 eeg)" in shown
     for code in {marker.code for marker in study.lantern.markers}:
         assert code in shown
+    (lost,) = (one for one in study.lantern.schedule.pulses if one.happened and one.marked is None)
+    told = re.search(r"  1 of them without a marker, at ([0-9.]+) s\n", shown)
+    assert told is not None
+    assert float(told[1]) == pytest.approx(lost.time_s, abs=0.001)
 
 
 def test_draft_is_a_plan_that_mend_refuses_until_a_person_decided(study: Study, tmp_path: Path) -> None:

@@ -58,6 +58,8 @@ def run(args: argparse.Namespace) -> int:
 
 
 def _lines(summary: RecordingSummary) -> list[str]:
+    from pulsemend.mending.pulse_evidence import unmarked_events
+
     facts = summary.facts
     types = ", ".join(f"{count} {kind}" for kind, count in summary.channel_types.items())
     lines = [
@@ -68,8 +70,11 @@ def _lines(summary: RecordingSummary) -> list[str]:
     if facts.boundaries:
         at = _listed([f"{sample / facts.rate_hz:.3f} s" for sample in facts.boundaries])
         lines.append(f"  breaks: {at}")
-    found = len(summary.pulses_found)
-    lines.append(f"  pulse-like events in the signal: {found or 'none'}")
+    lines.append(f"  pulse-like events in the signal: {len(summary.pulses_found) or 'none'}")
+    if facts.markers:
+        alone = unmarked_events(facts, summary.pulses_found)
+        at = _listed([f"{sample / facts.rate_hz:.3f} s" for sample in alone])
+        lines += [f"  {len(alone)} of them without a marker, at {at}"] if alone else []
     if facts.reference:
         lines.append(f"  reference: {facts.reference}")
     lines += _channel_lines(summary)

@@ -12,7 +12,7 @@ from pulsemend.engine.setup import bind
 from pulsemend.mending.gap_suggestion import NO_SUGGESTION, GapSuggestion, suggested_gaps
 from pulsemend.model.marks import Marks
 from pulsemend.model.plan import About, Channels, Epochs, Export, Filter, Plan, Pulses
-from pulsemend.model.recording import Recording, RecordingFacts
+from pulsemend.model.recording import Marker, Recording, RecordingFacts
 from pulsemend.model.vocabulary import Fill
 from pulsemend.progress import Work
 from pulsemend.units import ms_to_s, s_to_ms
@@ -75,11 +75,10 @@ def pulse_evidence(facts: RecordingFacts, pulses_found: Sequence[int]) -> PulseE
     pulses_found : sequence of int
         Recorded samples of pulse-like events.
     """
-    low, high = (ms_to_s(edge) * facts.rate_hz for edge in Pulses().search_ms)
     seen: dict[str, list[float]] = {}
     unmarked = 0
     for event in pulses_found:
-        near = [marker for marker in facts.markers if low <= event - marker.sample <= high]
+        near = _markers_near(facts, event)
         if near:
             marker = min(near, key=lambda one: abs(event - one.sample))
             seen.setdefault(marker.code, []).append(s_to_ms((event - marker.sample) / facts.rate_hz))
@@ -90,6 +89,17 @@ def pulse_evidence(facts: RecordingFacts, pulses_found: Sequence[int]) -> PulseE
         CodeEvidence(code, counts[code], len(ms), median(ms), min(ms), max(ms)) for code, ms in seen.items()
     )
     return PulseEvidence(codes, len(pulses_found), unmarked)
+
+
+def unmarked_events(facts: RecordingFacts, pulses_found: Sequence[int]) -> tuple[int, ...]:
+    """Give the samples of pulse-like events that no marker is near."""
+    return tuple(event for event in pulses_found if not _markers_near(facts, event))
+
+
+def _markers_near(facts: RecordingFacts, event: int) -> list[Marker]:
+    """Markers within the usual search range of an event."""
+    low, high = (ms_to_s(edge) * facts.rate_hz for edge in Pulses().search_ms)
+    return [marker for marker in facts.markers if low <= event - marker.sample <= high]
 
 
 def gaps_around(recording: Recording, pulses_found: Sequence[int]) -> Work[GapSuggestion]:
