@@ -81,6 +81,7 @@ def test_a_whole_set_passes_and_every_item_shows_value_and_limit(whole_set: Path
     assert {key for key, kind in kinds.items() if kind == "readiness"} == {
         "balance",
         "rank",
+        "ranges",
         "replaced_by_rule",
     }
     assert not any("ready" in (item.title + item.value).lower() for item in result.items)

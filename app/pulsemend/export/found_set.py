@@ -28,7 +28,7 @@ from pulsemend.export.region import OpenRegion
 from pulsemend.export.tables import Table, read_table
 from pulsemend.model.plan import Plan
 from pulsemend.model.plan_file import parse_plan
-from pulsemend.model.vocabulary import Fill
+from pulsemend.model.vocabulary import ChannelType, Fill
 from pulsemend.progress import Progress, Work
 
 _DAMAGE = (
@@ -75,6 +75,8 @@ class FoundSet:
         Replaced share of every epoch.
     decay_shares : list of float
         Share of every epoch that `/decay_fitted` marks; empty where the set has none.
+    ranges_v : list of float
+        Largest range of every epoch over its good EEG channels, in volts.
     """
 
     folder: Path
@@ -93,6 +95,7 @@ class FoundSet:
     unequal: list[int] = field(default_factory=list)
     shares: list[float] = field(default_factory=list)
     decay_shares: list[float] = field(default_factory=list)
+    ranges_v: list[float] = field(default_factory=list)
 
     def path(self, name: str) -> Path:
         """Path of one of the set's files."""
@@ -219,11 +222,16 @@ def _read_samples(found: FoundSet, done: float, total: float) -> Work[None]:
         OpenRegion(fif.data if fif is not None else main) as others,
         OpenRegion((h5.decay_fitted if h5 is not None else None) or main) as fitted,
     ):
+        good = None
+        if h5 is not None:
+            good = [c.type is ChannelType.EEG and c.status == "good" for c in h5.channels]
         for index in range(main.shape[0]):
             if index % 16 == 0:
                 yield Progress("reading back", done + (total - done) * index / main.shape[0], total)
             volts = samples.read(index)
             finite = np.isfinite(volts)
+            if good is not None and len(good) == len(volts) and any(good) and finite.any():
+                found.ranges_v.append(float(np.ptp(np.nan_to_num(volts[good]), axis=1).max()))
             if h5 is not None:
                 replaced = flags.read(index)
                 found.shares.append(np.count_nonzero(replaced) / replaced.size)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from statistics import median
 
 from pulsemend.export.check_items import CheckItem
 from pulsemend.export.contents import EPOCHS_TSV
@@ -10,6 +11,13 @@ from pulsemend.export.found_set import FoundSet
 from pulsemend.export.integrity import epochs_per_rule
 from pulsemend.model.epochs import NOT_AVAILABLE
 from pulsemend.model.vocabulary import ChannelType
+from pulsemend.units import v_to_uv
+
+MOST_OVER_USUAL = 6.0
+"""Range of an epoch, over its good EEG channels, in medians of the set, above which it should be looked at
+(common practice: none known; blinks stay below, pulses are ten times larger and more)."""
+
+_MOST_NAMED = 5
 
 LEAK_LIMIT_UV = 0.5
 """Leak above which an epoch should be looked at (common practice: none known; the mean of 100 epochs of 10 uV
@@ -50,6 +58,7 @@ def check_readiness(found: FoundSet) -> list[CheckItem]:
             limit += f"; {rebuilt} rebuilt from these add nothing"
         items.append(CheckItem("rank", "rank of the samples", str(rank), limit, rank >= eeg - 1, "readiness"))
     items += _replaced_by_condition(found)
+    items += _standing_out(found)
     leaks = _leak_per_rule(found)
     if leaks:
         every = [one for rule in leaks.values() for one in rule]
@@ -97,6 +106,33 @@ def _mean_shares(groups: Sequence[str], shares: Sequence[float]) -> dict[str, fl
 def _range(values: Mapping[str, float]) -> float:
     # Shares are sums of flags over counts: a limit that is met exactly must not be missed by rounding.
     return round(float(max(values.values()) - min(values.values())), 9)
+
+
+def _standing_out(found: FoundSet) -> list[CheckItem]:
+    """Epochs far larger than the others: a pulse that nobody marked looks like this."""
+    if found.hdf5 is None or not found.ranges_v or len(found.ranges_v) != len(found.hdf5.labels.name):
+        return []
+    usual_v = median(found.ranges_v)
+    labels = found.hdf5.labels
+    out = [
+        f"{name} trial {trial} piece {piece}: {v_to_uv(range_v):.3g} uV"
+        for name, trial, piece, range_v in zip(
+            labels.name, labels.trial, labels.piece, found.ranges_v, strict=True
+        )
+        if range_v > MOST_OVER_USUAL * usual_v
+    ]
+    more = len(out) - _MOST_NAMED
+    return [
+        CheckItem(
+            "ranges",
+            "epochs far larger than the others",
+            f"{len(out)} of {len(found.ranges_v)}; usual range {v_to_uv(usual_v):.3g} uV",
+            f"none above {MOST_OVER_USUAL:g} times the usual: an unmarked pulse, for example",
+            not out,
+            "readiness",
+            "; ".join(out[:_MOST_NAMED]) + (f"; and {more} more" if more > 0 else ""),
+        )
+    ]
 
 
 def _leak_per_rule(found: FoundSet) -> dict[str, list[float]]:
