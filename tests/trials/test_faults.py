@@ -253,6 +253,15 @@ def test_pulses_closer_than_pairs_can_be_are_doubled() -> None:
     assert (fault.key, fault.count) == ("doubled marker within 0.5 ms T", 1)
 
 
+def test_doubled_pulses_two_samples_apart_at_5_khz_are_told() -> None:
+    plan = plan_of({"T": "pulse", "cue": "cue"})
+    pulses = [Marker(float(start + step), "T") for start in range(5000, 50000, 5000) for step in (0, 2)]
+    cues = [Marker(float(start - 2500), "cue") for start in range(5000, 50000, 5000)]
+    markers = sorted([*cues, *pulses], key=lambda marker: marker.sample)
+    fault = only(find_faults(markers, 5000.0, plan))
+    assert (fault.key, fault.count) == ("doubled marker within 0.5 ms T", 9)
+
+
 def test_doubled_pulses_cannot_be_told_from_pairs_at_a_low_rate() -> None:
     """At 250 Hz two pulses 2.5 ms apart may have the same sample."""
     plan = plan_of({"T": "pulse"})

@@ -222,8 +222,10 @@ def two_bits_apart(stream: Stream) -> list[Change]:
 
 def doubled(within_s: float, stream: Stream) -> list[Change]:
     """Keep the first of markers with one code that follow each other within a time, per code."""
-    # One sample less, as times are rounded to samples: pulses every 20 ms are not doubled.
-    within = max(within_s * stream.rate_hz - 1.0, 0.5)
+    # One sample less, as times are rounded to samples: markers every 20 ms are not doubled. No two pulses are
+    # as near as the limit of pulses, so nothing is taken off there.
+    rounding = 1.0 if within_s == DOUBLED_S else 0.0
+    within = max(within_s * stream.rate_hz - rounding, 0.5)
     changes = []
     for code, places in stream.places.items():
         left_out: list[int] = []
