@@ -125,3 +125,15 @@ def test_pulses_whose_stretch_another_one_cuts_are_left_out_of_the_median() -> N
     chain = make_chain(found, PLAN)
     leak = finish(measure_leak(chain, finish(fit(found, chain.setup)), []))
     assert leak.n_pulses == 2
+
+
+def test_a_gap_that_begins_after_the_onset_is_measured_from_the_onset() -> None:
+    late = replace(PLAN, pulses=replace(PULSES, window_ms=(1.0, 14.0)))
+    found = recording(decaying(1000.0, 0.015, ONSETS))
+    chain = make_chain(found, late)
+    leak = finish(
+        measure_leak(chain, finish(fit(found, chain.setup)), [chain.cut(float(ONSETS[2]), -0.51, 250)])
+    )
+    assert leak.n_pulses == len(ONSETS)
+    # The spike at the onset stays in the signal, and what it contributes is told.
+    assert leak.peaks_v[0] > 1e-6

@@ -97,7 +97,7 @@ def measure_leak(chain: Chain, estimates: Estimates, cuts: Sequence[Cut]) -> Wor
 def _span(setup: Setup) -> tuple[int, int]:
     """First sample of any channel's gap and the end of the median, in samples from the onset, half open."""
     first_s = min(window_s[0] for group in setup.groups for window_s in group.windows_s[:1])
-    first, _ = window_to_samples(0, (first_s, 0.0), setup.facts.rate_hz)
+    first, _ = window_to_samples(0, (min(first_s, 0.0), 0.0), setup.facts.rate_hz)
     return min(first, 0), math.floor(AFTER_S * setup.facts.rate_hz) + 1
 
 
