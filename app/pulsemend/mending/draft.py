@@ -152,7 +152,7 @@ def _faults(facts: RecordingFacts, notes: Sequence[str]) -> list[str]:
         lines += [
             "# decide: which cures are right. The marks of each recording accept them, in the window or by",
             f"# hand in marks/{_one_line(facts.stem)}.marks.toml beside this plan; a draft made after that",
-            "# shows the codes as cured:",
+            "# shows the codes as cured. Add to those that stand there already:",
             "# [cures]",
             "# accepted = [",
             *(f"#   {show(key)}," for key in keys),
