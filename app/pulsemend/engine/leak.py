@@ -86,11 +86,11 @@ def measure_leak(chain: Chain, estimates: Estimates, cuts: Sequence[Cut]) -> Wor
         return nothing
     response = _Response(setup)
     yield from response.learn(median)
-    peaks = np.zeros(len(cuts))
+    peaks, onsets = np.zeros(len(cuts)), estimates.onsets
     for place, cut in enumerate(cuts):
         if place % 64 == 0:
             yield Progress(_STAGE, place, len(cuts))
-        peaks[place] = response.peak(cut, estimates.onsets)
+        peaks[place] = response.peak(cut, onsets)
     return Leak(peaks, n_pulses)
 
 
