@@ -14,7 +14,7 @@ from pulsemend.engine.fit import fit
 from pulsemend.engine.scan import find_pulse_like
 from pulsemend.errors import InputError, UsageError
 from pulsemend.mending.event_table import PlannedEvents, event_table
-from pulsemend.mending.prepare import bind_checked, decide
+from pulsemend.mending.prepare import bind_checked, decide, marks_path
 from pulsemend.mending.pulse_evidence import pulse_evidence
 from pulsemend.mending.study_log import read_study_log
 from pulsemend.model.faults import MarkerFault
@@ -199,7 +199,7 @@ def marks_of(plan_path: Path, facts: RecordingFacts, path: Path | None = None) -
     MarksError
         They cannot be used, or are those of another recording.
     """
-    place = path or plan_path.parent / "marks" / f"{facts.stem}.marks.toml"
+    place = path or marks_path(plan_path, facts.stem)
     if path is None and not place.exists():
         return NO_MARKS
     marks_file = read_marks(place)
